@@ -1,0 +1,20 @@
+//! foldtrace traces a tone found in a sampled recording back to the physical
+//! sources that could have made it, whether the tone is real where it shows or
+//! has folded down from above half the sample rate.
+//!
+//! Data flows one way: [`capture`] → [`spectrum`] → [`tones`] → [`suspects`] →
+//! [`report`]. [`fold`] and [`frontend`] hold the sampling arithmetic and the
+//! analog path before the converter; [`sources`] what is known of the site.
+#![forbid(unsafe_code)]
+#![cfg_attr(test, allow(clippy::unwrap_used, clippy::expect_used, clippy::panic))]
+
+pub mod capture;
+pub mod fold;
+pub mod frontend;
+pub mod report;
+pub mod sources;
+pub mod spectrum;
+pub mod suspects;
+pub mod tones;
+pub mod triage;
+pub mod units;

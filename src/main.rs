@@ -1,0 +1,2 @@
+//! The foldtrace command line.
+fn main() {}

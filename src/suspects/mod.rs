@@ -1,0 +1,101 @@
+//! Which sources could have made each tone, and how probable each is.
+
+use crate::sources::Kind;
+use crate::units::{Sense, TrueHz};
+use serde::Serialize;
+
+/// Who is proposed for a tone.
+#[derive(Debug, Clone, PartialEq, Serialize)]
+pub enum Cause {
+    /// A listed source: index into the catalogue.
+    Source {
+        /// Index into `Catalogue::sources`.
+        source: usize,
+        /// Index into that source's lines.
+        line: usize,
+        /// For the reports.
+        name: String,
+        /// For the reports.
+        kind: Kind,
+    },
+    /// A harmonic or intermodulation of seen tones (their numbers).
+    Parents(Vec<usize>),
+    /// The recorder's own artefact.
+    Recorder,
+}
+
+/// One suspect for one tone.
+#[derive(Debug, Clone, PartialEq, Serialize)]
+pub struct Suspect {
+    /// Who.
+    pub cause: Cause,
+    /// `7x`, `2c-4o`, `rate/3`.
+    pub line: String,
+    /// Posterior estimate of the analog frequency given this suspect.
+    pub true_hz: TrueHz,
+    /// ±, 95 %, Hz.
+    pub true_hz_u95: f64,
+    /// Nyquist zone, from 1.
+    pub zone: u64,
+    /// Upright or inverted.
+    pub sense: Sense,
+    /// Posterior probability.
+    pub probability: f64,
+    /// Listed lines expected this close by pure chance.
+    pub coincidence: f64,
+}
+
+/// `direct`, `folded` or `open`.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize)]
+#[serde(rename_all = "lowercase")]
+pub enum Verdict {
+    /// `folded_probability` ≤ 0.1.
+    Direct,
+    /// `folded_probability` ≥ 0.9.
+    Folded,
+    /// Between.
+    Open,
+}
+
+impl Verdict {
+    /// The contract's thresholds.
+    pub fn from_folded_probability(p: f64) -> Self {
+        if p <= 0.1 {
+            Verdict::Direct
+        } else if p >= 0.9 {
+            Verdict::Folded
+        } else {
+            Verdict::Open
+        }
+    }
+}
+
+/// What is concluded about one tone.
+#[derive(Debug, Clone, PartialEq, Serialize)]
+pub struct Finding {
+    /// Index into the tones.
+    pub tone: usize,
+    /// Probability that the tone is folded, over all suspects and unlisted.
+    pub folded_probability: f64,
+    /// From `folded_probability`.
+    pub verdict: Verdict,
+    /// By falling probability.
+    pub suspects: Vec<Suspect>,
+    /// Probability of no listed source, in band and folded.
+    pub unlisted_direct: f64,
+    /// See `unlisted_direct`.
+    pub unlisted_folded: f64,
+}
+
+/// What the recording says of one listed source.
+#[derive(Debug, Clone, PartialEq, Serialize)]
+pub struct SourceFit {
+    /// Index into `Catalogue::sources`.
+    pub source: usize,
+    /// `(latent name, fitted Hz, ± 95 % Hz)`.
+    pub latents: Vec<(String, f64, f64)>,
+    /// Expected number of tones it explains.
+    pub tones_explained: f64,
+    /// Probability that it is present at all.
+    pub present_probability: f64,
+}

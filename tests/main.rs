@@ -1,0 +1,1 @@
+//! Integration tests: the program and the library seen from outside.
