@@ -1,3 +1,4 @@
 //! Integration tests: the program and the library seen from outside.
 
 mod fold;
+mod windows;

@@ -1,1 +1,3 @@
 //! spectrum
+
+pub mod window;
