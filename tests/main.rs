@@ -1,4 +1,5 @@
 //! Integration tests: the program and the library seen from outside.
 
 mod fold;
+mod frontend;
 mod windows;
