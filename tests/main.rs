@@ -2,4 +2,5 @@
 
 mod fold;
 mod sources;
+mod frontend;
 mod windows;

@@ -1,3 +1,4 @@
 //! report
 
 pub mod sources_table;
+pub mod ladder;

@@ -1,4 +1,24 @@
 //! Which sources could have made each tone, and how probable each is.
+//!
+//! Joint inference over all tones and all listed sources. Sources that share
+//! latent frequencies form a *cluster* ([`clusters`]); where its latents could be
+//! is found from where its lines meet tones ([`modes`], [`pairs`]); the likelihood
+//! there, and who explains which tone, is [`evaluate`]; clusters are reconciled
+//! with one another, with [`unlisted`] tones and with the recorder's [`clock`] in
+//! [`sweep`]; [`attribute`] puts the result into words.
+
+mod attribute;
+mod clock;
+mod clusters;
+mod evaluate;
+mod modes;
+mod pairs;
+mod scene;
+mod strength;
+mod sweep;
+mod unlisted;
+
+pub use scene::Scene;
 
 use crate::sources::Kind;
 use crate::units::{Sense, TrueHz};
@@ -98,4 +118,31 @@ pub struct SourceFit {
     pub tones_explained: f64,
     /// Probability that it is present at all.
     pub present_probability: f64,
+}
+
+/// The recorder's clock error, fitted.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
+pub struct ClockFit {
+    /// Relative error of the true rate against the nominal, parts per million.
+    pub ppm: f64,
+    /// ±, 95 %, parts per million.
+    pub ppm_u95: f64,
+    /// How many fitted latents it rests on; 0 means only the description.
+    pub latents: usize,
+}
+
+/// All that is concluded about one recording.
+#[derive(Debug, Clone, PartialEq, Serialize)]
+pub struct Inference {
+    /// One per tone, in their order.
+    pub findings: Vec<Finding>,
+    /// One per listed source, in the order of the catalogue.
+    pub fits: Vec<SourceFit>,
+    /// The clock that reconciles the sources.
+    pub clock: ClockFit,
+}
+
+/// Infers who made each tone. Never fails: without sources every tone is unlisted.
+pub fn infer(scene: &Scene) -> Inference {
+    attribute::attribute(scene, &sweep::solve(scene))
 }
