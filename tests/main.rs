@@ -1,6 +1,6 @@
 //! Integration tests: the program and the library seen from outside.
 
 mod fold;
-mod sources;
 mod frontend;
+mod sources;
 mod windows;

@@ -1,4 +1,4 @@
 //! report
 
-pub mod sources_table;
 pub mod ladder;
+pub mod sources_table;

@@ -5,9 +5,7 @@ use super::clusters::Normal;
 use super::modes::Entry;
 use super::scene::Scene;
 use super::sweep::{Solution, Solved};
-use super::{
-    Cause, ClockFit, Finding, Inference, SourceFit, Suspect, Verdict, clock,
-};
+use super::{Cause, ClockFit, Finding, Inference, SourceFit, Suspect, Verdict, clock};
 use crate::sources::LatentId;
 use crate::units::{Sense, TrueHz, U95};
 use std::collections::BTreeMap;
@@ -125,7 +123,8 @@ fn collect(scene: &Scene, solution: &Solution) -> Shares {
             // The other rungs, by which side of half the rate they are on.
             let half = scene.chain.file_rate_hz() / 2.0;
             let best_folded = e.best.0 > half;
-            let other_folded = (e.folded / e.density - if best_folded { best } else { 0.0 }).max(0.0);
+            let other_folded =
+                (e.folded / e.density - if best_folded { best } else { 0.0 }).max(0.0);
             let other_direct = (1.0 - best - other_folded).max(0.0);
             if other_folded > 1e-9 {
                 let f = if best_folded {

@@ -32,12 +32,7 @@ pub(super) fn posterior(
     let mut sum = 0.0;
     let mut used = 0;
     for s in solved {
-        let present = s
-            .value
-            .absent
-            .iter()
-            .map(|a| 1.0 - a)
-            .fold(0.0, f64::max);
+        let present = s.value.absent.iter().map(|a| 1.0 - a).fold(0.0, f64::max);
         let Some(fit) = s.fit().filter(|_| present > SURE) else {
             continue;
         };

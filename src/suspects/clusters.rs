@@ -7,7 +7,7 @@
 
 use super::strength::{Faintness, PerClass, Strengths};
 use crate::fold::Chain;
-use crate::sources::{LatentId, Site, Steadiness};
+use crate::sources::{LatentId, Site};
 use crate::units::TrueHz;
 
 /// A normal distribution.
@@ -28,8 +28,6 @@ pub(super) struct ClusterLine {
     pub b: f64,
     /// Variance beyond the cluster's latents, Hz².
     pub var: f64,
-    pub nominal_hz: f64,
-    pub weight: f64,
     pub faintness: Faintness,
 }
 
@@ -49,10 +47,6 @@ pub(super) struct Cluster {
     pub latents: Vec<usize>,
     pub members: Vec<Member>,
     pub lines: Vec<ClusterLine>,
-    /// Where the pinned latents come from: catalogue indices.
-    pub pinned: Vec<usize>,
-    /// Any latent locked to a crystal.
-    pub quartz: [bool; 2],
 }
 
 /// The plan of clusters: which latents, which sources, what is pinned.
@@ -154,8 +148,13 @@ impl Cluster {
         let catalogue = &site.catalogue;
         let mut members = Vec::new();
         let mut lines = Vec::new();
-        let top = site.recorder.front_end.bandwidth_hz.unwrap_or(f64::INFINITY);
+        let top = site
+            .recorder
+            .front_end
+            .bandwidth_hz
+            .unwrap_or(f64::INFINITY);
         let rate = chain.converter_rate_hz();
+        let front = site.recorder.front_end.prepared();
         for &s in &plan.sources {
             let Some(source) = catalogue.sources.get(s) else {
                 continue;
@@ -190,7 +189,7 @@ impl Cluster {
                 if !nominal_hz.is_finite() || nominal_hz > top || nominal_hz == 0.0 {
                     continue;
                 }
-                let gain = site.recorder.front_end.gain(TrueHz(nominal_hz), rate);
+                let gain = front.gain(TrueHz(nominal_hz), rate);
                 let faintness = Faintness::new(line.weight, gain);
                 let shown = strengths.shown(&faintness);
                 for (h, s) in ln_hidden.iter_mut().zip(shown) {
@@ -202,8 +201,6 @@ impl Cluster {
                     a,
                     b,
                     var,
-                    nominal_hz,
-                    weight: line.weight,
                     faintness,
                 });
             }
@@ -216,18 +213,10 @@ impl Cluster {
                     .and_then(|g| groups.iter().position(|known| known == g)),
             });
         }
-        let quartz = |slot: usize| {
-            plan.latents
-                .get(slot)
-                .and_then(|&l| catalogue.latents.get(l))
-                .is_some_and(|l| l.steadiness == Steadiness::Quartz)
-        };
         Cluster {
             latents: plan.latents.clone(),
             members,
             lines,
-            pinned: plan.pinned.clone(),
-            quartz: [quartz(0), quartz(1)],
         }
     }
 }

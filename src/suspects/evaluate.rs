@@ -144,7 +144,11 @@ impl Factor {
             0.0
         };
         let total: f64 = weights.iter().sum::<f64>() + absent;
-        (most + total.ln(), weights.map(|w| w / total), absent / total)
+        (
+            most + total.ln(),
+            weights.map(|w| w / total),
+            absent / total,
+        )
     }
 }
 
@@ -312,12 +316,7 @@ fn share_between_members(entries: &[Entry], responsibility: &mut [f64]) {
     }
 }
 
-fn evaluate_broad(
-    places: &Places,
-    bases: &[MemberBase],
-    others: &[f64],
-    value: &mut Value,
-) -> f64 {
+fn evaluate_broad(places: &Places, bases: &[MemberBase], others: &[f64], value: &mut Value) -> f64 {
     let entries: &[BroadEntry] = &places.broad;
     value.broad_responsibility = vec![0.0; entries.len()];
     value.broad_absent = bases
@@ -328,9 +327,8 @@ fn evaluate_broad(
         return f64::NEG_INFINITY;
     }
     let mut ln_weight = places.broad_mass.ln();
-    let scaled = |e: &BroadEntry| {
-        e.density / places.broad_mass / others.get(e.tone).copied().unwrap_or(1.0)
-    };
+    let scaled =
+        |e: &BroadEntry| e.density / places.broad_mass / others.get(e.tone).copied().unwrap_or(1.0);
     for member in runs(entries, |e| e.member) {
         let Some(m) = entries.get(member.start).map(|e| e.member) else {
             continue;
@@ -417,8 +415,7 @@ pub(super) fn evaluate(
     value.beliefs = beliefs.to_vec();
     value.absent = (0..members)
         .map(|m| {
-            let mut p =
-                value.broad_weight * value.broad_absent.get(m).copied().unwrap_or(0.0);
+            let mut p = value.broad_weight * value.broad_absent.get(m).copied().unwrap_or(0.0);
             for (mode, weights) in value.modes.iter().zip(&value.weights) {
                 for (n, w) in weights.iter().enumerate() {
                     p += w * mode.absent.get(n * members + m).copied().unwrap_or(0.0);

@@ -50,7 +50,6 @@ pub(super) struct Mode {
     pub entries: Vec<Entry>,
     /// Groups of entries of one line meeting different tones.
     pub rivals: Vec<Vec<usize>>,
-    pub score: f64,
 }
 
 /// A line meeting a tone somewhere in the rest of the prior.
@@ -177,7 +176,10 @@ fn below(x: f64) -> f64 {
 
 /// The prior's mass between two points, in the tail without cancellation.
 pub(super) fn prior_mass(prior: &Normal, low: f64, high: f64) -> f64 {
-    let (l, h) = ((low - prior.mean) / prior.sd, (high - prior.mean) / prior.sd);
+    let (l, h) = (
+        (low - prior.mean) / prior.sd,
+        (high - prior.mean) / prior.sd,
+    );
     if l > 0.0 {
         below(-l) - below(-h)
     } else {
@@ -215,16 +217,13 @@ pub(super) fn find(cluster: &Cluster, prior: &Normal, setting: &Setting) -> Plac
     let mut modes = Vec::new();
     let mut covered: Vec<(f64, f64)> = Vec::new();
     let widest = candidates.iter().map(|c| c.half_width).fold(0.0, f64::max);
-    let mut sorted: Vec<(f64, f64, f64)> = centres
+    let mut sorted: Vec<(f64, f64)> = centres
         .iter()
-        .map(|&(theta, score)| {
-            let (centre, width) = settle(theta, &candidates, widest, cluster, prior, setting);
-            (centre, width, score)
-        })
+        .map(|&(theta, _)| settle(theta, &candidates, widest, cluster, prior, setting))
         .collect();
     sorted.sort_by(|a, b| a.0.total_cmp(&b.0));
     sorted.dedup_by(|b, a| (b.0 - a.0).abs() < 0.5 * a.1.min(b.1));
-    for (i, &(centre, width, score)) in sorted.iter().enumerate() {
+    for (i, &(centre, width)) in sorted.iter().enumerate() {
         let left = i
             .checked_sub(1)
             .and_then(|p| sorted.get(p))
@@ -262,7 +261,7 @@ pub(super) fn find(cluster: &Cluster, prior: &Normal, setting: &Setting) -> Plac
             enter(j, meeting);
         }
         covered.push((low, high));
-        modes.push(Mode::new([[1.0, 0.0], [0.0, 1.0]], nodes, entries, score));
+        modes.push(Mode::new([[1.0, 0.0], [0.0, 1.0]], nodes, entries));
     }
     let inside: f64 = covered.iter().map(|&(l, h)| prior_mass(prior, l, h)).sum();
     let mut broad = Broad::default();
@@ -310,15 +309,18 @@ impl Broad {
             centre += a * p.mean;
         }
         let density = gaussian(meeting.rung_hz - centre, var);
-        let entry = self.0.entry((j, meeting.tone)).or_insert_with(|| BroadEntry {
-            line: j,
-            member: line.member,
-            tone: meeting.tone,
-            density: 0.0,
-            best: (meeting.rung_hz, 0.0),
-            folded: 0.0,
-            odds: setting.odds(line, tone, meeting.image),
-        });
+        let entry = self
+            .0
+            .entry((j, meeting.tone))
+            .or_insert_with(|| BroadEntry {
+                line: j,
+                member: line.member,
+                tone: meeting.tone,
+                density: 0.0,
+                best: (meeting.rung_hz, 0.0),
+                folded: 0.0,
+                odds: setting.odds(line, tone, meeting.image),
+            });
         entry.density += density;
         if meeting.rung_hz > setting.half_hz {
             entry.folded += density;
@@ -336,12 +338,7 @@ impl Broad {
 }
 
 impl Mode {
-    pub fn new(
-        axes: [[f64; 2]; 2],
-        nodes: Vec<Node>,
-        mut entries: Vec<Entry>,
-        score: f64,
-    ) -> Mode {
+    pub fn new(axes: [[f64; 2]; 2], nodes: Vec<Node>, mut entries: Vec<Entry>) -> Mode {
         entries.sort_by_key(|e| (e.member, e.tone, e.line));
         let mut by_line: std::collections::BTreeMap<usize, Vec<usize>> = Default::default();
         for (i, e) in entries.iter().enumerate() {
@@ -353,7 +350,6 @@ impl Mode {
             nodes,
             entries,
             rivals,
-            score,
         }
     }
 }

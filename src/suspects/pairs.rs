@@ -124,10 +124,9 @@ pub(super) fn find(
     // Lines by how likely they show.
     let mut order: Vec<usize> = (0..cluster.lines.len()).collect();
     let likely = |j: &usize| {
-        cluster
-            .lines
-            .get(*j)
-            .map_or(0.0, |l| super::modes::mean(&setting.strengths.shown(&l.faintness)))
+        cluster.lines.get(*j).map_or(0.0, |l| {
+            super::modes::mean(&setting.strengths.shown(&l.faintness))
+        })
     };
     order.sort_by(|a, b| likely(b).total_cmp(&likely(a)));
     let judges: Vec<usize> = order.iter().copied().take(JUDGE_LINES).collect();
@@ -216,8 +215,8 @@ fn seeds(
         let mut used = 0;
         // Given line p's rung, the prior leaves line q only part of its range.
         let vp = quadratic([prior[0].sd.powi(2), 0.0, prior[1].sd.powi(2)], lp.a);
-        let cross = lp.a[0] * lq.a[0] * prior[0].sd.powi(2)
-            + lp.a[1] * lq.a[1] * prior[1].sd.powi(2);
+        let cross =
+            lp.a[0] * lq.a[0] * prior[0].sd.powi(2) + lp.a[1] * lq.a[1] * prior[1].sd.powi(2);
         let vq = quadratic([prior[0].sd.powi(2), 0.0, prior[1].sd.powi(2)], lq.a);
         let rest = (vq - cross * cross / vp).max(0.0).sqrt();
         let means = [prior[0].mean, prior[1].mean];
@@ -259,7 +258,9 @@ fn seeds(
                 let mut score = prior_ln;
                 let mut matched = 0;
                 for &j in judges {
-                    let Some(line) = cluster.lines.get(j) else { continue };
+                    let Some(line) = cluster.lines.get(j) else {
+                        continue;
+                    };
                     let spread = quadratic(covariance, line.a) + line.var;
                     let f = line.b + dot(line.a, theta);
                     let seen = chain.see(TrueHz(f)).seen.0;
@@ -307,32 +308,39 @@ fn settle(
     for _ in 0..4 {
         let (w0, w1) = (prior[0].sd.powi(-2), prior[1].sd.powi(-2));
         let mut precision = [w0, 0.0, w1];
-        let mut sum = [w0 * (prior[0].mean - theta[0]), w1 * (prior[1].mean - theta[1])];
+        let mut sum = [
+            w0 * (prior[0].mean - theta[0]),
+            w1 * (prior[1].mean - theta[1]),
+        ];
         score = 0.0;
         let mut tones: Vec<usize> = Vec::new();
         for line in &cluster.lines {
             let spread = quadratic(covariance, line.a) + line.var;
             let f = line.b + dot(line.a, theta);
             let seen = chain.see(TrueHz(f));
-            near.each(seen.seen.0, REACH * (spread + near.worst).sqrt(), &mut |i| {
-                let Some((tone, others)) = setting.tone(i) else {
-                    return;
-                };
-                let off = seen.sense.sign() * (tone.nu - seen.seen.0);
-                let odds = 0.5 * mean(&setting.odds(line, tone, false));
-                let x = odds * gaussian(off, spread + tone.var) / others;
-                let r = x / (1.0 + x);
-                let weight = r / (tone.var + line.var);
-                precision[0] += weight * line.a[0] * line.a[0];
-                precision[1] += weight * line.a[0] * line.a[1];
-                precision[2] += weight * line.a[1] * line.a[1];
-                sum[0] += weight * line.a[0] * off;
-                sum[1] += weight * line.a[1] * off;
-                score += x.ln_1p();
-                if r > 0.5 && !tones.contains(&i) {
-                    tones.push(i);
-                }
-            });
+            near.each(
+                seen.seen.0,
+                REACH * (spread + near.worst).sqrt(),
+                &mut |i| {
+                    let Some((tone, others)) = setting.tone(i) else {
+                        return;
+                    };
+                    let off = seen.sense.sign() * (tone.nu - seen.seen.0);
+                    let odds = 0.5 * mean(&setting.odds(line, tone, false));
+                    let x = odds * gaussian(off, spread + tone.var) / others;
+                    let r = x / (1.0 + x);
+                    let weight = r / (tone.var + line.var);
+                    precision[0] += weight * line.a[0] * line.a[0];
+                    precision[1] += weight * line.a[0] * line.a[1];
+                    precision[2] += weight * line.a[1] * line.a[1];
+                    sum[0] += weight * line.a[0] * off;
+                    sum[1] += weight * line.a[1] * off;
+                    score += x.ln_1p();
+                    if r > 0.5 && !tones.contains(&i) {
+                        tones.push(i);
+                    }
+                },
+            );
         }
         covariance = inverse(precision);
         theta = [
@@ -415,5 +423,5 @@ fn grid(
             });
         });
     }
-    Mode::new(axes, nodes, entries, place.score)
+    Mode::new(axes, nodes, entries)
 }

@@ -61,9 +61,8 @@ impl Strengths {
         let points = slot(REACH_DB) + 1;
         let x = |i: usize| (i as f64 + 0.5) * STEP_DB - REACH_DB;
         // A tenth of all lines is anywhere: resonances and nulls.
-        let mixed = |f: fn(f64, f64) -> f64, x: f64| {
-            0.9 * f(x, SPREAD_DB) + 0.1 * f(x, 2.5 * SPREAD_DB)
-        };
+        let mixed =
+            |f: fn(f64, f64) -> f64, x: f64| 0.9 * f(x, SPREAD_DB) + 0.1 * f(x, 2.5 * SPREAD_DB);
         Strengths {
             threshold_db,
             density: (0..points).map(|i| mixed(normal, x(i))).collect(),
@@ -94,9 +93,8 @@ impl Strengths {
     pub fn odds(&self, line: &Faintness, snr_db: f64) -> PerClass {
         std::array::from_fn(|c| {
             let expected = Self::expected(line, c);
-            let get = |table: &[f64], x: f64| {
-                table.get(slot(x * line.narrowing)).copied().unwrap_or(0.0)
-            };
+            let get =
+                |table: &[f64], x: f64| table.get(slot(x * line.narrowing)).copied().unwrap_or(0.0);
             let most = line.most_shown();
             let density = most * line.narrowing * get(&self.density, snr_db - expected);
             let hidden = 1.0 - most * get(&self.above, self.threshold_db - expected);

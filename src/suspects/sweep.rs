@@ -136,7 +136,16 @@ pub(super) fn solve(scene: &Scene) -> Solution {
     for round in 0..ROUNDS {
         for (c, plan) in plans.iter().enumerate() {
             if round < PROPOSALS {
-                propose(scene, &strengths, &ladders, &groups, plan, c, &latents, &mut solution);
+                propose(
+                    scene,
+                    &strengths,
+                    &ladders,
+                    &groups,
+                    plan,
+                    c,
+                    &latents,
+                    &mut solution,
+                );
             }
             update(c, &mut solution);
         }
@@ -159,8 +168,14 @@ fn propose(
     let known = &solution.latents;
     let at = |l: usize| {
         // Own latents at their prior, pinned ones where they were fitted.
-        let from = if plan.latents.contains(&l) { latents } else { known };
-        from.get(l).copied().unwrap_or(Normal { mean: 1.0, sd: 1.0 })
+        let from = if plan.latents.contains(&l) {
+            latents
+        } else {
+            known
+        };
+        from.get(l)
+            .copied()
+            .unwrap_or(Normal { mean: 1.0, sd: 1.0 })
     };
     let cluster = Cluster::new(plan, scene.site, scene.chain, strengths, groups, &at);
     let prior: Vec<Normal> = cluster.latents.iter().map(|&l| at(l)).collect();
@@ -287,7 +302,12 @@ impl Solved {
                         .and_then(|n| n.theta.get(k).copied())
                         .unwrap_or(0.0)
                 };
-                let mean: f64 = weights.iter().enumerate().map(|(n, w)| w * at(n)).sum::<f64>() / mass;
+                let mean: f64 = weights
+                    .iter()
+                    .enumerate()
+                    .map(|(n, w)| w * at(n))
+                    .sum::<f64>()
+                    / mass;
                 let var: f64 = weights
                     .iter()
                     .enumerate()

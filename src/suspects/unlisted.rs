@@ -7,6 +7,7 @@
 //! filter and substantial behind nothing.
 
 use super::scene::{Measured, Scene};
+use crate::frontend::PreparedFrontEnd;
 use crate::units::{SeenHz, TrueHz};
 
 /// Density per Hz of unlisted tones at a seen frequency, per expected tone.
@@ -34,20 +35,19 @@ const RARITY_DB: f64 = 18.0;
 const MOST_RUNGS: f64 = 400.0;
 
 /// Share of tones that would still be seen behind the front end at `f`.
-fn passing(scene: &Scene, f: f64) -> f64 {
-    let front = &scene.site.recorder.front_end;
-    if front.bandwidth_hz.is_some_and(|b| f > b) {
-        return 0.0;
-    }
+fn passing(scene: &Scene, front: &PreparedFrontEnd, f: f64) -> f64 {
     let gain = front.gain(TrueHz(f), scene.chain.converter_rate_hz());
     // E exp(G/R) for G normal, but never above 1.
     let scale = gain.sd_db / RARITY_DB;
-    (gain.mean_db / RARITY_DB + 0.5 * scale * scale).min(0.0).exp()
+    (gain.mean_db / RARITY_DB + 0.5 * scale * scale)
+        .min(0.0)
+        .exp()
 }
 
 /// Densities at each tone.
 pub(super) fn densities(scene: &Scene, tones: &[Measured]) -> Vec<Unlisted> {
     let half = scene.chain.file_rate_hz() / 2.0;
+    let front = scene.site.recorder.front_end.prepared();
     let top = scene
         .site
         .recorder
@@ -62,7 +62,7 @@ pub(super) fn densities(scene: &Scene, tones: &[Measured]) -> Vec<Unlisted> {
     let folded_mass: f64 = (0..steps)
         .map(|i| {
             let f = half * (octaves * (f64::from(i) + 0.5) / f64::from(steps)).exp();
-            passing(scene, f) * octaves / f64::from(steps)
+            passing(scene, &front, f) * octaves / f64::from(steps)
         })
         .sum();
     let mass = direct_mass + folded_mass;
@@ -79,7 +79,7 @@ pub(super) fn densities(scene: &Scene, tones: &[Measured]) -> Vec<Unlisted> {
                     rungs
                         .iter()
                         .filter(|r| r.zone > 1)
-                        .map(|r| passing(scene, r.true_hz.0) / r.true_hz.0)
+                        .map(|r| passing(scene, &front, r.true_hz.0) / r.true_hz.0)
                         .sum::<f64>()
                 })
                 .unwrap_or(0.0)
