@@ -88,8 +88,11 @@ fn base(cluster: &Cluster, beliefs: &[Belief]) -> Vec<MemberBase> {
         .iter()
         .zip(beliefs)
         .map(|(member, belief)| {
-            let ln_prior = (belief.present / CLASSES as f64).max(1e-300).ln();
-            let ln_classes = member.ln_hidden.map(|h| h + ln_prior);
+            let ln_prior = belief.present.max(1e-300).ln();
+            let ln_classes: PerClass = std::array::from_fn(|c| {
+                let get = |v: &PerClass| v.get(c).copied().unwrap_or(0.0);
+                ln_prior + get(&member.class_prior).ln() + get(&member.ln_hidden)
+            });
             let ln_absent = (1.0 - belief.present).max(1e-300).ln();
             // Absence may be out of the range of numbers against a family of
             // thousands of lines, never the classes among themselves.
