@@ -182,6 +182,12 @@ impl Faintness {
         MOST_SHOWN * 10f64.powf(self.weight_db / 40.0).max(0.3)
     }
 
+    /// Orders lines by how likely they show.
+    pub fn better(&self, other: &Faintness) -> std::cmp::Ordering {
+        let level = |f: &Faintness| f.weight_db + f.gain_db;
+        level(self).total_cmp(&level(other))
+    }
+
     /// A line `by_db` fainter.
     pub fn fainter(self, by_db: f64) -> Faintness {
         Faintness {

@@ -16,11 +16,12 @@
 use super::clusters::{Cluster, Plan};
 use super::evaluate::{Belief, Value, evaluate};
 use super::hidden::{self, Extended, Standing};
-use super::modes::{Places, Setting};
+use super::modes::{Effort, Places, Setting};
 use super::prior::{Normal, Prior};
 use super::scene::{Ladders, Scene, measure};
 use super::solution::{Solution, Solved, unlisted_rate};
 use super::strength::Strengths;
+use super::wander::MeanRatios;
 use super::{clock, clusters, mixture, pairs, places, unlisted};
 use std::rc::Rc;
 
@@ -55,6 +56,7 @@ pub(super) struct Problem<'a> {
     pub extended: Extended,
     plans: Vec<Plan>,
     strengths: Strengths,
+    mean_ratios: MeanRatios,
     ladders: Ladders,
     groups: Vec<String>,
 }
@@ -99,6 +101,8 @@ impl Problem<'_> {
             strengths: &self.strengths,
             others,
             background: &background,
+            mean_ratios: &self.mean_ratios,
+            effort: Effort::new(solution.solved.len(), solution.tones.len()),
             half_hz: self.scene.chain.file_rate_hz() / 2.0,
         };
         match solved.prior.as_slice() {
@@ -140,6 +144,7 @@ pub(super) fn solve(scene: &Scene) -> Vec<(f64, Solution)> {
         plans: clusters::plan(&extended.site),
         ladders: Ladders::new(scene.chain, &tones, up_to),
         strengths,
+        mean_ratios: MeanRatios::new(),
         groups,
         extended,
     };
