@@ -88,6 +88,8 @@ pub(super) struct Setting<'a> {
     pub others: &'a [f64],
     /// Density of unlisted tones alone.
     pub background: &'a [f64],
+    /// The least it can become.
+    pub least: &'a [f64],
     pub mean_ratios: &'a wander::MeanRatios,
     /// Meetings looked at and places kept per cluster.
     pub effort: Effort,
@@ -198,7 +200,12 @@ pub(super) struct Broad {
     /// `1 +` index into `entries`, by line and tone.
     slots: Vec<u32>,
     entries: Vec<BroadEntry>,
+    /// Least density of everything else at each tone.
+    least: Vec<f64>,
 }
+
+/// Odds below which a meeting is not worth an entry in the broad node.
+const NEGLIGIBLE: f64 = 1e-5;
 
 impl Broad {
     pub fn new(cluster: &Cluster, setting: &Setting) -> Broad {
@@ -207,6 +214,7 @@ impl Broad {
             tones,
             slots: vec![0; tones * cluster.lines.len()],
             entries: Vec::new(),
+            least: setting.least.to_vec(),
         }
     }
 
@@ -315,7 +323,10 @@ impl Broad {
 
     pub fn finish(self) -> Vec<BroadEntry> {
         let mut all = self.entries;
-        all.retain(|e| e.density > 0.0);
+        all.retain(|e| {
+            let others = self.least.get(e.tone).copied().unwrap_or(1.0);
+            e.density * mean(&e.odds) > NEGLIGIBLE * others
+        });
         all.sort_by_key(|e| (e.member, e.tone));
         all
     }

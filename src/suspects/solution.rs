@@ -17,6 +17,10 @@ pub(super) struct Solved {
     pub standing: Standing,
     pub places: Rc<Places>,
     pub value: Value,
+    /// Tones it would claim if it were alone.
+    pub first_claims: f64,
+    /// Everything else at each tone when it was last evaluated.
+    pub met: Vec<f64>,
     /// What it tells each tone.
     pub message: Vec<f64>,
     /// Its share in each tone, once everything is settled.
@@ -32,7 +36,11 @@ pub(super) struct Solution {
     pub unlisted_rate: Vec<f64>,
     /// Background density of each tone's strength, per dB.
     pub level_density: Rc<Vec<f64>>,
+    /// The least the density of unlisted tones can become at each tone.
+    pub least: Rc<Vec<f64>>,
     pub solved: Vec<Solved>,
+    /// Sum of all messages at each tone.
+    pub told: Vec<f64>,
     /// Best present knowledge of each latent, on the recorder's scale.
     pub latents: Vec<Normal>,
 }
@@ -52,14 +60,54 @@ impl Solution {
 
     /// Everything but cluster `but` at tone `i`.
     pub fn others(&self, i: usize, but: Option<usize>) -> f64 {
-        self.background(i)
-            + self
-                .solved
+        let told = self.told.get(i).copied().unwrap_or(0.0);
+        let own = but
+            .and_then(|c| self.solved.get(c)?.message.get(i))
+            .copied()
+            .unwrap_or(0.0);
+        let rest = if own == 0.0 {
+            told
+        } else if own < 0.5 * told {
+            told - own
+        } else {
+            // The difference would cancel: add the others up.
+            self.solved
                 .iter()
                 .enumerate()
                 .filter(|(c, _)| Some(*c) != but)
                 .filter_map(|(_, s)| s.message.get(i))
-                .sum::<f64>()
+                .sum()
+        };
+        self.background(i) + rest
+    }
+
+    /// Gives cluster `c` a new message.
+    pub fn tell(&mut self, c: usize, message: Vec<f64>) {
+        let Some(s) = self.solved.get_mut(c) else {
+            return;
+        };
+        let changes = message.iter().zip(&s.message).zip(&mut self.told);
+        let mut exact = true;
+        for ((new, old), told) in changes {
+            // Taking a large part away would leave rounding errors.
+            exact &= *old < 0.5 * *told || old == new;
+            *told += new - old;
+        }
+        s.message = message;
+        if !exact {
+            self.add_up();
+        }
+    }
+
+    /// Adds the messages up anew.
+    pub fn add_up(&mut self) {
+        let mut told = vec![0.0; self.tones.len()];
+        for s in &self.solved {
+            for (t, m) in told.iter_mut().zip(&s.message) {
+                *t += m;
+            }
+        }
+        self.told = told;
     }
 
     pub fn all_others(&self, but: Option<usize>) -> Vec<f64> {
