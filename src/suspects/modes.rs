@@ -122,12 +122,12 @@ impl Setting<'_> {
     }
 
     pub fn odds(&self, line: &ClusterLine, tone: &Measured, image: bool) -> PerClass {
-        let faintness = if image {
-            line.faintness.fainter(IMAGE_DB)
+        if image {
+            let fainter = line.faintness.fainter(IMAGE_DB);
+            self.strengths.odds(&fainter, tone.snr_db)
         } else {
-            line.faintness
-        };
-        self.strengths.odds(&faintness, tone.snr_db)
+            self.strengths.odds(&line.faintness, tone.snr_db)
+        }
     }
 
     /// The entry of a line at a meeting.

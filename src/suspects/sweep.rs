@@ -300,7 +300,7 @@ fn run(
         for &c in order {
             let renew = match solution.solved.get(c).map(|s| s.standing) {
                 Some(Standing::Anonymous) if round < from => continue,
-                Some(Standing::Anonymous) => round < from + 3,
+                Some(Standing::Anonymous) => round < from + if many { 1 } else { 3 },
                 _ => propose && round == 1 && (!many || lost(c, &solution)),
             };
             if renew {
