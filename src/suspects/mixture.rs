@@ -74,7 +74,7 @@ fn replace(
         .zip(&comer.message)
         .map(|(o, m)| if *m < 0.5 * o { o - m } else { o * 1e-12 + (o - m).max(0.0) })
         .enumerate()
-        .map(|(i, o)| o.max(solution.background(i)))
+        .map(|(i, o)| o.max(solution.sourceless(i)))
         .collect();
     let places = problem.places_of(comer, solution, &others);
     let value = evaluate(&places, &comer.cluster, &beliefs(comes, solution), &others);

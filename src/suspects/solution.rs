@@ -1,5 +1,6 @@
 //! A solution: every cluster's posterior and what it tells each tone.
 
+use super::byproducts::Byproduct;
 use super::clusters::Cluster;
 use super::evaluate::Value;
 use super::hidden::Standing;
@@ -38,6 +39,9 @@ pub(super) struct Solution {
     pub level_density: Rc<Vec<f64>>,
     /// The least the density of unlisted tones can become at each tone.
     pub least: Rc<Vec<f64>>,
+    pub byproducts: Rc<Vec<Byproduct>>,
+    /// Their density at each tone.
+    pub byproduct_density: Rc<Vec<f64>>,
     pub solved: Vec<Solved>,
     /// Sum of all messages at each tone.
     pub told: Vec<f64>,
@@ -56,6 +60,11 @@ impl Solution {
         let get = |v: &[f64]| v.get(i).copied().unwrap_or(0.0);
         let density = self.unlisted.get(i).map_or(0.0, Unlisted::total);
         (get(&self.unlisted_rate) * density * get(&self.level_density)).max(1e-300)
+    }
+
+    /// Density of all that is no source: unlisted tones and by-products.
+    pub fn sourceless(&self, i: usize) -> f64 {
+        self.background(i) + self.byproduct_density.get(i).copied().unwrap_or(0.0)
     }
 
     /// Everything but cluster `but` at tone `i`.
@@ -78,7 +87,7 @@ impl Solution {
                 .filter_map(|(_, s)| s.message.get(i))
                 .sum()
         };
-        self.background(i) + rest
+        self.sourceless(i) + rest
     }
 
     /// Gives cluster `c` a new message.
@@ -123,10 +132,13 @@ impl Solution {
             .collect()
     }
 
-    /// What is left of each tone for the unlisted.
-    pub fn unlisted_share(&self, i: usize) -> f64 {
+    /// What is left of each tone for the unlisted and for by-products: the first,
+    /// and per unit of density of the second.
+    pub fn left_over(&self, i: usize) -> (f64, f64) {
         let claimed: f64 = self.solved.iter().filter_map(|s| s.share.get(i)).sum();
-        (1.0 - claimed).max(0.0)
+        let left = (1.0 - claimed).max(0.0);
+        let all = self.sourceless(i);
+        (left * self.background(i) / all, left / all)
     }
 
     /// Settles the shares from the messages.

@@ -22,7 +22,7 @@ use super::scene::{Ladders, Scene, measure};
 use super::solution::{Solution, Solved, unlisted_rate};
 use super::strength::Strengths;
 use super::wander::MeanRatios;
-use super::{clock, clusters, mixture, pairs, places, unlisted};
+use super::{byproducts, clock, clusters, mixture, pairs, places, unlisted};
 use std::rc::Rc;
 
 /// Probability that a listed source is present, before looking.
@@ -93,7 +93,7 @@ impl Problem<'_> {
     /// Places of a cluster where everything else at the tones is `others`.
     pub fn places_of(&self, solved: &Solved, solution: &Solution, others: &[f64]) -> Places {
         let background: Vec<f64> = (0..solution.tones.len())
-            .map(|i| solution.background(i))
+            .map(|i| solution.sourceless(i))
             .collect();
         let setting = Setting {
             tones: &solution.tones,
@@ -155,18 +155,24 @@ pub(super) fn solve(scene: &Scene) -> Vec<(f64, Solution)> {
         .iter()
         .map(|t| problem.strengths.background(t.snr_db))
         .collect();
+    let one: Vec<f64> = unlisted
+        .iter()
+        .zip(&level_density)
+        .map(|(u, l)| (u.total() * l).max(1e-300))
+        .collect();
+    let byproducts = byproducts::find(scene, &tones, &one);
+    let mut byproduct_density = vec![0.0; tones.len()];
+    for b in &byproducts {
+        if let Some(d) = byproduct_density.get_mut(b.tone) {
+            *d += b.density;
+        }
+    }
     let mut start = Solution {
+        byproducts: Rc::new(byproducts),
+        byproduct_density: Rc::new(byproduct_density),
         // Before looking, nothing is explained: sources have to win each tone.
         unlisted_rate: vec![unlisted_rate(tones.len() as f64); tones.len()],
-        least: Rc::new(
-            (0..tones.len())
-            .map(|i| {
-                let density = unlisted.get(i).map_or(0.0, unlisted::Unlisted::total);
-                let level = level_density.get(i).copied().unwrap_or(0.0);
-                (unlisted_rate(0.0) * density * level).max(1e-300)
-            })
-            .collect(),
-        ),
+        least: Rc::new(one.iter().map(|d| unlisted_rate(0.0) * d).collect()),
         told: vec![0.0; tones.len()],
         unlisted: Rc::new(unlisted),
         level_density: Rc::new(level_density),
