@@ -176,11 +176,16 @@ impl Cluster {
                 .iter()
                 .zip(&gains)
                 .max_by(|a, b| {
-                    let level =
-                        |(l, g): (&Line, &Gain)| Faintness::weight_db(l.weight) + g.mean_db;
+                    let level = |(l, g): (&Line, &Gain)| Faintness::weight_db(l.weight) + g.mean_db;
                     level(*a).total_cmp(&level(*b))
                 })
-                .map_or(Gain { mean_db: 0.0, sd_db: 0.0 }, |(_, g)| *g);
+                .map_or(
+                    Gain {
+                        mean_db: 0.0,
+                        sd_db: 0.0,
+                    },
+                    |(_, g)| *g,
+                );
             for ((j, line), gain) in source.lines.iter().enumerate().zip(&gains) {
                 let mut a = [0.0; 2];
                 let mut b = 0.0;

@@ -344,10 +344,7 @@ fn share_between_members(entries: &[Entry], responsibility: &mut [f64]) {
 fn evaluate_broad(places: &Places, bases: &[MemberBase], others: &[f64], value: &mut Value) -> f64 {
     let entries: &[BroadEntry] = &places.broad;
     value.broad_responsibility = vec![0.0; entries.len()];
-    value.broad_absent = bases
-        .iter()
-        .map(|b| b.absent_by_itself)
-        .collect();
+    value.broad_absent = bases.iter().map(|b| b.absent_by_itself).collect();
     if places.broad_mass < 1e-12 {
         return f64::NEG_INFINITY;
     }

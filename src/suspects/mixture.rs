@@ -72,7 +72,13 @@ fn replace(
         .all_others(Some(goes))
         .iter()
         .zip(&comer.message)
-        .map(|(o, m)| if *m < 0.5 * o { o - m } else { o * 1e-12 + (o - m).max(0.0) })
+        .map(|(o, m)| {
+            if *m < 0.5 * o {
+                o - m
+            } else {
+                o * 1e-12 + (o - m).max(0.0)
+            }
+        })
         .enumerate()
         .map(|(i, o)| o.max(solution.sourceless(i)))
         .collect();

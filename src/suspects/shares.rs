@@ -177,7 +177,12 @@ impl Collector<'_> {
                     let tone_var = solution.tones.get(e.tone).map_or(0.0, |t| t.var);
                     let (f, var) = between(f, var, e.rung_hz, tone_var, e.var - tone_var);
                     let theta = node.theta[0];
-                    let piece = Piece { mass, f, var, theta };
+                    let piece = Piece {
+                        mass,
+                        f,
+                        var,
+                        theta,
+                    };
                     self.add(s, *chance, e.tone, e.line, piece);
                 }
             }
@@ -286,4 +291,3 @@ fn coincidence(
     };
     lines as f64 * (2.0 * U95 * window_var.sqrt() / half).min(1.0)
 }
-

@@ -293,9 +293,8 @@ fn run(
     }
     let mut before = solution.shares();
     // Anonymous families explain what is left over, unless they come first.
-    let anonymous = |c: &usize| {
-        solution.solved.get(*c).map(|s| s.standing) == Some(Standing::Anonymous)
-    };
+    let anonymous =
+        |c: &usize| solution.solved.get(*c).map(|s| s.standing) == Some(Standing::Anonymous);
     let from = if order.first().is_some_and(anonymous) {
         0
     } else {
@@ -442,11 +441,7 @@ fn lost(c: usize, solution: &Solution) -> bool {
     let Some(s) = solution.solved.get(c) else {
         return false;
     };
-    let claims: f64 = s
-        .value
-        .claims(&s.places, solution.tones.len())
-        .iter()
-        .sum();
+    let claims: f64 = s.value.claims(&s.places, solution.tones.len()).iter().sum();
     s.first_claims > 1.0 && claims < 0.5 * s.first_claims
 }
 
@@ -459,4 +454,3 @@ fn update_unlisted(solution: &mut Solution) {
     // A tone may not vouch for itself here either.
     solution.unlisted_rate = shares.iter().map(|s| unlisted_rate(total - s)).collect();
 }
-

@@ -141,7 +141,9 @@ impl<'a> Origins<'a> {
 
     /// Chance that a family with its fundamental seen at `nu` is folded as a whole.
     pub fn family_folded(&self, nu: f64) -> f64 {
-        self.share(nu, |f| 1.0 / (f * (1.0 + (SLOWEST_HZ / f).powi(2)) * (1.0 + f / FASTEST_HZ)))
+        self.share(nu, |f| {
+            1.0 / (f * (1.0 + (SLOWEST_HZ / f).powi(2)) * (1.0 + f / FASTEST_HZ))
+        })
     }
 
     /// Chance that an unlisted tone at `nu` is folded.
