@@ -140,7 +140,9 @@ pub(super) fn find(
         }
         let new = places.iter().all(|p| {
             let d = [p.theta[0] - place.theta[0], p.theta[1] - place.theta[1]];
+            // Distinct to either: a sharp place may lie on the ridge of a blunt one.
             quadratic(inverse(p.covariance), d) > 9.0
+                || quadratic(inverse(place.covariance), d) > 9.0
         });
         if new {
             places.push(place);
@@ -185,6 +187,7 @@ fn seeds(
     near: &Near,
 ) -> Vec<Place> {
     let mut found = Vec::new();
+    let mut hits: Vec<(usize, f64)> = Vec::new();
     let mut budget = PAIRS;
     // Pairs of lines, strongest together first.
     let mut line_pairs: Vec<(usize, usize)> = Vec::new();
@@ -256,8 +259,9 @@ fn seeds(
                     r0[0] * r1[0] * v1 + r0[1] * r1[1] * v2,
                     r1[0] * r1[0] * v1 + r1[1] * r1[1] * v2,
                 ];
-                let mut score = prior_ln;
-                let mut matched = 0;
+                // Of each tone the best line only: in some places many lines fall
+                // on one tone.
+                hits.clear();
                 for &j in judges {
                     let Some(line) = cluster.lines.get(j) else {
                         continue;
@@ -265,20 +269,20 @@ fn seeds(
                     let spread = quadratic(covariance, line.a) + line.var;
                     let f = line.b + dot(line.a, theta);
                     let seen = chain.see(TrueHz(f)).seen.0;
-                    let mut best: f64 = 0.0;
                     near.each(seen, REACH * (spread + near.worst).sqrt(), &mut |i| {
                         if let Some((tone, others)) = setting.tone(i) {
                             let var = spread + tone.var;
                             let odds = 0.5 * mean(&setting.odds(line, tone, false));
-                            let x = odds * gaussian(tone.nu - seen, var) / others;
-                            best = best.max(x.ln_1p());
+                            let gain = (odds * gaussian(tone.nu - seen, var) / others).ln_1p();
+                            match hits.iter_mut().find(|h| h.0 == i) {
+                                Some(h) => h.1 = h.1.max(gain),
+                                None => hits.push((i, gain)),
+                            }
                         }
                     });
-                    if best > 0.5 {
-                        matched += 1;
-                    }
-                    score += best;
                 }
+                let score = prior_ln + hits.iter().map(|h| h.1).sum::<f64>();
+                let matched = hits.iter().filter(|h| h.1 > 0.5).count();
                 if matched >= 3 {
                     found.push(Place {
                         theta,
@@ -313,8 +317,7 @@ fn settle(
             w0 * (prior[0].mean - theta[0]),
             w1 * (prior[1].mean - theta[1]),
         ];
-        score = 0.0;
-        let mut tones: Vec<usize> = Vec::new();
+        let mut tones: std::collections::BTreeMap<usize, f64> = Default::default();
         for line in &cluster.lines {
             let spread = quadratic(covariance, line.a) + line.var;
             let f = line.b + dot(line.a, theta);
@@ -336,10 +339,7 @@ fn settle(
                     precision[2] += weight * line.a[1] * line.a[1];
                     sum[0] += weight * line.a[0] * off;
                     sum[1] += weight * line.a[1] * off;
-                    score += x.ln_1p();
-                    if r > 0.5 && !tones.contains(&i) {
-                        tones.push(i);
-                    }
+                    *tones.entry(i).or_default() += x;
                 },
             );
         }
@@ -348,7 +348,8 @@ fn settle(
             theta[0] + covariance[0] * sum[0] + covariance[1] * sum[1],
             theta[1] + covariance[1] * sum[0] + covariance[2] * sum[1],
         ];
-        matched = tones.len();
+        score = tones.values().map(|x| x.ln_1p()).sum();
+        matched = tones.values().filter(|x| **x > 1.0).count();
     }
     // Laplace: the peak's share of the prior.
     let volume = (determinant(covariance).max(0.0).sqrt() / (prior[0].sd * prior[1].sd)).ln();
