@@ -213,7 +213,7 @@ fn run(command: &mut Command) -> Result<Run> {
     let output = output?;
     if !output.status.success() {
         let said = String::from_utf8_lossy(&output.stderr);
-        return Err(format!("{name}: {}: {}", output.status, said.trim()).into());
+        return Err(format!("{name} failed ({}) {}", output.status, said.trim()).into());
     }
     Ok(Run {
         wall_s,
