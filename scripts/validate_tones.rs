@@ -280,6 +280,22 @@ fn family(trials: usize, rng: &mut StdRng) {
             }
         }
         let set = run(&x);
+        if std::env::var_os("SHOW").is_some() {
+            println!("family n {n} base {mean} tau {tau}");
+            for t in &set.tones {
+                println!(
+                    "  order {:8.4} wander {:.5} (true {:.5}) snr {:.1} u95 {:.2e} cells {:.1} {:.2}..{:.2}",
+                    t.seen_hz.0 / mean,
+                    t.wander_hz / (t.seen_hz.0),
+                    1e-3,
+                    t.snr_db,
+                    t.seen_hz_u95,
+                    t.seen_hz.0 * 1e-3 * n as f64,
+                    t.from_s / n as f64,
+                    t.to_s / n as f64
+                );
+            }
+        }
         rows += set.tones.len();
         lines += 40;
         for order in 1..=40 {

@@ -4,26 +4,21 @@
 //! not explain, and patches that stand out only when smoothed, are judged as
 //! wandering tones or dropped as humps of noise.
 
+use super::peaks::{LOWEST, peaks};
 use super::refine::{Line, Residual, View, refine};
 use super::statistic::{Coarse, Fine};
 use super::threshold;
-use super::wander::{Judged, Wanderer, judge};
+use super::wander::{Wanderer, judge};
 use crate::spectrum::Band;
 use crate::spectrum::fft::Complex64;
 use std::ops::Range;
 
-/// Cells from 0 that are left alone: a tone with fewer periods in the whole
-/// recording than this cannot be told from drift.
-const LOWEST: usize = 4;
 /// Peaks this close, in cells, belong to one bunch.
 const BUNCH: usize = 10;
 /// A bunch of this many peaks is not a set of steady tones.
 const SPLINTERS: usize = 4;
 /// Chance that noise alone makes a fitted steady line look unsteady.
 const UNSTEADY_CHANCE: f64 = 1e-4;
-
-/// Chance that a cell of a pedestal or hump passes for a line on it.
-const RAGGED_CHANCE: f64 = 1e-5;
 /// Share of the false alarms granted to peaks at full resolution.
 const FINE_SHARE: f64 = 0.75;
 
@@ -67,182 +62,30 @@ pub fn detect(band: &Band, false_alarms: f64) -> Found {
         }
         fine.hann_floor = rest.hann_floor;
     }
-
-    // Unsteady lines and splinters ask for a judgement; so do coarse patches.
-    let offset = band.first_bin;
-    let mut patches: Vec<Range<usize>> = bunches;
-    for line in &lines {
-        if unsteady(line) {
-            let centre = (line.bin.round() as usize).saturating_sub(offset);
-            patches.push(centre.saturating_sub(8)..(centre + 9).min(band.bins.len()));
-        }
-    }
-    let mut wanderers = Vec::new();
-    for patch in merge(patches) {
-        settle(
-            band,
-            &fine,
-            patch,
-            &mut lines,
-            &mut residual,
-            &mut wanderers,
-        );
-    }
-    coarse_patches(
-        band,
-        &fine,
-        (1.0 - FINE_SHARE) * false_alarms,
-        &mut lines,
-        &mut residual,
-        &mut wanderers,
-    );
+    let scales = (1..12)
+        .map_while(|s| Coarse::new(&fine.hann, 1.0, 4usize.pow(s), band.first_bin == 0))
+        .collect();
+    let mut patches = bunches;
+    patches.extend(lines.iter().filter(|l| unsteady(l)).map(|line| {
+        let centre = (line.bin.round() as usize).saturating_sub(band.first_bin);
+        centre.saturating_sub(8)..(centre + 9).min(band.bins.len())
+    }));
+    let mut search = Patches {
+        fine,
+        scales,
+        residual,
+        lines,
+        wanderers: Vec::new(),
+    };
+    search.settle_all(patches);
+    search.coarse((1.0 - FINE_SHARE) * false_alarms);
+    let Patches {
+        mut lines,
+        wanderers,
+        ..
+    } = search;
     lines.retain(|l| l.c.norm_sqr() > 0.0 && l.bin.is_finite());
     Found { lines, wanderers }
-}
-
-/// Cells that exceed the threshold in some view and are not a stronger peak's
-/// leakage, strongest first.
-fn peaks(band: &Band, fine: &Fine, false_alarms: f64) -> Vec<usize> {
-    let n = band.bins.len();
-    // Three views of a cell, closely correlated, exceed a high threshold about
-    // 1.7 times as often as one (counted on white noise at 1e-3 to 1e-5).
-    let pfa = false_alarms / (1.7 * n as f64);
-    let plain_worth = fine.plain_floor.cells / correlation(&fine.plain, &fine.plain_floor.level, 1);
-    let hann_worth = fine.hann_floor.cells / correlation(&fine.hann, &fine.hann_floor.level, 3);
-    let plain_ratio = threshold::ratio(1.0, plain_worth, pfa) as f32;
-    let hann_ratio = threshold::ratio(1.0, hann_worth, pfa) as f32;
-    let lowest = LOWEST.saturating_sub(band.first_bin);
-    let highest = n.saturating_sub(if 2 * (band.first_bin + n) > band.grid {
-        2
-    } else {
-        0
-    });
-    let mut strong: Vec<(f32, usize)> = (lowest..highest)
-        .filter_map(|i| {
-            let plain_floor = fine.plain_floor.level[i];
-            let hit = fine.plain[i] > plain_ratio * plain_floor
-                || fine.between[i] > plain_ratio * plain_floor
-                || fine.hann[i] > hann_ratio * fine.hann_floor.level[i];
-            hit.then(|| {
-                (
-                    fine.plain[i].max(fine.between[i]).max(1.5 * fine.hann[i]),
-                    i,
-                )
-            })
-        })
-        .collect();
-    strong.sort_by(|a, b| b.0.total_cmp(&a.0).then(a.1.cmp(&b.1)));
-    let mut accepted: Vec<(usize, f32)> = Vec::new();
-    let mut by_bin = std::collections::BTreeMap::<usize, f32>::new();
-    for (power, i) in strong {
-        let stands_in = |view: View| {
-            let (value, floor, ratio) = match view {
-                View::Plain => (
-                    fine.plain[i].max(fine.between[i]),
-                    fine.plain_floor.level[i],
-                    plain_ratio,
-                ),
-                View::Hann => (fine.hann[i], fine.hann_floor.level[i], hann_ratio),
-            };
-            value > ratio * floor
-                && !by_bin
-                    .range(i.saturating_sub(4096)..i + 4096)
-                    .any(|(&j, &p)| value < 4.0 * leakage(view, i.abs_diff(j), p))
-                && above_pedestal(fine, view, i, value, &by_bin)
-        };
-        if stands_in(View::Hann) || stands_in(View::Plain) {
-            accepted.push((i, power));
-            by_bin.insert(i, power);
-        }
-    }
-    accepted.into_iter().map(|(i, _)| i).collect()
-}
-
-/// The most that a steady tone of power `p` puts `distance` cells away.
-fn leakage(view: View, distance: usize, p: f32) -> f32 {
-    // `p` may be 1 dB low between cells, and the tone half a cell nearer.
-    let d = distance as f32 - 0.5;
-    let p = 1.3 * p;
-    match view {
-        View::Plain if distance < 2 => p,
-        View::Plain => p / (std::f32::consts::PI * d).powi(2),
-        View::Hann if distance < 3 => p,
-        View::Hann => 0.67 * p / (std::f32::consts::PI * d * (d * d - 1.0)).powi(2),
-    }
-}
-
-/// A strong tone that jitters stands on a pedestal of its own noise, and a
-/// resonance narrower than the floor's windows is ragged too: where the immediate
-/// surroundings stand above the floor, a line must stand out of *them*.
-fn above_pedestal(
-    fine: &Fine,
-    view: View,
-    i: usize,
-    value: f32,
-    stronger: &std::collections::BTreeMap<usize, f32>,
-) -> bool {
-    let (power, floor) = match view {
-        View::Plain => (&fine.plain, fine.plain_floor.level[i]),
-        View::Hann => (&fine.hann, fine.hann_floor.level[i]),
-    };
-    let mut around: Vec<f32> = (i.saturating_sub(14)..(i + 15).min(power.len()))
-        .filter(|&k| k.abs_diff(i) >= 3)
-        .filter(|&k| stronger.range(k.saturating_sub(2)..=k + 2).next().is_none())
-        .map(|k| power[k])
-        .collect();
-    if around.len() < 6 {
-        return true;
-    }
-    let mid = around.len() / 2;
-    let median = *around.select_nth_unstable_by(mid, f32::total_cmp).1;
-    let level = median / std::f32::consts::LN_2;
-    // 2.08/n is the relative variance of a median of exponentials; Hann cells
-    // are worth about half.
-    let worth = around.len() as f64 / 2.08 / if view == View::Hann { 1.94 } else { 1.0 };
-    let raised = f64::from(level / floor) > 1.0 + 3.0 / worth.sqrt();
-    !raised || f64::from(value / level) > threshold::ratio(1.0, worth, RAGGED_CHANCE)
-}
-
-/// Over how many cells the power is correlated: 1 on steady noise, more when the
-/// noise came in bursts (a burst of length τ smears its pattern over 1/τ). A
-/// floor over n cells is then worth only n over this.
-///
-/// `from_lag` is the first lag at which steady noise has none: 1, or 3 under a
-/// Hann window, whose neighbours its floor has counted already.
-fn correlation(power: &[f32], floor: &[f32], from_lag: usize) -> f64 {
-    // capped, so that tones do not count
-    let y: Vec<f32> = power
-        .iter()
-        .zip(floor)
-        .map(|(p, f)| (p / f).min(4.0))
-        .collect();
-    let n = y.len() as f64;
-    let mean = (y.iter().map(|&v| f64::from(v)).sum::<f64>() / n) as f32;
-    let y: Vec<f32> = y.into_iter().map(|v| v - mean).collect();
-    let covariance = |lag: usize| -> f64 {
-        // partial sums keep f32 exact enough and fast
-        y.chunks(4096)
-            .enumerate()
-            .map(|(c, a)| {
-                let b = &y[(c * 4096 + lag).min(y.len())..];
-                f64::from(a.iter().zip(b).map(|(a, b)| a * b).sum::<f32>())
-            })
-            .sum::<f64>()
-            / n
-    };
-    let variance = covariance(0);
-    if variance <= 0.0 {
-        return 1.0;
-    }
-    let mut sum = 0.0;
-    for lag in from_lag..128.min(y.len()) {
-        let r = covariance(lag) / variance;
-        if r < 3.0 / n.sqrt() {
-            break;
-        }
-        sum += r;
-    }
-    1.0 + 2.0 * sum
 }
 
 /// Splits peaks into bunches of splinters (as ranges of cells) and the rest.
@@ -315,95 +158,185 @@ fn merge(mut ranges: Vec<Range<usize>>) -> Vec<Range<usize>> {
     merged
 }
 
-/// Judges a patch with the lines inside it put back; if it is one wandering tone
-/// the lines inside were its splinters, otherwise they stay if they stand out of
-/// the patch itself.
-fn settle(
-    band: &Band,
-    fine: &Fine,
-    patch: Range<usize>,
-    lines: &mut Vec<Line>,
-    residual: &mut Residual,
-    wanderers: &mut Vec<Wanderer>,
-) {
-    let offset = band.first_bin as f64;
-    let patch = patch.start..patch.end.min(band.bins.len());
-    if patch.is_empty() {
-        return;
-    }
-    let inside = |l: &Line| {
-        l.bin - offset > patch.start as f64 - 3.0 && l.bin - offset < patch.end as f64 + 2.0
-    };
-    for line in lines.iter().filter(|l| inside(l)) {
-        residual.add(line, 1.0);
-    }
-    // Broader and broader: the patch is where it stood out, not all it covers.
-    let floor = fine.hann_floor.level[(patch.start + patch.end) / 2];
-    let edges = [patch.start, patch.end - 1].map(|k| fine.hann_floor.level[k]);
-    let noise = f64::from(edges.into_iter().fold(floor, f32::min));
-    let mut judged = Judged::Noise;
-    for widen in [0, 1, 3] {
-        let extra = widen * patch.len().max(8);
-        let core = patch.start.saturating_sub(extra)..(patch.end + extra).min(band.bins.len());
-        let others = lines
-            .iter()
-            .any(|l| !inside(l) && core.contains(&((l.bin - offset).max(0.0) as usize)));
-        if others && widen > 0 {
-            break;
-        }
-        judged = judge(residual.band(), core, noise);
-        if let Judged::Tone(_) = judged {
-            break;
-        }
-    }
-    match judged {
-        Judged::Tone(tone) => {
-            lines.retain(|l| !inside(l));
-            wanderers.push(tone);
-        }
-        Judged::Noise => {
-            let cells = patch.len() as f64;
-            let total: f64 = residual.band().bins[patch.clone()]
-                .iter()
-                .map(|z| f64::from(z.norm_sqr()))
-                .sum();
-            let n = band.samples;
-            lines.retain(|l| {
-                if !inside(l) || !unsteady(l) {
-                    return true;
-                }
-                // against the mean of the rest of the patch
-                let own = l.snr(n) * l.noise;
-                let rest = ((total - own) / cells).max(l.noise);
-                own > threshold::ratio(1.0, cells / 2.0, 1e-4) * rest
-            });
-            for line in lines.iter().filter(|l| inside(l)) {
-                residual.add(line, -1.0);
-            }
-        }
-    }
+/// What is known while broad patches are looked at.
+struct Patches {
+    fine: Fine,
+    scales: Vec<Coarse>,
+    /// The band without the lines.
+    residual: Residual,
+    lines: Vec<Line>,
+    wanderers: Vec<Wanderer>,
 }
 
-/// Patches that stand out at coarser and coarser resolution.
-fn coarse_patches(
-    band: &Band,
-    fine: &Fine,
-    false_alarms: f64,
-    lines: &mut Vec<Line>,
-    residual: &mut Residual,
-    wanderers: &mut Vec<Wanderer>,
-) {
-    let scales: Vec<Coarse> = (1..12)
-        .map_while(|s| Coarse::new(&fine.hann, 1.0, 4usize.pow(s), band.first_bin == 0))
-        .collect();
-    let tests: usize = scales.iter().map(|c| c.power.len()).sum();
-    for coarse in &scales {
-        let pfa = false_alarms / tests as f64;
-        for patch in stand_out(coarse, pfa) {
-            if !explained(band, coarse, &patch, lines, wanderers) {
-                settle(band, fine, patch, lines, residual, wanderers);
+impl Patches {
+    fn band(&self) -> &Band {
+        self.residual.band()
+    }
+
+    /// Does the line lie in these cells?
+    fn inside(&self, line: &Line, cells: &Range<usize>) -> bool {
+        let at = line.bin - self.band().first_bin as f64;
+        at > cells.start as f64 - 3.0 && at < cells.end as f64 + 2.0
+    }
+
+    /// The lowest floor that any resolution sees under a cell: a line broad
+    /// enough to lift the floor at one resolution is narrow at a coarser one.
+    fn base(&self, cell: usize) -> f64 {
+        self.scales
+            .iter()
+            .filter_map(|c| c.floor.level.get(cell / c.stride))
+            .chain(self.fine.hann_floor.level.get(cell))
+            .fold(f64::INFINITY, |low, &f| low.min(f64::from(f)))
+    }
+
+    /// Settles patches, strongest first.
+    fn settle_all(&mut self, patches: Vec<Range<usize>>) {
+        let power = |p: &Range<usize>| -> f32 {
+            self.fine.hann[p.start..p.end.min(self.fine.hann.len())]
+                .iter()
+                .sum()
+        };
+        let mut ordered = merge(patches);
+        ordered.sort_by(|a, b| power(b).total_cmp(&power(a)).then(a.start.cmp(&b.start)));
+        for patch in ordered {
+            self.settle(patch);
+        }
+    }
+
+    /// Where a patch ends: outwards in strips until a strip is down at the floor
+    /// or holds a steady line of its own. The strips are an eighth of the patch
+    /// wide, so that a gap in a ragged spectrum does not end it.
+    fn grow(&self, patch: Range<usize>) -> Range<usize> {
+        let n = self.fine.hann.len();
+        let widest = (n / 48).max(64);
+        let mut core = patch.clone();
+        let (mut left, mut right) = (true, true);
+        while (left || right) && core.len() < widest {
+            let strip = (core.len() / 8).max(6);
+            let raised = |cells: Range<usize>| {
+                let m = cells.len();
+                if m < 3
+                    || self
+                        .lines
+                        .iter()
+                        .any(|l| !self.inside(l, &patch) && !unsteady(l) && self.inside(l, &cells))
+                {
+                    return false;
+                }
+                let mean = self.fine.hann[cells.clone()]
+                    .iter()
+                    .map(|&p| f64::from(p))
+                    .sum::<f64>()
+                    / m as f64;
+                // Hann cells are worth about half an independent one
+                let sd = (1.94 / m as f64).sqrt();
+                mean > self.base(cells.start + m / 2) * (1.2 + 2.5 * sd)
+            };
+            if left {
+                let next = core.start.saturating_sub(strip);
+                left = raised(next..core.start);
+                if left {
+                    core.start = next;
+                }
+            }
+            if right {
+                let next = (core.end + strip).min(n);
+                right = raised(core.end..next);
+                if right {
+                    core.end = next;
+                }
             }
         }
+        core
+    }
+
+    /// Judges a patch with the lines inside it put back; if it is one wandering
+    /// tone the lines inside were its splinters, otherwise they stay if they
+    /// stand out of the patch itself.
+    fn settle(&mut self, patch: Range<usize>) {
+        let patch = patch.start..patch.end.min(self.band().bins.len());
+        let first = self.band().first_bin;
+        let taken = self
+            .wanderers
+            .iter()
+            .any(|w| w.cells.start < patch.end + first && w.cells.end > patch.start + first);
+        if patch.is_empty() {
+            return;
+        }
+        if taken {
+            // a splinter of a tone already settled
+            let cells = patch.clone();
+            let keep: Vec<bool> = self
+                .lines
+                .iter()
+                .map(|l| !(self.inside(l, &cells) && unsteady(l)))
+                .collect();
+            let mut keep = keep.into_iter();
+            self.lines.retain(|_| keep.next().unwrap_or(true));
+            return;
+        }
+        let core = self.grow(patch.clone());
+        let noise = (core.start..core.end)
+            .step_by((core.len() / 8).max(1))
+            .map(|k| self.base(k))
+            .fold(f64::INFINITY, f64::min);
+        let (inner, outer): (Vec<Line>, Vec<Line>) = std::mem::take(&mut self.lines)
+            .into_iter()
+            .partition(|l| self.inside(l, &core));
+        for line in &inner {
+            self.residual.add(line, 1.0);
+        }
+        self.lines = outer;
+        if let Some(tone) = judge(self.residual.band(), core.clone(), noise) {
+            self.wanderers.push(tone);
+            return;
+        }
+        let cells = core.len() as f64;
+        let total: f64 = self.band().bins[core]
+            .iter()
+            .map(|z| f64::from(z.norm_sqr()))
+            .sum();
+        for line in inner {
+            // against the mean of the rest of the patch
+            let own = line.snr(self.band().samples) * line.noise;
+            let rest = ((total - own) / cells).max(line.noise);
+            let stands = own > threshold::ratio(1.0, cells / 2.0, 1e-4) * rest;
+            if !unsteady(&line) || stands {
+                self.residual.add(&line, -1.0);
+                self.lines.push(line);
+            }
+        }
+    }
+
+    /// Patches that stand out at coarser and coarser resolution.
+    fn coarse(&mut self, false_alarms: f64) {
+        let tests: usize = self.scales.iter().map(|c| c.power.len()).sum();
+        for scale in 0..self.scales.len() {
+            let patches: Vec<Range<usize>> =
+                stand_out(&self.scales[scale], false_alarms / tests as f64)
+                    .into_iter()
+                    .filter(|p| !self.explained(&self.scales[scale], p))
+                    .collect();
+            self.settle_all(patches);
+        }
+    }
+
+    /// Do the tones already found account for what stands out in a patch?
+    fn explained(&self, coarse: &Coarse, patch: &Range<usize>) -> bool {
+        let first = self.band().first_bin;
+        let of_lines: f64 = self
+            .lines
+            .iter()
+            .filter(|l| self.inside(l, patch))
+            .map(|l| l.snr(self.band().samples) * l.noise)
+            .sum();
+        let of_wanderers: f64 = self
+            .wanderers
+            .iter()
+            .filter(|w| w.cells.end > patch.start + first && w.cells.start < patch.end + first)
+            .map(|w| w.strength * w.strength * (w.present.1 - w.present.0))
+            .sum();
+        of_lines + of_wanderers > 0.7 * coarse.excess(patch)
     }
 }
 
@@ -455,27 +388,4 @@ fn shape_from_spread(ratios: &[f32]) -> f64 {
     let high = *r.select_nth_unstable_by(3 * q, f32::total_cmp).1;
     let spread = f64::from(high - low).max(1e-9);
     (1.349 / spread).powi(2)
-}
-
-/// Do the tones already found account for what stands out in a patch?
-fn explained(
-    band: &Band,
-    coarse: &Coarse,
-    patch: &Range<usize>,
-    lines: &[Line],
-    wanderers: &[Wanderer],
-) -> bool {
-    let offset = band.first_bin as f64;
-    let (a, b) = (patch.start as f64 - 3.0, patch.end as f64 + 2.0);
-    let of_lines: f64 = lines
-        .iter()
-        .filter(|l| l.bin - offset > a && l.bin - offset < b)
-        .map(|l| l.snr(band.samples) * l.noise)
-        .sum();
-    let of_wanderers: f64 = wanderers
-        .iter()
-        .filter(|w| w.cells.end as f64 - offset > a && (w.cells.start as f64) - offset < b)
-        .map(|w| w.strength * w.strength * (w.present.1 - w.present.0))
-        .sum();
-    of_lines + of_wanderers > 0.7 * coarse.excess(patch)
 }

@@ -141,26 +141,19 @@ impl Patch {
     }
 }
 
-/// What a patch turned out to be.
-pub enum Judged {
-    /// One tone.
-    Tone(Wanderer),
-    /// No tone: noise shaped like a hump, or several things at once.
-    Noise,
-}
-
 /// Judges the cells `core` of `band` (indices into its bins) standing on a floor
-/// of `noise` per cell.
-pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Judged {
+/// of `noise` per cell: one tone, or `None` for noise shaped like a hump or
+/// several things at once.
+pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wanderer> {
     let pad = (core.len() / 4).max(6);
     let cells = core.start.saturating_sub(pad)..(core.end + pad).min(band.bins.len());
     if cells.len() < 12 {
-        return Judged::Noise;
+        return None;
     }
     let patch = Patch::cut(band, cells.clone(), noise);
     let tone_power = patch.power - patch.noise;
     if tone_power <= 0.0 {
-        return Judged::Noise;
+        return None;
     }
     // Independent samples: what Gaussian noise of this shape would be worth.
     let (sum, sum2) = band.bins[cells.clone()]
@@ -183,18 +176,16 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Judged {
     // amplitude-modulated or disturbed one may be.
     let constant = 2.0 - steadiness >= 0.5 * share * share;
     if !constant || steadiness_of_noise(worth, steadiness) > NOISE_CALLED_TONE {
-        return Judged::Noise;
+        return None;
     }
-    let Some(track) = track(&patch, from, to, mean_power - patch.noise) else {
-        return Judged::Noise;
-    };
+    let track = track(&patch, from, to, mean_power - patch.noise)?;
     let n = track.len() as f64;
     let mean = track.iter().map(|p| p.bin).sum::<f64>() / n;
     let variance = track.iter().map(|p| (p.bin - mean).powi(2)).sum::<f64>() / n;
     let measured = track.iter().map(|p| p.sd * p.sd).sum::<f64>() / n;
     let duty = on.len() as f64 / patch.z.len() as f64;
     let samples_share = band.samples as f64 / band.grid as f64;
-    Judged::Tone(Wanderer {
+    Some(Wanderer {
         bin: mean,
         bin_sd: (measured / n).sqrt(),
         wander: (variance - measured).max(0.0).sqrt(),
