@@ -12,6 +12,7 @@ const TAKEN: [&str; 2] = ["unlisted", "recorder"];
 
 pub(super) fn link(mut entries: Vec<Entry>) -> Result<Catalogue, SiteError> {
     let index = by_name(&entries)?;
+    check_total(&entries)?;
     let mut latents = Vec::new();
     // What can be ridden on or fed from, and the finished sources, each in the place
     // of its entry.
@@ -89,9 +90,10 @@ pub(super) fn link(mut entries: Vec<Entry>) -> Result<Catalogue, SiteError> {
         }
     }
 
-    let sources: Vec<Source> = sources.into_iter().flatten().collect();
-    check_total(&entries, &sources)?;
-    Ok(Catalogue { latents, sources })
+    Ok(Catalogue {
+        latents,
+        sources: sources.into_iter().flatten().collect(),
+    })
 }
 
 fn with_latent((latent, source): (LatentId, Source)) -> (Option<LatentId>, Option<Source>) {
@@ -218,10 +220,11 @@ fn turning(
     Err(SiteError::key(on.line, "on", Problem::Cycle { got }))
 }
 
-fn check_total(entries: &[Entry], sources: &[Source]) -> Result<(), SiteError> {
+/// Before anything is expanded, so that no file can ask for more memory than this.
+fn check_total(entries: &[Entry]) -> Result<(), SiteError> {
     let mut total = 0;
-    for (entry, source) in entries.iter().zip(sources) {
-        total += source.lines.len();
+    for entry in entries {
+        total += entry.most_lines();
         if total > MAX_LINES {
             return Err(SiteError::key(
                 entry.line,
