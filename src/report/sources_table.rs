@@ -173,6 +173,16 @@ mod tests {
         let lines: usize = site.catalogue.sources.iter().map(|s| s.lines.len()).sum();
         assert_eq!(rows, lines + site.catalogue.sources.len());
         assert!(text.contains("mains 50 Hz (mains, 50 lines)\n"));
+        // EN 50160: 50 Hz ± 1 % (from memory).
+        let cells = |n: usize| {
+            text.lines()
+                .nth(n)
+                .unwrap()
+                .split_whitespace()
+                .collect::<Vec<_>>()
+        };
+        assert_eq!(cells(4), ["line", "hz", "u95_hz"]);
+        assert_eq!(cells(5), ["1x", "50.000", "0.50"]);
         assert!(
             text.contains(
                 "rests on watch crystal: 32768.000 Hz ± 3.3 Hz (100 ppm), crystal-locked"

@@ -78,10 +78,10 @@ pub(super) fn link(mut entries: Vec<Entry>) -> Result<Catalogue, SiteError> {
     for (i, entry) in entries.iter().enumerate() {
         let source = match &entry.description {
             Description::Gear { gear, on } => {
-                gear.expand(turning(&entries, &latent_of, i, on, &find)?).1
+                gear.expand(turning(&entries, &latent_of, on, &find)?).1
             }
             Description::Bearing { bearing, on } => {
-                bearing.expand(turning(&entries, &latent_of, i, on, &find)?)
+                bearing.expand(turning(&entries, &latent_of, on, &find)?)
             }
             _ => continue,
         };
@@ -194,18 +194,13 @@ fn settle(
 fn turning(
     entries: &[Entry],
     latent_of: &[Option<LatentId>],
-    rider: usize,
     on: &Reference,
     find: &impl Fn(&Reference, &'static str) -> Result<Found, SiteError>,
 ) -> Result<Turning, SiteError> {
     let mut at = find(on, "on")?.at;
     let mut ratio = 1.0;
-    // A chain longer than the list goes round in a circle, perhaps one that this
-    // rider is not itself part of.
+    // A chain longer than the list goes round in a circle.
     for _ in 0..=entries.len() {
-        if at == rider {
-            break;
-        }
         if let Some(latent) = latent_of.get(at).copied().flatten() {
             return Ok(Turning { latent, ratio });
         }
