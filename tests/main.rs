@@ -1,3 +1,5 @@
 //! Integration tests: the program and the library seen from outside.
+#![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
 mod fold;
+mod sources;

@@ -1,1 +1,3 @@
 //! report
+
+pub mod sources_table;

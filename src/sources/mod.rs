@@ -4,6 +4,82 @@
 //! Line `j` of a source lies at `f_j = Σ_l a_jl·θ_l` where `θ_l` are latents
 //! (the mains frequency, a shaft's speed, a carrier) with a normal prior. Kinds
 //! that ride on one another (a gear on a shaft) share the latent.
+//!
+//! One file per kind describes a source and expands it into lines:
+//! [`mains`], [`shaft`], [`clock`], [`drive`], [`motor`], [`gear`],
+//! [`bearing`], [`tone`]. [`Site::load`] reads a site file or a plain list;
+//! [`Site::builtin`] stands in where there is none.
+//!
+//! # Site file
+//! Two tables, `[recorder]` and `[[source]]`. Every source has a `name` and a
+//! `kind`; the other keys, with their defaults in parentheses:
+//!
+//! | kind | keys |
+//! |---|---|
+//! | `mains` | `hz`, `tolerance` (1 %), `orders` (50) |
+//! | `shaft` | `rpm` or `hz`, `tolerance` (3 %), `orders` (10), `vanes` |
+//! | `clock` | `hz`, `tolerance` (100 ppm), `orders` (10), `sideband_hz`, `sideband_tolerance` (1 %), `sidebands` (3) |
+//! | `drive` | `carrier_hz`, `carrier_tolerance` (3 %), `output_hz`, `output_tolerance` (5 %), `orders` (10); `tolerance` is of both |
+//! | `motor` | `mains_hz` with `mains_tolerance` (1 %), or `fed_by`; `poles`; `rpm` with `tolerance` (the slip, and the supply's), or `slip`; `rotor_bars` |
+//! | `gear` | `on`, `teeth`, `ratio` (1) |
+//! | `bearing` | `on`, `balls`, `ball_mm`, `pitch_mm`, `angle_deg` (0), `tolerance` of each line (2 %) |
+//! | `tone` | `hz`, `tolerance` (1 %) |
+//!
+//! `fed_by` names a mains or a drive, `on` a shaft, a motor or a gear (which then
+//! carries on its own shaft). A motor on a drive may give `mains_hz` too: the
+//! frequency its nameplate's `rpm` is stated for, where that is not 50 or 60 Hz.
+//! Tolerances are ± with 95 %: `"1 %"`, `"100 ppm"`, `"0.5 Hz"`. A range of slip is
+//! `"2..5 %"` or `[0.02, 0.05]`.
+//!
+//! `[recorder]` takes `clock_ppm`, `bandwidth_hz`, `aperture_s`, `stages`,
+//! `full_scale`, and `antialias` with `family`, `order`, `corner_hz` and, as the
+//! family needs them, `ripple_db` and `stop_db`.
+//!
+//! ```
+//! use foldtrace::sources::Site;
+//!
+//! let site = Site::from_toml(
+//!     r#"
+//!     [[source]]
+//!     name = "fan shaft"
+//!     kind = "shaft"
+//!     rpm = 1740
+//!     vanes = 7
+//!     "#,
+//! )?;
+//! let fan = &site.catalogue.sources[0];
+//! let vane_pass = fan.lines.iter().find(|line| line.label == "7x").unwrap();
+//! assert_eq!(site.catalogue.nominal_hz(vane_pass), 203.0);
+//!
+//! let error = Site::from_toml("[[source]]\nkind = \"shaft\"\nrmp = 1740").unwrap_err();
+//! assert!(error.to_string().starts_with("line 3: key `rmp`: is not known here, did you mean `rpm`?"));
+//! # Ok::<(), foldtrace::sources::SiteError>(())
+//! ```
+//!
+//! # Weights
+//! Line weights say how often a line shows, not how strong it is. Whether a line
+//! clears the noise goes with the logarithm of its amplitude, so a family whose
+//! amplitudes fall as 1/k shows its multiples less and less, but more slowly than
+//! that; most kinds here use `k^-1/2`. This is a choice of this project, not a
+//! measured law.
+
+pub mod bearing;
+pub mod builtin;
+pub mod clock;
+pub mod drive;
+mod error;
+pub mod gear;
+pub mod mains;
+pub mod motor;
+pub mod quantity;
+pub mod shaft;
+mod site_file;
+pub mod tone;
+
+pub use error::{Problem, SiteError};
+pub use site_file::MAX_LINES_PER_SOURCE;
+
+use quantity::Tolerance;
 
 /// Index of a latent in [`Catalogue::latents`].
 #[derive(Debug, Clone, Copy, PartialEq, Eq, PartialOrd, Ord, Hash, serde::Serialize)]
@@ -83,6 +159,105 @@ pub enum Kind {
     Bearing,
     /// A single line.
     Tone,
+}
+
+impl Kind {
+    /// Every kind, in the order of the documentation.
+    pub const ALL: [Kind; 8] = [
+        Kind::Mains,
+        Kind::Shaft,
+        Kind::Clock,
+        Kind::Drive,
+        Kind::Motor,
+        Kind::Gear,
+        Kind::Bearing,
+        Kind::Tone,
+    ];
+
+    /// The word of the site file: `mains`, `shaft`, …
+    pub fn as_str(self) -> &'static str {
+        match self {
+            Kind::Mains => "mains",
+            Kind::Shaft => "shaft",
+            Kind::Clock => "clock",
+            Kind::Drive => "drive",
+            Kind::Motor => "motor",
+            Kind::Gear => "gear",
+            Kind::Bearing => "bearing",
+            Kind::Tone => "tone",
+        }
+    }
+}
+
+impl std::fmt::Display for Kind {
+    fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
+        f.pad(self.as_str())
+    }
+}
+
+/// A shaft as seen by what rides on it: `ratio` turns for each turn of the latent.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Turning {
+    /// The latent speed.
+    pub latent: LatentId,
+    /// Turns per turn of the latent, > 0.
+    pub ratio: f64,
+}
+
+/// Appends a latent and returns its index.
+fn push_latent(
+    latents: &mut Vec<Latent>,
+    name: String,
+    nominal_hz: f64,
+    tolerance: Tolerance,
+    steadiness: Steadiness,
+) -> LatentId {
+    latents.push(Latent {
+        name,
+        nominal_hz,
+        sd_hz: tolerance.sd_hz(nominal_hz),
+        steadiness,
+    });
+    LatentId(latents.len() - 1)
+}
+
+/// A line without uncertainty of its own. Terms on one latent are joined and
+/// those that cancel are dropped.
+fn line(label: String, parts: &[(LatentId, f64)], weight: f64) -> Line {
+    let mut terms: Vec<(LatentId, f64)> = Vec::with_capacity(parts.len());
+    for &(latent, multiplier) in parts {
+        match terms.iter_mut().find(|(known, _)| *known == latent) {
+            Some((_, sum)) => *sum += multiplier,
+            None => terms.push((latent, multiplier)),
+        }
+    }
+    terms.retain(|&(_, multiplier)| multiplier != 0.0);
+    Line {
+        label,
+        terms,
+        extra_rel_sd: 0.0,
+        weight,
+    }
+}
+
+/// `+2s`, `-1s`; nothing for zero.
+fn signed(n: i32, unit: &str) -> String {
+    if n == 0 {
+        String::new()
+    } else {
+        format!("{n:+}{unit}")
+    }
+}
+
+/// A source of the analyst's own: no citation, excluding no other.
+fn source(name: &str, kind: Kind, lines: Vec<Line>) -> Source {
+    Source {
+        name: name.to_owned(),
+        kind,
+        lines,
+        citation: String::new(),
+        exclusive_group: None,
+    }
 }
 
 /// Everything listed, ready for inference.
