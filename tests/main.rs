@@ -3,3 +3,4 @@
 
 mod fold;
 mod sources;
+mod windows;

@@ -1,3 +1,4 @@
+<<<<<<< HEAD
 //! From blocks of samples to spectra: transforms, averaged periodograms, the
 //! noise floor, and narrow slices of the transform of the whole recording.
 //!
@@ -58,3 +59,8 @@ impl Band {
         Some(if mirrored { x.conj() } else { x })
     }
 }
+=======
+//! spectrum
+
+pub mod window;
+>>>>>>> fold
