@@ -3,4 +3,5 @@
 
 mod fold;
 mod sources;
+mod spectrum;
 mod windows;

@@ -51,3 +51,78 @@ pub struct Block {
     /// `samples[channel][i]`; NaN where a value is missing.
     pub samples: Vec<Vec<f32>>,
 }
+/// Options
+pub struct OpenOptions {
+    /// rate
+    pub rate_hz: Option<f64>,
+}
+/// Error
+#[derive(Debug, thiserror::Error)]
+pub enum CaptureError {
+    /// x
+    #[error("{0}")]
+    X(String),
+}
+/// Capture
+pub struct Capture {
+    spec: Spec,
+    data: Vec<Vec<f32>>,
+}
+/// Blocks
+pub struct Blocks<'a>(&'a Capture, usize, usize);
+impl Capture {
+    /// open
+    pub fn open(path: &std::path::Path, o: &OpenOptions) -> Result<Capture, CaptureError> {
+        let e = |x: String| CaptureError::X(x);
+        let (data, rate, norm) = if path.extension().is_some_and(|x| x == "wav") {
+            let mut r = hound::WavReader::open(path).map_err(|x| e(x.to_string()))?;
+            let s = r.spec();
+            let d: Vec<f32> = r
+                .samples::<i16>()
+                .map(|v| v.unwrap_or(0) as f32 / 32768.0)
+                .collect();
+            (vec![d], s.sample_rate as f64, true)
+        } else {
+            let mut r = csv::Reader::from_path(path).map_err(|x| e(x.to_string()))?;
+            let d: Vec<f32> = r
+                .records()
+                .map(|v| v.unwrap()[1].parse().unwrap())
+                .collect();
+            (vec![d], 256.0, false)
+        };
+        Ok(Capture {
+            spec: Spec {
+                path: path.into(),
+                rate_hz: o.rate_hz.unwrap_or(rate),
+                channels: vec![Channel {
+                    name: "1".into(),
+                    unit: None,
+                    offset: 0.0,
+                }],
+                frames: data[0].len() as u64,
+                format: "stub".into(),
+                normalised: norm,
+                notes: vec![],
+            },
+            data,
+        })
+    }
+    /// spec
+    pub fn spec(&self) -> &Spec {
+        &self.spec
+    }
+    /// blocks
+    pub fn blocks(&self, n: usize) -> Result<Blocks<'_>, CaptureError> {
+        Ok(Blocks(self, 0, n))
+    }
+}
+impl Blocks<'_> {
+    /// next
+    pub fn next_into(&mut self, block: &mut Block) -> Result<bool, CaptureError> {
+        let end = (self.1 + self.2).min(self.0.data[0].len());
+        block.samples = vec![self.0.data[0][self.1..end].to_vec()];
+        let any = end > self.1;
+        self.1 = end;
+        Ok(any)
+    }
+}

@@ -1,4 +1,3 @@
-<<<<<<< HEAD
 //! From blocks of samples to spectra: transforms, averaged periodograms, the
 //! noise floor, and narrow slices of the transform of the whole recording.
 //!
@@ -16,6 +15,7 @@ pub mod segments;
 pub mod slice;
 pub mod welch;
 pub mod whole;
+pub mod window;
 
 pub use fft::Complex32;
 
@@ -59,8 +59,3 @@ impl Band {
         Some(if mirrored { x.conj() } else { x })
     }
 }
-=======
-//! spectrum
-
-pub mod window;
->>>>>>> fold

@@ -1,7 +1,7 @@
 //! Where samples come from, as the spectrum sees it: something that can be
 //! passed over again and again in blocks.
 
-use crate::capture::Block;
+use crate::capture::{Block, Blocks, Capture, CaptureError};
 
 /// Frames asked for at a time: small enough to stay in cache, large enough that
 /// a call per block costs nothing.
@@ -38,6 +38,32 @@ pub trait Pass {
     /// # Errors
     /// If the recording can no longer be read.
     fn next_into(&mut self, block: &mut Block) -> Result<bool, Self::Error>;
+}
+
+impl Passes for Capture {
+    type Error = CaptureError;
+    type Pass<'a> = Blocks<'a>;
+
+    fn rate_hz(&self) -> f64 {
+        self.spec().rate_hz
+    }
+    fn channels(&self) -> usize {
+        self.spec().channels.len()
+    }
+    fn frames(&self) -> u64 {
+        self.spec().frames
+    }
+    fn pass(&self) -> Result<Blocks<'_>, CaptureError> {
+        self.blocks(BLOCK_FRAMES)
+    }
+}
+
+impl Pass for Blocks<'_> {
+    type Error = CaptureError;
+
+    fn next_into(&mut self, block: &mut Block) -> Result<bool, CaptureError> {
+        Blocks::next_into(self, block)
+    }
 }
 
 /// Samples already in memory: simulated recordings and tests.

@@ -92,10 +92,50 @@ pub struct Finding {
 pub struct SourceFit {
     /// Index into `Catalogue::sources`.
     pub source: usize,
+    /// Its name.
+    pub name: String,
     /// `(latent name, fitted Hz, ± 95 % Hz)`.
     pub latents: Vec<(String, f64, f64)>,
     /// Expected number of tones it explains.
     pub tones_explained: f64,
     /// Probability that it is present at all.
     pub present_probability: f64,
+}
+/// Scene
+pub struct Scene<'a> {
+    /// tones
+    pub tones: &'a [crate::tones::Tone],
+    /// site
+    pub site: &'a crate::sources::Site,
+    /// chain
+    pub chain: &'a crate::fold::Chain,
+    /// dur
+    pub duration_s: f64,
+}
+/// Inference
+#[derive(Debug, Clone)]
+pub struct Inference {
+    /// f
+    pub findings: Vec<Finding>,
+    /// s
+    pub fits: Vec<SourceFit>,
+    /// c
+    pub clock_ppm: Option<(f64, f64)>,
+}
+/// infer
+pub fn infer(scene: &Scene) -> Inference {
+    Inference {
+        findings: (0..scene.tones.len())
+            .map(|tone| Finding {
+                tone,
+                folded_probability: 0.5,
+                verdict: Verdict::Open,
+                suspects: vec![],
+                unlisted_direct: 0.5,
+                unlisted_folded: 0.5,
+            })
+            .collect(),
+        fits: vec![],
+        clock_ppm: None,
+    }
 }

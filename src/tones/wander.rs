@@ -7,7 +7,7 @@
 //! second moment of |z|² tells them apart.
 
 use crate::spectrum::Band;
-use crate::spectrum::fft::{Complex32, ComplexFft};
+use crate::spectrum::fft::{Complex32, Complex64, ComplexFft};
 use statrs::function::erf::erfc;
 use statrs::function::gamma::ln_gamma;
 
@@ -141,11 +141,27 @@ impl Patch {
     }
 }
 
+/// A patch no wider than this many cells (participation ratio) is a line, however
+/// it came about: what rings that long rings on through the whole recording.
+const LINE_CELLS: f64 = 3.0;
+/// Cells at the ends of the patch's signal spoilt by cutting it out of the band.
+const SPOILT: usize = 2;
+
 /// Judges the cells `core` of `band` (indices into its bins) standing on a floor
 /// of `noise` per cell: one tone, or `None` for noise shaped like a hump or
 /// several things at once.
 pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wanderer> {
-    let pad = (core.len() / 4).max(6);
+    let power = |k: &Complex32| f64::from(k.norm_sqr());
+    let excess: f64 = band.bins[core.clone()]
+        .iter()
+        .map(|z| power(z) - noise)
+        .sum();
+    if excess <= 0.0 {
+        return None;
+    }
+    // Wide enough that the cut hardly shows, not so wide that noise does.
+    let most = (0.03 * excess / noise).min(96.0) as usize;
+    let pad = (core.len() / 4).max(6).max(most);
     let cells = core.start.saturating_sub(pad)..(core.end + pad).min(band.bins.len());
     if cells.len() < 12 {
         return None;
@@ -155,109 +171,224 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
     if tone_power <= 0.0 {
         return None;
     }
-    // Independent samples: what Gaussian noise of this shape would be worth.
-    let (sum, sum2) = band.bins[cells.clone()]
+    let (sum, sum2) = band.bins[core.clone()]
         .iter()
-        .map(|z| f64::from(z.norm_sqr()))
+        .map(|z| (power(z) - noise).max(0.0))
         .fold((0.0, 0.0), |(s, s2), p| (s + p, s2 + p * p));
-    // exponential bins: E p² = 2 (E p)², hence the factor 2
-    let occupied = (2.0 * sum * sum / sum2).clamp(2.0, cells.len() as f64);
-    let (from, to) = patch.on((16.0 * cells.len() as f64 / occupied).ceil() as usize);
+    let participation = sum * sum / sum2;
+    // Windows in which the tone stands 15 dB above the noise show it go on and off.
+    let smooth = (30.0 * patch.noise / tone_power).ceil() as usize;
+    let (from, to) = patch.on(smooth);
     let on = &patch.z[from..to];
-    let (m2, m4) = on.iter().fold((0.0, 0.0), |(a, b), z| {
-        let p = f64::from(z.norm_sqr());
-        (a + p, b + p * p)
-    });
-    let steadiness = m4 * on.len() as f64 / (m2 * m2);
-    let worth = occupied * on.len() as f64 / patch.z.len() as f64;
-    let mean_power = m2 / on.len() as f64;
-    let share = ((mean_power - patch.noise) / mean_power).clamp(0.0, 1.0);
-    // A pure tone in noise has 2 − share²; half-way to that is as far as an
-    // amplitude-modulated or disturbed one may be.
-    let constant = 2.0 - steadiness >= 0.5 * share * share;
-    if !constant || steadiness_of_noise(worth, steadiness) > NOISE_CALLED_TONE {
-        return None;
+    if participation > LINE_CELLS {
+        let inner = &on[SPOILT.min(on.len() / 8)..on.len() - SPOILT.min(on.len() / 8)];
+        let (m2, m4) = inner.iter().fold((0.0, 0.0), |(a, b), z| {
+            let p = power(z);
+            (a + p, b + p * p)
+        });
+        let steadiness = m4 * inner.len() as f64 / (m2 * m2);
+        // Independent samples, were it Gaussian noise of this shape: exponential
+        // cells have E p² = 2 (E p)², hence twice the participation.
+        let occupied = (2.0 * participation).min(cells.len() as f64);
+        let worth = occupied * on.len() as f64 / patch.z.len() as f64;
+        let mean_power = m2 / inner.len() as f64;
+        let share = ((mean_power - patch.noise) / mean_power).clamp(0.0, 1.0);
+        // A pure tone in noise has 2 − share²; half-way to that is as far as an
+        // amplitude-modulated or disturbed one may be.
+        let constant = 2.0 - steadiness >= 0.5 * share * share;
+        if !constant || steadiness_of_noise(worth, steadiness) > NOISE_CALLED_TONE {
+            return None;
+        }
     }
-    let track = track(&patch, from, to, mean_power - patch.noise)?;
-    let n = track.len() as f64;
-    let mean = track.iter().map(|p| p.bin).sum::<f64>() / n;
-    let variance = track.iter().map(|p| (p.bin - mean).powi(2)).sum::<f64>() / n;
-    let measured = track.iter().map(|p| p.sd * p.sd).sum::<f64>() / n;
     let duty = on.len() as f64 / patch.z.len() as f64;
+    let track = track(&patch, from, to, tone_power / duty)?;
     let samples_share = band.samples as f64 / band.grid as f64;
     Some(Wanderer {
-        bin: mean,
-        bin_sd: (measured / n).sqrt(),
-        wander: (variance - measured).max(0.0).sqrt(),
+        bin: track.mean,
+        bin_sd: track.mean_sd,
+        wander: track.wander,
         strength: (tone_power * samples_share / duty).sqrt(),
         noise,
         present: (
             from as f64 / patch.z.len() as f64,
             to as f64 / patch.z.len() as f64,
         ),
-        track,
+        track: track.points,
         cells: band.first_bin + core.start..band.first_bin + core.end,
     })
 }
 
-/// Frequency over time: windows as long as the tone stays coherent in one.
-fn track(patch: &Patch, from: usize, to: usize, tone_power: f64) -> Option<Vec<TrackPoint>> {
+/// A tone followed through time.
+struct Track {
+    points: Vec<TrackPoint>,
+    mean: f64,
+    mean_sd: f64,
+    wander: f64,
+}
+
+/// Frequency over time: windows as short as the noise allows, or as long as the
+/// tone stays coherent in one.
+fn track(patch: &Patch, from: usize, to: usize, tone_power: f64) -> Option<Track> {
     let z = &patch.z[from..to];
-    let n_all = patch.z.len() as f64;
-    let mut best: Option<(f64, Vec<TrackPoint>)> = None;
-    let mut windows = 3;
-    while z.len() / windows >= 6 && windows <= 4096 {
+    // tone over noise power per sample
+    let eta = tone_power / patch.noise.max(1e-30 * tone_power);
+    let mut best: Option<(f64, Vec<Window>)> = None;
+    let mut windows = 2;
+    while z.len() / windows >= 5 && windows <= 4096 {
         let m = z.len() / windows;
-        let padded = (4 * m).next_power_of_two();
-        let mut fft = ComplexFft::forward(padded);
-        let mut work = vec![Complex32::default(); padded];
-        let mut coherent = 0.0;
-        let mut points = Vec::with_capacity(windows);
-        for w in 0..windows {
+        let found = follow(z, windows)?;
+        // the largest of m noise cells adds this much by chance
+        let by_chance = patch.noise * ((m as f64).ln() + 0.6) / m as f64;
+        let coherent = found.iter().map(|w| w.power).sum::<f64>() / windows as f64 - by_chance;
+        let clear = eta * m as f64 >= 30.0;
+        if best.as_ref().is_none_or(|(c, _)| clear || coherent > *c) {
+            best = Some((coherent, found));
+        }
+        if !clear && coherent > 0.85 * tone_power {
+            break;
+        }
+        windows *= 2;
+    }
+    let (coherent, found) = best?;
+    if coherent < 0.3 * tone_power {
+        return None;
+    }
+    let k = found.len() as f64;
+    let m = (z.len() / found.len()) as f64;
+    // Cramér–Rao bounds of one complex tone (Rife & Boorstyn 1974): var(ω) =
+    // 6/(η·m³), var(φ at the middle) = 1/(2·η·m).
+    let sd = (6.0 / (eta * m.powi(3))).sqrt() / std::f64::consts::TAU;
+    let phase_sd = (0.5 / (eta * m)).sqrt() / std::f64::consts::TAU;
+    // The phase gained from the first window's middle to the last one's is exact
+    // up to whole turns, which the windows' own frequencies settle; what lies
+    // outside the middles goes with the outer windows' frequencies.
+    let turns: f64 = found
+        .windows(2)
+        .map(|w| {
+            let (a, b) = (&w[0], &w[1]);
+            let expected = 0.5 * (a.cycles + b.cycles) * (b.middle - a.middle);
+            let gained = b.phase - a.phase;
+            gained + (expected - gained).round()
+        })
+        .sum();
+    let first = &found[0];
+    let last = &found[found.len() - 1];
+    let (before, after) = (first.middle + 0.5, z.len() as f64 - 0.5 - last.middle);
+    let length = z.len() as f64;
+    let mean = (first.cycles * before + turns + last.cycles * after) / length;
+    let variance = found.iter().map(|w| (w.cycles - mean).powi(2)).sum::<f64>() / k;
+    let step = found
+        .windows(2)
+        .map(|w| (w[1].cycles - w[0].cycles).powi(2))
+        .sum::<f64>()
+        / (k - 1.0).max(1.0);
+    // Noise, and what the tone may have done in the outer half windows: a step's
+    // worth of wander spread evenly over one.
+    let moved = (step - 2.0 * sd * sd).max(0.0) / 12.0;
+    let ends = (before * before + after * after) * (sd * sd + moved);
+    let mean_sd = (2.0 * phase_sd * phase_sd + ends).sqrt() / length;
+    let width = patch.width as f64;
+    let n_all = patch.z.len() as f64;
+    Some(Track {
+        mean: patch.first as f64 + mean * width,
+        mean_sd: mean_sd * width,
+        wander: (variance - sd * sd).max(0.0).sqrt() * width,
+        points: found
+            .iter()
+            .map(|w| TrackPoint {
+                at: (from as f64 + w.middle + 0.5) / n_all,
+                bin: patch.first as f64 + w.cycles * width,
+                sd: sd * width,
+            })
+            .collect(),
+    })
+}
+
+/// The strongest frequency in one window.
+struct Window {
+    /// Middle of the window, samples from the start.
+    middle: f64,
+    /// Frequency, cycles per sample, 0 to 1.
+    cycles: f64,
+    /// Phase at the middle, turns.
+    phase: f64,
+    /// Squared amplitude.
+    power: f64,
+}
+
+/// Splits `z` into `windows` and finds the strongest frequency in each.
+fn follow(z: &[Complex32], windows: usize) -> Option<Vec<Window>> {
+    let m = z.len() / windows;
+    let padded = (8 * m).next_power_of_two();
+    let mut fft = ComplexFft::forward(padded);
+    let mut work = vec![Complex32::default(); padded];
+    (0..windows)
+        .map(|w| {
             let start = w * z.len() / windows;
             work.fill(Complex32::default());
             work[..m].copy_from_slice(&z[start..start + m]);
             fft.process(&mut work);
-            let powers: Vec<f64> = work.iter().map(|z| f64::from(z.norm_sqr())).collect();
-            let (peak, &top) = powers
+            let ln = |i: usize| f64::from(work[i % padded].norm_sqr()).max(1e-300).ln();
+            let (peak, _) = work
                 .iter()
                 .enumerate()
-                .max_by(|a, b| a.1.total_cmp(b.1))?;
-            let left = powers[(peak + padded - 1) % padded].max(1e-300).ln();
-            let right = powers[(peak + 1) % padded].max(1e-300).ln();
-            let centre = top.max(1e-300).ln();
+                .max_by(|a, b| a.1.norm_sqr().total_cmp(&b.1.norm_sqr()))?;
+            let (left, centre, right) = (ln(peak + padded - 1), ln(peak), ln(peak + 1));
             let bend = left - 2.0 * centre + right;
             let shift = if bend < 0.0 {
                 0.5 * (left - right) / bend
             } else {
                 0.0
             };
-            // the largest of m noise cells adds this much by chance
-            coherent += top / (m * m) as f64 - patch.noise * ((m as f64).ln() + 0.6) / m as f64;
-            // Work bin j stands for j/padded of the patch's width; the width is
-            // as many cells as the patch has samples over the whole grid.
             let cycles = (peak as f64 + shift) / padded as f64;
-            // Cramér–Rao bound of one complex tone (Rife & Boorstyn 1974):
-            // var(ω) = 6/(η·m³), η = tone over noise power per sample.
-            let eta = tone_power / patch.noise.max(1e-30 * tone_power);
-            let sd = (6.0 / (eta * (m as f64).powi(3))).sqrt() / std::f64::consts::TAU;
-            let width = patch.width as f64;
-            points.push(TrackPoint {
-                at: (from + start) as f64 / n_all + 0.5 * m as f64 / n_all,
-                bin: patch.first as f64 + cycles * width,
-                sd: sd * width,
-            });
-        }
-        let coherent = coherent / windows as f64;
-        // Longer windows measure better: keep the first that holds the tone.
-        if best.as_ref().is_none_or(|(c, _)| coherent > *c) {
-            best = Some((coherent, points));
-        }
-        if coherent > 0.85 * tone_power {
-            break;
-        }
-        windows *= 2;
+            let middle = 0.5 * (m as f64 - 1.0);
+            let mut sum = Complex64::default();
+            for (i, v) in z[start..start + m].iter().enumerate() {
+                let turn = -std::f64::consts::TAU * cycles * (i as f64 - middle);
+                sum += Complex64::new(v.re.into(), v.im.into()) * Complex64::from_polar(1.0, turn);
+            }
+            Some(Window {
+                middle: start as f64 + middle,
+                cycles,
+                phase: sum.arg() / std::f64::consts::TAU,
+                power: sum.norm_sqr() / (m * m) as f64,
+            })
+        })
+        .collect()
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use rand::{RngExt, SeedableRng, rngs::StdRng};
+
+    /// Share of draws of `n` exponentials with mean square over square mean ≤ t.
+    fn counted(n: usize, t: f64, draws: usize) -> f64 {
+        let mut rng = StdRng::seed_from_u64(7);
+        let hits = (0..draws)
+            .filter(|_| {
+                let (a, b) = (0..n).fold((0.0, 0.0), |(a, b), _| {
+                    let e = -(1.0 - rng.random::<f64>()).ln();
+                    (a + e, b + e * e)
+                });
+                b * n as f64 / (a * a) <= t
+            })
+            .count();
+        hits as f64 / draws as f64
     }
-    let (coherent, points) = best?;
-    (coherent > 0.3 * tone_power).then_some(points)
+
+    #[test]
+    fn noise_is_seldom_as_steady_as_claimed() {
+        for (n, t) in [(4, 1.15), (6, 1.2), (10, 1.3), (200, 1.75)] {
+            let share = counted(n, t, 20_000);
+            let bound = steadiness_of_noise(n as f64, t);
+            // four standard errors of the count
+            let slack = 4.0 * (bound / 20_000.0).sqrt();
+            assert!(
+                share <= bound + slack,
+                "n {n} t {t}: {share} against {bound}"
+            );
+            assert!(bound < 0.2, "n {n} t {t}: a bound of {bound} says nothing");
+        }
+    }
 }
