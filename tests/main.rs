@@ -2,6 +2,7 @@
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
 mod fold;
+mod frontend;
 mod sources;
 mod spectrum;
 mod windows;

@@ -288,3 +288,79 @@ fn a_windowed_sine_has_the_reference_power() {
         );
     }
 }
+
+/// The integers of the reference's recipe: `x → (1103515245·x + 12345) mod 2³¹` from
+/// 1, each `(x >> 16) − 16384`.
+fn test_noise(count: usize) -> Vec<f64> {
+    let mut x: u64 = 1;
+    (0..count)
+        .map(|_| {
+            x = (1_103_515_245 * x + 12_345) % (1 << 31);
+            (x >> 16) as f64 - 16_384.0
+        })
+        .collect()
+}
+
+/// Welch's averaged periodogram written out plainly: one-sided density of Hann
+/// segments with half overlap.
+fn naive_welch(samples: &[f64], rate_hz: f64, segment: usize) -> Vec<f64> {
+    let window = Window::Hann.coefficients(segment);
+    let fft = FftPlanner::new().plan_fft_forward(segment);
+    let mut density = vec![0.0; segment / 2 + 1];
+    let starts: Vec<usize> = (0..=samples.len() - segment).step_by(segment / 2).collect();
+    for &start in &starts {
+        let mut buffer: Vec<Complex<f64>> = samples[start..start + segment]
+            .iter()
+            .zip(&window)
+            .map(|(x, w)| Complex::new(x * w, 0.0))
+            .collect();
+        fft.process(&mut buffer);
+        for (d, c) in density.iter_mut().zip(&buffer) {
+            *d += c.norm_sqr();
+        }
+    }
+    let power: f64 = window.iter().map(|w| w * w).sum();
+    for (bin, d) in density.iter_mut().enumerate() {
+        let sides = if bin == 0 || bin == segment / 2 {
+            1.0
+        } else {
+            2.0
+        };
+        *d *= sides / (rate_hz * power * starts.len() as f64);
+    }
+    density
+}
+
+#[test]
+fn averaged_periodograms_match_the_reference() {
+    let rows = reference(include_str!("reference/welch.csv"));
+    let noise = test_noise(2048);
+    let tone: Vec<f64> = noise
+        .iter()
+        .enumerate()
+        .map(|(i, x)| {
+            let square = if (i / 9) % 2 == 0 { 8192.0 } else { -8192.0 };
+            (x / 256.0).floor() + square
+        })
+        .collect();
+    for (name, samples) in [("noise", noise), ("tone", tone)] {
+        let density = naive_welch(&samples, 8000.0, 256);
+        let expected = rows.iter().filter(|row| row["signal"] == name);
+        assert_eq!(expected.clone().count(), density.len());
+        let largest = density.iter().copied().fold(0.0, f64::max);
+        for (row, got) in expected.zip(&density) {
+            let density: f64 = row["density"].parse().unwrap();
+            let power: f64 = row["power"].parse().unwrap();
+            // Budget: a transform of 256 doubles, rounding relative to the largest bin
+            // in amplitude.
+            let budget = 1e-13 * (density * largest).sqrt();
+            assert!((got - density).abs() < budget, "{name} {row:?}: {got}");
+            // The two scalings differ by the noise bandwidth.
+            let bandwidth_hz = Window::Hann.enbw_bins() * 8000.0 / 256.0;
+            assert!(
+                (power / (density * bandwidth_hz) - 1.0).abs() < 1e-12,
+                "{row:?}"
+            );
+        }
+    }
+}

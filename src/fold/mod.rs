@@ -142,9 +142,15 @@ fn segment(k: f64, r: f64, half: f64, edge: Edge) -> f64 {
     }
 }
 
+/// Parity of a whole number ≥ 0, without the slow remainder of floats. Beyond 2⁵³
+/// every double is even.
+fn is_odd(whole: f64) -> bool {
+    whole < TWO_POW_53 && whole as u64 & 1 == 1
+}
+
 /// Whether a count of reflections inverts the spectrum.
 fn sense_of(turns: f64) -> Sense {
-    if turns % 2.0 == 1.0 {
+    if is_odd(turns) {
         Sense::Inverted
     } else {
         Sense::Upright
@@ -208,7 +214,7 @@ impl Iterator for Rungs {
         let at_top = self.seen_hz >= 0.5 * self.rate_hz;
         let at_edge = at_top || self.seen_hz == 0.0;
         loop {
-            let rises = self.segment % 2.0 == 0.0;
+            let rises = !is_odd(self.segment);
             let hz = if rises {
                 (0.5 * self.segment).mul_add(self.rate_hz, self.seen_hz)
             } else {

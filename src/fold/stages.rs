@@ -1,7 +1,7 @@
 //! What one stage of a [`Chain`](super::Chain) does to a frequency, forwards and
 //! backwards, and the count of turns along the way.
 
-use super::{Edge, nearest_multiple, segment};
+use super::{Edge, is_odd, nearest_multiple, segment};
 
 /// One rate of a chain.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -23,8 +23,12 @@ impl Stage {
     /// Turns of this and the later stages up to a point in segment `index`, the
     /// later ones' share of that segment excepted.
     fn turns(&self, index: f64) -> f64 {
-        let descending = index % 2.0;
-        index * (self.inner_turns + 1.0) + descending * self.inner_turns
+        let sweeps = index * (self.inner_turns + 1.0);
+        if is_odd(index) {
+            sweeps + self.inner_turns
+        } else {
+            sweeps
+        }
     }
 }
 
@@ -40,7 +44,7 @@ pub(super) fn walk(stages: &[Stage], x: f64, edge: Edge) -> (f64, f64) {
     for stage in stages {
         let (index, folded) = stage.fold(x, edge);
         turns += sign * stage.turns(index);
-        if index % 2.0 != 0.0 {
+        if is_odd(index) {
             sign = -sign;
             edge = edge.flipped();
         }
@@ -78,7 +82,7 @@ impl Part {
     fn advance(&mut self, crossed: f64, hz: f64) {
         self.hz = hz;
         self.crossed += crossed;
-        if crossed % 2.0 != 0.0 {
+        if is_odd(crossed) {
             self.edge = self.edge.flipped();
         }
     }
@@ -89,7 +93,7 @@ impl Part {
             rate_hz, half_hz, ..
         } = *stage;
         let position = move |order: f64| {
-            if order % 2.0 == 0.0 {
+            if !is_odd(order) {
                 (0.5 * order).mul_add(rate_hz, self.hz)
             } else {
                 (0.5 * (order + 1.0)).mul_add(rate_hz, -self.hz)
@@ -101,7 +105,7 @@ impl Part {
             .take_while(move |&(_, hz)| hz <= top_hz)
             .filter(move |&(order, _)| {
                 // At the ends of the band images meet in pairs.
-                let odd = order % 2.0 != 0.0;
+                let odd = is_odd(order);
                 if odd {
                     self.hz < half_hz
                 } else {
@@ -142,7 +146,7 @@ impl Candidate {
             .step_by(step)
             .map(f64::from)
             .map(move |index| {
-                let rises = index % 2.0 == 0.0;
+                let rises = !is_odd(index);
                 let hz = if rises {
                     (0.5 * index).mul_add(stage.rate_hz, self.hz)
                 } else {
@@ -173,7 +177,7 @@ impl Candidate {
     /// Turns up to this frequency in segment `index` of `stage`: the formulas of
     /// [`walk`], backwards.
     fn turns(self, stage: &Stage, index: f64, edge: Edge) -> f64 {
-        let rises = index % 2.0 == 0.0;
+        let rises = !is_odd(index);
         let later = match (edge, rises) {
             (Edge::Above, true) => self.above,
             (Edge::Above, false) => -self.below,

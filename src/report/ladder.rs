@@ -91,23 +91,23 @@ const HEADINGS: [&str; 7] = [
 ];
 
 impl Row {
-    /// True and seen frequency without the dust of rounding.
+    /// True and seen frequency, cycles and π radians per sample, all without the dust
+    /// of rounding.
     ///
-    /// Both carry a unit in the last place of the largest number on the way from one
-    /// to the other, so neither is printed beyond a few of those.
-    fn frequencies(&self, chain: &Chain) -> [String; 2] {
+    /// They carry a unit in the last place of the largest number on the way from true
+    /// to seen, so none is printed beyond a few of those.
+    fn numbers(&self, chain: &Chain) -> [String; 4] {
+        let rate_hz = chain.file_rate_hz();
         let scale = chain.rates_hz().fold(self.true_hz.0.abs(), f64::max);
         let resolution = 16.0 * f64::EPSILON * scale;
-        [self.true_hz.0, self.seen.seen.0].map(|hz| plain(hz, resolution))
-    }
-
-    /// Cycles and π radians per sample.
-    fn normalised(&self, chain: &Chain) -> [String; 2] {
-        let rate_hz = chain.file_rate_hz();
+        let hz = |value| plain(value, resolution.max(1e-9));
+        let normalised = |value| plain(value, (resolution / rate_hz).max(1e-12));
         let seen = self.seen.seen;
         [
-            plain(cycles_per_sample(seen, rate_hz), 1e-9),
-            plain(pi_radians_per_sample(seen, rate_hz), 1e-9),
+            hz(self.true_hz.0),
+            hz(seen.0),
+            normalised(cycles_per_sample(seen, rate_hz)),
+            normalised(pi_radians_per_sample(seen, rate_hz)),
         ]
     }
 }
@@ -118,7 +118,7 @@ fn write_rows(rows: &[Row], chain: &Chain, out: &mut dyn Write) -> io::Result<()
     let mut seen_hz = Layout::of(h_seen);
     let mut zone_width = h_zone.len();
     for row in rows {
-        let [t, s] = row.frequencies(chain);
+        let [t, s, ..] = row.numbers(chain);
         true_hz.fit(&t);
         seen_hz.fit(&s);
         zone_width = zone_width.max(row.seen.zone.to_string().len());
@@ -130,8 +130,7 @@ fn write_rows(rows: &[Row], chain: &Chain, out: &mut dyn Write) -> io::Result<()
         s = seen_hz.width(),
     )?;
     for row in rows {
-        let [t, s] = row.frequencies(chain);
-        let [cycles, pi] = row.normalised(chain);
+        let [t, s, cycles, pi] = row.numbers(chain);
         writeln!(
             out,
             "{}  {}  {zone:>zone_width$}  {sense:<8}  {image:<5}  {cycles:<c$}  {pi}",
@@ -160,6 +159,7 @@ fn digits(text: &str) -> (usize, usize) {
 /// How the numbers of a column are set: points below each other, padded behind with
 /// spaces, because a zero there would claim a digit.
 struct Layout {
+    heading: usize,
     before: usize,
     /// With the point.
     after: usize,
@@ -168,7 +168,8 @@ struct Layout {
 impl Layout {
     fn of(heading: &str) -> Self {
         Layout {
-            before: heading.len(),
+            heading: heading.len(),
+            before: 0,
             after: 0,
         }
     }
@@ -183,23 +184,23 @@ impl Layout {
     }
 
     fn width(&self) -> usize {
-        self.before + self.after
+        self.heading.max(self.before + self.after)
     }
 
     fn cell(&self, text: &str) -> String {
         let (before, _) = digits(text);
-        let padded = format!("{}{text}", " ".repeat(self.before.saturating_sub(before)));
-        format!("{padded:<width$}", width = self.width())
+        let padded = format!("{text:<w$}", w = before + self.after);
+        format!("{padded:>w$}", w = self.width())
     }
 }
 
-/// A number in plain decimals, as many as `resolution` leaves meaning (at most 9), no
-/// zeros at the end.
+/// A number in plain decimals, as many as `resolution` leaves meaning, no zeros at
+/// the end.
 fn plain(value: f64, resolution: f64) -> String {
     if !value.is_finite() {
         return value.to_string();
     }
-    let decimals = (-resolution.log10()).floor().clamp(0.0, 9.0) as usize;
+    let decimals = (-resolution.log10()).floor().clamp(0.0, 15.0) as usize;
     let text = format!("{value:.decimals$}");
     if text.contains('.') {
         text.trim_end_matches('0').trim_end_matches('.').to_string()
@@ -284,13 +285,13 @@ true_hz  seen_hz  zone  sense     image  cycles_per_sample  pi_rad_per_sample
     fn numbers_carry_no_rounding_dust() {
         for (value, resolution, text) in [
             (2000.0 - 1e-9, 1e-8, "2000"),
-            (0.1 + 0.2, 1e-15, "0.3"),
+            (0.1 + 0.2, 1e-12, "0.3"),
             (1e9 / 3.0, 1e-3, "333333333.333"),
             (62_500.0, 1e-11, "62500"),
             (0.0, 1e-15, "0"),
             (1e15, 1.0, "1000000000000000"),
             (0.02, 1e-15, "0.02"),
-            (100.0 - 1e-12, 1e-15, "100"),
+            (100.0 - 1e-12, 1e-9, "100"),
         ] {
             assert_eq!(plain(value, resolution), text);
         }
@@ -300,6 +301,9 @@ true_hz  seen_hz  zone  sense     image  cycles_per_sample  pi_rad_per_sample
         let text = fold_text(&[12_345_678.1], &[1000.0]);
         assert!(text.contains("  321.9  "), "{text}");
         let text = unfold_text(&[0.1], &[44_100.1], 1e6).unwrap();
-        assert!(!text.contains("99999") && !text.contains("00000"), "{text}");
+        for row in text.lines().skip(1) {
+            let true_hz = row.split_whitespace().next().unwrap();
+            assert!(digits(true_hz).1 <= 1, "{row}");
+        }
     }
 }
