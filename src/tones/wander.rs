@@ -192,11 +192,14 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
         let occupied = (2.0 * participation).min(cells.len() as f64);
         let worth = occupied * on.len() as f64 / patch.z.len() as f64;
         let mean_power = m2 / inner.len() as f64;
-        let share = ((mean_power - patch.noise) / mean_power).clamp(0.0, 1.0);
-        // A pure tone in noise has 2 − share²; half-way to that is as far as an
-        // amplitude-modulated or disturbed one may be.
-        let constant = 2.0 - steadiness >= 0.5 * share * share;
-        if !constant || steadiness_of_noise(worth, steadiness) > NOISE_CALLED_TONE {
+        // A tone with share s of the power in Gaussian noise has a steadiness of
+        // 2 − s², noise alone 2: so much of the way from noise to tone, less two
+        // standard errors of what the noise itself does to it.
+        let share = ((mean_power - patch.noise) / mean_power).clamp(0.05, 1.0);
+        let error = (8.0 * (1.0 - share) / inner.len() as f64).sqrt();
+        let cleaned = 2.0 - (2.0 - steadiness) / (share * share) + error;
+        // Half-way is as far as an amplitude-modulated or disturbed tone may be.
+        if cleaned > 1.5 || steadiness_of_noise(worth, cleaned) > NOISE_CALLED_TONE {
             return None;
         }
     }
