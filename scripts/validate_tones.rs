@@ -48,13 +48,13 @@ fn brown(rng: &mut StdRng, n: usize) -> Vec<f64> {
 }
 
 /// White noise plus two resonances of Q 5 to 500, 10 to 30 dB above it, at least
-/// 8 resolution cells wide (a narrower one rings on through the recording: it is
+/// 12 resolution cells wide (a narrower one rings on through the recording: it is
 /// a line in every respect that a recording can show).
 fn resonant(rng: &mut StdRng, n: usize) -> Vec<f64> {
     let mut x = white(rng, n);
     for _ in 0..2 {
         let f = 0.02 + 0.4 * rng.random::<f64>();
-        let q = (5.0 * 100f64.powf(rng.random())).min(f * n as f64 / 8.0);
+        let q = (5.0 * 100f64.powf(rng.random())).min(f * n as f64 / 12.0);
         let r = 1.0 - PI * f / q;
         let gain = (1.0 - r) * 10f64.powf(0.5 + rng.random::<f64>());
         let (a1, a2) = (2.0 * r * (TAU * f).cos(), -r * r);

@@ -11,8 +11,8 @@ use crate::spectrum::fft::{Complex32, Complex64, ComplexFft};
 use statrs::function::erf::erfc;
 use statrs::function::gamma::ln_gamma;
 
-/// Chance at which a patch of Gaussian noise would be called a tone, given that
-/// it stood out of the floor.
+/// Chance at which a patch of Gaussian noise 20 cells wide would be called a tone,
+/// given that it stood out of the floor.
 const NOISE_CALLED_TONE: f64 = 1e-4;
 
 /// A tone that wanders or comes and goes.
@@ -145,7 +145,7 @@ impl Patch {
 /// it came about: what rings that long rings on through the whole recording.
 const LINE_CELLS: f64 = 3.0;
 /// Cells at the ends of the patch's signal spoilt by cutting it out of the band.
-const SPOILT: usize = 2;
+const SPOILT: usize = 3;
 
 /// Judges the cells `core` of `band` (indices into its bins) standing on a floor
 /// of `noise` per cell: one tone, or `None` for noise shaped like a hump or
@@ -160,7 +160,7 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
         return None;
     }
     // Wide enough that the cut hardly shows, not so wide that noise does.
-    let most = (0.03 * excess / noise).min(96.0) as usize;
+    let most = (0.008 * excess / noise).min(64.0) as usize;
     let pad = (core.len() / 4).max(6).max(most);
     let cells = core.start.saturating_sub(pad)..(core.end + pad).min(band.bins.len());
     if cells.len() < 12 {
@@ -193,13 +193,13 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
         let worth = occupied * on.len() as f64 / patch.z.len() as f64;
         let mean_power = m2 / inner.len() as f64;
         // A tone with share s of the power in Gaussian noise has a steadiness of
-        // 2 − s², noise alone 2: so much of the way from noise to tone, less two
-        // standard errors of what the noise itself does to it.
-        let share = ((mean_power - patch.noise) / mean_power).clamp(0.05, 1.0);
-        let error = (8.0 * (1.0 - share) / inner.len() as f64).sqrt();
-        let cleaned = 2.0 - (2.0 - steadiness) / (share * share) + error;
-        // Half-way is as far as an amplitude-modulated or disturbed tone may be.
-        if cleaned > 1.5 || steadiness_of_noise(worth, cleaned) > NOISE_CALLED_TONE {
+        // 2 − s², noise alone 2; half-way is as far as an amplitude-modulated or
+        // disturbed tone may be.
+        let share = ((mean_power - patch.noise) / mean_power).clamp(0.0, 1.0);
+        // Humps so narrow are rarer still: the prior chance falls with width².
+        let chance = NOISE_CALLED_TONE * (20.0 / participation).powi(2).max(1.0);
+        if 2.0 - steadiness < 0.5 * share * share || steadiness_of_noise(worth, steadiness) > chance
+        {
             return None;
         }
     }
