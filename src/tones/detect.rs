@@ -19,6 +19,9 @@ const BUNCH: usize = 10;
 const SPLINTERS: usize = 4;
 /// Chance that noise alone makes a fitted steady line look unsteady.
 const UNSTEADY_CHANCE: f64 = 1e-4;
+/// A patch gathers the highest of many cells: it must hold this many times what
+/// a single steady line must.
+const PATCH_MARGIN: f64 = 3.0;
 /// Share of the false alarms granted to peaks at full resolution.
 const FINE_SHARE: f64 = 0.75;
 
@@ -76,6 +79,7 @@ pub fn detect(band: &Band, false_alarms: f64) -> Found {
         residual,
         lines,
         wanderers: Vec::new(),
+        threshold: level.fitted(View::Plain),
     };
     search.settle_all(patches);
     search.coarse((1.0 - FINE_SHARE) * false_alarms);
@@ -166,6 +170,8 @@ struct Patches {
     residual: Residual,
     lines: Vec<Line>,
     wanderers: Vec<Wanderer>,
+    /// What a steady line's power over noise must exceed.
+    threshold: f64,
 }
 
 impl Patches {
@@ -287,7 +293,11 @@ impl Patches {
             self.residual.add(line, 1.0);
         }
         self.lines = outer;
-        if let Some(tone) = judge(self.residual.band(), core.clone(), noise) {
+        // A patch that reaches down to 0 Hz is drift.
+        let drift = core.start + first < LOWEST;
+        let judged = judge(self.residual.band(), core, noise)
+            .filter(|t| !drift && t.strength.powi(2) > PATCH_MARGIN * self.threshold * noise);
+        if let Some(tone) = judged {
             self.wanderers.push(tone);
             return;
         }

@@ -11,9 +11,9 @@ use crate::spectrum::fft::{Complex32, Complex64, ComplexFft};
 use statrs::function::erf::erfc;
 use statrs::function::gamma::ln_gamma;
 
-/// Chance at which a patch of Gaussian noise 20 cells wide would be called a tone,
-/// given that it stood out of the floor.
-const NOISE_CALLED_TONE: f64 = 1e-4;
+/// Chance at which a patch of Gaussian noise would be called a tone, given that it
+/// stood out of the floor.
+const NOISE_CALLED_TONE: f64 = 5e-4;
 
 /// A tone that wanders or comes and goes.
 #[derive(Debug, Clone)]
@@ -196,8 +196,8 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
         // 2 − s², noise alone 2; half-way is as far as an amplitude-modulated or
         // disturbed tone may be.
         let share = ((mean_power - patch.noise) / mean_power).clamp(0.0, 1.0);
-        // Humps so narrow are rarer still: the prior chance falls with width².
-        let chance = NOISE_CALLED_TONE * (20.0 / participation).powi(2).max(1.0);
+        // Narrow humps are rare, and of wide ones steadiness alone says enough.
+        let chance = NOISE_CALLED_TONE * (20.0 / participation).powi(2).clamp(1.0, 30.0);
         if 2.0 - steadiness < 0.5 * share * share || steadiness_of_noise(worth, steadiness) > chance
         {
             return None;
