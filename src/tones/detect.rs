@@ -4,7 +4,7 @@
 //! not explain, and patches that stand out only when smoothed, are judged as
 //! wandering tones or dropped as humps of noise.
 
-use super::peaks::{LOWEST, peaks};
+use super::peaks::{LOWEST, Level, peaks};
 use super::refine::{Line, Residual, View, refine};
 use super::statistic::{Coarse, Fine};
 use super::threshold;
@@ -19,6 +19,8 @@ const BUNCH: usize = 10;
 const SPLINTERS: usize = 4;
 /// Chance that noise alone makes a fitted steady line look unsteady.
 const UNSTEADY_CHANCE: f64 = 1e-4;
+/// Chance that the highest cell of a hump passes for a line on it.
+const HUMP_CHANCE: f64 = 1e-6;
 /// A patch gathers the highest of many cells: it must hold this many times what
 /// a single steady line must.
 const PATCH_MARGIN: f64 = 3.0;
@@ -39,7 +41,8 @@ pub struct Found {
 /// it holds noise only.
 pub fn detect(band: &Band, false_alarms: f64) -> Found {
     let mut fine = Fine::new(band);
-    let (bunches, singles) = bunches(&peaks(band, &fine, FINE_SHARE * false_alarms));
+    let level = Level::new(&fine, FINE_SHARE * false_alarms);
+    let (bunches, singles) = bunches(&peaks(band, &fine, &level));
     let mut lines: Vec<Line> = singles.iter().map(|&i| start(band, &fine, i)).collect();
     let mut residual = refine(band, &mut lines);
     if !lines.is_empty() {
@@ -54,7 +57,7 @@ pub fn detect(band: &Band, false_alarms: f64) -> Found {
                     .iter()
                     .any(|b| b.start < i + BUNCH && i < b.end + BUNCH)
         };
-        let more: Vec<Line> = peaks(residual.band(), &rest, FINE_SHARE * false_alarms)
+        let more: Vec<Line> = peaks(residual.band(), &rest, &level)
             .into_iter()
             .filter(|&i| !near(i))
             .map(|i| start(band, &rest, i))
@@ -88,7 +91,7 @@ pub fn detect(band: &Band, false_alarms: f64) -> Found {
         wanderers,
         ..
     } = search;
-    lines.retain(|l| l.c.norm_sqr() > 0.0 && l.bin.is_finite());
+    lines.retain(|l| l.bin.is_finite() && stands_out(l, band.samples, &level));
     Found { lines, wanderers }
 }
 
@@ -138,6 +141,14 @@ fn start(band: &Band, fine: &Fine, i: usize) -> Line {
         view,
         leftover: 1.0,
     }
+}
+
+/// Does a fitted line exceed the final threshold, over what is left around it
+/// if that is clearly more than the floor?
+fn stands_out(line: &Line, samples: usize, level: &Level) -> bool {
+    // 17 cells of noise are within a half of their mean 98 % of the time
+    let raised = (line.leftover / 1.5).max(1.0);
+    line.snr(samples) > raised * level.fitted(line.view)
 }
 
 /// Is there more around a fitted line than noise explains?
@@ -301,16 +312,11 @@ impl Patches {
             self.wanderers.push(tone);
             return;
         }
-        let cells = core.len() as f64;
-        let total: f64 = self.band().bins[core]
-            .iter()
-            .map(|z| f64::from(z.norm_sqr()))
-            .sum();
         for line in inner {
-            // against the mean of the rest of the patch
-            let own = line.snr(self.band().samples) * line.noise;
-            let rest = ((total - own) / cells).max(line.noise);
-            let stands = own > threshold::ratio(1.0, cells / 2.0, 1e-4) * rest;
+            // An unsteady line that is not a tone of its own is the highest of
+            // the cells of a hump; the 17 around it tell how high those are.
+            let stands = line.snr(self.band().samples)
+                > line.leftover * threshold::ratio(1.0, 8.0, HUMP_CHANCE);
             if !unsteady(&line) || stands {
                 self.residual.add(&line, -1.0);
                 self.lines.push(line);

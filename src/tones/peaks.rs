@@ -4,6 +4,7 @@ use super::refine::View;
 use super::statistic::Fine;
 use super::threshold;
 use crate::spectrum::Band;
+use crate::spectrum::floor::Floor;
 use std::collections::BTreeMap;
 
 /// Cells from 0 that are left alone: a tone with fewer periods in the whole
@@ -12,17 +13,56 @@ pub const LOWEST: usize = 4;
 /// Chance that a cell of a pedestal or hump passes for a line on it.
 const RAGGED_CHANCE: f64 = 1e-5;
 
-/// Cells that exceed the threshold in some view and are not a stronger peak's
-/// leakage, strongest first.
-pub fn peaks(band: &Band, fine: &Fine, false_alarms: f64) -> Vec<usize> {
+/// How high a cell, and later a fitted line, must stand.
+pub struct Level {
+    /// Share of the false alarms per cell.
+    per_cell: f64,
+    /// Cells that the floors are worth.
+    plain_worth: f64,
+    hann_worth: f64,
+}
+
+/// A cell is looked at from here on, as a share of what a fitted line must
+/// reach: between two cells the best view is 0.9 dB low.
+const FIRST_LOOK: f64 = 0.8;
+
+impl Level {
+    /// For `false_alarms` expected in the band when it holds noise only.
+    pub fn new(fine: &Fine, false_alarms: f64) -> Level {
+        let worth =
+            |floor: &Floor, power: &[f32], lag| floor.cells / correlation(power, &floor.level, lag);
+        Level {
+            per_cell: false_alarms / fine.plain.len() as f64,
+            plain_worth: worth(&fine.plain_floor, &fine.plain, 1),
+            hann_worth: worth(&fine.hann_floor, &fine.hann, 3),
+        }
+    }
+
+    /// What a fitted line's power over noise must exceed.
+    ///
+    /// The fit takes the highest point of a continuous spectrum. By Rice's
+    /// formula that of N cells exceeds T about N·√(πT/3)·exp(−T) times.
+    pub fn fitted(&self, view: View) -> f64 {
+        let crossings = (std::f64::consts::PI * 16.0 / 3.0).sqrt();
+        let worth = match view {
+            View::Plain => self.plain_worth,
+            View::Hann => self.hann_worth,
+        };
+        let t = threshold::ratio(1.0, worth, (self.per_cell / crossings).min(0.5));
+        match view {
+            View::Plain => t,
+            // a Hann window passes 1.5 cells of noise
+            View::Hann => 1.5 * t,
+        }
+    }
+}
+
+/// Cells that stand out in some view and are not a stronger peak's leakage,
+/// strongest first.
+pub fn peaks(band: &Band, fine: &Fine, level: &Level) -> Vec<usize> {
     let n = band.bins.len();
-    // Three views of a cell, closely correlated, exceed a high threshold about
-    // 1.7 times as often as one (counted on white noise at 1e-3 to 1e-5).
-    let pfa = false_alarms / (1.7 * n as f64);
-    let plain_worth = fine.plain_floor.cells / correlation(&fine.plain, &fine.plain_floor.level, 1);
-    let hann_worth = fine.hann_floor.cells / correlation(&fine.hann, &fine.hann_floor.level, 3);
-    let plain_ratio = threshold::ratio(1.0, plain_worth, pfa) as f32;
-    let hann_ratio = threshold::ratio(1.0, hann_worth, pfa) as f32;
+    let plain_ratio = (FIRST_LOOK * level.fitted(View::Plain)) as f32;
+    let hann_ratio = (FIRST_LOOK * level.fitted(View::Hann) / 1.5) as f32;
     let lowest = LOWEST.saturating_sub(band.first_bin);
     let highest = n.saturating_sub(if 2 * (band.first_bin + n) > band.grid {
         2
