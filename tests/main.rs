@@ -1,8 +1,10 @@
 //! Integration tests: the program and the library seen from outside.
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
+mod cli;
 mod fold;
 mod frontend;
+mod sample_data;
 mod sources;
 mod spectrum;
 mod windows;
