@@ -7,4 +7,5 @@ mod frontend;
 mod sample_data;
 mod sources;
 mod spectrum;
+mod tones;
 mod windows;

@@ -42,7 +42,7 @@ pub trait Pass {
 
 impl Passes for Capture {
     type Error = CaptureError;
-    type Pass<'a> = Blocks<'a>;
+    type Pass<'a> = Blocks;
 
     fn rate_hz(&self) -> f64 {
         self.spec().rate_hz
@@ -53,12 +53,12 @@ impl Passes for Capture {
     fn frames(&self) -> u64 {
         self.spec().frames
     }
-    fn pass(&self) -> Result<Blocks<'_>, CaptureError> {
+    fn pass(&self) -> Result<Blocks, CaptureError> {
         self.blocks(BLOCK_FRAMES)
     }
 }
 
-impl Pass for Blocks<'_> {
+impl Pass for Blocks {
     type Error = CaptureError;
 
     fn next_into(&mut self, block: &mut Block) -> Result<bool, CaptureError> {
