@@ -1,1 +1,3 @@
 //! Integration tests: the program and the library seen from outside.
+
+mod capture;
