@@ -1,0 +1,190 @@
+//! Single cells of a table: numbers, missing values, column names and units.
+
+use super::text::to_text;
+
+/// What a cell holds.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub(super) enum Cell {
+    Number(f64),
+    /// Nothing, or one of the usual marks for nothing.
+    Missing,
+    Word,
+}
+
+/// Marks of a missing value, in lower case. NaN and infinities are missing too.
+const MISSING: &[&str] = &[
+    "-",
+    "--",
+    "---",
+    "*",
+    "?",
+    "na",
+    "n/a",
+    "#n/a",
+    "n.a.",
+    "null",
+    "nil",
+    "none",
+    "ol",
+    "o.l",
+    "+ol",
+    "-ol",
+    "over",
+    "overload",
+    "overflow",
+    "ovl",
+    "ovf",
+    "invalid",
+    "bad",
+    "err",
+    "error",
+    "#value!",
+    "#div/0!",
+    "#num!",
+    "#ref!",
+    "missing",
+    "1.#ind",
+    "-1.#ind",
+    "1.#qnan",
+    "-1.#qnan",
+    "1.#inf",
+    "-1.#inf",
+    "-nan(ind)",
+];
+
+/// Reads a cell: decimal point or comma, exponent, either minus sign.
+pub(super) fn read_cell(bytes: &[u8]) -> Cell {
+    let bytes = trim(bytes);
+    if bytes.is_empty() {
+        return Cell::Missing;
+    }
+    match parse(bytes).or_else(|| parse_mended(bytes)) {
+        Some(number) if number.is_finite() => Cell::Number(number),
+        Some(_) => Cell::Missing,
+        None if is_missing_mark(bytes) => Cell::Missing,
+        None => Cell::Word,
+    }
+}
+
+/// Without blanks, also the non-breaking ones of Latin-1 and UTF-8.
+pub(super) fn trim(bytes: &[u8]) -> &[u8] {
+    let mut bytes = bytes.trim_ascii();
+    loop {
+        let trimmed = bytes
+            .strip_prefix(b"\xC2\xA0")
+            .or_else(|| bytes.strip_suffix(b"\xC2\xA0"))
+            .or_else(|| bytes.strip_suffix(b"\xA0"));
+        match trimmed {
+            // A multi-byte character may end in 0xA0.
+            Some(rest) if rest.is_ascii() => bytes = rest.trim_ascii(),
+            _ => return bytes,
+        }
+    }
+}
+
+fn parse(bytes: &[u8]) -> Option<f64> {
+    std::str::from_utf8(bytes).ok()?.parse().ok()
+}
+
+/// Decimal comma, and the minus sign of typography.
+fn parse_mended(bytes: &[u8]) -> Option<f64> {
+    const LONGEST: usize = 64;
+    const MINUS: &[u8] = "\u{2212}".as_bytes();
+    let (sign, digits) = match bytes.strip_prefix(MINUS) {
+        Some(rest) => (-1.0, rest),
+        None => (1.0, bytes),
+    };
+    if sign < 0.0
+        && !digits
+            .first()
+            .is_some_and(|&c| c.is_ascii_digit() || c == b'.' || c == b',')
+    {
+        return None;
+    }
+    let mut buffer = [0; LONGEST];
+    let copy = buffer.get_mut(..digits.len())?;
+    copy.copy_from_slice(digits);
+    let mut marks = copy.iter_mut().filter(|c| matches!(c, b',' | b'.'));
+    // Two marks would be thousands separators, which cannot be told apart.
+    if let (Some(mark), None) = (marks.next(), marks.next()) {
+        *mark = b'.';
+    }
+    parse(copy).map(|number| sign * number)
+}
+
+fn is_missing_mark(bytes: &[u8]) -> bool {
+    MISSING
+        .iter()
+        .any(|mark| bytes.eq_ignore_ascii_case(mark.as_bytes()))
+}
+
+/// Whether a record is a remark: `#`, `%`, `//`, or a `;` that is not the
+/// delimiter.
+pub(super) fn is_remark(first: &[u8], delimiter: u8) -> bool {
+    let first = first.trim_ascii_start();
+    first.starts_with(b"#") && !first.eq_ignore_ascii_case(b"#n/a")
+        || first.starts_with(b"%")
+        || first.starts_with(b"//")
+        || (first.starts_with(b";") && delimiter != b';')
+}
+
+/// A column's heading, taken apart.
+#[derive(Debug, Clone, Default, PartialEq)]
+pub(super) struct Heading {
+    /// Without the unit.
+    pub name: String,
+    pub unit: Option<String>,
+}
+
+/// `accel [m/s^2]`, `U (V)`, `t/s` or plain `x`.
+pub(super) fn read_heading(bytes: &[u8]) -> Heading {
+    let text = to_text(bytes);
+    let text = text.trim_matches(|c: char| c.is_whitespace() || c.is_control() || c == '\u{FEFF}');
+    for (open, close) in [('[', ']'), ('(', ')'), ('{', '}'), ('<', '>')] {
+        let inside = text
+            .strip_suffix(close)
+            .and_then(|rest| rest.rsplit_once(open));
+        if let Some((name, unit)) = inside {
+            let (name, unit) = (name.trim(), unit.trim());
+            // "x (left)" is a name, but a bracketed unit may be any word.
+            if !unit.is_empty() && (open == '[' || is_unit(unit)) {
+                let name = if name.is_empty() { text } else { name };
+                return Heading {
+                    name: name.into(),
+                    unit: Some(unit.into()),
+                };
+            }
+        }
+    }
+    for separator in ['/', ','] {
+        if let Some((name, unit)) = text.split_once(separator) {
+            if is_unit(unit.trim()) && !name.trim().is_empty() {
+                return Heading {
+                    name: name.trim().into(),
+                    unit: Some(unit.trim().into()),
+                };
+            }
+        }
+    }
+    Heading {
+        name: text.into(),
+        unit: None,
+    }
+}
+
+/// Units of what recorders measure, without prefix.
+const UNITS: &[&str] = &[
+    "s", "sec", "min", "h", "V", "A", "W", "VA", "var", "Hz", "g", "m/s^2", "m/s²", "m/s2",
+    "m/s**2", "m/s", "m", "in", "in/s", "mil", "mils", "ips", "Pa", "bar", "psi", "N", "Nm", "N·m",
+    "N*m", "T", "G", "gauss", "K", "C", "degC", "°C", "F", "degF", "°F", "deg", "°", "rad",
+    "rad/s", "deg/s", "°/s", "rpm", "1/min", "min-1", "r/min", "%", "dB", "dBm", "dBV", "ohm", "Ω",
+    "F", "H", "C", "lx", "e", "eV", "V/m", "A/m", "l/min", "m3/h", "m³/h", "strain", "m/m", "1",
+    "pu", "p.u.", "counts", "LSB", "FS", "Vrms", "Arms", "Vpp", "gn", "g_n",
+];
+
+/// Whether `text` is a known unit, with or without a prefix.
+pub(super) fn is_unit(text: &str) -> bool {
+    const PREFIXES: &[char] = &['n', 'u', 'µ', 'μ', 'm', 'c', 'k', 'M', 'G', 'p'];
+    let known = |unit: &str| UNITS.contains(&unit);
+    known(text) || text.strip_prefix(PREFIXES).is_some_and(known)
+}

@@ -1,0 +1,385 @@
+//! What a table is like, from its first lines: delimiter, where the rows of
+//! numbers start, headings, units, and which column is the time.
+
+use csv::ByteRecord;
+
+use super::cells::{Cell, Heading, is_remark, is_unit, read_cell, read_heading};
+use super::error::CaptureError;
+use super::stamps::StampFormat;
+use super::text::LONGEST_LINE;
+
+/// Lines looked at.
+const MOST_LINES: usize = 1000;
+/// Delimiters, the less ambiguous first.
+const DELIMITERS: &[u8] = b"\t;,";
+
+/// The plan for reading a table.
+#[derive(Debug, Clone, PartialEq)]
+pub(super) struct Table {
+    pub delimiter: u8,
+    /// Bytes of decoded text before the first row of numbers.
+    pub skip_bytes: u64,
+    /// 1-based line of that row.
+    pub first_line: u64,
+    pub columns: Vec<Heading>,
+    pub time: Option<TimeColumn>,
+    /// Indices of the columns of values.
+    pub values: Vec<usize>,
+    /// Indices of columns that are neither.
+    left_out: Vec<usize>,
+    pub notes: Vec<String>,
+}
+
+/// The column of time stamps.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub(super) struct TimeColumn {
+    pub column: usize,
+    pub format: StampFormat,
+}
+
+struct Line {
+    /// Bytes before it.
+    start: usize,
+    /// 1-based.
+    number: u64,
+    cells: ByteRecord,
+    remark: bool,
+}
+
+/// How the cells of a column mostly read.
+#[derive(Debug, Clone, Copy, Default, PartialEq)]
+struct Tally {
+    numbers: usize,
+    words: usize,
+}
+
+impl Tally {
+    fn numeric(self) -> bool {
+        self.numbers > self.words
+    }
+}
+
+/// Finds the layout of the table that starts with `head`. `whole`: the head is
+/// all there is.
+pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table, CaptureError> {
+    if head.trim_ascii().is_empty() {
+        return Err(if whole {
+            CaptureError::Empty
+        } else {
+            CaptureError::NoNumbers
+        });
+    }
+    let lines = physical_lines(head, whole)?;
+    let (delimiter, records) = DELIMITERS
+        .iter()
+        .map(|&delimiter| (delimiter, split(&lines, delimiter)))
+        .reduce(|best, next| {
+            if score(&next.1) > score(&best.1) {
+                next
+            } else {
+                best
+            }
+        })
+        .ok_or(CaptureError::NoNumbers)?;
+    let width = usual_width(&records);
+    let tallies = tally(&records, width);
+    let first = records.iter().position(|line| is_data(line, &tallies));
+    let Some(first) = first else {
+        let header_only = whole && records.iter().filter(|line| !line.remark).count() <= 2;
+        return Err(if header_only {
+            CaptureError::NoSamples
+        } else {
+            CaptureError::NoNumbers
+        });
+    };
+    super::limit_channels(width as u64)?;
+    // Rows with a bad cell may come first; a heading starts with a word.
+    let earlier = records.iter().take(first).rev();
+    let first = first
+        - earlier
+            .take_while(|line| is_spoilt_data(line, &tallies))
+            .count();
+    let (before, data) = records.split_at(first);
+    let mut table = Table {
+        delimiter,
+        skip_bytes: data.first().map_or(0, |line| line.start as u64),
+        first_line: data.first().map_or(1, |line| line.number),
+        columns: headings(before, width),
+        time: None,
+        values: Vec::new(),
+        left_out: Vec::new(),
+        notes: Vec::new(),
+    };
+    super::csv_time::find_time(&mut table, &rows(data), rate_given)?;
+    choose_values(&mut table, data, &tallies)?;
+    Ok(table)
+}
+
+/// The lines that are no remarks.
+fn rows(data: &[Line]) -> Vec<&ByteRecord> {
+    data.iter()
+        .filter(|line| !line.remark)
+        .map(|line| &line.cells)
+        .collect()
+}
+
+/// Start and bytes of each line.
+fn physical_lines(head: &[u8], whole: bool) -> Result<Vec<(usize, &[u8])>, CaptureError> {
+    let mut lines = Vec::new();
+    let mut start = 0;
+    for line in head.split_inclusive(|&c| c == b'\n').take(MOST_LINES) {
+        let complete = line.ends_with(b"\n");
+        if line.len() > LONGEST_LINE {
+            let line = lines.len() as u64 + 1;
+            return Err(CaptureError::LineTooLong {
+                line,
+                limit: LONGEST_LINE,
+            });
+        }
+        if complete || whole {
+            lines.push((start, line));
+        }
+        start += line.len();
+    }
+    Ok(lines)
+}
+
+/// Splits each line for itself, so that a stray quote spoils one line only.
+fn split(lines: &[(usize, &[u8])], delimiter: u8) -> Vec<Line> {
+    let mut split = Vec::new();
+    for (&(start, bytes), number) in lines.iter().zip(1..) {
+        let mut cells = ByteRecord::new();
+        let read = csv::ReaderBuilder::new()
+            .has_headers(false)
+            .delimiter(delimiter)
+            .buffer_capacity(bytes.len().max(1))
+            .from_reader(bytes)
+            .read_byte_record(&mut cells);
+        if matches!(read, Ok(true)) {
+            let remark = is_remark(cells.get(0).unwrap_or_default(), delimiter);
+            split.push(Line {
+                start,
+                number,
+                cells,
+                remark,
+            });
+        }
+    }
+    split
+}
+
+fn tally_cell(cell: &[u8]) -> (usize, usize) {
+    match read_cell(cell) {
+        Cell::Number(_) => (1, 0),
+        Cell::Missing => (0, 0),
+        Cell::Word => (0, 1),
+    }
+}
+
+/// Numbers less words, over the lines that hold a number.
+fn score(lines: &[Line]) -> i64 {
+    let width = usual_width(lines);
+    let of_line = |line: &Line| {
+        let (numbers, words) = line
+            .cells
+            .iter()
+            .map(tally_cell)
+            .fold((0, 0), |(n, w), (number, word)| (n + number, w + word));
+        if numbers > 0 {
+            numbers as i64 - words as i64
+        } else {
+            -1
+        }
+    };
+    lines
+        .iter()
+        .filter(|line| !line.remark && line.cells.len() == width)
+        .map(of_line)
+        .sum()
+}
+
+/// The commonest number of cells among the lines with a number in them.
+fn usual_width(lines: &[Line]) -> usize {
+    let mut counts = std::collections::BTreeMap::new();
+    for line in lines.iter().filter(|line| !line.remark) {
+        if line.cells.iter().any(|cell| tally_cell(cell).0 > 0) {
+            *counts.entry(line.cells.len()).or_insert(0) += 1;
+        }
+    }
+    counts
+        .into_iter()
+        .max_by_key(|&(width, count)| (count, width))
+        .map_or(1, |(width, _)| width)
+}
+
+fn tally(lines: &[Line], width: usize) -> Vec<Tally> {
+    let mut tallies = vec![Tally::default(); width];
+    for line in lines
+        .iter()
+        .filter(|line| !line.remark && line.cells.len() == width)
+    {
+        for (tally, cell) in tallies.iter_mut().zip(&line.cells) {
+            let (number, word) = tally_cell(cell);
+            tally.numbers += number;
+            tally.words += word;
+        }
+    }
+    tallies
+}
+
+/// A row of numbers: as wide as usual, with no word where numbers are usual.
+fn is_data(line: &Line, tallies: &[Tally]) -> bool {
+    let mut numbers = 0;
+    let mut words = 0;
+    for (cell, tally) in line.cells.iter().zip(tallies) {
+        if tally.numeric() {
+            let (number, word) = tally_cell(cell);
+            numbers += number;
+            words += word;
+        }
+    }
+    !line.remark && line.cells.len() == tallies.len() && numbers > 0 && words == 0
+}
+
+/// A row whose first number is there, if not the others.
+fn is_spoilt_data(line: &Line, tallies: &[Tally]) -> bool {
+    let first = line
+        .cells
+        .iter()
+        .zip(tallies)
+        .find(|(_, tally)| tally.numeric());
+    !line.remark
+        && line.cells.len() == tallies.len()
+        && first.is_some_and(|(cell, _)| tally_cell(cell).0 > 0)
+}
+
+/// Names and units from the lines before the data.
+fn headings(before: &[Line], width: usize) -> Vec<Heading> {
+    let mut rows = before
+        .iter()
+        .rev()
+        .map(header_cells)
+        .skip_while(|cells| cells.iter().all(|cell| cell.is_empty()));
+    let fits = |cells: &Vec<Vec<u8>>| {
+        // A trailing delimiter may be in the header or in the rows only.
+        let filled = cells.iter().filter(|cell| !cell.is_empty()).count();
+        let numbers = cells.iter().filter(|cell| tally_cell(cell).0 > 0).count();
+        cells.len().abs_diff(width) <= 1 && 2 * numbers <= filled && (width == 1 || filled > 1)
+    };
+    let last = rows.next().filter(fits);
+    let mut units = None;
+    let mut names = last;
+    if names
+        .as_ref()
+        .is_some_and(|cells| cells.iter().all(|cell| is_unit_cell(cell)))
+    {
+        // A row of units only, if there are names above it.
+        if let Some(above) = rows.next().filter(fits) {
+            units = names.replace(above);
+        }
+    }
+    (0..width)
+        .map(|column| {
+            let cell = |row: &Option<Vec<Vec<u8>>>| {
+                row.as_ref()
+                    .and_then(|row| row.get(column))
+                    .cloned()
+                    .unwrap_or_default()
+            };
+            let mut heading = read_heading(&cell(&names));
+            let unit = read_heading(&cell(&units));
+            let unit = unit.unit.unwrap_or(unit.name);
+            if !unit.is_empty() {
+                heading.unit = Some(unit.trim_matches(['[', ']', '(', ')']).into());
+            }
+            heading
+        })
+        .collect()
+}
+
+/// The cells of a line before the data, without the mark of a remark.
+fn header_cells(line: &Line) -> Vec<Vec<u8>> {
+    let mut cells: Vec<Vec<u8>> = line
+        .cells
+        .iter()
+        .map(|cell| super::cells::trim(cell).to_vec())
+        .collect();
+    if line.remark {
+        if let Some(first) = cells.first_mut() {
+            let marks = first.iter().take_while(|c| b"#%/; \t".contains(c)).count();
+            first.drain(..marks);
+        }
+    }
+    cells
+}
+
+fn is_unit_cell(cell: &[u8]) -> bool {
+    let text = super::text::to_text(cell);
+    let bare = text.trim().trim_matches(['[', ']', '(', ')']);
+    bare.is_empty()
+        || bare == "-"
+        || bare.len() < text.trim().len()
+        || is_unit(bare)
+        || StampFormat::from_unit(bare).is_some()
+}
+
+/// Columns of numbers are channels; what else there is, is noted.
+fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<(), CaptureError> {
+    let time = table.time.map(|time| time.column);
+    for (column, tally) in tallies.iter().enumerate() {
+        let name = table.column_name(column);
+        if Some(column) == time || table.left_out(column) {
+            continue;
+        }
+        if tally.words > tally.numbers {
+            table
+                .notes
+                .push(format!("column {name:?} holds words: left out"));
+        } else if tally.numbers > 0 || !table.is_unnamed(column) {
+            table.values.push(column);
+        }
+    }
+    if !table.values.is_empty() {
+        return Ok(());
+    }
+    let word = data.iter().filter(|line| !line.remark).find_map(|line| {
+        let mut cells = line.cells.iter().enumerate();
+        let (column, cell) = cells.find(|(_, cell)| tally_cell(cell).1 > 0)?;
+        Some(CaptureError::NotANumber {
+            line: line.number,
+            column: column + 1,
+            text: super::error::excerpt(cell),
+            share: "no column of numbers beside the time".into(),
+        })
+    });
+    Err(word.unwrap_or(CaptureError::NoNumbers))
+}
+
+impl Table {
+    /// The heading, or "column 2".
+    pub(super) fn column_name(&self, column: usize) -> String {
+        match self.columns.get(column) {
+            Some(heading) if !heading.name.is_empty() => heading.name.clone(),
+            _ => format!("column {}", column + 1),
+        }
+    }
+
+    /// Marks a column as neither time nor channel, and says why.
+    pub(super) fn leave_out(&mut self, column: usize, why: &str) {
+        self.notes.push(format!(
+            "column {:?} {why}: left out",
+            self.column_name(column)
+        ));
+        self.left_out.push(column);
+    }
+
+    pub(super) fn left_out(&self, column: usize) -> bool {
+        self.left_out.contains(&column)
+    }
+
+    pub(super) fn is_unnamed(&self, column: usize) -> bool {
+        self.columns
+            .get(column)
+            .is_none_or(|heading| heading.name.is_empty())
+    }
+}
