@@ -3,7 +3,7 @@
 use crate::capture::{Capture, CaptureError, OpenOptions, Spec};
 use crate::fold::{Chain, ChainError};
 use crate::sources::Site;
-use crate::suspects::{self, Cause, Finding, Inference, Scene, Verdict};
+use crate::suspects::{self, Cause, Finding, Inference, Scene, SourceFit, Verdict};
 use crate::tones::{self, Search, Tone, ToneSet};
 use std::path::Path;
 
@@ -27,6 +27,8 @@ pub struct Triage {
     pub full_scale: Option<(f64, String)>,
     /// The tones.
     pub tones: ToneSet,
+    /// Names of the listed sources, in the catalogue's order.
+    pub sources: Vec<String>,
     /// Suspects and fitted sources.
     pub inference: Inference,
 }
@@ -103,6 +105,12 @@ pub fn run(
         spec,
         full_scale,
         tones,
+        sources: site
+            .catalogue
+            .sources
+            .iter()
+            .map(|s| s.name.clone())
+            .collect(),
         inference,
     })
 }
@@ -114,6 +122,14 @@ impl Triage {
             .findings
             .iter()
             .filter_map(|f| Some((self.tones.tones.get(f.tone)?, f)))
+    }
+
+    /// Every listed source's name with what the recording says of it.
+    pub fn fits(&self) -> impl Iterator<Item = (&str, &SourceFit)> {
+        self.inference
+            .fits
+            .iter()
+            .filter_map(|f| Some((self.sources.get(f.source)?.as_str(), f)))
     }
 
     /// Channels of a tone as the suspect list names them: numbers in a WAV,

@@ -90,10 +90,26 @@ fn recording(result: &Triage, top: usize) -> Value {
         "missing_samples": result.tones.missing,
         "analysis": result.tones.plan,
         "tones": tones,
-        "sources": result.inference.fits,
-        "clock_ppm": result.inference.clock_ppm.map(|(value, u95)| json!({"value": value, "u95": u95})),
+        "sources": sources(result),
+        "clock": {"ppm": result.inference.clock.ppm, "ppm_u95": result.inference.clock.ppm_u95},
         "summary": result.summary(),
     })
+}
+
+fn sources(result: &Triage) -> Vec<Value> {
+    result
+        .fits()
+        .map(|(name, fit)| {
+            json!({
+                "source": name,
+                "present_probability": fit.present_probability,
+                "tones_explained": fit.tones_explained,
+                "latents": fit.latents.iter().map(|(latent, hz, u95)| {
+                    json!({"name": latent, "hz": hz, "hz_u95": u95})
+                }).collect::<Vec<_>>(),
+            })
+        })
+        .collect()
 }
 
 /// Amplitude in the recording's unit, where full scale is known.

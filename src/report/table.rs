@@ -200,10 +200,8 @@ fn unlisted_words(finding: &Finding) -> String {
 
 fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
     let fits: Vec<_> = result
-        .inference
-        .fits
-        .iter()
-        .filter(|f| f.present_probability >= 0.05)
+        .fits()
+        .filter(|(_, f)| f.present_probability >= 0.05)
         .collect();
     if fits.is_empty() {
         return Ok(());
@@ -212,7 +210,7 @@ fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
         out,
         "\n{QUIET}source                    there  tones  fitted{QUIET:#}"
     )?;
-    for fit in fits {
+    for (name, fit) in fits {
         let latents: Vec<String> = fit
             .latents
             .iter()
@@ -224,15 +222,13 @@ fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
         writeln!(
             out,
             "{:<24}  {:>5}  {:>5.1}  {}",
-            plain(&fit.name),
+            plain(name),
             percent(fit.present_probability),
             fit.tones_explained,
             latents.join(", ")
         )?;
     }
-    if let Some((ppm, u95)) = result.inference.clock_ppm {
-        let (ppm, u95) = with_u95(ppm, u95);
-        writeln!(out, "recorder's clock          {ppm} ± {u95} ppm")?;
-    }
-    Ok(())
+    let clock = &result.inference.clock;
+    let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
+    writeln!(out, "the recorder's clock is off by {ppm} ± {u95} ppm")
 }

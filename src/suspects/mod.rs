@@ -1,4 +1,24 @@
 //! Which sources could have made each tone, and how probable each is.
+//!
+//! Joint inference over all tones and all listed sources. Sources that share
+//! latent frequencies form a *cluster* ([`clusters`]); where its latents could be
+//! is found from where its lines meet tones ([`modes`], [`pairs`]); the likelihood
+//! there, and who explains which tone, is [`evaluate`]; clusters are reconciled
+//! with one another, with [`unlisted`] tones and with the recorder's [`clock`] in
+//! [`sweep`]; [`attribute`] puts the result into words.
+
+mod attribute;
+mod clock;
+mod clusters;
+mod evaluate;
+mod modes;
+mod pairs;
+mod scene;
+mod strength;
+mod sweep;
+mod unlisted;
+
+pub use scene::Scene;
 
 use crate::sources::Kind;
 use crate::units::{Sense, TrueHz};
@@ -92,8 +112,6 @@ pub struct Finding {
 pub struct SourceFit {
     /// Index into `Catalogue::sources`.
     pub source: usize,
-    /// Its name.
-    pub name: String,
     /// `(latent name, fitted Hz, ± 95 % Hz)`.
     pub latents: Vec<(String, f64, f64)>,
     /// Expected number of tones it explains.
@@ -101,41 +119,30 @@ pub struct SourceFit {
     /// Probability that it is present at all.
     pub present_probability: f64,
 }
-/// Scene
-pub struct Scene<'a> {
-    /// tones
-    pub tones: &'a [crate::tones::Tone],
-    /// site
-    pub site: &'a crate::sources::Site,
-    /// chain
-    pub chain: &'a crate::fold::Chain,
-    /// dur
-    pub duration_s: f64,
+
+/// The recorder's clock error, fitted.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
+pub struct ClockFit {
+    /// Relative error of the true rate against the nominal, parts per million.
+    pub ppm: f64,
+    /// ±, 95 %, parts per million.
+    pub ppm_u95: f64,
+    /// How many fitted latents it rests on; 0 means only the description.
+    pub latents: usize,
 }
-/// Inference
-#[derive(Debug, Clone)]
+
+/// All that is concluded about one recording.
+#[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct Inference {
-    /// f
+    /// One per tone, in their order.
     pub findings: Vec<Finding>,
-    /// s
+    /// One per listed source, in the order of the catalogue.
     pub fits: Vec<SourceFit>,
-    /// c
-    pub clock_ppm: Option<(f64, f64)>,
+    /// The clock that reconciles the sources.
+    pub clock: ClockFit,
 }
-/// infer
+
+/// Infers who made each tone. Never fails: without sources every tone is unlisted.
 pub fn infer(scene: &Scene) -> Inference {
-    Inference {
-        findings: (0..scene.tones.len())
-            .map(|tone| Finding {
-                tone,
-                folded_probability: 0.5,
-                verdict: Verdict::Open,
-                suspects: vec![],
-                unlisted_direct: 0.5,
-                unlisted_folded: 0.5,
-            })
-            .collect(),
-        fits: vec![],
-        clock_ppm: None,
-    }
+    attribute::attribute(scene, &sweep::solve(scene))
 }

@@ -1,0 +1,459 @@
+//! The likelihood of a cluster's latents and who explains which tone there.
+//!
+//! At given latents and strengths each tone is either a line's or something
+//! else's, and each line shows or hides:
+//!
+//!     L(θ, class) = Π_j (1 − d_j) · Π_i (1 + Σ_j x_ij),
+//!     x_ij = d_j/(1 − d_j) · N(ν_i; g(a_j·θ), σ_ij²) / others_i
+//!
+//! and tone `i` is line `j` with probability `x_ij / (1 + Σ_j x_ij)` there.
+//! Averaged over the whole posterior, the broad node included, this *is* the
+//! leave-one-out claim of method: `P = ∫ q r = X/(1 + X)` with
+//! `X = ∫ q^(−i) x_i` and `q^(−i) ∝ q/(1 + x_i)`. What a tone says about where its
+//! source is, it cannot also say about whether it is its own.
+
+use super::clusters::Cluster;
+use super::modes::{BroadEntry, Entry, Mode, Places, mean};
+use super::strength::{CLASSES, PerClass};
+
+/// What is believed of a member before looking.
+#[derive(Debug, Clone, Copy)]
+pub(super) struct Belief {
+    /// Probability that it is present at all.
+    pub present: f64,
+}
+
+/// A mode's nodes evaluated.
+#[derive(Debug, Clone, Default)]
+pub(super) struct ModeValue {
+    /// Log of prior mass × likelihood, per node.
+    pub ln_weight: Vec<f64>,
+    /// `responsibility[node·entries + entry]`.
+    pub responsibility: Vec<f64>,
+    /// `absent[node·members + member]`: chance that it is absent, there.
+    pub absent: Vec<f64>,
+}
+
+/// A cluster's places evaluated: normalised.
+#[derive(Debug, Clone, Default)]
+pub(super) struct Value {
+    pub modes: Vec<ModeValue>,
+    /// Normalised weight of each node, per mode.
+    pub weights: Vec<Vec<f64>>,
+    pub broad_weight: f64,
+    pub broad_responsibility: Vec<f64>,
+    pub broad_absent: Vec<f64>,
+    /// Probability that each member is absent: its small values matter.
+    pub absent: Vec<f64>,
+    /// The belief that went in.
+    pub beliefs: Vec<Belief>,
+    /// Log of the cluster's evidence against every one of its sources hidden.
+    pub ln_evidence: f64,
+}
+
+/// Share of measurements that are off by more than their uncertainty says, and
+/// by how much.
+const OFF_SHARE: f64 = 0.05;
+const OFF_FACTOR: f64 = 3.0;
+
+/// Density of a tone `d` from where it is expected: normal with a heavier tail.
+fn kernel(d: f64, var: f64) -> f64 {
+    let z2 = d * d / var;
+    if z2 > 300.0 {
+        return 0.0;
+    }
+    let norm = (2.0 * std::f64::consts::PI * var).sqrt().recip();
+    norm * ((1.0 - OFF_SHARE) * (-0.5 * z2).exp()
+        + OFF_SHARE / OFF_FACTOR * (-0.5 * z2 / (OFF_FACTOR * OFF_FACTOR)).exp())
+}
+
+/// Log-weights of a member's classes: `ln` of prior times all lines hidden.
+struct MemberBase {
+    ln_classes: PerClass,
+    /// Probability of absence.
+    absent: f64,
+    /// Log of the member's factor where nothing meets it.
+    ln_nothing: f64,
+}
+
+fn base(cluster: &Cluster, beliefs: &[Belief]) -> Vec<MemberBase> {
+    cluster
+        .members
+        .iter()
+        .zip(beliefs)
+        .map(|(member, belief)| {
+            let ln_prior = (belief.present / CLASSES as f64).max(1e-300).ln();
+            let ln_classes = member.ln_hidden.map(|h| h + ln_prior);
+            let absent = 1.0 - belief.present;
+            MemberBase {
+                ln_classes,
+                absent,
+                ln_nothing: (absent + ln_classes.iter().map(|l| l.exp()).sum::<f64>()).ln(),
+            }
+        })
+        .collect()
+}
+
+/// One member at one place: multiplies in tones, then yields its factor.
+struct Factor {
+    product: PerClass,
+    ln_product: PerClass,
+}
+
+impl Factor {
+    fn new() -> Factor {
+        Factor {
+            product: [1.0; CLASSES],
+            ln_product: [0.0; CLASSES],
+        }
+    }
+
+    fn meet(&mut self, x: &PerClass) {
+        for ((p, ln), x) in self.product.iter_mut().zip(&mut self.ln_product).zip(x) {
+            *p *= 1.0 + x;
+            if *p > 1e150 {
+                *ln += p.ln();
+                *p = 1.0;
+            }
+        }
+    }
+
+    /// `(ln factor, weight of each class, of absence)`, the weights summing to 1.
+    fn finish(&self, base: &MemberBase) -> (f64, PerClass, f64) {
+        let mut ln: PerClass = [0.0; CLASSES];
+        let mut most = if base.absent > 0.0 {
+            base.absent.ln()
+        } else {
+            f64::NEG_INFINITY
+        };
+        for (c, l) in ln.iter_mut().enumerate() {
+            let (Some(b), Some(p), Some(q)) = (
+                base.ln_classes.get(c),
+                self.product.get(c),
+                self.ln_product.get(c),
+            ) else {
+                continue;
+            };
+            *l = b + p.ln() + q;
+            most = most.max(*l);
+        }
+        let weights = ln.map(|l| (l - most).exp());
+        let absent = if base.absent > 0.0 {
+            (base.absent.ln() - most).exp()
+        } else {
+            0.0
+        };
+        let total: f64 = weights.iter().sum::<f64>() + absent;
+        (
+            most + total.ln(),
+            weights.map(|w| w / total),
+            absent / total,
+        )
+    }
+}
+
+fn evaluate_mode(
+    mode: &Mode,
+    cluster: &Cluster,
+    bases: &[MemberBase],
+    others: &[f64],
+) -> ModeValue {
+    let entries = &mode.entries;
+    let count = entries.len();
+    let members = cluster.members.len();
+    let mut value = ModeValue {
+        ln_weight: Vec::with_capacity(mode.nodes.len()),
+        responsibility: vec![0.0; mode.nodes.len() * count],
+        absent: vec![0.0; mode.nodes.len() * members],
+    };
+    let mean_odds: Vec<f64> = entries.iter().map(|e| mean(&e.odds)).collect();
+    let of = |tone: usize| others.get(tone).copied().unwrap_or(1.0);
+    // Runs of entries of one member and tone.
+    let runs = runs(entries, |e| (e.member, e.tone));
+    let along = |e: &Entry, axis: [f64; 2]| (e.a[0] * axis[0] + e.a[1] * axis[1]).powi(2);
+    let stretch: Vec<[f64; 2]> = entries
+        .iter()
+        .map(|e| [along(e, mode.axes[0]), along(e, mode.axes[1])])
+        .collect();
+    let mut density = vec![0.0; count];
+    let mut met: Vec<PerClass> = vec![[0.0; CLASSES]; runs.len()];
+    for (n, node) in mode.nodes.iter().enumerate() {
+        for ((d, e), s) in density.iter_mut().zip(entries).zip(&stretch) {
+            let off = e.a[0] * node.theta[0] + e.a[1] * node.theta[1] - e.target;
+            let var = e.var + s[0] * node.cell_var[0] + s[1] * node.cell_var[1];
+            *d = kernel(off, var) / of(e.tone);
+        }
+        share_between_rivals(&mode.rivals, &mean_odds, &mut density);
+        let mut ln_weight = node.ln_mass;
+        let mut first = 0;
+        for (m, base) in bases.iter().enumerate() {
+            let mut factor = Factor::new();
+            let start = first;
+            while let Some(run) = runs.get(first) {
+                if entries.get(run.start).map(|e| e.member) != Some(m) {
+                    break;
+                }
+                let x = meet(entries, &density, run.clone());
+                if let Some(slot) = met.get_mut(first) {
+                    *slot = x;
+                }
+                factor.meet(&x);
+                first += 1;
+            }
+            let slot = value.absent.get_mut(n * members + m);
+            if start == first {
+                // Nothing meets it here.
+                if let Some(p) = slot {
+                    *p = base.absent / base.ln_nothing.exp();
+                }
+                continue;
+            }
+            let (ln_factor, classes, absent) = factor.finish(base);
+            ln_weight += ln_factor - base.ln_nothing;
+            if let Some(p) = slot {
+                *p = absent;
+            }
+            for r in start..first {
+                let (Some(run), Some(x)) = (runs.get(r), met.get(r)) else {
+                    continue;
+                };
+                for i in run.clone() {
+                    let (Some(e), Some(d)) = (entries.get(i), density.get(i)) else {
+                        continue;
+                    };
+                    if *d == 0.0 {
+                        continue;
+                    }
+                    let r: f64 = classes
+                        .iter()
+                        .zip(&e.odds)
+                        .zip(x)
+                        .map(|((w, o), x)| w * o / (1.0 + x))
+                        .sum();
+                    if let Some(slot) = value.responsibility.get_mut(n * count + i) {
+                        *slot = r * d;
+                    }
+                }
+            }
+        }
+        if members > 1 {
+            if let Some(all) = value.responsibility.get_mut(n * count..(n + 1) * count) {
+                share_between_members(entries, all);
+            }
+        }
+        value.ln_weight.push(ln_weight);
+    }
+    value
+}
+
+fn meet(entries: &[Entry], density: &[f64], run: std::ops::Range<usize>) -> PerClass {
+    let mut x = [0.0; CLASSES];
+    for i in run {
+        if let (Some(e), Some(&d)) = (entries.get(i), density.get(i)) {
+            if d > 0.0 {
+                for (x, o) in x.iter_mut().zip(&e.odds) {
+                    *x += o * d;
+                }
+            }
+        }
+    }
+    x
+}
+
+/// Maximal ranges of equal key.
+fn runs<T, K: PartialEq>(items: &[T], key: impl Fn(&T) -> K) -> Vec<std::ops::Range<usize>> {
+    let mut runs: Vec<std::ops::Range<usize>> = Vec::new();
+    let mut last: Option<K> = None;
+    for (i, item) in items.iter().enumerate() {
+        let k = key(item);
+        if last.as_ref() == Some(&k) {
+            if let Some(run) = runs.last_mut() {
+                run.end = i + 1;
+            }
+        } else {
+            runs.push(i..i + 1);
+            last = Some(k);
+        }
+    }
+    runs
+}
+
+/// A line makes one tone: tones that compete for it share it.
+fn share_between_rivals(rivals: &[Vec<usize>], mean_odds: &[f64], density: &mut [f64]) {
+    for group in rivals {
+        let x = |i: &usize, density: &[f64]| {
+            mean_odds.get(*i).copied().unwrap_or(0.0) * density.get(*i).copied().unwrap_or(0.0)
+        };
+        let all: Vec<f64> = group.iter().map(|i| x(i, density)).collect();
+        let total: f64 = all.iter().sum();
+        if total < 1e-3 {
+            continue;
+        }
+        for (i, own) in group.iter().zip(&all) {
+            if let Some(d) = density.get_mut(*i) {
+                *d /= 1.0 + total - own;
+            }
+        }
+    }
+}
+
+/// Members were evaluated each on its own; where they claim the same tone, they
+/// share it.
+fn share_between_members(entries: &[Entry], responsibility: &mut [f64]) {
+    let mut odds: std::collections::BTreeMap<(usize, usize), f64> = Default::default();
+    for (e, r) in entries.iter().zip(responsibility.iter()) {
+        *odds.entry((e.tone, e.member)).or_default() += r;
+    }
+    let mut total: std::collections::BTreeMap<usize, f64> = Default::default();
+    for (&(tone, _), r) in &odds {
+        *total.entry(tone).or_default() += r / (1.0 - r).max(1e-12);
+    }
+    for (e, r) in entries.iter().zip(responsibility.iter_mut()) {
+        let own = odds.get(&(e.tone, e.member)).copied().unwrap_or(0.0);
+        let all = total.get(&e.tone).copied().unwrap_or(0.0);
+        // own/(1−own) of all/(1+all), split as the member split it.
+        *r *= 1.0 / ((1.0 - own).max(1e-12) * (1.0 + all));
+    }
+}
+
+fn evaluate_broad(places: &Places, bases: &[MemberBase], others: &[f64], value: &mut Value) -> f64 {
+    let entries: &[BroadEntry] = &places.broad;
+    value.broad_responsibility = vec![0.0; entries.len()];
+    value.broad_absent = bases
+        .iter()
+        .map(|b| b.absent / b.ln_nothing.exp())
+        .collect();
+    if places.broad_mass < 1e-12 {
+        return f64::NEG_INFINITY;
+    }
+    let mut ln_weight = places.broad_mass.ln();
+    let scaled =
+        |e: &BroadEntry| e.density / places.broad_mass / others.get(e.tone).copied().unwrap_or(1.0);
+    for member in runs(entries, |e| e.member) {
+        let Some(m) = entries.get(member.start).map(|e| e.member) else {
+            continue;
+        };
+        let Some(base) = bases.get(m) else { continue };
+        let own = entries.get(member.clone()).unwrap_or_default();
+        let mut factor = Factor::new();
+        let mut met = Vec::new();
+        for run in runs(own, |e| e.tone) {
+            let mut x = [0.0; CLASSES];
+            for e in own.get(run.clone()).unwrap_or_default() {
+                let d = scaled(e);
+                for (x, o) in x.iter_mut().zip(&e.odds) {
+                    *x += o * d;
+                }
+            }
+            factor.meet(&x);
+            met.push((run, x));
+        }
+        let (ln_factor, classes, absent) = factor.finish(base);
+        ln_weight += ln_factor - base.ln_nothing;
+        if let Some(p) = value.broad_absent.get_mut(m) {
+            *p = absent;
+        }
+        for (run, x) in met {
+            for i in run {
+                let Some(e) = own.get(i) else { continue };
+                let r: f64 = classes
+                    .iter()
+                    .zip(&e.odds)
+                    .zip(&x)
+                    .map(|((w, o), x)| w * o / (1.0 + x))
+                    .sum();
+                if let Some(slot) = value.broad_responsibility.get_mut(member.start + i) {
+                    *slot = r * scaled(e);
+                }
+            }
+        }
+    }
+    ln_weight
+}
+
+/// Evaluates every place of a cluster against `others`, the density of everything
+/// else at each tone.
+pub(super) fn evaluate(
+    places: &Places,
+    cluster: &Cluster,
+    beliefs: &[Belief],
+    others: &[f64],
+) -> Value {
+    let bases = base(cluster, beliefs);
+    let mut value = Value::default();
+    for mode in &places.modes {
+        value
+            .modes
+            .push(evaluate_mode(mode, cluster, &bases, others));
+    }
+    let ln_broad = evaluate_broad(places, &bases, others, &mut value);
+    let most = value
+        .modes
+        .iter()
+        .flat_map(|m| m.ln_weight.iter().copied())
+        .fold(ln_broad, f64::max);
+    let total: f64 = (ln_broad - most).exp()
+        + value
+            .modes
+            .iter()
+            .flat_map(|m| &m.ln_weight)
+            .map(|l| (l - most).exp())
+            .sum::<f64>();
+    value.ln_evidence = most + total.ln();
+    value.broad_weight = (ln_broad - most).exp() / total;
+    value.weights = value
+        .modes
+        .iter()
+        .map(|m| {
+            m.ln_weight
+                .iter()
+                .map(|l| (l - most).exp() / total)
+                .collect()
+        })
+        .collect();
+    let members = cluster.members.len();
+    value.beliefs = beliefs.to_vec();
+    value.absent = (0..members)
+        .map(|m| {
+            let mut p = value.broad_weight * value.broad_absent.get(m).copied().unwrap_or(0.0);
+            for (mode, weights) in value.modes.iter().zip(&value.weights) {
+                for (n, w) in weights.iter().enumerate() {
+                    p += w * mode.absent.get(n * members + m).copied().unwrap_or(0.0);
+                }
+            }
+            p.clamp(1e-290, 1.0)
+        })
+        .collect();
+    value
+}
+
+impl Value {
+    /// Total responsibility of the cluster for each tone.
+    pub fn claims(&self, places: &Places, tones: usize) -> Vec<f64> {
+        let mut claims = vec![0.0; tones];
+        self.each(places, &mut |tone, share| {
+            if let Some(c) = claims.get_mut(tone) {
+                *c += share;
+            }
+        });
+        claims
+    }
+
+    fn each(&self, places: &Places, claim: &mut dyn FnMut(usize, f64)) {
+        for ((mode, value), weights) in places.modes.iter().zip(&self.modes).zip(&self.weights) {
+            let count = mode.entries.len();
+            for (n, w) in weights.iter().enumerate() {
+                if *w < 1e-15 {
+                    continue;
+                }
+                let rs = value.responsibility.iter().skip(n * count);
+                for (e, r) in mode.entries.iter().zip(rs) {
+                    claim(e.tone, w * r);
+                }
+            }
+        }
+        for (e, r) in places.broad.iter().zip(&self.broad_responsibility) {
+            claim(e.tone, self.broad_weight * r);
+        }
+    }
+}

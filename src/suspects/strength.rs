@@ -1,0 +1,144 @@
+//! How strong a source is, and with it which of its lines should show.
+//!
+//! A source's strength is unknown: it is one of a few classes, each a level of its
+//! strongest line over the noise and a rate at which the others fall off. A line
+//! of weight `w` behind a gain `A` dB has the expected SNR
+//!
+//!     L = level + slope·20·log10(w) + A,
+//!
+//! the true one spreads about it with [`SPREAD_DB`], and the line shows if that
+//! clears the detector's threshold. So a missing line counts as much as it was
+//! expected, and a tone much stronger than the line it would be is doubted. This
+//! is this project's own model; its constants are broad on purpose.
+
+use statrs::function::erf::erfc;
+
+/// Classes of strength: `(SNR of the strongest line, dB; slope)`.
+pub(super) const CLASSES: usize = 24;
+
+const LEVELS_DB: [f64; 8] = [8.0, 18.0, 28.0, 38.0, 48.0, 58.0, 68.0, 80.0];
+const SLOPES: [f64; 3] = [0.7, 1.8, 3.5];
+
+/// Standard deviation of a line's level about the expected one, dB.
+const SPREAD_DB: f64 = 8.0;
+
+/// The share of lines that show although the level would let them is at most this:
+/// real families have holes.
+const MOST_SHOWN: f64 = 0.9;
+
+/// A value per class.
+pub(super) type PerClass = [f64; CLASSES];
+
+/// Steps of the tables, dB.
+const STEP_DB: f64 = 0.25;
+const REACH_DB: f64 = 150.0;
+
+/// Precomputed densities.
+#[derive(Debug, Clone)]
+pub(super) struct Strengths {
+    threshold_db: f64,
+    /// Density of a level `x` dB above the expected one, per dB.
+    density: Vec<f64>,
+    /// Chance that a level is more than `x` dB above the expected one.
+    above: Vec<f64>,
+}
+
+fn normal(x: f64, sd: f64) -> f64 {
+    (-0.5 * (x / sd).powi(2)).exp() / (sd * (2.0 * std::f64::consts::PI).sqrt())
+}
+
+fn normal_above(x: f64, sd: f64) -> f64 {
+    0.5 * erfc(x / (sd * std::f64::consts::SQRT_2))
+}
+
+fn slot(x: f64) -> usize {
+    ((x + REACH_DB) / STEP_DB).clamp(0.0, 2.0 * REACH_DB / STEP_DB) as usize
+}
+
+impl Strengths {
+    /// For a detector that finds a tone from `threshold_db` of SNR on.
+    pub fn new(threshold_db: f64) -> Strengths {
+        let points = slot(REACH_DB) + 1;
+        let x = |i: usize| (i as f64 + 0.5) * STEP_DB - REACH_DB;
+        // A tenth of all lines is anywhere: resonances and nulls.
+        let mixed =
+            |f: fn(f64, f64) -> f64, x: f64| 0.9 * f(x, SPREAD_DB) + 0.1 * f(x, 2.5 * SPREAD_DB);
+        Strengths {
+            threshold_db,
+            density: (0..points).map(|i| mixed(normal, x(i))).collect(),
+            above: (0..points).map(|i| mixed(normal_above, x(i))).collect(),
+        }
+    }
+
+    /// Expected SNR of a line per class, dB.
+    fn expected(line: &Faintness, class: usize) -> f64 {
+        let (level, slope) = (
+            LEVELS_DB.get(class / SLOPES.len()).copied().unwrap_or(0.0),
+            SLOPES.get(class % SLOPES.len()).copied().unwrap_or(1.0),
+        );
+        level + slope * line.weight_db + line.gain_db
+    }
+
+    /// Chance, per class, that a line shows.
+    pub fn shown(&self, line: &Faintness) -> PerClass {
+        std::array::from_fn(|c| {
+            let need = self.threshold_db - Self::expected(line, c);
+            let above = self.above.get(slot(need * line.narrowing)).copied();
+            line.most_shown() * above.unwrap_or(0.0)
+        })
+    }
+
+    /// Per class: density (per dB) of the line showing at `snr_db`, over the chance
+    /// of it not showing at all.
+    pub fn odds(&self, line: &Faintness, snr_db: f64) -> PerClass {
+        std::array::from_fn(|c| {
+            let expected = Self::expected(line, c);
+            let get =
+                |table: &[f64], x: f64| table.get(slot(x * line.narrowing)).copied().unwrap_or(0.0);
+            let most = line.most_shown();
+            let density = most * line.narrowing * get(&self.density, snr_db - expected);
+            let hidden = 1.0 - most * get(&self.above, self.threshold_db - expected);
+            density / hidden
+        })
+    }
+
+    /// Density (per dB) of the SNR of a tone that nothing listed made.
+    pub fn background(&self, snr_db: f64) -> f64 {
+        let x = (snr_db - self.threshold_db).max(0.0);
+        0.7 * (-x / 18.0).exp() / 18.0 + 0.3 * (-x / 45.0).exp() / 45.0
+    }
+}
+
+/// What decides whether a line shows.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub(super) struct Faintness {
+    /// `20·log10` of the line's weight, ≤ 0.
+    weight_db: f64,
+    /// Expected gain of the front end, dB.
+    gain_db: f64,
+    /// [`SPREAD_DB`] over the spread with the gain's uncertainty, in (0, 1].
+    narrowing: f64,
+}
+
+impl Faintness {
+    pub fn new(weight: f64, gain: crate::frontend::Gain) -> Faintness {
+        Faintness {
+            weight_db: 20.0 * weight.clamp(1e-6, 1.0).log10(),
+            gain_db: gain.mean_db,
+            narrowing: SPREAD_DB / SPREAD_DB.hypot(gain.sd_db),
+        }
+    }
+
+    /// Rarer lines are absent for reasons other than their level.
+    fn most_shown(&self) -> f64 {
+        MOST_SHOWN * 10f64.powf(self.weight_db / 40.0).max(0.3)
+    }
+
+    /// A line `by_db` fainter.
+    pub fn fainter(self, by_db: f64) -> Faintness {
+        Faintness {
+            gain_db: self.gain_db - by_db,
+            ..self
+        }
+    }
+}

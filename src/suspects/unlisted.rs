@@ -1,0 +1,90 @@
+//! Tones that nothing listed made: where they fall, and how likely they are folded.
+//!
+//! Analog frequencies are taken to be spread evenly over the logarithm, from a
+//! small part of the band to the top of what reaches the converter. What part of
+//! that lies above half the rate and would still be seen after the front end is
+//! the prior mass of `unlisted, folded`; it is near 0 behind a steep described
+//! filter and substantial behind nothing.
+
+use super::scene::{Measured, Scene};
+use crate::frontend::PreparedFrontEnd;
+use crate::units::{SeenHz, TrueHz};
+
+/// Density per Hz of unlisted tones at a seen frequency, per expected tone.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub(super) struct Unlisted {
+    pub direct: f64,
+    pub folded: f64,
+}
+
+impl Unlisted {
+    pub fn total(&self) -> f64 {
+        self.direct + self.folded
+    }
+}
+
+/// Lowest analog frequency over half the rate: two decades and a bit.
+const LOWEST: f64 = 1.0 / 200.0;
+/// Where nothing says how high analog frequencies go: this many times half the rate.
+const HIGHEST: f64 = 50.0;
+/// Part of the direct tones that is spread evenly over the band.
+const EVEN: f64 = 0.5;
+/// Scale on which weaker tones are more common, dB (as the strengths' background).
+const RARITY_DB: f64 = 18.0;
+/// Rungs looked at.
+const MOST_RUNGS: f64 = 400.0;
+
+/// Share of tones that would still be seen behind the front end at `f`.
+fn passing(scene: &Scene, front: &PreparedFrontEnd, f: f64) -> f64 {
+    let gain = front.gain(TrueHz(f), scene.chain.converter_rate_hz());
+    // E exp(G/R) for G normal, but never above 1.
+    let scale = gain.sd_db / RARITY_DB;
+    (gain.mean_db / RARITY_DB + 0.5 * scale * scale)
+        .min(0.0)
+        .exp()
+}
+
+/// Densities at each tone.
+pub(super) fn densities(scene: &Scene, tones: &[Measured]) -> Vec<Unlisted> {
+    let half = scene.chain.file_rate_hz() / 2.0;
+    let front = scene.site.recorder.front_end.prepared();
+    let top = scene
+        .site
+        .recorder
+        .front_end
+        .bandwidth_hz
+        .unwrap_or(HIGHEST * half)
+        .max(half);
+    let top = top.min(MOST_RUNGS * half);
+    let direct_mass = LOWEST.recip().ln();
+    let steps = 200;
+    let octaves = (top / half).ln();
+    let folded_mass: f64 = (0..steps)
+        .map(|i| {
+            let f = half * (octaves * (f64::from(i) + 0.5) / f64::from(steps)).exp();
+            passing(scene, &front, f) * octaves / f64::from(steps)
+        })
+        .sum();
+    let mass = direct_mass + folded_mass;
+    let low = LOWEST * half;
+    tones
+        .iter()
+        .map(|t| {
+            let spread = 1.0 / ((t.nu + low) * ((half + low) / low).ln());
+            let direct = (EVEN / half + (1.0 - EVEN) * spread) * direct_mass / mass;
+            let folded = scene
+                .chain
+                .unfold(SeenHz(t.nu), TrueHz(top))
+                .map(|rungs| {
+                    rungs
+                        .iter()
+                        .filter(|r| r.zone > 1)
+                        .map(|r| passing(scene, &front, r.true_hz.0) / r.true_hz.0)
+                        .sum::<f64>()
+                })
+                .unwrap_or(0.0)
+                / mass;
+            Unlisted { direct, folded }
+        })
+        .collect()
+}
