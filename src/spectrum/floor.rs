@@ -177,7 +177,9 @@ mod tests {
                 p[k] *= 1e6;
             }
             let floor = estimate(&p, 1.0, 1.0, true);
-            let worst = (40..20_000)
+            // Below a few hundred bins the trend itself is uncertain, and both sides
+            // of a window see much of its slope.
+            let worst = (200..20_000)
                 .map(|k| (floor.level[k] / law(k)).ln().abs())
                 .fold(0.0, f32::max);
             // four standard deviations of one side's median

@@ -144,6 +144,8 @@ impl Patch {
 /// A patch no wider than this many cells (participation ratio) is a line, however
 /// it came about: what rings that long rings on through the whole recording.
 const LINE_CELLS: f64 = 3.0;
+/// A tone present for a smaller share of the recording must prove itself steady.
+const LEAST_DUTY: f64 = 0.15;
 /// Cells at the ends of the patch's signal spoilt by cutting it out of the band.
 const SPOILT: usize = 3;
 
@@ -178,9 +180,25 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
     let participation = sum * sum / sum2;
     // Windows in which the tone stands 15 dB above the noise show it go on and off.
     let smooth = (30.0 * patch.noise / tone_power).ceil() as usize;
-    let (from, to) = patch.on(smooth);
+    let (mut from, mut to) = patch.on(smooth);
+    // The ends are spoilt by the cut: on from there is on from the start.
+    let edge = SPOILT.max(patch.z.len() / 20);
+    if from <= edge {
+        from = 0;
+    }
+    if to + edge >= patch.z.len() {
+        to = patch.z.len();
+    }
     let on = &patch.z[from..to];
-    if participation > LINE_CELLS {
+    let duty = on.len() as f64 / patch.z.len() as f64;
+    // What is on for part of the time is as broad as that time makes it; but one
+    // short ring of a struck structure is no tone.
+    let own_cells = if duty < LEAST_DUTY {
+        participation
+    } else {
+        participation * duty
+    };
+    if own_cells > LINE_CELLS {
         let inner = &on[SPOILT.min(on.len() / 8)..on.len() - SPOILT.min(on.len() / 8)];
         let (m2, m4) = inner.iter().fold((0.0, 0.0), |(a, b), z| {
             let p = power(z);
@@ -190,7 +208,7 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
         // Independent samples, were it Gaussian noise of this shape: exponential
         // cells have E p² = 2 (E p)², hence twice the participation.
         let occupied = (2.0 * participation).min(cells.len() as f64);
-        let worth = occupied * on.len() as f64 / patch.z.len() as f64;
+        let worth = occupied * duty;
         let mean_power = m2 / inner.len() as f64;
         // A tone with share s of the power in Gaussian noise has a steadiness of
         // 2 − s², noise alone 2; half-way is as far as an amplitude-modulated or
@@ -203,8 +221,14 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
             return None;
         }
     }
-    let duty = on.len() as f64 / patch.z.len() as f64;
-    let track = track(&patch, from, to, tone_power / duty)?;
+    // Followed in a wider cut: its windows reject the noise, and more samples show
+    // the movement.
+    let pad = core.len().clamp(32, 256);
+    let wide = core.start.saturating_sub(pad)..(core.end + pad).min(band.bins.len());
+    let finer = Patch::cut(band, wide, noise);
+    let scale = finer.z.len() as f64 / patch.z.len() as f64;
+    let at = |i: usize| ((i as f64 * scale).round() as usize).min(finer.z.len());
+    let track = track(&finer, at(from), at(to), tone_power / duty)?;
     let samples_share = band.samples as f64 / band.grid as f64;
     Some(Wanderer {
         bin: track.mean,
@@ -232,12 +256,21 @@ struct Track {
 /// Frequency over time: windows as short as the noise allows, or as long as the
 /// tone stays coherent in one.
 fn track(patch: &Patch, from: usize, to: usize, tone_power: f64) -> Option<Track> {
-    let z = &patch.z[from..to];
+    // The cut spoils a few samples at the very ends.
+    let spoilt = SPOILT.min((to - from) / 8);
+    let start = from + if from < spoilt { spoilt } else { 0 };
+    let end = to
+        - if to + spoilt > patch.z.len() {
+            spoilt
+        } else {
+            0
+        };
+    let z = &patch.z[start..end];
     // tone over noise power per sample
     let eta = tone_power / patch.noise.max(1e-30 * tone_power);
     let mut best: Option<(f64, Vec<Window>)> = None;
-    let mut windows = 2;
-    while z.len() / windows >= 5 && windows <= 4096 {
+    let mut windows = 1;
+    while z.len() / windows >= 8 && windows <= 4096 {
         let m = z.len() / windows;
         let found = follow(z, windows)?;
         // the largest of m noise cells adds this much by chance
@@ -276,8 +309,9 @@ fn track(patch: &Patch, from: usize, to: usize, tone_power: f64) -> Option<Track
         .sum();
     let first = &found[0];
     let last = &found[found.len() - 1];
-    let (before, after) = (first.middle + 0.5, z.len() as f64 - 0.5 - last.middle);
-    let length = z.len() as f64;
+    let before = (start - from) as f64 + first.middle + 0.5;
+    let after = (to - start) as f64 - 0.5 - last.middle;
+    let length = (to - from) as f64;
     let mean = (first.cycles * before + turns + last.cycles * after) / length;
     let variance = found.iter().map(|w| (w.cycles - mean).powi(2)).sum::<f64>() / k;
     let step = found
@@ -299,7 +333,7 @@ fn track(patch: &Patch, from: usize, to: usize, tone_power: f64) -> Option<Track
         points: found
             .iter()
             .map(|w| TrackPoint {
-                at: (from as f64 + w.middle + 0.5) / n_all,
+                at: (start as f64 + w.middle + 0.5) / n_all,
                 bin: patch.first as f64 + w.cycles * width,
                 sd: sd * width,
             })
