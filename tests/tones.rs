@@ -100,7 +100,7 @@ fn a_long_recording_is_measured_whole() {
     let mut x = noise(&mut rng, n);
     let tones = [
         (50.013, 0.05),
-        (1234.567_8, 0.02),
+        (1_234.567_8, 0.02),
         (1234.9, 0.03),
         (3999.2, 0.05),
     ];

@@ -3,7 +3,7 @@
 //!
 //! Short recordings are transformed whole ([`whole`]). Longer ones are averaged
 //! over segments ([`welch`]) to find where something stands out, and a second
-//! pass ([`slice`]) then yields the transform of the *whole* recording in those
+//! pass ([`mod@slice`]) then yields the transform of the *whole* recording in those
 //! narrow bands only, so that memory does not grow with length while resolution
 //! does.
 
