@@ -1,8 +1,9 @@
 //! From the solution to findings: suspects with rungs and zones, fitted sources,
 //! the clock.
 
-use super::clusters::Normal;
+use super::hidden::Standing;
 use super::modes::Entry;
+use super::prior::{Normal, Prior};
 use super::scene::Scene;
 use super::sweep::{Solution, Solved};
 use super::{Cause, ClockFit, Finding, Inference, SourceFit, Suspect, Verdict, clock};
@@ -170,7 +171,12 @@ fn coincidence(
     tone: usize,
 ) -> f64 {
     let half = scene.chain.file_rate_hz() / 2.0;
-    let lines: usize = solution.solved.iter().map(|s| s.cluster.lines.len()).sum();
+    let lines: usize = solution
+        .solved
+        .iter()
+        .filter(|s| s.standing == Standing::Listed)
+        .map(|s| s.cluster.lines.len())
+        .sum();
     let (Some(s), Some(t)) = (solution.solved.get(c), solution.tones.get(tone)) else {
         return 0.0;
     };
@@ -183,7 +189,8 @@ fn coincidence(
             .map(|(a, p)| (a * p.sd).powi(2))
             .sum()
     };
-    let before = spread(&s.prior);
+    let prior: Vec<Normal> = s.prior.iter().map(Prior::normal).collect();
+    let before = spread(&prior);
     let window_var = match fits.get(c) {
         Some(Some(fit)) => {
             // What is known of the line without this tone.
@@ -236,10 +243,26 @@ pub(super) fn attribute(scene: &Scene, solution: &Solution) -> Inference {
             .filter(|(z, _)| **z > 1)
             .map(|(_, s)| s.mass)
             .sum();
-        finding.folded_probability += folded;
-        let Some(cluster) = solution.solved.get(c).map(|s| &s.cluster) else {
+        let Some(solved) = solution.solved.get(c) else {
             continue;
         };
+        if solved.standing != Standing::Listed {
+            // A family nobody listed. Of an anonymous one only the place as seen is
+            // known: it may be folded as a whole.
+            let folded = if solved.standing == Standing::Anonymous {
+                let unlisted = solution.unlisted.get(tone);
+                let share = unlisted.map_or(0.0, |u| u.folded / u.total());
+                folded + share * (total - folded)
+            } else {
+                folded
+            };
+            finding.folded_probability += folded;
+            finding.unlisted_folded += folded;
+            finding.unlisted_direct += total - folded;
+            continue;
+        }
+        finding.folded_probability += folded;
+        let cluster = &solved.cluster;
         let Some(cluster_line) = cluster.lines.get(line) else {
             continue;
         };

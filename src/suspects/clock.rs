@@ -5,7 +5,8 @@
 //! `y = δ − ε` with the source's own deviation `δ ~ N(0, (sd/nominal)²)`: every
 //! source that was found is a measurement `−y` of ε, as good as the source is known.
 
-use super::clusters::Normal;
+use super::hidden::Standing;
+use super::prior::Normal;
 use super::scene::Scene;
 use super::sweep::Solved;
 
@@ -31,7 +32,7 @@ pub(super) fn posterior(
     let mut precision = prior_sd(scene).powi(-2);
     let mut sum = 0.0;
     let mut used = 0;
-    for s in solved {
+    for s in solved.iter().filter(|s| s.standing == Standing::Listed) {
         let present = s.value.absent.iter().map(|a| 1.0 - a).fold(0.0, f64::max);
         let Some(fit) = s.fit().filter(|_| present > SURE) else {
             continue;

@@ -5,17 +5,11 @@
 //! from where it was fitted. A source's clock-scaled latents are worked with on
 //! the recorder's own scale, `θ/(1+ε)`: only that can be seen.
 
+use super::prior::Normal;
 use super::strength::{Faintness, PerClass, Strengths};
 use crate::fold::Chain;
-use crate::sources::{LatentId, Site};
+use crate::sources::{LatentId, Site, Steadiness};
 use crate::units::TrueHz;
-
-/// A normal distribution.
-#[derive(Debug, Clone, Copy, PartialEq)]
-pub(super) struct Normal {
-    pub mean: f64,
-    pub sd: f64,
-}
 
 /// A line as a function of its cluster's latents: `a·θ + b`.
 #[derive(Debug, Clone)]
@@ -47,6 +41,8 @@ pub(super) struct Cluster {
     pub latents: Vec<usize>,
     pub members: Vec<Member>,
     pub lines: Vec<ClusterLine>,
+    /// Whether each latent is locked to a crystal.
+    pub quartz: [bool; 2],
 }
 
 /// The plan of clusters: which latents, which sources, what is pinned.
@@ -213,10 +209,17 @@ impl Cluster {
                     .and_then(|g| groups.iter().position(|known| known == g)),
             });
         }
+        let quartz = |slot: usize| {
+            plan.latents
+                .get(slot)
+                .and_then(|&l| catalogue.latents.get(l))
+                .is_some_and(|l| l.steadiness == Steadiness::Quartz)
+        };
         Cluster {
             latents: plan.latents.clone(),
             members,
             lines,
+            quartz: [quartz(0), quartz(1)],
         }
     }
 }

@@ -2,7 +2,7 @@
 //!
 //! Joint inference over all tones and all listed sources. Sources that share
 //! latent frequencies form a *cluster* ([`clusters`]); where its latents could be
-//! is found from where its lines meet tones ([`modes`], [`pairs`]); the likelihood
+//! is found from where its lines meet tones ([`places`], [`pairs`]); the likelihood
 //! there, and who explains which tone, is [`evaluate`]; clusters are reconciled
 //! with one another, with [`unlisted`] tones and with the recorder's [`clock`] in
 //! [`sweep`]; [`attribute`] puts the result into words.
@@ -11,12 +11,16 @@ mod attribute;
 mod clock;
 mod clusters;
 mod evaluate;
+mod hidden;
 mod modes;
 mod pairs;
+mod places;
+mod prior;
 mod scene;
 mod strength;
 mod sweep;
 mod unlisted;
+mod wander;
 
 pub use scene::Scene;
 

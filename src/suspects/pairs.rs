@@ -7,10 +7,9 @@
 //! than three tones agree on need no grid: with two latents free, two tones are
 //! met independently, and that is what the broad node says.
 
-use super::clusters::{Cluster, Normal};
-use super::modes::{
-    Broad, Entry, Mode, Node, PRIOR_REACH, Places, REACH, Setting, gaussian, mean, meetings,
-};
+use super::clusters::Cluster;
+use super::modes::{Broad, Mode, Node, Places, REACH, Setting, gaussian, mean, meetings};
+use super::prior::{Normal, PRIOR_REACH, Prior};
 use super::scene::Meeting;
 use crate::fold::Chain;
 use crate::units::TrueHz;
@@ -100,12 +99,13 @@ pub(super) fn find(
     setting: &Setting,
     chain: &Chain,
 ) -> Places {
+    let priors = prior.map(Prior::Normal);
     let mut broad = Broad::default();
     let mut met: Vec<Vec<Meeting>> = Vec::with_capacity(cluster.lines.len());
     for (j, line) in cluster.lines.iter().enumerate() {
         let mut own = Vec::new();
-        meetings(line, prior, setting, &mut |meeting, _, _| {
-            broad.add(cluster, prior, setting, j, &meeting);
+        meetings(line, &priors, setting, &mut |meeting, _, _| {
+            broad.add(cluster, &priors, setting, j, &meeting);
             own.push(meeting);
         });
         met.push(own);
@@ -152,7 +152,7 @@ pub(super) fn find(
     places.truncate(MODES);
     let modes: Vec<Mode> = places
         .iter()
-        .map(|p| grid(p, cluster, prior, setting, chain, &near))
+        .flat_map(|p| grid(p, cluster, prior, setting, chain, &near))
         .collect();
     let inside: f64 = modes
         .iter()
@@ -366,7 +366,7 @@ fn grid(
     setting: &Setting,
     chain: &Chain,
     near: &Near,
-) -> Mode {
+) -> Vec<Mode> {
     let (values, axes) = eigen(place.covariance);
     let sd = values.map(|v| v.max(1e-300).sqrt());
     // Edges grow like sinh: fine within a standard deviation, out to the reach.
@@ -410,18 +410,13 @@ fn grid(
             if (tone.nu - seen).abs() > extent + REACH * 1.5 * (line.var + tone.var).sqrt() {
                 return;
             }
-            let rung_hz = rung(chain, f, tone.nu);
-            entries.push(Entry {
-                line: j,
-                member: line.member,
+            let meeting = Meeting {
                 tone: i,
-                rung_hz,
-                a: line.a,
-                target: rung_hz - line.b,
-                var: tone.var + line.var,
-                odds: setting.odds(line, tone, false),
-            });
+                rung_hz: rung(chain, f, tone.nu),
+                image: false,
+            };
+            entries.extend(setting.entry(cluster, j, &meeting));
         });
     }
-    Mode::new(axes, nodes, entries)
+    Mode::variants(axes, nodes, entries, place.theta, cluster, setting)
 }

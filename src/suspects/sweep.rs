@@ -4,41 +4,56 @@
 //! What a cluster tells a tone is its claim with the tone's own evidence divided
 //! out, `m = others · P/(1 − P)`; what a tone tells a cluster is the density of
 //! everything else, `others = unlisted + Σ m` of the other clusters.
+//!
+//! Where families compete for the same tones there is more than one way to agree.
+//! Several orders are tried and the one with the greatest evidence (Bethe's
+//! approximation, Yedidia, Freeman & Weiss 2005, from memory) is kept:
+//!
+//!     ln Z = Σ_c ln Z_c + Σ_i ln T_i − Σ_c Σ_i ln(T_i / others_ci),
+//!
+//! `T_i` the sum of everything at tone i, `Z_c` the evidence of cluster c.
 
-use super::clusters::{Cluster, Normal, Plan};
+use super::clusters::{Cluster, Plan};
 use super::evaluate::{Belief, Value, evaluate};
+use super::hidden::{self, Extended, Standing};
 use super::modes::{Places, Setting};
+use super::prior::{Normal, Prior};
 use super::scene::{Ladders, Measured, Scene, measure};
 use super::strength::Strengths;
 use super::unlisted::{self, Unlisted};
-use super::{clock, clusters, modes, pairs};
+use super::{clock, clusters, pairs, places};
+use std::rc::Rc;
 
 /// Probability that a listed source is present, before looking.
 const PRESENT: f64 = 0.5;
 /// Of a group of sources that exclude each other, that none is.
 const NONE_OF_GROUP: f64 = 0.1;
-/// Rounds of proposals, and rounds in all.
-const PROPOSALS: usize = 2;
-const ROUNDS: usize = 5;
+/// Rounds in all.
+const ROUNDS: usize = 7;
+/// Scenes with more clusters than this are solved in one order only.
+const MANY: usize = 24;
 
 /// A cluster with its latents' posterior.
+#[derive(Debug, Clone)]
 pub(super) struct Solved {
-    pub cluster: Cluster,
-    pub prior: Vec<Normal>,
-    pub places: Places,
+    pub cluster: Rc<Cluster>,
+    pub prior: Vec<Prior>,
+    pub standing: Standing,
+    pub places: Rc<Places>,
     pub value: Value,
     /// What it tells each tone.
     pub message: Vec<f64>,
 }
 
 /// Everything solved.
+#[derive(Debug, Clone)]
 pub(super) struct Solution {
-    pub tones: Vec<Measured>,
-    pub unlisted: Vec<Unlisted>,
+    pub tones: Rc<Vec<Measured>>,
+    pub unlisted: Rc<Vec<Unlisted>>,
     /// Expected number of unlisted tones, seen from each tone.
     pub unlisted_rate: Vec<f64>,
     /// Background density of each tone's strength, per dB.
-    pub level_density: Vec<f64>,
+    pub level_density: Rc<Vec<f64>>,
     pub solved: Vec<Solved>,
     /// Best present knowledge of each latent, on the recorder's scale.
     pub latents: Vec<Normal>,
@@ -68,6 +83,28 @@ impl Solution {
                 .filter_map(|(_, s)| s.message.get(i))
                 .sum::<f64>()
     }
+
+    fn all_others(&self, but: Option<usize>) -> Vec<f64> {
+        (0..self.tones.len()).map(|i| self.others(i, but)).collect()
+    }
+
+    /// Bethe's approximation of the log evidence.
+    fn ln_evidence(&self) -> f64 {
+        let total = self.all_others(None);
+        let mut ln = total.iter().map(|t| t.ln()).sum::<f64>();
+        for s in &self.solved {
+            ln += s.value.ln_evidence;
+            for (t, m) in total.iter().zip(&s.message) {
+                // ln(others/T) without cancellation where the message is small.
+                ln += if *m < 0.5 * t {
+                    (-m / t).ln_1p()
+                } else {
+                    ((t - m).max(1e-300) / t).ln()
+                };
+            }
+        }
+        ln
+    }
 }
 
 /// Detection threshold of the SNR in one resolution cell, dB: the level that noise
@@ -84,25 +121,74 @@ fn threshold_db(scene: &Scene) -> f64 {
         .max(3.0)
 }
 
+/// What does not change while sweeping.
+struct Problem<'a> {
+    scene: &'a Scene<'a>,
+    extended: Extended,
+    plans: Vec<Plan>,
+    strengths: Strengths,
+    ladders: Ladders,
+    groups: Vec<String>,
+}
+
+impl Problem<'_> {
+    fn cluster(&self, plan: &Plan, known: &[Normal]) -> Cluster {
+        let at = |l: usize| {
+            // Own latents at their prior, pinned ones where they were fitted.
+            let prior = self.extended.priors.get(l).map(Prior::normal);
+            if plan.latents.contains(&l) {
+                prior
+            } else {
+                known.get(l).copied().or(prior)
+            }
+            .unwrap_or(Normal { mean: 1.0, sd: 1.0 })
+        };
+        Cluster::new(
+            plan,
+            &self.extended.site,
+            self.scene.chain,
+            &self.strengths,
+            &self.groups,
+            &at,
+        )
+    }
+
+    fn places(&self, c: usize, solution: &Solution) -> Places {
+        let Some(solved) = solution.solved.get(c) else {
+            return Places::default();
+        };
+        let others = solution.all_others(Some(c));
+        let background: Vec<f64> = (0..solution.tones.len())
+            .map(|i| solution.background(i))
+            .collect();
+        let setting = Setting {
+            tones: &solution.tones,
+            ladders: &self.ladders,
+            strengths: &self.strengths,
+            others: &others,
+            background: &background,
+            half_hz: self.scene.chain.file_rate_hz() / 2.0,
+        };
+        match solved.prior.as_slice() {
+            [one] => places::find(&solved.cluster, one, &setting),
+            [one, two] => pairs::find(
+                &solved.cluster,
+                &[one.normal(), two.normal()],
+                &setting,
+                self.scene.chain,
+            ),
+            _ => Places::default(),
+        }
+    }
+}
+
 pub(super) fn solve(scene: &Scene) -> Solution {
     let tones = measure(scene);
     let strengths = Strengths::new(threshold_db(scene));
-    let plans = clusters::plan(scene.site);
-    let epsilon_sd = clock::prior_sd(scene);
-    let latents: Vec<Normal> = scene
-        .site
-        .catalogue
-        .latents
-        .iter()
-        .map(|l| Normal {
-            mean: l.nominal_hz,
-            sd: l.sd_hz.hypot(l.nominal_hz * epsilon_sd).max(1e-12),
-        })
-        .collect();
+    let extended = hidden::extend(scene, clock::prior_sd(scene));
+    let catalogue = &extended.site.catalogue;
     let mut groups: Vec<String> = Vec::new();
-    for g in scene
-        .site
-        .catalogue
+    for g in catalogue
         .sources
         .iter()
         .filter_map(|s| s.exclusive_group.as_ref())
@@ -111,41 +197,138 @@ pub(super) fn solve(scene: &Scene) -> Solution {
             groups.push(g.clone());
         }
     }
-    let up_to = scene
-        .site
-        .catalogue
+    let up_to = catalogue
         .sources
         .iter()
         .flat_map(|s| &s.lines)
-        .map(|l| {
-            scene.site.catalogue.nominal_hz(l).abs() + 6.0 * scene.site.catalogue.prior_sd_hz(l)
-        })
+        .map(|l| catalogue.nominal_hz(l).abs() + 6.0 * catalogue.prior_sd_hz(l))
         .fold(scene.chain.file_rate_hz(), f64::max);
-    let ladders = Ladders::new(scene.chain, &tones, up_to);
-    let mut solution = Solution {
-        unlisted: unlisted::densities(scene, &tones),
-        unlisted_rate: vec![unlisted_rate(1.0); tones.len()],
-        level_density: tones
-            .iter()
-            .map(|t| strengths.background(t.snr_db))
-            .collect(),
-        tones,
-        solved: Vec::new(),
-        latents: latents.clone(),
+    let problem = Problem {
+        scene,
+        plans: clusters::plan(&extended.site),
+        ladders: Ladders::new(scene.chain, &tones, up_to),
+        strengths,
+        groups,
+        extended,
     };
+    let latents: Vec<Normal> = problem.extended.priors.iter().map(Prior::normal).collect();
+    let mut start = Solution {
+        unlisted: Rc::new(unlisted::densities(scene, &tones)),
+        unlisted_rate: vec![unlisted_rate(1.0); tones.len()],
+        level_density: Rc::new(
+            tones
+                .iter()
+                .map(|t| problem.strengths.background(t.snr_db))
+                .collect(),
+        ),
+        tones: Rc::new(tones),
+        solved: Vec::new(),
+        latents,
+    };
+    for plan in &problem.plans {
+        let standing = plan
+            .sources
+            .first()
+            .and_then(|&s| problem.extended.standing.get(s))
+            .copied()
+            .unwrap_or(Standing::Listed);
+        start.solved.push(Solved {
+            cluster: Rc::new(problem.cluster(plan, &start.latents)),
+            prior: plan
+                .latents
+                .iter()
+                .filter_map(|&l| problem.extended.priors.get(l).copied())
+                .collect(),
+            standing,
+            places: Rc::default(),
+            value: Value::default(),
+            message: vec![0.0; start.tones.len()],
+        });
+    }
+    first_look(&problem, &mut start);
+    let orders = orders(&start);
+    let mut best: Option<(f64, Solution)> = None;
+    for (parallel, order) in orders {
+        let solution = run(&problem, start.clone(), parallel, &order);
+        let ln = solution.ln_evidence();
+        if best.as_ref().is_none_or(|(b, _)| ln > *b) || !ln.is_finite() {
+            best = Some((ln, solution));
+        }
+    }
+    best.map_or(start, |b| b.1)
+}
+
+/// Every cluster but the anonymous ones alone against the background.
+fn first_look(problem: &Problem, solution: &mut Solution) {
+    for c in 0..solution.solved.len() {
+        if solution.solved.get(c).map(|s| s.standing) == Some(Standing::Anonymous) {
+            continue;
+        }
+        let places = problem.places(c, solution);
+        let beliefs = beliefs(c, solution);
+        let others = solution.all_others(Some(c));
+        if let Some(s) = solution.solved.get_mut(c) {
+            s.value = evaluate(&places, &s.cluster, &beliefs, &others);
+            s.places = Rc::new(places);
+        }
+    }
+}
+
+/// `(all at once first?, order of clusters)` of each attempt.
+fn orders(start: &Solution) -> Vec<(bool, Vec<usize>)> {
+    let standing = |c: &usize| start.solved.get(*c).map(|s| s.standing);
+    let strength = |c: &usize| start.solved.get(*c).map_or(0.0, |s| s.value.ln_evidence);
+    let all: Vec<usize> = (0..start.solved.len()).collect();
+    let mut strongest = all.clone();
+    strongest.sort_by(|a, b| {
+        let anonymous = |c| standing(c) == Some(Standing::Anonymous);
+        anonymous(a)
+            .cmp(&anonymous(b))
+            .then(strength(b).total_cmp(&strength(a)))
+    });
+    if all.len() > MANY {
+        return vec![(true, strongest)];
+    }
+    let mut weakest: Vec<usize> = strongest.clone();
+    weakest.sort_by(|a, b| {
+        let anonymous = |c| standing(c) == Some(Standing::Anonymous);
+        anonymous(a)
+            .cmp(&anonymous(b))
+            .then(strength(a).total_cmp(&strength(b)))
+    });
+    let mut hidden_first = strongest.clone();
+    hidden_first.sort_by_key(|c| standing(c) == Some(Standing::Listed));
+    vec![
+        (true, strongest.clone()),
+        (false, strongest),
+        (false, weakest),
+        (false, hidden_first),
+    ]
+}
+
+fn run(problem: &Problem, mut solution: Solution, parallel: bool, order: &[usize]) -> Solution {
+    if parallel {
+        let looked: Vec<Option<Vec<f64>>> = (0..solution.solved.len())
+            .map(|c| message(c, &solution))
+            .collect();
+        for (s, m) in solution.solved.iter_mut().zip(looked) {
+            if let Some(m) = m {
+                s.message = m;
+            }
+        }
+    }
     for round in 0..ROUNDS {
-        for (c, plan) in plans.iter().enumerate() {
-            if round < PROPOSALS {
-                propose(
-                    scene,
-                    &strengths,
-                    &ladders,
-                    &groups,
-                    plan,
-                    c,
-                    &latents,
-                    &mut solution,
-                );
+        for &c in order {
+            let propose = match solution.solved.get(c).map(|s| s.standing) {
+                Some(Standing::Anonymous) => round < 3,
+                _ => round == 1,
+            };
+            if propose {
+                renew_pinned(problem, c, &mut solution);
+                let places = problem.places(c, &solution);
+                if let Some(s) = solution.solved.get_mut(c) {
+                    s.places = Rc::new(places);
+                }
             }
             update(c, &mut solution);
         }
@@ -154,60 +337,14 @@ pub(super) fn solve(scene: &Scene) -> Solution {
     solution
 }
 
-#[allow(clippy::too_many_arguments)] // the pieces of one call, no object of their own
-fn propose(
-    scene: &Scene,
-    strengths: &Strengths,
-    ladders: &Ladders,
-    groups: &[String],
-    plan: &Plan,
-    c: usize,
-    latents: &[Normal],
-    solution: &mut Solution,
-) {
-    let known = &solution.latents;
-    let at = |l: usize| {
-        // Own latents at their prior, pinned ones where they were fitted.
-        let from = if plan.latents.contains(&l) {
-            latents
-        } else {
-            known
-        };
-        from.get(l)
-            .copied()
-            .unwrap_or(Normal { mean: 1.0, sd: 1.0 })
+/// A cluster with pinned latents is expanded anew once they are fitted.
+fn renew_pinned(problem: &Problem, c: usize, solution: &mut Solution) {
+    let Some(plan) = problem.plans.get(c).filter(|p| !p.pinned.is_empty()) else {
+        return;
     };
-    let cluster = Cluster::new(plan, scene.site, scene.chain, strengths, groups, &at);
-    let prior: Vec<Normal> = cluster.latents.iter().map(|&l| at(l)).collect();
-    let others: Vec<f64> = (0..solution.tones.len())
-        .map(|i| solution.others(i, Some(c)))
-        .collect();
-    let setting = Setting {
-        tones: &solution.tones,
-        ladders,
-        strengths,
-        others: &others,
-        half_hz: scene.chain.file_rate_hz() / 2.0,
-    };
-    let places = match prior.as_slice() {
-        [one] => modes::find(&cluster, one, &setting),
-        [one, two] => pairs::find(&cluster, &[*one, *two], &setting, scene.chain),
-        _ => Places::default(),
-    };
-    let tones = solution.tones.len();
-    let solved = Solved {
-        cluster,
-        prior,
-        places,
-        value: Value::default(),
-        message: vec![0.0; tones],
-    };
-    match solution.solved.get_mut(c) {
-        Some(slot) => {
-            let message = std::mem::take(&mut slot.message);
-            *slot = Solved { message, ..solved };
-        }
-        None => solution.solved.push(solved),
+    let cluster = problem.cluster(plan, &solution.latents);
+    if let Some(s) = solution.solved.get_mut(c) {
+        s.cluster = Rc::new(cluster);
     }
 }
 
@@ -220,8 +357,13 @@ fn beliefs(c: usize, solution: &Solution) -> Vec<Belief> {
         .members
         .iter()
         .map(|member| {
+            let (plain, none) = match own.standing {
+                Standing::Listed => (PRESENT, NONE_OF_GROUP),
+                Standing::Supply => (hidden::SUPPLY_PRESENT, 1.0 - hidden::SUPPLY_PRESENT),
+                Standing::Anonymous => (hidden::ANONYMOUS_PRESENT, 0.0),
+            };
             let Some(group) = member.exclusive else {
-                return Belief { present: PRESENT };
+                return Belief { present: plain };
             };
             // Bayes factors of the group's other sources.
             let mut size = 1.0;
@@ -235,8 +377,8 @@ fn beliefs(c: usize, solution: &Solution) -> Vec<Belief> {
                     }
                 }
             }
-            let each = (1.0 - NONE_OF_GROUP) / size;
-            let absent = NONE_OF_GROUP + each * rivals;
+            let each = (1.0 - none) / size;
+            let absent = none + each * rivals;
             Belief {
                 present: (each / (each + absent)).max(1e-250),
             }
@@ -244,21 +386,34 @@ fn beliefs(c: usize, solution: &Solution) -> Vec<Belief> {
         .collect()
 }
 
+/// What a cluster tells the tones, from its present value.
+fn message(c: usize, solution: &Solution) -> Option<Vec<f64>> {
+    let others = solution.all_others(Some(c));
+    let solved = solution.solved.get(c)?;
+    let claims = solved.value.claims(&solved.places, others.len());
+    Some(
+        claims
+            .iter()
+            .zip(&others)
+            .map(|(p, o)| o * p / (1.0 - p).max(1e-12))
+            .collect(),
+    )
+}
+
 fn update(c: usize, solution: &mut Solution) {
     let beliefs = beliefs(c, solution);
-    let count = solution.tones.len();
-    let others: Vec<f64> = (0..count).map(|i| solution.others(i, Some(c))).collect();
+    let others = solution.all_others(Some(c));
     let Some(solved) = solution.solved.get_mut(c) else {
         return;
     };
-    let value = evaluate(&solved.places, &solved.cluster, &beliefs, &others);
-    let claims = value.claims(&solved.places, count);
-    solved.message = claims
-        .iter()
-        .zip(&others)
-        .map(|(p, o)| o * p / (1.0 - p).max(1e-12))
-        .collect();
-    solved.value = value;
+    solved.value = evaluate(&solved.places, &solved.cluster, &beliefs, &others);
+    let Some(message) = message(c, solution) else {
+        return;
+    };
+    let Some(solved) = solution.solved.get_mut(c) else {
+        return;
+    };
+    solved.message = message;
     let posterior = solved.posterior();
     for (&l, p) in solved.cluster.latents.iter().zip(posterior) {
         if let Some(slot) = solution.latents.get_mut(l) {
@@ -281,52 +436,62 @@ impl Solved {
     /// Mean and standard deviation of each latent: the best mode's where one
     /// stands out, the prior's otherwise.
     pub fn posterior(&self) -> Vec<Normal> {
-        self.fit().unwrap_or_else(|| self.prior.clone())
+        self.fit()
+            .unwrap_or_else(|| self.prior.iter().map(Prior::normal).collect())
     }
 
-    /// [`posterior`](Solved::posterior) where a mode stands out.
+    /// [`posterior`](Solved::posterior) where the modes agree on one place.
     pub fn fit(&self) -> Option<Vec<Normal>> {
+        let all =
+            |k: usize| {
+                self.places.modes.iter().zip(&self.value.weights).flat_map(
+                    move |(mode, weights)| {
+                        mode.nodes.iter().zip(weights).map(move |(n, w)| {
+                            let along = |axis: [f64; 2]| axis.get(k).map_or(0.0, |a| a * a);
+                            let cell = along(mode.axes[0]) * n.cell_var[0]
+                                + along(mode.axes[1]) * n.cell_var[1];
+                            (*w, n.theta.get(k).copied().unwrap_or(0.0), cell)
+                        })
+                    },
+                )
+            };
+        // The best mode and all others whose middle lies with it.
         let masses: Vec<f64> = self.value.weights.iter().map(|w| w.iter().sum()).collect();
         let best = masses
             .iter()
             .enumerate()
-            .max_by(|a, b| a.1.total_cmp(b.1))
-            .filter(|(_, m)| **m > 0.5);
-        let (b, mass) = best?;
-        let (mode, weights) = (self.places.modes.get(b)?, self.value.weights.get(b)?);
-        let fitted = (0..self.prior.len())
+            .max_by(|a, b| a.1.total_cmp(b.1))?;
+        let mode = self.places.modes.get(best.0)?;
+        let middle = mode.nodes.get(mode.nodes.len() / 2)?.theta;
+        let extent = |k: usize| {
+            mode.nodes
+                .iter()
+                .filter_map(|n| n.theta.get(k))
+                .map(|t| (t - middle.get(k).copied().unwrap_or(0.0)).abs())
+                .fold(0.0, f64::max)
+        };
+        let mut mass = 0.0;
+        let fitted: Vec<Normal> = (0..self.prior.len())
             .map(|k| {
-                let at = |n: usize| {
-                    mode.nodes
-                        .get(n)
-                        .and_then(|n| n.theta.get(k).copied())
-                        .unwrap_or(0.0)
-                };
-                let mean: f64 = weights
-                    .iter()
-                    .enumerate()
-                    .map(|(n, w)| w * at(n))
-                    .sum::<f64>()
-                    / mass;
-                let var: f64 = weights
-                    .iter()
-                    .enumerate()
-                    .map(|(n, w)| {
-                        let cell = mode.nodes.get(n).map_or(0.0, |node| {
-                            let along = |axis: [f64; 2]| axis.get(k).map_or(0.0, |a| a * a);
-                            along(mode.axes[0]) * node.cell_var[0]
-                                + along(mode.axes[1]) * node.cell_var[1]
-                        });
-                        w * ((at(n) - mean).powi(2) + cell)
-                    })
-                    .sum::<f64>()
-                    / mass;
+                let reach = extent(k);
+                let pivot = middle.get(k).copied().unwrap_or(0.0);
+                let (mut m, mut first, mut second) = (0.0, 0.0, 0.0);
+                for (w, theta, cell) in all(k) {
+                    let d = theta - pivot;
+                    if d.abs() <= reach {
+                        m += w;
+                        first += w * d;
+                        second += w * (d * d + cell);
+                    }
+                }
+                mass = m;
+                let d = first / m;
                 Normal {
-                    mean,
-                    sd: var.sqrt(),
+                    mean: pivot + d,
+                    sd: (second / m - d * d).max(0.0).sqrt(),
                 }
             })
             .collect();
-        Some(fitted)
+        (mass > 0.5 && fitted.iter().all(|f| f.mean.is_finite())).then_some(fitted)
     }
 }
