@@ -8,6 +8,12 @@ use crate::triage::Triage;
 use anstyle::{AnsiColor, Style};
 use std::io::{self, Write};
 
+/// A latent's own name without that of the source it is printed beside.
+fn latent_word(latent: &str, source: &str) -> String {
+    let rest = latent.strip_prefix(source).unwrap_or(latent).trim();
+    plain(if rest.is_empty() { "at" } else { rest })
+}
+
 /// Suspects less probable than this are not worth a line on the screen; they
 /// stay in the exports.
 const WORTH_A_LINE: f64 = 0.02;
@@ -90,28 +96,19 @@ fn duration(seconds: f64) -> String {
     }
 }
 
-fn tones(rows: &[(&Tone, &Finding)], top: usize, out: &mut dyn Write) -> io::Result<()> {
-    // the unlisted row needs 8, the heading 7
-    let name_width = rows
-        .iter()
-        .flat_map(|(_, f)| shown(f, top))
-        .map(|s| label(s).chars().count())
-        .max()
-        .unwrap_or(0)
-        .clamp(8, 40);
-    writeln!(
-        out,
-        "\n{QUIET}tone      seen Hz ± 95 %        dBFS  verdict    could be {:<pad$}  chance      true Hz ± 95 %        zone   by luck{QUIET:#}",
-        "",
-        pad = name_width.saturating_sub(9),
-    )?;
-    for (tone, finding) in rows {
-        let (seen, u95) = with_u95(tone.seen_hz.0, tone.seen_hz_u95);
-        let (word, style) = verdict(finding.verdict);
-        let mut head = format!(
-            "{:>4}  {:>11} ± {:<9}  {:>6.1}  {style}{word:<9}{style:#}  ",
-            tone.number, seen, u95, tone.level_dbfs
-        );
+/// One printed line: a tone's own cells are only on its first.
+struct Row {
+    tone: Option<[String; 3]>,
+    verdict: Option<Verdict>,
+    suspect: String,
+    chance: String,
+    /// True frequency, zone, luck; or words where nothing listed is meant.
+    rest: Result<[String; 3], String>,
+}
+
+fn rows(tones: &[(&Tone, &Finding)], top: usize) -> Vec<Row> {
+    let mut all = Vec::new();
+    for (tone, finding) in tones {
         let unlisted = finding.unlisted_direct + finding.unlisted_folded;
         let mut lines: Vec<(Option<&Suspect>, f64)> = shown(finding, top)
             .map(|s| (Some(s), s.probability))
@@ -120,41 +117,114 @@ fn tones(rows: &[(&Tone, &Finding)], top: usize, out: &mut dyn Write) -> io::Res
             lines.push((None, unlisted));
         }
         lines.sort_by(|a, b| b.1.total_cmp(&a.1));
-        for (suspect, p) in lines {
-            write!(out, "{head}")?;
-            head = " ".repeat(49);
-            match suspect {
-                Some(s) => {
-                    let (true_hz, true_u95) = with_u95(s.true_hz.0, s.true_hz_u95);
-                    let zone = if s.sense.is_inverted() {
-                        format!("{} inv", s.zone)
-                    } else {
-                        s.zone.to_string()
-                    };
-                    writeln!(
-                        out,
-                        "{:<name_width$}  {:>6}  {:>13} ± {:<9}  {:<6}  {:>6}",
-                        label(s),
-                        percent(p),
-                        true_hz,
-                        true_u95,
-                        zone,
-                        luck(s.coincidence)
-                    )?;
-                }
-                None => writeln!(
+        for (i, (suspect, p)) in lines.into_iter().enumerate() {
+            let first = i == 0;
+            let seen = with_u95(tone.seen_hz.0, tone.seen_hz_u95);
+            all.push(Row {
+                tone: first.then(|| {
+                    [
+                        tone.number.to_string(),
+                        interval(&seen),
+                        format!("{:.1}", tone.level_dbfs),
+                    ]
+                }),
+                verdict: first.then_some(finding.verdict),
+                suspect: suspect.map_or("unlisted".into(), label),
+                chance: percent(p),
+                rest: match suspect {
+                    Some(s) => Ok([
+                        interval(&with_u95(s.true_hz.0, s.true_hz_u95)),
+                        if s.sense.is_inverted() {
+                            format!("{} inv", s.zone)
+                        } else {
+                            s.zone.to_string()
+                        },
+                        luck(s.coincidence),
+                    ]),
+                    None => Err(unlisted_words(finding)),
+                },
+            });
+        }
+    }
+    all
+}
+
+fn interval((value, u95): &(String, String)) -> String {
+    format!("{value} ± {u95}")
+}
+
+fn tones(found: &[(&Tone, &Finding)], top: usize, out: &mut dyn Write) -> io::Result<()> {
+    let rows = rows(found, top);
+    let widest = |heading: &str, cell: &dyn Fn(&Row) -> Option<usize>| {
+        rows.iter()
+            .filter_map(cell)
+            .chain([heading.chars().count()])
+            .max()
+            .unwrap_or(0)
+    };
+    let of_tone = |i: usize| move |r: &Row| r.tone.as_ref().map(|t| t[i].chars().count());
+    let of_rest = |i: usize| move |r: &Row| r.rest.as_ref().ok().map(|t| t[i].chars().count());
+    let headings = [
+        "tone",
+        "seen Hz ± 95 %",
+        "dBFS",
+        "verdict",
+        "could be",
+        "chance",
+        "true Hz ± 95 %",
+        "zone",
+        "by luck",
+    ];
+    let widths = [
+        widest(headings[0], &of_tone(0)),
+        widest(headings[1], &of_tone(1)),
+        widest(headings[2], &of_tone(2)),
+        headings[3].len(),
+        widest(headings[4], &|r| Some(r.suspect.chars().count())),
+        headings[5].len(),
+        widest(headings[6], &of_rest(0)),
+        widest(headings[7], &of_rest(1)),
+        headings[8].len(),
+    ];
+    let [n, seen, dbfs, word, name, chance, truth, zone, by_luck] = widths;
+    writeln!(
+        out,
+        "\n{QUIET}{:>n$}  {:>seen$}  {:>dbfs$}  {:<word$}  {:<name$}  {:>chance$}  {:>truth$}  {:<zone$}  {:>by_luck$}{QUIET:#}",
+        headings[0],
+        headings[1],
+        headings[2],
+        headings[3],
+        headings[4],
+        headings[5],
+        headings[6],
+        headings[7],
+        headings[8],
+    )?;
+    for row in &rows {
+        match (&row.tone, row.verdict) {
+            (Some([number, seen_hz, level]), Some(v)) => {
+                let (text, style) = verdict(v);
+                write!(
                     out,
-                    "{:<name_width$}  {:>6}  {QUIET}{}{QUIET:#}",
-                    "unlisted",
-                    percent(p),
-                    unlisted_words(finding)
-                )?,
+                    "{number:>n$}  {seen_hz:>seen$}  {level:>dbfs$}  {style}{text:<word$}{style:#}"
+                )?;
             }
+            _ => write!(out, "{:indent$}", "", indent = n + seen + dbfs + word + 6)?,
+        }
+        write!(out, "  {:<name$}  {:>chance$}  ", row.suspect, row.chance)?;
+        match &row.rest {
+            Ok([true_hz, in_zone, lucky]) => {
+                writeln!(
+                    out,
+                    "{true_hz:>truth$}  {in_zone:<zone$}  {lucky:>by_luck$}"
+                )?;
+            }
+            Err(words) => writeln!(out, "{QUIET}{words}{QUIET:#}")?,
         }
     }
     writeln!(
         out,
-        "{QUIET}by luck: how many listed lines would fall this close by pure chance; inv: in an inverted zone, where rising is seen as falling{QUIET:#}"
+        "{QUIET}by luck: listed lines expected this close by pure chance. inv: inverted, what rises is seen to fall.{QUIET:#}"
     )
 }
 
@@ -190,11 +260,11 @@ fn unlisted_words(finding: &Finding) -> String {
         0.0
     };
     if share > 0.9 {
-        "nothing listed; folded if so".into()
+        "and then folded".into()
     } else if share < 0.1 {
-        "nothing listed; real where it shows if so".into()
+        "and then real where it shows".into()
     } else {
-        format!("nothing listed; folded in {} of such cases", percent(share))
+        format!("and then {} folded", percent(share))
     }
 }
 
@@ -206,22 +276,29 @@ fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
     if fits.is_empty() {
         return Ok(());
     }
+    let width = fits
+        .iter()
+        .map(|(name, _)| plain(name).chars().count())
+        .chain(["source".len()])
+        .max()
+        .unwrap_or(0);
     writeln!(
         out,
-        "\n{QUIET}source                    there  tones  fitted{QUIET:#}"
+        "\n{QUIET}{:<width$}  there  tones  fitted ± 95 %{QUIET:#}",
+        "source"
     )?;
     for (name, fit) in fits {
         let latents: Vec<String> = fit
             .latents
             .iter()
-            .map(|(name, value, u95)| {
+            .map(|(latent, value, u95)| {
                 let (value, u95) = with_u95(*value, *u95);
-                format!("{} {value} ± {u95} Hz", plain(name))
+                format!("{} {value} ± {u95} Hz", latent_word(latent, name))
             })
             .collect();
         writeln!(
             out,
-            "{:<24}  {:>5}  {:>5.1}  {}",
+            "{:<width$}  {:>5}  {:>5.1}  {}",
             plain(name),
             percent(fit.present_probability),
             fit.tones_explained,
@@ -229,6 +306,9 @@ fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
         )?;
     }
     let clock = &result.inference.clock;
-    let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
-    writeln!(out, "the recorder's clock is off by {ppm} ± {u95} ppm")
+    if clock.latents > 0 {
+        let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
+        writeln!(out, "recorder's clock: {ppm} ± {u95} ppm")?;
+    }
+    Ok(())
 }
