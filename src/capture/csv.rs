@@ -5,7 +5,8 @@ use std::path::PathBuf;
 use std::sync::Arc;
 
 use super::cells::Cell;
-use super::clock::{Clock, ClockPlan, ClockProbe};
+use super::clock::Clock;
+use super::clock_plan::{ClockPlan, ClockProbe};
 use super::csv_rows::{RowCounts, Rows, Source};
 use super::csv_sniff::{Table, sniff};
 use super::error::{CaptureError, excerpt};

@@ -17,6 +17,8 @@ const DELIMITERS: &[u8] = b"\t;,";
 #[derive(Debug, Clone, PartialEq)]
 pub(super) struct Table {
     pub delimiter: u8,
+    /// Cells may be in quotes.
+    pub quoted: bool,
     /// Bytes of decoded text before the first row of numbers.
     pub skip_bytes: u64,
     /// 1-based line of that row.
@@ -50,12 +52,14 @@ struct Line {
 #[derive(Debug, Clone, Copy, Default, PartialEq)]
 struct Tally {
     numbers: usize,
+    /// Written times and dates.
+    times: usize,
     words: usize,
 }
 
 impl Tally {
     fn numeric(self) -> bool {
-        self.numbers > self.words
+        self.numbers + self.times > self.words
     }
 }
 
@@ -93,16 +97,22 @@ pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table,
         });
     };
     super::limit_channels(width as u64)?;
-    // Rows with a bad cell may come first; a heading starts with a word.
-    let earlier = records.iter().take(first).rev();
-    let first = first
-        - earlier
-            .take_while(|line| is_spoilt_data(line, &tallies))
-            .count();
+    // Rows with a bad cell may come first, right under a heading of words.
+    let heading = records
+        .iter()
+        .take(first)
+        .rposition(|line| is_wordy(line, width));
+    let first = heading.map_or(first, |heading| heading + 1);
     let (before, data) = records.split_at(first);
+    let start = data.first().map_or(0, |line| line.start);
     let mut table = Table {
         delimiter,
-        skip_bytes: data.first().map_or(0, |line| line.start as u64),
+        // Without this, a stray quote in a remark could swallow rows.
+        quoted: lines
+            .iter()
+            .filter(|(at, bytes)| *at >= start && !is_remark(bytes, delimiter))
+            .any(|(_, bytes)| bytes.contains(&b'"')),
+        skip_bytes: start as u64,
         first_line: data.first().map_or(1, |line| line.number),
         columns: headings(before, width),
         time: None,
@@ -168,10 +178,12 @@ fn split(lines: &[(usize, &[u8])], delimiter: u8) -> Vec<Line> {
     split
 }
 
+/// 1 for a number or time, 1 for a word.
 fn tally_cell(cell: &[u8]) -> (usize, usize) {
     match read_cell(cell) {
         Cell::Number(_) => (1, 0),
         Cell::Missing => (0, 0),
+        Cell::Word if StampFormat::is_written(cell) => (1, 0),
         Cell::Word => (0, 1),
     }
 }
@@ -219,9 +231,12 @@ fn tally(lines: &[Line], width: usize) -> Vec<Tally> {
         .filter(|line| !line.remark && line.cells.len() == width)
     {
         for (tally, cell) in tallies.iter_mut().zip(&line.cells) {
-            let (number, word) = tally_cell(cell);
-            tally.numbers += number;
-            tally.words += word;
+            match read_cell(cell) {
+                Cell::Number(_) => tally.numbers += 1,
+                Cell::Missing => {}
+                Cell::Word if StampFormat::is_written(cell) => tally.times += 1,
+                Cell::Word => tally.words += 1,
+            }
         }
     }
     tallies
@@ -241,16 +256,11 @@ fn is_data(line: &Line, tallies: &[Tally]) -> bool {
     !line.remark && line.cells.len() == tallies.len() && numbers > 0 && words == 0
 }
 
-/// A row whose first number is there, if not the others.
-fn is_spoilt_data(line: &Line, tallies: &[Tally]) -> bool {
-    let first = line
-        .cells
-        .iter()
-        .zip(tallies)
-        .find(|(_, tally)| tally.numeric());
-    !line.remark
-        && line.cells.len() == tallies.len()
-        && first.is_some_and(|(cell, _)| tally_cell(cell).0 > 0)
+/// As wide as the rows, with words and no number.
+fn is_wordy(line: &Line, width: usize) -> bool {
+    let counts = line.cells.iter().map(tally_cell);
+    let (numbers, words) = counts.fold((0, 0), |(n, w), (number, word)| (n + number, w + word));
+    line.cells.len() == width && numbers == 0 && words > 0
 }
 
 /// Names and units from the lines before the data.
@@ -331,10 +341,15 @@ fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<
         if Some(column) == time || table.left_out(column) {
             continue;
         }
-        if tally.words > tally.numbers {
+        if tally.words + tally.times > tally.numbers {
+            let what = if tally.words > tally.times {
+                "words"
+            } else {
+                "times"
+            };
             table
                 .notes
-                .push(format!("column {name:?} holds words: left out"));
+                .push(format!("column {name:?} holds {what}: left out"));
         } else if tally.numbers > 0 || !table.is_unnamed(column) {
             table.values.push(column);
         }

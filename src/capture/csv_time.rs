@@ -66,6 +66,13 @@ pub(super) fn find_time(
         }
     }
     table.time = best.map(|(_, time)| time);
+    if let Some(time) = table.time {
+        let cells: Vec<&[u8]> = rows
+            .iter()
+            .map(|row| row.get(time.column).unwrap_or_default())
+            .collect();
+        table.notes.extend(time.format.assumption(&cells));
+    }
     for column in times {
         if table.time.is_some_and(|time| time.column != column) {
             table.leave_out(column, "is a second time");

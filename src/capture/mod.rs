@@ -5,10 +5,12 @@
 
 mod cells;
 mod clock;
+mod clock_plan;
 mod csv;
 mod csv_rows;
 mod csv_sniff;
 mod csv_time;
+mod dates;
 mod error;
 mod probe;
 mod riff;

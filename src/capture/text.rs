@@ -224,7 +224,6 @@ enum Place {
     Quoted,
     /// After a quote within quotes: the end, or the first half of a quote.
     QuoteEnd,
-    Comment,
 }
 
 /// Passes bytes through and fails when a CSV record grows beyond
@@ -234,6 +233,8 @@ enum Place {
 pub(super) struct LineLimit<R> {
     inner: R,
     delimiter: u8,
+    /// Whether cells may be in quotes.
+    quoted: bool,
     place: Place,
     length: usize,
     /// Newlines passed, and those passed when the record began.
@@ -242,10 +243,11 @@ pub(super) struct LineLimit<R> {
 }
 
 impl<R> LineLimit<R> {
-    pub(super) fn new(inner: R, delimiter: u8) -> Self {
+    pub(super) fn new(inner: R, delimiter: u8, quoted: bool) -> Self {
         LineLimit {
             inner,
             delimiter,
+            quoted,
             place: Place::RecordStart,
             length: 0,
             lines: 0,
@@ -254,8 +256,8 @@ impl<R> LineLimit<R> {
     }
 
     fn pass(&mut self, bytes: &[u8]) -> io::Result<()> {
-        let quoted = matches!(self.place, Place::Quoted | Place::QuoteEnd);
-        if quoted || bytes.contains(&b'"') {
+        let within = matches!(self.place, Place::Quoted | Place::QuoteEnd);
+        if self.quoted && (within || bytes.contains(&b'"')) {
             bytes.iter().for_each(|&byte| self.pass_byte(byte));
         } else {
             self.pass_plain(bytes);
@@ -281,10 +283,7 @@ impl<R> LineLimit<R> {
             None => bytes,
         };
         self.length += line.len();
-        if self.place == Place::RecordStart && line.first() == Some(&b'#') {
-            self.place = Place::Comment;
-        }
-        if let (Some(&last), true) = (line.last(), self.place != Place::Comment) {
+        if let Some(&last) = line.last() {
             self.place = if last == self.delimiter {
                 Place::FieldStart
             } else {
@@ -304,7 +303,6 @@ impl<R> LineLimit<R> {
                 self.record_line = self.lines;
                 Place::RecordStart
             }
-            (Place::Comment, _) | (Place::RecordStart, b'#') => Place::Comment,
             (Place::RecordStart | Place::FieldStart, b'"') => Place::Quoted,
             (_, byte) if byte == self.delimiter => Place::FieldStart,
             _ => Place::Plain,

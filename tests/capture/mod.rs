@@ -3,6 +3,7 @@
 
 mod csv;
 mod riff;
+mod stamps;
 mod wav;
 
 use std::path::{Path, PathBuf};
