@@ -60,7 +60,7 @@ pub(super) fn open(
         .iter()
         .filter_map(|column| Some((column.column, column.first?)))
         .collect();
-    let rate_hz = rate(&scan, options, &mut notes)?;
+    let rate_hz = rate(&scan, &table, options, &mut notes)?;
     let described = channels.iter().map(|&(column, offset)| Channel {
         name: table.column_name(column),
         unit: table
@@ -133,8 +133,13 @@ fn plan_clock(source: &Source, table: &Arc<Table>) -> Result<Result<ClockPlan, u
     Ok(probe.plan().ok_or(rows.counts.rows))
 }
 
-fn rate(scan: &Scan, options: &OpenOptions, notes: &mut Vec<String>) -> Result<f64, CaptureError> {
-    let measured = scan.clock.as_ref().map(Clock::rate_hz);
+fn rate(
+    scan: &Scan,
+    table: &Table,
+    options: &OpenOptions,
+    notes: &mut Vec<String>,
+) -> Result<f64, CaptureError> {
+    let measured = scan.clock.as_ref().map(Clock::rate_hz).or(table.rate_hz);
     match (options.rate_hz, measured) {
         (Some(rate_hz), Some(measured)) => {
             const SAME: f64 = 1e-3;

@@ -14,7 +14,7 @@ use super::csv_sniff::Table;
 use super::dates::DAY_S;
 use super::error::CaptureError;
 use super::stamps::{Stamp, StampFormat};
-use super::text::{Encoding, LONGEST_LINE, LineLimit, TextReader, TooLong};
+use super::text::{BlankReader, Encoding, LONGEST_LINE, LineLimit, TextReader, TooLong};
 
 /// How the text of a file is read.
 #[derive(Debug, Clone, PartialEq, Eq)]
@@ -46,7 +46,7 @@ pub(super) struct Row {
 /// Reads rows one by one into a record that is reused.
 pub(super) struct Rows {
     table: Arc<Table>,
-    reader: csv::Reader<LineLimit<TextReader<File>>>,
+    reader: csv::Reader<LineLimit<BlankReader<TextReader<File>>>>,
     record: ByteRecord,
     origin: Option<Stamp>,
     /// Seconds of the days that clock times have passed, and the last one.
@@ -92,6 +92,7 @@ impl Rows {
             &mut text.by_ref().take(table.skip_bytes),
             &mut std::io::sink(),
         )?;
+        let text = BlankReader::new(text, table.delimiter == b' ');
         let reader = csv::ReaderBuilder::new()
             .has_headers(false)
             .flexible(true)

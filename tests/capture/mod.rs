@@ -2,6 +2,7 @@
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
 mod csv;
+mod dialects;
 mod riff;
 mod stamps;
 mod wav;
