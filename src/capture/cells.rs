@@ -58,6 +58,11 @@ pub(super) fn read_cell(bytes: &[u8]) -> Cell {
     if bytes.is_empty() {
         return Cell::Missing;
     }
+    // Quotes are there where the reader was not told to expect any.
+    let bytes = match bytes {
+        [b'"', inside @ .., b'"'] => trim(inside),
+        _ => bytes,
+    };
     match parse(bytes).or_else(|| parse_mended(bytes)) {
         Some(number) if number.is_finite() => Cell::Number(number),
         Some(_) => Cell::Missing,
@@ -122,7 +127,7 @@ fn is_missing_mark(bytes: &[u8]) -> bool {
 /// delimiter.
 pub(super) fn is_remark(first: &[u8], delimiter: u8) -> bool {
     let first = first.trim_ascii_start();
-    first.starts_with(b"#") && !first.eq_ignore_ascii_case(b"#n/a")
+    first.starts_with(b"#") && !is_missing_mark(first.trim_ascii_end())
         || first.starts_with(b"%")
         || first.starts_with(b"//")
         || (first.starts_with(b";") && delimiter != b';')

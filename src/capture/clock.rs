@@ -5,6 +5,8 @@
 //! [`Clock`] then follows the stamps row by row, so that every pass over the
 //! file decides alike without holding a stamp.
 
+use super::clock_plan::ClockPlan;
+
 /// How far a row may be late, in periods, before samples are missing.
 const LATE: f64 = 0.6;
 /// A step of more periods than this is a gap.
@@ -15,80 +17,6 @@ const EARLY: f64 = 0.75;
 const GAIN: f64 = 0.1;
 /// Rows after which the fitted period is better than the planned one.
 const FITTED: f64 = 256.0;
-
-/// The time line as the first rows show it, in seconds.
-#[derive(Debug, Clone, Copy, PartialEq)]
-pub(super) struct ClockPlan {
-    /// Time from one sample to the next, > 0.
-    pub period: f64,
-    /// Step of the rounded stamps where several rows share one, else 0.
-    pub quantum: f64,
-}
-
-/// Collects stamps until they suffice for a [`ClockPlan`].
-#[derive(Debug, Default)]
-pub(super) struct ClockProbe {
-    last: Option<f64>,
-    /// Steps ahead, and how many rows had the stamp before each.
-    steps: Vec<f64>,
-    group_sizes: Vec<f64>,
-    group: f64,
-    rows: usize,
-    repeats: usize,
-}
-
-impl ClockProbe {
-    /// Takes a stamp; `true` when no more are needed.
-    pub(super) fn take(&mut self, stamp: f64) -> bool {
-        const ROWS: usize = 4096;
-        const GROUPS: usize = 8;
-        self.rows += 1;
-        let step = self.last.map_or(0.0, |last| stamp - last);
-        if step > 0.0 {
-            self.steps.push(step);
-            self.group_sizes.push(self.group);
-            self.group = 0.0;
-        } else if step == 0.0 && self.last.is_some() {
-            self.repeats += 1;
-        }
-        self.group += 1.0;
-        self.last = Some(stamp);
-        self.rows >= ROWS && self.steps.len() >= GROUPS
-    }
-
-    /// The plan; `None` where time does not move.
-    pub(super) fn plan(mut self) -> Option<ClockPlan> {
-        /// Share of repeated stamps from which they are taken as rounded.
-        const ROUNDED: f64 = 0.05;
-        let step = median(&mut self.steps)?;
-        if (self.repeats as f64) < ROUNDED * self.rows as f64 {
-            return Some(ClockPlan {
-                period: step,
-                quantum: 0.0,
-            });
-        }
-        // The first group may have begun before the file did.
-        if self.group_sizes.len() > 2 {
-            self.group_sizes.remove(0);
-        }
-        let typical = median(&mut self.group_sizes)?;
-        let usual: Vec<f64> = self
-            .group_sizes
-            .into_iter()
-            .filter(|size| (size - typical).abs() <= 1.0)
-            .collect();
-        let rows_per_step = usual.iter().sum::<f64>() / usual.len() as f64;
-        Some(ClockPlan {
-            period: step / rows_per_step,
-            quantum: step,
-        })
-    }
-}
-
-fn median(values: &mut [f64]) -> Option<f64> {
-    values.sort_unstable_by(f64::total_cmp);
-    values.get(values.len() / 2).copied()
-}
 
 /// What to do with a row.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -160,26 +88,29 @@ impl Clock {
         };
         if !self.started {
             self.started = true;
-            self.line = stamp;
+            self.line = stamp + self.plan.start;
             self.last = stamp;
             self.fit.add(0.0, stamp);
             return Advance::Frame { missing: 0 };
         }
         let period = self.period();
-        let slack = self.plan.quantum / period;
+        // In periods: half of the scatter each way, and what the line sways.
+        let scatter = self.plan.scatter / period;
+        let sway = 0.55 * scatter + 0.25;
+        let (latest, earliest) = (sway.max(LATE), -sway.max(EARLY));
         let late = |time: f64| (time - self.line) / period - 1.0;
         let step = (stamp - self.last) / period;
-        let repeats = stamp == self.last && self.plan.quantum == 0.0;
+        let repeats = stamp == self.last && !self.plan.shared;
         self.last = stamp;
 
         if let Some(offset) = self.previous_offset.take() {
             // One bad stamp only: time goes on as before it.
-            if late(stamp + offset).abs() < LATE + slack {
+            if late(stamp + offset).abs() < latest {
                 self.offset = offset;
             }
         }
         let deviation = late(stamp + self.offset);
-        if deviation < -(EARLY + slack) {
+        if deviation < earliest {
             if repeats {
                 self.counts.repeated += 1;
                 return Advance::Drop;
@@ -191,7 +122,7 @@ impl Clock {
             return Advance::Frame { missing: 0 };
         }
         let mut missing = 0;
-        if deviation > LATE + slack && step > GAP_STEP + slack {
+        if deviation > latest && step > GAP_STEP * scatter.max(1.0) {
             // Rounded down by `as` only beyond 2^64, which is refused anyway.
             missing = deviation.round().max(1.0) as u64;
             self.counts.gaps += 1;
@@ -209,7 +140,7 @@ impl Clock {
     /// behind it.
     fn step(&mut self, frames: u64, late: f64) {
         let period = self.period();
-        let gain = GAIN / (1.0 + self.plan.quantum / period);
+        let gain = GAIN / (1.0 + self.plan.scatter / period);
         self.line += period * (frames as f64 + gain * late);
         self.frame = self.frame.saturating_add(frames);
     }
@@ -248,16 +179,18 @@ impl Clock {
     /// Says how exact the stamps are, where that is notable.
     pub(super) fn note(&self, notes: &mut Vec<String>) {
         const NOTABLE: f64 = 0.05;
-        let quantum = self.plan.quantum;
+        let ClockPlan {
+            scatter, shared, ..
+        } = self.plan;
         let rms = (self.counts.jitter / self.counts.rows.max(1) as f64).sqrt();
-        if quantum > 0.0 {
+        if shared {
             notes.push(format!(
-                "stamps are rounded to {quantum} s, about {:.1} samples each: taken as evenly spaced",
-                quantum / self.period()
+                "time stamps come in steps of {scatter:.3} s, about {:.1} samples each: taken as evenly spaced",
+                scatter / self.period()
             ));
         } else if rms > NOTABLE {
             notes.push(format!(
-                "stamps jitter by {:.0} % of the sample period (rms): taken as evenly spaced",
+                "time stamps scatter by {:.0} % of the sample period (rms): taken as evenly spaced",
                 100.0 * rms
             ));
         }

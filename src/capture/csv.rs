@@ -5,7 +5,8 @@ use std::path::PathBuf;
 use std::sync::Arc;
 
 use super::cells::Cell;
-use super::clock::{Clock, ClockPlan, ClockProbe};
+use super::clock::Clock;
+use super::clock_plan::{ClockPlan, ClockProbe};
 use super::csv_rows::{RowCounts, Rows, Source};
 use super::csv_sniff::{Table, sniff};
 use super::error::{CaptureError, excerpt};
@@ -59,7 +60,7 @@ pub(super) fn open(
         .iter()
         .filter_map(|column| Some((column.column, column.first?)))
         .collect();
-    let rate_hz = rate(&scan, options, &mut notes)?;
+    let rate_hz = rate(&scan, &table, options, &mut notes)?;
     let described = channels.iter().map(|&(column, offset)| Channel {
         name: table.column_name(column),
         unit: table
@@ -132,8 +133,13 @@ fn plan_clock(source: &Source, table: &Arc<Table>) -> Result<Result<ClockPlan, u
     Ok(probe.plan().ok_or(rows.counts.rows))
 }
 
-fn rate(scan: &Scan, options: &OpenOptions, notes: &mut Vec<String>) -> Result<f64, CaptureError> {
-    let measured = scan.clock.as_ref().map(Clock::rate_hz);
+fn rate(
+    scan: &Scan,
+    table: &Table,
+    options: &OpenOptions,
+    notes: &mut Vec<String>,
+) -> Result<f64, CaptureError> {
+    let measured = scan.clock.as_ref().map(Clock::rate_hz).or(table.rate_hz);
     match (options.rate_hz, measured) {
         (Some(rate_hz), Some(measured)) => {
             const SAME: f64 = 1e-3;

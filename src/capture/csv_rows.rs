@@ -8,11 +8,13 @@ use std::sync::Arc;
 use csv::ByteRecord;
 
 use super::cells::{Cell, is_remark, read_cell};
-use super::clock::{Advance, Clock, ClockPlan};
+use super::clock::{Advance, Clock};
+use super::clock_plan::ClockPlan;
 use super::csv_sniff::Table;
+use super::dates::DAY_S;
 use super::error::CaptureError;
-use super::stamps::Stamp;
-use super::text::{Encoding, LONGEST_LINE, LineLimit, TextReader, TooLong};
+use super::stamps::{Stamp, StampFormat};
+use super::text::{BlankReader, Encoding, LONGEST_LINE, LineLimit, TextReader, TooLong};
 
 /// How the text of a file is read.
 #[derive(Debug, Clone, PartialEq, Eq)]
@@ -44,9 +46,12 @@ pub(super) struct Row {
 /// Reads rows one by one into a record that is reused.
 pub(super) struct Rows {
     table: Arc<Table>,
-    reader: csv::Reader<LineLimit<TextReader<File>>>,
+    reader: csv::Reader<LineLimit<BlankReader<TextReader<File>>>>,
     record: ByteRecord,
     origin: Option<Stamp>,
+    /// Seconds of the days that clock times have passed, and the last one.
+    days: f64,
+    last: f64,
     pub clock: Option<Clock>,
     pub counts: RowCounts,
 }
@@ -87,18 +92,21 @@ impl Rows {
             &mut text.by_ref().take(table.skip_bytes),
             &mut std::io::sink(),
         )?;
+        let text = BlankReader::new(text, table.delimiter == b' ');
         let reader = csv::ReaderBuilder::new()
             .has_headers(false)
             .flexible(true)
             .delimiter(table.delimiter)
-            .comment(Some(b'#'))
+            .quoting(table.quoted)
             .buffer_capacity(64 * 1024)
-            .from_reader(LineLimit::new(text, table.delimiter));
+            .from_reader(LineLimit::new(text, table.delimiter, table.quoted));
         Ok(Rows {
             table: Arc::clone(table),
             reader,
             record: ByteRecord::new(),
             origin: None,
+            days: 0.0,
+            last: 0.0,
             clock: plan.map(Clock::new),
             counts: RowCounts::default(),
         })
@@ -169,7 +177,17 @@ impl Rows {
         let time = self.table.time?;
         let stamp = time.format.read(self.record.get(time.column)?)?;
         let origin = *self.origin.get_or_insert(stamp);
-        Some(stamp.since(origin))
+        let mut since = stamp.since(origin) + self.days;
+        // Past midnight, a clock time goes back by most of a day.
+        if time.format == StampFormat::ClockTime {
+            const DAY: f64 = DAY_S as f64;
+            if since < self.last - DAY / 2.0 {
+                self.days += DAY;
+                since += DAY;
+            }
+            self.last = since;
+        }
+        Some(since)
     }
 
     fn has_number(&self) -> bool {

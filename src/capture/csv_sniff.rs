@@ -6,23 +6,27 @@ use csv::ByteRecord;
 use super::cells::{Cell, Heading, is_remark, is_unit, read_cell, read_heading};
 use super::error::CaptureError;
 use super::stamps::StampFormat;
-use super::text::LONGEST_LINE;
+use super::text::{LONGEST_LINE, squeeze};
 
 /// Lines looked at.
 const MOST_LINES: usize = 1000;
 /// Delimiters, the less ambiguous first.
-const DELIMITERS: &[u8] = b"\t;,";
+const DELIMITERS: &[u8] = b"\t;, ";
 
 /// The plan for reading a table.
 #[derive(Debug, Clone, PartialEq)]
 pub(super) struct Table {
     pub delimiter: u8,
+    /// Cells may be in quotes.
+    pub quoted: bool,
     /// Bytes of decoded text before the first row of numbers.
     pub skip_bytes: u64,
     /// 1-based line of that row.
     pub first_line: u64,
     pub columns: Vec<Heading>,
     pub time: Option<TimeColumn>,
+    /// Sample rate from a line above the table, where there is no time column.
+    pub rate_hz: Option<f64>,
     /// Indices of the columns of values.
     pub values: Vec<usize>,
     /// Indices of columns that are neither.
@@ -50,12 +54,14 @@ struct Line {
 #[derive(Debug, Clone, Copy, Default, PartialEq)]
 struct Tally {
     numbers: usize,
+    /// Written times and dates.
+    times: usize,
     words: usize,
 }
 
 impl Tally {
     fn numeric(self) -> bool {
-        self.numbers > self.words
+        self.numbers + self.times > self.words
     }
 }
 
@@ -70,7 +76,7 @@ pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table,
         });
     }
     let lines = physical_lines(head, whole)?;
-    let (delimiter, records) = DELIMITERS
+    let (mut delimiter, mut records) = DELIMITERS
         .iter()
         .map(|&delimiter| (delimiter, split(&lines, delimiter)))
         .reduce(|best, next| {
@@ -81,6 +87,17 @@ pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table,
             }
         })
         .ok_or(CaptureError::NoNumbers)?;
+    if delimiter == b',' {
+        match halved_numbers(&records) {
+            // One column: any delimiter but the comma reads it.
+            Some(2) => {
+                delimiter = b';';
+                records = split(&lines, delimiter);
+            }
+            Some(_) => return Err(CaptureError::AmbiguousCommas),
+            None => {}
+        }
+    }
     let width = usual_width(&records);
     let tallies = tally(&records, width);
     let first = records.iter().position(|line| is_data(line, &tallies));
@@ -93,24 +110,41 @@ pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table,
         });
     };
     super::limit_channels(width as u64)?;
-    // Rows with a bad cell may come first; a heading starts with a word.
-    let earlier = records.iter().take(first).rev();
-    let first = first
-        - earlier
-            .take_while(|line| is_spoilt_data(line, &tallies))
-            .count();
+    // Rows with a bad cell may come first, right under a heading of words.
+    let heading = records
+        .iter()
+        .take(first)
+        .rposition(|line| is_wordy(line, width));
+    let first = heading.map_or(first, |heading| heading + 1);
     let (before, data) = records.split_at(first);
+    let start = data.first().map_or(0, |line| line.start);
     let mut table = Table {
         delimiter,
-        skip_bytes: data.first().map_or(0, |line| line.start as u64),
+        // Without this, a stray quote in a remark could swallow rows.
+        quoted: lines
+            .iter()
+            .filter(|(at, bytes)| *at >= start && !is_remark(bytes, delimiter))
+            .any(|(_, bytes)| bytes.contains(&b'"')),
+        skip_bytes: start as u64,
         first_line: data.first().map_or(1, |line| line.number),
         columns: headings(before, width),
         time: None,
+        rate_hz: None,
         values: Vec::new(),
         left_out: Vec::new(),
         notes: Vec::new(),
     };
-    super::csv_time::find_time(&mut table, &rows(data), rate_given)?;
+    let told = before.iter().rev().find_map(|line| {
+        let (_, bytes) = lines.iter().find(|(start, _)| *start == line.start)?;
+        Some((line.number, super::csv_rate::read_rate(bytes)?))
+    });
+    super::csv_time::find_time(&mut table, &rows(data), rate_given || told.is_some())?;
+    if let (Some((line, rate_hz)), None, false) = (told, table.time, rate_given) {
+        table.rate_hz = Some(rate_hz);
+        table
+            .notes
+            .push(format!("sample rate {rate_hz} Hz taken from line {line}"));
+    }
     choose_values(&mut table, data, &tallies)?;
     Ok(table)
 }
@@ -149,6 +183,14 @@ fn split(lines: &[(usize, &[u8])], delimiter: u8) -> Vec<Line> {
     let mut split = Vec::new();
     for (&(start, bytes), number) in lines.iter().zip(1..) {
         let mut cells = ByteRecord::new();
+        let squeezed;
+        let bytes = match delimiter {
+            b' ' => {
+                squeezed = squeeze(bytes);
+                squeezed.as_slice()
+            }
+            _ => bytes,
+        };
         let read = csv::ReaderBuilder::new()
             .has_headers(false)
             .delimiter(delimiter)
@@ -168,10 +210,44 @@ fn split(lines: &[(usize, &[u8])], delimiter: u8) -> Vec<Line> {
     split
 }
 
+/// Cells per row, if commas split what are numbers with decimal commas.
+///
+/// Each second cell is then bare digits, the others are whole, and there are
+/// zeros that whole numbers have no use for: `-0` or `05`, or the heading has
+/// half as many cells.
+fn halved_numbers(records: &[Line]) -> Option<usize> {
+    let width = usual_width(records);
+    if width % 2 != 0 {
+        return None;
+    }
+    let tallies = tally(records, width);
+    let first = records.iter().position(|line| is_data(line, &tallies))?;
+    let (before, data) = records.split_at(first);
+    let heading = before.last().map_or(0, |line| line.cells.len());
+    let mut needless_zero = heading == width / 2;
+    for line in data.iter().filter(|line| is_data(line, &tallies)) {
+        for (cell, second) in line.cells.iter().zip([false, true].into_iter().cycle()) {
+            let digits = if second {
+                cell
+            } else {
+                cell.strip_prefix(b"-").unwrap_or(cell)
+            };
+            if digits.is_empty() || !digits.iter().all(u8::is_ascii_digit) {
+                return None;
+            }
+            let leading_zero = digits.len() > 1 && digits.starts_with(b"0");
+            needless_zero |= second && leading_zero || !second && cell == b"-0";
+        }
+    }
+    (needless_zero && heading != width).then_some(width)
+}
+
+/// 1 for a number or time, 1 for a word.
 fn tally_cell(cell: &[u8]) -> (usize, usize) {
     match read_cell(cell) {
         Cell::Number(_) => (1, 0),
         Cell::Missing => (0, 0),
+        Cell::Word if StampFormat::is_written(cell) => (1, 0),
         Cell::Word => (0, 1),
     }
 }
@@ -219,9 +295,12 @@ fn tally(lines: &[Line], width: usize) -> Vec<Tally> {
         .filter(|line| !line.remark && line.cells.len() == width)
     {
         for (tally, cell) in tallies.iter_mut().zip(&line.cells) {
-            let (number, word) = tally_cell(cell);
-            tally.numbers += number;
-            tally.words += word;
+            match read_cell(cell) {
+                Cell::Number(_) => tally.numbers += 1,
+                Cell::Missing => {}
+                Cell::Word if StampFormat::is_written(cell) => tally.times += 1,
+                Cell::Word => tally.words += 1,
+            }
         }
     }
     tallies
@@ -241,16 +320,11 @@ fn is_data(line: &Line, tallies: &[Tally]) -> bool {
     !line.remark && line.cells.len() == tallies.len() && numbers > 0 && words == 0
 }
 
-/// A row whose first number is there, if not the others.
-fn is_spoilt_data(line: &Line, tallies: &[Tally]) -> bool {
-    let first = line
-        .cells
-        .iter()
-        .zip(tallies)
-        .find(|(_, tally)| tally.numeric());
-    !line.remark
-        && line.cells.len() == tallies.len()
-        && first.is_some_and(|(cell, _)| tally_cell(cell).0 > 0)
+/// As wide as the rows, with words and no number.
+fn is_wordy(line: &Line, width: usize) -> bool {
+    let counts = line.cells.iter().map(tally_cell);
+    let (numbers, words) = counts.fold((0, 0), |(n, w), (number, word)| (n + number, w + word));
+    line.cells.len() == width && numbers == 0 && words > 0
 }
 
 /// Names and units from the lines before the data.
@@ -258,7 +332,7 @@ fn headings(before: &[Line], width: usize) -> Vec<Heading> {
     let mut rows = before
         .iter()
         .rev()
-        .map(header_cells)
+        .map(|line| header_cells(line, width))
         .skip_while(|cells| cells.iter().all(|cell| cell.is_empty()));
     let fits = |cells: &Vec<Vec<u8>>| {
         // A trailing delimiter may be in the header or in the rows only.
@@ -298,7 +372,7 @@ fn headings(before: &[Line], width: usize) -> Vec<Heading> {
 }
 
 /// The cells of a line before the data, without the mark of a remark.
-fn header_cells(line: &Line) -> Vec<Vec<u8>> {
+fn header_cells(line: &Line, width: usize) -> Vec<Vec<u8>> {
     let mut cells: Vec<Vec<u8>> = line
         .cells
         .iter()
@@ -308,6 +382,10 @@ fn header_cells(line: &Line) -> Vec<Vec<u8>> {
         if let Some(first) = cells.first_mut() {
             let marks = first.iter().take_while(|c| b"#%/; \t".contains(c)).count();
             first.drain(..marks);
+        }
+        // A mark set off by the delimiter is no cell.
+        if cells.len() > width && cells.first().is_some_and(Vec::is_empty) {
+            cells.remove(0);
         }
     }
     cells
@@ -331,10 +409,15 @@ fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<
         if Some(column) == time || table.left_out(column) {
             continue;
         }
-        if tally.words > tally.numbers {
+        if tally.words + tally.times > tally.numbers {
+            let what = if tally.words > tally.times {
+                "words"
+            } else {
+                "times"
+            };
             table
                 .notes
-                .push(format!("column {name:?} holds words: left out"));
+                .push(format!("column {name:?} holds {what}: left out"));
         } else if tally.numbers > 0 || !table.is_unnamed(column) {
             table.values.push(column);
         }

@@ -40,7 +40,7 @@ struct Trial {
 pub(super) fn find_time(
     table: &mut Table,
     rows: &[&ByteRecord],
-    rate_given: bool,
+    rate_known: bool,
 ) -> Result<(), CaptureError> {
     let mut best: Option<(usize, TimeColumn)> = None;
     let mut times = Vec::new();
@@ -66,6 +66,13 @@ pub(super) fn find_time(
         }
     }
     table.time = best.map(|(_, time)| time);
+    if let Some(time) = table.time {
+        let cells: Vec<&[u8]> = rows
+            .iter()
+            .map(|row| row.get(time.column).unwrap_or_default())
+            .collect();
+        table.notes.extend(time.format.assumption(&cells));
+    }
     for column in times {
         if table.time.is_some_and(|time| time.column != column) {
             table.leave_out(column, "is a second time");
@@ -78,11 +85,11 @@ pub(super) fn find_time(
         }
     }
     if table.time.is_none() && !table.left_out(0) {
-        time_in_first_column(table, rows, rate_given);
+        time_in_first_column(table, rows, rate_known);
     }
     match table.time {
         Some(_) => Ok(()),
-        None if rate_given => Ok(()),
+        None if rate_known => Ok(()),
         None if table.left_out(0) => Err(CaptureError::OnlyIndex),
         None => Err(CaptureError::NoTime),
     }
@@ -90,7 +97,7 @@ pub(super) fn find_time(
 
 /// A first column that runs on in even steps, under no or another name, is
 /// taken as seconds, unless its steps are whole: then nothing says seconds.
-fn time_in_first_column(table: &mut Table, rows: &[&ByteRecord], rate_given: bool) {
+fn time_in_first_column(table: &mut Table, rows: &[&ByteRecord], rate_known: bool) {
     let other_unit = table
         .columns
         .first()
@@ -101,7 +108,7 @@ fn time_in_first_column(table: &mut Table, rows: &[&ByteRecord], rate_given: boo
     }
     let seconds = trial.format == StampFormat::Decimal { exponent: 0 };
     if seconds && trial.steps.iter().all(|step| step.fract() == 0.0) {
-        if rate_given {
+        if rate_known {
             table.leave_out(0, "runs evenly in an unknown unit");
         }
         return;
@@ -172,7 +179,7 @@ fn named_time(heading: &Heading) -> Option<NamedTime> {
 }
 
 /// Lower-case words of a name: `Time_Stamp (rel.)` gives time, stamp, rel.
-fn words_of(name: &str) -> Vec<String> {
+pub(super) fn words_of(name: &str) -> Vec<String> {
     name.split(|c: char| !c.is_alphanumeric())
         .filter(|word| !word.is_empty())
         .map(str::to_lowercase)

@@ -98,6 +98,11 @@ pub enum CaptureError {
     /// The time of the samples is not told.
     #[error("no time column found: give the sample rate with --rate HZ")]
     NoTime,
+    /// Commas as delimiters and as decimal marks.
+    #[error(
+        "commas both separate the columns and mark decimals (export with semicolons or with decimal points)"
+    )]
+    AmbiguousCommas,
     /// A first column of 0, 1, 2, … without a name: rows or seconds?
     #[error(
         "no time column found (the first column only counts the rows): give the sample rate with --rate HZ"

@@ -5,10 +5,13 @@
 
 mod cells;
 mod clock;
+mod clock_plan;
 mod csv;
+mod csv_rate;
 mod csv_rows;
 mod csv_sniff;
 mod csv_time;
+mod dates;
 mod error;
 mod probe;
 mod riff;

@@ -98,10 +98,10 @@ pub(super) fn walk<F: Read + Seek>(file: &mut F, length: u64) -> Result<Layout, 
             b"data" => notes.push("a second data chunk was left out".into()),
             _ => {}
         }
-        let Some(end) = start.checked_add(size).filter(|&end| end < length) else {
+        if start.checked_add(size).is_none_or(|end| end >= length) {
             break;
-        };
-        at = next_chunk(file, end)?;
+        }
+        at = next_chunk(file, start, size)?;
     }
 
     let format = format.ok_or_else(|| bad("no format chunk".into()))?;
@@ -181,13 +181,21 @@ fn read_chunk<F: Read + Seek>(file: &mut F, at: u64) -> Result<Option<Chunk>, Ca
     }))
 }
 
-/// Chunks start at even bytes, but some writers forget the pad byte.
-fn next_chunk<F: Read + Seek>(file: &mut F, end: u64) -> Result<u64, CaptureError> {
-    let padded = end + end % 2;
-    if padded != end && read_chunk(file, padded)?.is_none() && read_chunk(file, end)?.is_some() {
+/// Where the chunk after one of `size` bytes from `start` on begins: after a
+/// pad byte if the size is odd, but some writers forget it.
+fn next_chunk<F: Read + Seek>(file: &mut F, start: u64, size: u64) -> Result<u64, CaptureError> {
+    let end = start + size;
+    if size % 2 == 0 {
         return Ok(end);
     }
-    Ok(padded)
+    let known = |chunk: &Option<Chunk>| {
+        let id = chunk.as_ref().map(|chunk| chunk.id);
+        id.is_some_and(|id| [b"fmt ", b"data", b"fact", b"LIST", b"bext"].contains(&&id))
+    };
+    let padded = read_chunk(file, end + 1)?;
+    let unpadded = read_chunk(file, end)?;
+    let forgotten = !known(&padded) && (known(&unpadded) || padded.is_none() && unpadded.is_some());
+    Ok(if forgotten { end } else { end + 1 })
 }
 
 /// A data chunk of more than 4 GiB whose 32-bit size has wrapped around: whole
@@ -202,7 +210,7 @@ fn is_wrapped<F: Read + Seek>(
     if rest - size < 1 << 32 {
         return Ok(false);
     }
-    let next = next_chunk(file, chunk.start + size)?;
+    let next = next_chunk(file, chunk.start, size)?;
     Ok(read_chunk(file, next)?.is_none())
 }
 

@@ -1,6 +1,7 @@
 //! Times written in a table: what they look like and how they are read.
 
 use super::cells::trim;
+use super::dates::{DateOrder, read_clock_time, read_date_time};
 
 /// A point in time, split so that a date in seconds keeps its nanoseconds.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -33,6 +34,10 @@ pub(super) enum StampFormat {
     Decimal { exponent: u32 },
     /// A number times so many seconds: minutes, hours.
     Multiple { seconds: f64 },
+    /// Hours, minutes and seconds, of the day or elapsed.
+    ClockTime,
+    /// A date and a time.
+    DateTime { order: DateOrder },
 }
 
 impl StampFormat {
@@ -60,6 +65,8 @@ impl StampFormat {
         match self {
             StampFormat::Decimal { exponent } => read_decimal(bytes, exponent),
             StampFormat::Multiple { seconds } => Stamp::from_seconds(number(bytes)? * seconds),
+            StampFormat::ClockTime => read_clock_time(bytes),
+            StampFormat::DateTime { order } => read_date_time(bytes, order),
         }
     }
 }
@@ -123,13 +130,10 @@ pub(super) fn whole_number(digits: &[u8]) -> Option<i64> {
 }
 
 impl StampFormat {
-    /// The format that fits a column's cells, which may be known in part from
-    /// the heading. Numbers without a unit are seconds, or the epoch in a
-    /// smaller unit where they are too large for that.
+    /// The format that fits most of a column's cells; the unit of numbers may
+    /// be known from the heading. Numbers without a unit are seconds, or the
+    /// epoch in a smaller unit where they are too large for that.
     pub(super) fn of_cells(cells: &[&[u8]], named: Option<StampFormat>) -> StampFormat {
-        if let Some(format) = named {
-            return format;
-        }
         let first = cells.iter().find_map(|cell| number(cell)).unwrap_or(0.0);
         // 1e11 s is past the year 5000; the epoch reached 1e11 ms in 1973.
         let exponent = match first.abs() {
@@ -138,6 +142,71 @@ impl StampFormat {
             n if n < 1e17 => 6,
             _ => 9,
         };
-        StampFormat::Decimal { exponent }
+        // Where they fit equally, the first.
+        let formats = [
+            named.unwrap_or(StampFormat::Decimal { exponent }),
+            StampFormat::ClockTime,
+            StampFormat::DateTime {
+                order: DateOrder::DayFirst,
+            },
+            StampFormat::DateTime {
+                order: DateOrder::MonthFirst,
+            },
+        ];
+        let fit = |format: &StampFormat| cells.iter().filter_map(|cell| format.read(cell)).count();
+        let [mut best, ..] = formats;
+        for format in formats {
+            if fit(&format) > fit(&best) {
+                best = format;
+            }
+        }
+        if let StampFormat::DateTime {
+            order: DateOrder::DayFirst,
+        } = best
+        {
+            // Where both orders are dates, time runs on evenly in the right one.
+            let other = StampFormat::DateTime {
+                order: DateOrder::MonthFirst,
+            };
+            if fit(&other) == fit(&best) && other.longest_step(cells) < best.longest_step(cells) {
+                return other;
+            }
+        }
+        best
+    }
+
+    /// Longest step, ahead or back, from one cell to the next, in seconds.
+    fn longest_step(self, cells: &[&[u8]]) -> f64 {
+        let stamps: Vec<Stamp> = cells.iter().filter_map(|cell| self.read(cell)).collect();
+        let steps = stamps
+            .iter()
+            .zip(stamps.iter().skip(1))
+            .map(|(a, b)| b.since(*a).abs());
+        steps.fold(0.0, f64::max)
+    }
+
+    /// Whether a cell is a written time or date, but no number.
+    pub(super) fn is_written(cell: &[u8]) -> bool {
+        let cell = trim(cell);
+        read_clock_time(cell).is_some()
+            || read_date_time(cell, DateOrder::DayFirst).is_some()
+            || read_date_time(cell, DateOrder::MonthFirst).is_some()
+            || super::dates::is_date(cell)
+    }
+
+    /// What was assumed, where the cells could be read in two ways.
+    pub(super) fn assumption(self, cells: &[&[u8]]) -> Option<String> {
+        let StampFormat::DateTime { order } = self else {
+            return None;
+        };
+        let (other, taken, why) = match order {
+            DateOrder::DayFirst => (DateOrder::MonthFirst, "day", "month"),
+            DateOrder::MonthFirst => (DateOrder::DayFirst, "month", "day"),
+        };
+        let other = StampFormat::DateTime { order: other };
+        let differs = cells.iter().any(
+            |cell| matches!((self.read(cell), other.read(cell)), (Some(a), Some(b)) if a != b),
+        );
+        differs.then(|| format!("dates were read {taken} first, not {why} first"))
     }
 }

@@ -161,11 +161,8 @@ impl<R: Read> TextReader<R> {
                 return Ok(0);
             }
         }
-        let rest = self.ready.get(self.given..).unwrap_or_default();
-        let n = rest.len().min(buffer.len());
-        for (to, from) in buffer.iter_mut().zip(rest) {
-            *to = *from;
-        }
+        let mut rest = self.ready.get(self.given..).unwrap_or_default();
+        let n = rest.read(buffer)?;
         self.given += n;
         Ok(n)
     }
@@ -224,7 +221,6 @@ enum Place {
     Quoted,
     /// After a quote within quotes: the end, or the first half of a quote.
     QuoteEnd,
-    Comment,
 }
 
 /// Passes bytes through and fails when a CSV record grows beyond
@@ -234,6 +230,8 @@ enum Place {
 pub(super) struct LineLimit<R> {
     inner: R,
     delimiter: u8,
+    /// Whether cells may be in quotes.
+    quoted: bool,
     place: Place,
     length: usize,
     /// Newlines passed, and those passed when the record began.
@@ -242,10 +240,11 @@ pub(super) struct LineLimit<R> {
 }
 
 impl<R> LineLimit<R> {
-    pub(super) fn new(inner: R, delimiter: u8) -> Self {
+    pub(super) fn new(inner: R, delimiter: u8, quoted: bool) -> Self {
         LineLimit {
             inner,
             delimiter,
+            quoted,
             place: Place::RecordStart,
             length: 0,
             lines: 0,
@@ -254,8 +253,8 @@ impl<R> LineLimit<R> {
     }
 
     fn pass(&mut self, bytes: &[u8]) -> io::Result<()> {
-        let quoted = matches!(self.place, Place::Quoted | Place::QuoteEnd);
-        if quoted || bytes.contains(&b'"') {
+        let within = matches!(self.place, Place::Quoted | Place::QuoteEnd);
+        if self.quoted && (within || bytes.contains(&b'"')) {
             bytes.iter().for_each(|&byte| self.pass_byte(byte));
         } else {
             self.pass_plain(bytes);
@@ -281,10 +280,7 @@ impl<R> LineLimit<R> {
             None => bytes,
         };
         self.length += line.len();
-        if self.place == Place::RecordStart && line.first() == Some(&b'#') {
-            self.place = Place::Comment;
-        }
-        if let (Some(&last), true) = (line.last(), self.place != Place::Comment) {
+        if let Some(&last) = line.last() {
             self.place = if last == self.delimiter {
                 Place::FieldStart
             } else {
@@ -304,7 +300,6 @@ impl<R> LineLimit<R> {
                 self.record_line = self.lines;
                 Place::RecordStart
             }
-            (Place::Comment, _) | (Place::RecordStart, b'#') => Place::Comment,
             (Place::RecordStart | Place::FieldStart, b'"') => Place::Quoted,
             (_, byte) if byte == self.delimiter => Place::FieldStart,
             _ => Place::Plain,
@@ -316,6 +311,99 @@ impl<R: Read> Read for LineLimit<R> {
     fn read(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
         let n = self.inner.read(buffer)?;
         self.pass(buffer.get(..n).unwrap_or_default())?;
+        Ok(n)
+    }
+}
+
+/// A line with each run of blanks and tabs made one blank, and none at its ends.
+pub(super) fn squeeze(line: &[u8]) -> Vec<u8> {
+    let mut squeezed = Vec::with_capacity(line.len());
+    Squeezer::default().pass(line, &mut squeezed);
+    squeezed
+}
+
+/// Makes one blank of each run of blanks and tabs, and drops those at the ends
+/// of lines.
+#[derive(Debug, Clone, Copy)]
+struct Squeezer {
+    /// A blank is due before the next character.
+    due: bool,
+    line_start: bool,
+}
+
+impl Default for Squeezer {
+    fn default() -> Self {
+        Squeezer {
+            due: false,
+            line_start: true,
+        }
+    }
+}
+
+impl Squeezer {
+    fn pass(&mut self, bytes: &[u8], squeezed: &mut Vec<u8>) {
+        for &byte in bytes {
+            match byte {
+                b' ' | b'\t' => self.due = !self.line_start,
+                b'\n' | b'\r' => {
+                    squeezed.push(byte);
+                    *self = Squeezer::default();
+                }
+                _ => {
+                    if self.due {
+                        squeezed.push(b' ');
+                    }
+                    squeezed.push(byte);
+                    *self = Squeezer {
+                        due: false,
+                        line_start: false,
+                    };
+                }
+            }
+        }
+    }
+}
+
+/// Passes text through as it is, or squeezed for a table aligned with blanks.
+#[derive(Debug)]
+pub(super) struct BlankReader<R> {
+    inner: R,
+    squeezer: Option<Squeezer>,
+    raw: Vec<u8>,
+    ready: Vec<u8>,
+    given: usize,
+}
+
+impl<R> BlankReader<R> {
+    pub(super) fn new(inner: R, squeezed: bool) -> Self {
+        BlankReader {
+            inner,
+            squeezer: squeezed.then(Squeezer::default),
+            raw: Vec::new(),
+            ready: Vec::new(),
+            given: 0,
+        }
+    }
+}
+
+impl<R: Read> Read for BlankReader<R> {
+    fn read(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
+        let Some(squeezer) = &mut self.squeezer else {
+            return self.inner.read(buffer);
+        };
+        self.raw.resize(32 * 1024, 0);
+        while self.given == self.ready.len() {
+            let got = self.inner.read(&mut self.raw)?;
+            if got == 0 {
+                return Ok(0);
+            }
+            self.ready.clear();
+            self.given = 0;
+            squeezer.pass(self.raw.get(..got).unwrap_or_default(), &mut self.ready);
+        }
+        let mut rest = self.ready.get(self.given..).unwrap_or_default();
+        let n = rest.read(buffer)?;
+        self.given += n;
         Ok(n)
     }
 }
