@@ -63,17 +63,23 @@ fn kernel(d: f64, var: f64) -> f64 {
         return 0.0;
     }
     let norm = (2.0 * std::f64::consts::PI * var).sqrt().recip();
-    norm * ((1.0 - OFF_SHARE) * (-0.5 * z2).exp()
-        + OFF_SHARE / OFF_FACTOR * (-0.5 * z2 / (OFF_FACTOR * OFF_FACTOR)).exp())
+    let near = if z2 < 40.0 {
+        (1.0 - OFF_SHARE) * (-0.5 * z2).exp()
+    } else {
+        0.0
+    };
+    norm * (near + OFF_SHARE / OFF_FACTOR * (-0.5 * z2 / (OFF_FACTOR * OFF_FACTOR)).exp())
 }
 
-/// Log-weights of a member's classes: `ln` of prior times all lines hidden.
+/// Prior weights of a member's classes times the chance of every line hidden.
 struct MemberBase {
-    ln_classes: PerClass,
-    /// Probability of absence.
+    /// Relative to `exp(ln_scale)`.
+    classes: PerClass,
     absent: f64,
-    /// Log of the member's factor where nothing meets it.
+    ln_scale: f64,
+    /// Log of the member's factor where nothing meets it, and absence there.
     ln_nothing: f64,
+    absent_by_itself: f64,
 }
 
 fn base(cluster: &Cluster, beliefs: &[Belief]) -> Vec<MemberBase> {
@@ -84,85 +90,89 @@ fn base(cluster: &Cluster, beliefs: &[Belief]) -> Vec<MemberBase> {
         .map(|(member, belief)| {
             let ln_prior = (belief.present / CLASSES as f64).max(1e-300).ln();
             let ln_classes = member.ln_hidden.map(|h| h + ln_prior);
-            let absent = 1.0 - belief.present;
-            MemberBase {
-                ln_classes,
-                absent,
-                ln_nothing: (absent + ln_classes.iter().map(|l| l.exp()).sum::<f64>()).ln(),
-            }
+            let ln_absent = (1.0 - belief.present).max(1e-300).ln();
+            // Absence may be out of the range of numbers against a family of
+            // thousands of lines, never the classes among themselves.
+            let most = ln_classes.iter().copied().fold(f64::NEG_INFINITY, f64::max);
+            let ln_scale = most.max(ln_absent - 600.0);
+            let mut base = MemberBase {
+                classes: ln_classes.map(|l| (l - ln_scale).exp()),
+                absent: (ln_absent - ln_scale).exp(),
+                ln_scale,
+                ln_nothing: 0.0,
+                absent_by_itself: 0.0,
+            };
+            let (ln_nothing, _, absent) = Factor::new().finish(&base);
+            base.ln_nothing = ln_nothing;
+            base.absent_by_itself = absent;
+            base
         })
         .collect()
 }
 
 /// One member at one place: multiplies in tones, then yields its factor.
 struct Factor {
+    /// Per class, in units of `SCALE` to the power `scaled`.
     product: PerClass,
-    ln_product: PerClass,
+    scaled: i32,
 }
+
+const SCALE: f64 = 1e100;
 
 impl Factor {
     fn new() -> Factor {
         Factor {
             product: [1.0; CLASSES],
-            ln_product: [0.0; CLASSES],
+            scaled: 0,
         }
     }
 
     fn meet(&mut self, x: &PerClass) {
-        for ((p, ln), x) in self.product.iter_mut().zip(&mut self.ln_product).zip(x) {
+        let mut most = 0.0f64;
+        for (p, x) in self.product.iter_mut().zip(x) {
             *p *= 1.0 + x;
-            if *p > 1e150 {
-                *ln += p.ln();
-                *p = 1.0;
+            most = most.max(*p);
+        }
+        while most > SCALE {
+            for p in &mut self.product {
+                *p /= SCALE;
             }
+            most /= SCALE;
+            self.scaled += 1;
         }
     }
 
     /// `(ln factor, weight of each class, of absence)`, the weights summing to 1.
     fn finish(&self, base: &MemberBase) -> (f64, PerClass, f64) {
-        let mut ln: PerClass = [0.0; CLASSES];
-        let mut most = if base.absent > 0.0 {
-            base.absent.ln()
-        } else {
-            f64::NEG_INFINITY
-        };
-        for (c, l) in ln.iter_mut().enumerate() {
-            let (Some(b), Some(p), Some(q)) = (
-                base.ln_classes.get(c),
-                self.product.get(c),
-                self.ln_product.get(c),
-            ) else {
-                continue;
-            };
-            *l = b + p.ln() + q;
-            most = most.max(*l);
+        let mut weights = base.classes;
+        let mut total = 0.0;
+        for (w, p) in weights.iter_mut().zip(&self.product) {
+            *w *= p;
+            total += *w;
         }
-        let weights = ln.map(|l| (l - most).exp());
-        let absent = if base.absent > 0.0 {
-            (base.absent.ln() - most).exp()
-        } else {
-            0.0
-        };
-        let total: f64 = weights.iter().sum::<f64>() + absent;
-        (
-            most + total.ln(),
-            weights.map(|w| w / total),
-            absent / total,
-        )
+        let absent = base.absent * SCALE.powi(-self.scaled);
+        total += absent;
+        let ln = total.ln() + base.ln_scale + f64::from(self.scaled) * SCALE.ln();
+        (ln, weights.map(|w| w / total), absent / total)
     }
 }
 
+/// A mode whose middle is this many nats below the best is not looked at further.
+const HOPELESS: f64 = 30.0;
+
+/// `best` is the greatest log weight of a node met so far.
 fn evaluate_mode(
     mode: &Mode,
     cluster: &Cluster,
     bases: &[MemberBase],
     others: &[f64],
+    best: &mut f64,
 ) -> ModeValue {
     let entries = &mode.entries;
     let count = entries.len();
     let members = cluster.members.len();
     let mut value = ModeValue {
-        ln_weight: Vec::with_capacity(mode.nodes.len()),
+        ln_weight: Vec::new(),
         responsibility: vec![0.0; mode.nodes.len() * count],
         absent: vec![0.0; mode.nodes.len() * members],
     };
@@ -177,7 +187,13 @@ fn evaluate_mode(
         .collect();
     let mut density = vec![0.0; count];
     let mut met: Vec<PerClass> = vec![[0.0; CLASSES]; runs.len()];
-    for (n, node) in mode.nodes.iter().enumerate() {
+    value.ln_weight = vec![f64::NEG_INFINITY; mode.nodes.len()];
+    let middle = mode.nodes.len() / 2;
+    let others_of_it = (0..mode.nodes.len()).filter(|n| *n != middle);
+    for n in std::iter::once(middle).chain(others_of_it) {
+        let Some(node) = mode.nodes.get(n) else {
+            break;
+        };
         for ((d, e), s) in density.iter_mut().zip(entries).zip(&stretch) {
             let off = e.a[0] * node.theta[0] + e.a[1] * node.theta[1] - e.target;
             let var = e.var + s[0] * node.cell_var[0] + s[1] * node.cell_var[1];
@@ -204,7 +220,7 @@ fn evaluate_mode(
             if start == first {
                 // Nothing meets it here.
                 if let Some(p) = slot {
-                    *p = base.absent / base.ln_nothing.exp();
+                    *p = base.absent_by_itself;
                 }
                 continue;
             }
@@ -241,7 +257,13 @@ fn evaluate_mode(
                 share_between_members(entries, all);
             }
         }
-        value.ln_weight.push(ln_weight);
+        if let Some(slot) = value.ln_weight.get_mut(n) {
+            *slot = ln_weight;
+        }
+        *best = best.max(ln_weight);
+        if n == middle && ln_weight < *best - HOPELESS {
+            break;
+        }
     }
     value
 }
@@ -321,7 +343,7 @@ fn evaluate_broad(places: &Places, bases: &[MemberBase], others: &[f64], value: 
     value.broad_responsibility = vec![0.0; entries.len()];
     value.broad_absent = bases
         .iter()
-        .map(|b| b.absent / b.ln_nothing.exp())
+        .map(|b| b.absent_by_itself)
         .collect();
     if places.broad_mass < 1e-12 {
         return f64::NEG_INFINITY;
@@ -381,12 +403,13 @@ pub(super) fn evaluate(
 ) -> Value {
     let bases = base(cluster, beliefs);
     let mut value = Value::default();
+    let ln_broad = evaluate_broad(places, &bases, others, &mut value);
+    let mut best = ln_broad;
     for mode in &places.modes {
         value
             .modes
-            .push(evaluate_mode(mode, cluster, &bases, others));
+            .push(evaluate_mode(mode, cluster, &bases, others, &mut best));
     }
-    let ln_broad = evaluate_broad(places, &bases, others, &mut value);
     let most = value
         .modes
         .iter()

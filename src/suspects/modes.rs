@@ -168,10 +168,24 @@ pub(super) fn meetings(
 }
 
 /// Collects what the prior predicts over rungs.
-#[derive(Debug, Default)]
-pub(super) struct Broad(std::collections::BTreeMap<(usize, usize), BroadEntry>);
+#[derive(Debug)]
+pub(super) struct Broad {
+    tones: usize,
+    /// `1 +` index into `entries`, by line and tone.
+    slots: Vec<u32>,
+    entries: Vec<BroadEntry>,
+}
 
 impl Broad {
+    pub fn new(cluster: &Cluster, setting: &Setting) -> Broad {
+        let tones = setting.tones.len();
+        Broad {
+            tones,
+            slots: vec![0; tones * cluster.lines.len()],
+            entries: Vec::new(),
+        }
+    }
+
     pub fn add(
         &mut self,
         cluster: &Cluster,
@@ -196,11 +210,14 @@ impl Broad {
                 gaussian(meeting.rung_hz - centre, var)
             }
         };
-        let entry = self.0.entry((j, meeting.tone)).or_insert_with(|| {
+        let Some(slot) = self.slots.get_mut(j * self.tones + meeting.tone) else {
+            return;
+        };
+        if *slot == 0 {
             let centre = |k: usize| prior.get(k).map_or(0.0, |p| p.normal().mean);
             let scale = [line.a[0] * centre(0), line.a[1] * centre(1)];
             let ratio = wander::mean_ratio(tone, scale, cluster.quartz);
-            BroadEntry {
+            self.entries.push(BroadEntry {
                 line: j,
                 member: line.member,
                 tone: meeting.tone,
@@ -208,8 +225,12 @@ impl Broad {
                 best: (meeting.rung_hz, 0.0),
                 folded: 0.0,
                 odds: setting.odds(line, tone, meeting.image).map(|o| o * ratio),
-            }
-        });
+            });
+            *slot = self.entries.len() as u32;
+        }
+        let Some(entry) = self.entries.get_mut(*slot as usize - 1) else {
+            return;
+        };
         entry.density += density;
         if meeting.rung_hz > setting.half_hz {
             entry.folded += density;
@@ -220,7 +241,8 @@ impl Broad {
     }
 
     pub fn finish(self) -> Vec<BroadEntry> {
-        let mut all: Vec<BroadEntry> = self.0.into_values().collect();
+        let mut all = self.entries;
+        all.retain(|e| e.density > 0.0);
         all.sort_by_key(|e| (e.member, e.tone));
         all
     }

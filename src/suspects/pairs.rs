@@ -100,7 +100,7 @@ pub(super) fn find(
     chain: &Chain,
 ) -> Places {
     let priors = prior.map(Prior::Normal);
-    let mut broad = Broad::default();
+    let mut broad = Broad::new(cluster, setting);
     let mut met: Vec<Vec<Meeting>> = Vec::with_capacity(cluster.lines.len());
     for (j, line) in cluster.lines.iter().enumerate() {
         let mut own = Vec::new();

@@ -38,7 +38,10 @@ pub(super) fn find(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Place
     let mut candidates: Vec<Candidate> = Vec::new();
     let mut fixed: Vec<(usize, Meeting)> = Vec::new();
     let priors = [*prior];
+    // A tone meets a line on many rungs; its odds are the same on each.
+    let mut odds_of_tone = vec![f64::NAN; setting.tones.len()];
     for (j, line) in cluster.lines.iter().enumerate() {
+        odds_of_tone.fill(f64::NAN);
         meetings(line, &priors, setting, &mut |meeting, tone, others| {
             let a = line.a[0];
             if a == 0.0 {
@@ -46,7 +49,16 @@ pub(super) fn find(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Place
                 return;
             }
             let var = tone.var + line.var;
-            let mean_odds = mean(&setting.odds(line, tone, meeting.image));
+            let odds = || mean(&setting.odds(line, tone, meeting.image));
+            let mean_odds = match odds_of_tone.get_mut(meeting.tone) {
+                Some(known) if !meeting.image => {
+                    if known.is_nan() {
+                        *known = odds();
+                    }
+                    *known
+                }
+                _ => odds(),
+            };
             let peak = 0.5 * mean_odds / (2.0 * std::f64::consts::PI * var).sqrt();
             let background = setting.background.get(meeting.tone).copied().unwrap_or(1.0);
             candidates.push(Candidate {
@@ -62,9 +74,12 @@ pub(super) fn find(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Place
     }
     candidates.sort_by(|p, q| p.theta.total_cmp(&q.theta));
     let widest = candidates.iter().map(|c| c.half_width).fold(0.0, f64::max);
-    let mut centres: Vec<(f64, f64)> = peaks(&candidates, prior, |c| c.gain)
+    let mut found = peaks(&candidates, prior, |c| c.gain);
+    if candidates.iter().any(|c| c.free_gain > c.gain + 0.5) {
+        found.extend(peaks(&candidates, prior, |c| c.free_gain));
+    }
+    let mut centres: Vec<(f64, f64)> = found
         .into_iter()
-        .chain(peaks(&candidates, prior, |c| c.free_gain))
         .map(|theta| settle(theta, &candidates, widest, cluster, prior, setting))
         .collect();
     centres.sort_by(|a, b| a.0.total_cmp(&b.0));
@@ -101,7 +116,7 @@ pub(super) fn find(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Place
         ));
     }
     let inside: f64 = covered.iter().map(|&(l, h)| prior.mass(l, h)).sum();
-    let mut broad = Broad::default();
+    let mut broad = Broad::new(cluster, setting);
     let mut at = 0;
     for c in &candidates {
         while covered.get(at).is_some_and(|w| w.1 < c.theta) {

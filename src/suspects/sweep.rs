@@ -30,6 +30,8 @@ const PRESENT: f64 = 0.5;
 const NONE_OF_GROUP: f64 = 0.1;
 /// Rounds in all.
 const ROUNDS: usize = 7;
+/// Claims that change by less have settled.
+const SETTLED: f64 = 1e-4;
 /// Scenes with more clusters than this are solved in one order only.
 const MANY: usize = 24;
 
@@ -86,6 +88,15 @@ impl Solution {
 
     fn all_others(&self, but: Option<usize>) -> Vec<f64> {
         (0..self.tones.len()).map(|i| self.others(i, but)).collect()
+    }
+
+    /// Share of each cluster in each tone.
+    fn shares(&self) -> Vec<f64> {
+        let total = self.all_others(None);
+        self.solved
+            .iter()
+            .flat_map(|s| s.message.iter().zip(&total).map(|(m, t)| m / t))
+            .collect()
     }
 
     /// Bethe's approximation of the log evidence.
@@ -248,9 +259,20 @@ pub(super) fn solve(scene: &Scene) -> Solution {
     first_look(&problem, &mut start);
     let orders = orders(&start);
     let mut best: Option<(f64, Solution)> = None;
+    let dbg = std::env::var_os("DBG").is_some();
     for (parallel, order) in orders {
-        let solution = run(&problem, start.clone(), parallel, &order);
+        let solution = run(&problem, start.clone(), parallel, &order, best.is_none());
+        if best.is_none() {
+            // Proposals made against rivals serve the other orders too.
+            for (s, solved) in start.solved.iter_mut().zip(&solution.solved) {
+                if s.standing != Standing::Anonymous {
+                    s.places = solved.places.clone();
+                    s.cluster = solved.cluster.clone();
+                }
+            }
+        }
         let ln = solution.ln_evidence();
+        if dbg { eprintln!("order {parallel} {order:?}: {ln}"); }
         if best.as_ref().is_none_or(|(b, _)| ln > *b) || !ln.is_finite() {
             best = Some((ln, solution));
         }
@@ -306,7 +328,14 @@ fn orders(start: &Solution) -> Vec<(bool, Vec<usize>)> {
     ]
 }
 
-fn run(problem: &Problem, mut solution: Solution, parallel: bool, order: &[usize]) -> Solution {
+/// Sweeps in one order; `propose` asks for proposals against rivals.
+fn run(
+    problem: &Problem,
+    mut solution: Solution,
+    parallel: bool,
+    order: &[usize],
+    propose: bool,
+) -> Solution {
     if parallel {
         let looked: Vec<Option<Vec<f64>>> = (0..solution.solved.len())
             .map(|c| message(c, &solution))
@@ -317,13 +346,14 @@ fn run(problem: &Problem, mut solution: Solution, parallel: bool, order: &[usize
             }
         }
     }
+    let mut before = solution.shares();
     for round in 0..ROUNDS {
         for &c in order {
-            let propose = match solution.solved.get(c).map(|s| s.standing) {
+            let renew = match solution.solved.get(c).map(|s| s.standing) {
                 Some(Standing::Anonymous) => round < 3,
-                _ => round == 1,
+                _ => propose && round == 1,
             };
-            if propose {
+            if renew {
                 renew_pinned(problem, c, &mut solution);
                 let places = problem.places(c, &solution);
                 if let Some(s) = solution.solved.get_mut(c) {
@@ -333,6 +363,16 @@ fn run(problem: &Problem, mut solution: Solution, parallel: bool, order: &[usize
             update(c, &mut solution);
         }
         update_unlisted(&mut solution);
+        let after = solution.shares();
+        let moved = before
+            .iter()
+            .zip(&after)
+            .map(|(a, b)| (a - b).abs())
+            .fold(0.0, f64::max);
+        before = after;
+        if round >= 3 && moved < SETTLED {
+            break;
+        }
     }
     solution
 }
