@@ -109,7 +109,12 @@ impl Scores {
         });
         for (finding, truth) in inference.findings.iter().zip(&s.truth) {
             let outcome = judge(finding, truth);
-            if verbose && (outcome.ln_truth < -1.0 || (outcome.listed && !outcome.zone_right) || (outcome.folded_probability-f64::from(u8::from(outcome.folded))).abs()>0.5) {
+            if verbose
+                && (outcome.ln_truth < -1.0
+                    || (outcome.listed && !outcome.zone_right)
+                    || (outcome.folded_probability - f64::from(u8::from(outcome.folded))).abs()
+                        > 0.5)
+            {
                 let tone = &s.tones[finding.tone];
                 let names: Vec<String> = finding
                     .suspects

@@ -217,7 +217,7 @@ fn split(lines: &[(usize, &[u8])], delimiter: u8) -> Vec<Line> {
 /// half as many cells.
 fn halved_numbers(records: &[Line]) -> Option<usize> {
     let width = usual_width(records);
-    if width % 2 != 0 {
+    if !width.is_multiple_of(2) {
         return None;
     }
     let tallies = tally(records, width);

@@ -185,7 +185,7 @@ fn read_chunk<F: Read + Seek>(file: &mut F, at: u64) -> Result<Option<Chunk>, Ca
 /// pad byte if the size is odd, but some writers forget it.
 fn next_chunk<F: Read + Seek>(file: &mut F, start: u64, size: u64) -> Result<u64, CaptureError> {
     let end = start + size;
-    if size % 2 == 0 {
+    if size.is_multiple_of(2) {
         return Ok(end);
     }
     let known = |chunk: &Option<Chunk>| {

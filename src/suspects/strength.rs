@@ -4,7 +4,9 @@
 //! strongest line over the noise and a rate at which the others fall off. A line
 //! of weight `w` behind a gain `A` dB has the expected SNR
 //!
-//!     L = level + slope·20·log10(w) + A,
+//! ```text
+//! L = level + slope·20·log10(w) + A,
+//! ```
 //!
 //! the true one spreads about it with [`SPREAD_DB`], and the line shows if that
 //! clears the detector's threshold. So a missing line counts as much as it was

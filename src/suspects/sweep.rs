@@ -9,7 +9,9 @@
 //! Several orders are tried and the one with the greatest evidence (Bethe's
 //! approximation, Yedidia, Freeman & Weiss 2005, from memory) is kept:
 //!
-//!     ln Z = Σ_c ln Z_c + Σ_i ln T_i − Σ_c Σ_i ln(T_i / others_ci),
+//! ```text
+//! ln Z = Σ_c ln Z_c + Σ_i ln T_i − Σ_c Σ_i ln(T_i / others_ci),
+//! ```
 //!
 //! `T_i` the sum of everything at tone i, `Z_c` the evidence of cluster c.
 
@@ -272,7 +274,9 @@ pub(super) fn solve(scene: &Scene) -> Solution {
             }
         }
         let ln = solution.ln_evidence();
-        if dbg { eprintln!("order {parallel} {order:?}: {ln}"); }
+        if dbg {
+            eprintln!("order {parallel} {order:?}: {ln}");
+        }
         if best.as_ref().is_none_or(|(b, _)| ln > *b) || !ln.is_finite() {
             best = Some((ln, solution));
         }

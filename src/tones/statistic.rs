@@ -9,12 +9,12 @@ use crate::spectrum::floor::{self, Floor};
 /// Power per cell at the resolution of the whole recording.
 #[derive(Debug)]
 pub struct Fine {
-    /// |X[k]|², the most sensitive for a tone on a cell.
+    /// |X_k|², the most sensitive for a tone on a cell.
     pub plain: Vec<f32>,
-    /// |X[k] − X[k+1]|²/2, for a tone half-way to the next cell: −0.9 dB there,
+    /// |X_k − X_(k+1)|²/2, for a tone half-way to the next cell: −0.9 dB there,
     /// where `plain` is down 3.9 dB.
     pub between: Vec<f32>,
-    /// |2X[k] − X[k−1] − X[k+1]|²/6, the Hann window: −1.8 dB, but far from a
+    /// |2X_k − X_(k−1) − X_(k+1)|²/6, the Hann window: −1.8 dB, but far from a
     /// strong tone or a steep slope of noise its sidelobes are gone.
     pub hann: Vec<f32>,
     /// Floor under `plain` and `between`.
