@@ -143,8 +143,14 @@ pub(super) struct Heading {
 
 /// `accel [m/s^2]`, `U (V)`, `t/s` or plain `x`.
 pub(super) fn read_heading(bytes: &[u8]) -> Heading {
-    let text = to_text(bytes);
-    let text = text.trim_matches(|c: char| c.is_whitespace() || c.is_control() || c == '\u{FEFF}');
+    /// Characters of a name that are kept.
+    const LONGEST: usize = 120;
+    let mut text = to_text(bytes).replace(|c: char| c.is_control() || c == '\u{FEFF}', " ");
+    if let Some((end, _)) = text.char_indices().nth(LONGEST) {
+        text.truncate(end);
+        text.push('…');
+    }
+    let text = text.trim();
     for (open, close) in [('[', ']'), ('(', ')'), ('{', '}'), ('<', '>')] {
         let inside = text
             .strip_suffix(close)

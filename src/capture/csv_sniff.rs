@@ -435,16 +435,33 @@ fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<
             share: "no column of numbers beside the time".into(),
         })
     });
-    Err(word.unwrap_or(CaptureError::NoNumbers))
+    Err(word.unwrap_or(CaptureError::NoChannels))
 }
 
 impl Table {
-    /// The heading, or "column 2".
+    /// The heading, or "column 2"; with the column's number where two columns
+    /// have the same heading.
     pub(super) fn column_name(&self, column: usize) -> String {
+        let number = column + 1;
         match self.columns.get(column) {
-            Some(heading) if !heading.name.is_empty() => heading.name.clone(),
-            _ => format!("column {}", column + 1),
+            Some(heading) if !heading.name.is_empty() => {
+                let same = |other: &&Heading| other.name == heading.name;
+                match self.columns.iter().filter(same).count() {
+                    1 => heading.name.clone(),
+                    _ => format!("{} (column {number})", heading.name),
+                }
+            }
+            _ => format!("column {number}"),
         }
+    }
+
+    /// The same table, with a time column that is of no use.
+    pub(super) fn without_time(&self) -> Table {
+        let mut table = self.clone();
+        if let Some(time) = table.time.take() {
+            table.leave_out(time.column, "is no usable time");
+        }
+        table
     }
 
     /// Marks a column as neither time nor channel, and says why.

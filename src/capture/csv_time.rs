@@ -54,7 +54,9 @@ pub(super) fn find_time(
             continue;
         }
         let faults = trial.steps.iter().filter(|&&step| step <= 0.0).count();
-        times.push(column);
+        if trial.mostly_ahead() {
+            times.push(column);
+        }
         if best.as_ref().is_none_or(|&(least, _)| faults < least) {
             best = Some((
                 faults,
@@ -175,7 +177,9 @@ fn named_time(heading: &Heading) -> Option<NamedTime> {
     let short = words
         .first()
         .is_some_and(|word| matches!(word.as_str(), "h" | "min"));
-    (says_time || only_unit && !short).then_some(NamedTime { format, sure: true })
+    // A capital T without a unit is as often a temperature.
+    let sure = heading.name.trim() != "T";
+    (says_time || only_unit && !short).then_some(NamedTime { format, sure })
 }
 
 /// Lower-case words of a name: `Time_Stamp (rel.)` gives time, stamp, rel.
@@ -204,6 +208,12 @@ impl Trial {
             read: stamps.len(),
             steps: steps.collect(),
         }
+    }
+
+    /// Goes ahead or stands still, as a time does, and not only the latter.
+    fn mostly_ahead(&self) -> bool {
+        let back = self.steps.iter().filter(|&&step| step < 0.0).count();
+        back * 20 <= self.steps.len() && self.steps.iter().any(|&step| step > 0.0)
     }
 
     /// Always ahead, and nearly always by the same step.

@@ -9,6 +9,7 @@ mod clock_plan;
 mod csv;
 mod csv_rate;
 mod csv_rows;
+mod csv_scan;
 mod csv_sniff;
 mod csv_time;
 mod dates;
