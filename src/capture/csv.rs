@@ -11,7 +11,8 @@ use super::csv_rows::{Rows, Source};
 use super::csv_scan::Scan;
 use super::csv_sniff::{Table, sniff};
 use super::error::CaptureError;
-use super::text::{Encoding, LONGEST_LINE};
+use super::line_limit::LONGEST_LINE;
+use super::text::Encoding;
 use super::{Block, Channel, OpenOptions, Spec};
 
 /// All that is needed to pass over the samples.

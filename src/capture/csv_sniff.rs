@@ -5,8 +5,9 @@ use csv::ByteRecord;
 
 use super::cells::{Cell, Heading, is_remark, is_unit, read_cell, read_heading};
 use super::error::CaptureError;
+use super::line_limit::LONGEST_LINE;
 use super::stamps::StampFormat;
-use super::text::{LONGEST_LINE, squeeze};
+use super::text::squeeze;
 
 /// Lines looked at.
 const MOST_LINES: usize = 1000;

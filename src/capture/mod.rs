@@ -14,6 +14,7 @@ mod csv_sniff;
 mod csv_time;
 mod dates;
 mod error;
+mod line_limit;
 mod probe;
 mod riff;
 mod stamps;
