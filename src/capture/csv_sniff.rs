@@ -4,13 +4,10 @@
 use csv::ByteRecord;
 
 use super::cells::{Cell, Heading, is_remark, is_unit, read_cell, read_heading};
+use super::csv_lines::{Line, physical_lines, split};
 use super::error::CaptureError;
-use super::line_limit::LONGEST_LINE;
 use super::stamps::StampFormat;
-use super::text::squeeze;
 
-/// Lines looked at.
-const MOST_LINES: usize = 1000;
 /// Delimiters, the less ambiguous first.
 const DELIMITERS: &[u8] = b"\t;, ";
 
@@ -40,15 +37,6 @@ pub(super) struct Table {
 pub(super) struct TimeColumn {
     pub column: usize,
     pub format: StampFormat,
-}
-
-struct Line {
-    /// Bytes before it.
-    start: usize,
-    /// 1-based.
-    number: u64,
-    cells: ByteRecord,
-    remark: bool,
 }
 
 /// How the cells of a column mostly read.
@@ -156,59 +144,6 @@ fn rows(data: &[Line]) -> Vec<&ByteRecord> {
         .filter(|line| !line.remark)
         .map(|line| &line.cells)
         .collect()
-}
-
-/// Start and bytes of each line.
-fn physical_lines(head: &[u8], whole: bool) -> Result<Vec<(usize, &[u8])>, CaptureError> {
-    let mut lines = Vec::new();
-    let mut start = 0;
-    for line in head.split_inclusive(|&c| c == b'\n').take(MOST_LINES) {
-        let complete = line.ends_with(b"\n");
-        if line.len() > LONGEST_LINE {
-            let line = lines.len() as u64 + 1;
-            return Err(CaptureError::LineTooLong {
-                line,
-                limit: LONGEST_LINE,
-            });
-        }
-        if complete || whole {
-            lines.push((start, line));
-        }
-        start += line.len();
-    }
-    Ok(lines)
-}
-
-/// Splits each line for itself, so that a stray quote spoils one line only.
-fn split(lines: &[(usize, &[u8])], delimiter: u8) -> Vec<Line> {
-    let mut split = Vec::new();
-    for (&(start, bytes), number) in lines.iter().zip(1..) {
-        let mut cells = ByteRecord::new();
-        let squeezed;
-        let bytes = match delimiter {
-            b' ' => {
-                squeezed = squeeze(bytes);
-                squeezed.as_slice()
-            }
-            _ => bytes,
-        };
-        let read = csv::ReaderBuilder::new()
-            .has_headers(false)
-            .delimiter(delimiter)
-            .buffer_capacity(bytes.len().max(1))
-            .from_reader(bytes)
-            .read_byte_record(&mut cells);
-        if matches!(read, Ok(true)) {
-            let remark = is_remark(cells.get(0).unwrap_or_default(), delimiter);
-            split.push(Line {
-                start,
-                number,
-                cells,
-                remark,
-            });
-        }
-    }
-    split
 }
 
 /// Cells per row, if commas split what are numbers with decimal commas.

@@ -7,6 +7,7 @@ mod cells;
 mod clock;
 mod clock_plan;
 mod csv;
+mod csv_lines;
 mod csv_rate;
 mod csv_rows;
 mod csv_scan;
