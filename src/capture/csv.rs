@@ -24,6 +24,7 @@ pub(super) struct CsvRecipe {
     /// Column and offset of each channel.
     channels: Vec<(usize, f64)>,
     frames: u64,
+    gaps: u64,
 }
 
 /// Finds out the table's layout from its first lines, then reads it through
@@ -97,6 +98,7 @@ fn read_through(
             plan,
             channels,
             frames: scan.frames,
+            gaps: scan.clock.map_or(0, |clock| clock.counts.gaps),
         },
     ))
 }
@@ -166,6 +168,10 @@ fn rate(
 }
 
 impl CsvRecipe {
+    pub(super) fn gaps(&self) -> u64 {
+        self.gaps
+    }
+
     pub(super) fn blocks(&self, frames_per_block: usize) -> Result<CsvBlocks, CaptureError> {
         Ok(CsvBlocks {
             rows: Rows::open(&self.source, &self.table, self.plan)?,

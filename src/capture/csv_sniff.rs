@@ -340,6 +340,12 @@ fn is_unit_cell(cell: &[u8]) -> bool {
 /// Columns of numbers are channels; what else there is, is noted.
 fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<(), CaptureError> {
     let time = table.time.map(|time| time.column);
+    let full = tallies
+        .iter()
+        .map(|tally| tally.numbers)
+        .max()
+        .unwrap_or(0)
+        .max(1);
     for (column, tally) in tallies.iter().enumerate() {
         let name = table.column_name(column);
         if Some(column) == time || table.left_out(column) {
@@ -354,7 +360,14 @@ fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<
             table
                 .notes
                 .push(format!("column {name:?} holds {what}: left out"));
-        } else if tally.numbers > 0 || !table.is_unnamed(column) {
+        } else if table.is_unnamed(column) && 2 * tally.numbers < full {
+            // Settings beside the first rows, or a trailing delimiter.
+            if tally.numbers > 0 {
+                table
+                    .notes
+                    .push(format!("column {name:?} is mostly empty: left out"));
+            }
+        } else {
             table.values.push(column);
         }
     }

@@ -163,6 +163,14 @@ fn prime(i: usize) -> f32 {
 }
 
 #[test]
+fn captures_are_shared_and_passes_are_sent() {
+    fn shared<T: Send + Sync>() {}
+    fn sent<T: Send>() {}
+    shared::<Capture>();
+    sent::<foldtrace::capture::Blocks>();
+}
+
+#[test]
 fn passes_can_run_side_by_side_in_threads() {
     let folder = Folder::new();
     let text = table("t,x\n", 300, |i| {
