@@ -27,6 +27,9 @@ impl Folder {
 
     fn write(&self, name: &str, bytes: impl AsRef<[u8]>) -> PathBuf {
         let path = self.0.path().join(name);
+        // A file that is truncated and written again waits for the disk on
+        // some file systems: thousands of cases would take seconds.
+        let _ = std::fs::remove_file(&path);
         std::fs::write(&path, bytes).unwrap();
         path
     }
