@@ -54,15 +54,14 @@ const MISSING: &[&str] = &[
 
 /// Reads a cell: decimal point or comma, exponent, either minus sign.
 pub(super) fn read_cell(bytes: &[u8]) -> Cell {
-    let bytes = trim(bytes);
+    // Quotes are there where the reader was not told to expect any.
+    let bytes = match trim(bytes) {
+        [b'"', inside @ .., b'"'] => trim(inside),
+        bytes => bytes,
+    };
     if bytes.is_empty() {
         return Cell::Missing;
     }
-    // Quotes are there where the reader was not told to expect any.
-    let bytes = match bytes {
-        [b'"', inside @ .., b'"'] => trim(inside),
-        _ => bytes,
-    };
     match parse(bytes).or_else(|| parse_mended(bytes)) {
         Some(number) if number.is_finite() => Cell::Number(number),
         Some(_) => Cell::Missing,
@@ -75,15 +74,14 @@ pub(super) fn read_cell(bytes: &[u8]) -> Cell {
 pub(super) fn trim(bytes: &[u8]) -> &[u8] {
     let mut bytes = bytes.trim_ascii();
     loop {
-        let trimmed = bytes
-            .strip_prefix(b"\xC2\xA0")
-            .or_else(|| bytes.strip_suffix(b"\xC2\xA0"))
-            .or_else(|| bytes.strip_suffix(b"\xA0"));
-        match trimmed {
-            // A multi-byte character may end in 0xA0.
-            Some(rest) if rest.is_ascii() => bytes = rest.trim_ascii(),
+        bytes = match bytes {
+            // Before the lone byte, for it may end another character.
+            [b'\xC2', b'\xA0', rest @ ..] | [rest @ .., b'\xC2', b'\xA0'] => rest,
+            [b'\xA0', rest @ ..] => rest,
+            [rest @ .., b'\xA0'] if rest.is_ascii() => rest,
             _ => return bytes,
         }
+        .trim_ascii();
     }
 }
 
@@ -143,8 +141,14 @@ pub(super) struct Heading {
 
 /// `accel [m/s^2]`, `U (V)`, `t/s` or plain `x`.
 pub(super) fn read_heading(bytes: &[u8]) -> Heading {
-    let text = to_text(bytes);
-    let text = text.trim_matches(|c: char| c.is_whitespace() || c.is_control() || c == '\u{FEFF}');
+    /// Characters of a name that are kept.
+    const LONGEST: usize = 120;
+    let mut text = to_text(bytes).replace(|c: char| c.is_control() || c == '\u{FEFF}', " ");
+    if let Some((end, _)) = text.char_indices().nth(LONGEST) {
+        text.truncate(end);
+        text.push('…');
+    }
+    let text = text.trim();
     for (open, close) in [('[', ']'), ('(', ')'), ('{', '}'), ('<', '>')] {
         let inside = text
             .strip_suffix(close)
@@ -192,4 +196,89 @@ pub(super) fn is_unit(text: &str) -> bool {
     const PREFIXES: &[char] = &['n', 'u', 'µ', 'μ', 'm', 'c', 'k', 'M', 'G', 'p'];
     let known = |unit: &str| UNITS.contains(&unit);
     known(text) || text.strip_prefix(PREFIXES).is_some_and(known)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn cells() {
+        for (text, number) in [
+            ("1.5", 1.5),
+            ("-0,25", -0.25),
+            (" +7 ", 7.0),
+            (".5", 0.5),
+            (",5", 0.5),
+            ("5.", 5.0),
+            ("1e-3", 0.001),
+            ("1,5E3", 1500.0),
+            ("\u{2212}3.5", -3.5),
+            ("\u{A0}4\u{A0}", 4.0),
+            ("\"6\"", 6.0),
+        ] {
+            assert_eq!(read_cell(text.as_bytes()), Cell::Number(number), "{text:?}");
+        }
+        assert_eq!(read_cell(b"\xA04\xA0"), Cell::Number(4.0));
+        assert_eq!(trim("à".as_bytes()), "à".as_bytes());
+        assert_eq!(read_cell(b"4\xA0"), Cell::Number(4.0));
+        for text in [
+            "", "  ", "NaN", "nan", "inf", "-inf", "1e999", "#N/A", "ol", "--", "\"\"",
+        ] {
+            assert_eq!(read_cell(text.as_bytes()), Cell::Missing, "{text:?}");
+        }
+        let long = "1".repeat(1000) + "x";
+        for text in [
+            "x",
+            "1.2.3",
+            "1,234.5",
+            "1.234,5",
+            "1 2",
+            "0x10",
+            "5 V",
+            "1,2,3",
+            "\u{2212}",
+            "\u{2212}-1",
+            &long,
+        ] {
+            assert_eq!(read_cell(text.as_bytes()), Cell::Word, "{text:?}");
+        }
+    }
+
+    #[test]
+    fn remarks() {
+        for text in ["# x", "#", " #x", "% x", "// x", "; x"] {
+            assert!(is_remark(text.as_bytes(), b','), "{text:?}");
+        }
+        for text in ["#N/A", "#VALUE!", "x", "/x", ""] {
+            assert!(!is_remark(text.as_bytes(), b','), "{text:?}");
+        }
+        assert!(!is_remark(b";1", b';'));
+    }
+
+    #[test]
+    fn headings() {
+        for (text, name, unit) in [
+            ("accel [m/s^2]", "accel", Some("m/s^2")),
+            ("U (mV)", "U", Some("mV")),
+            ("x (left)", "x (left)", None),
+            ("x [left]", "x", Some("left")),
+            ("[V]", "[V]", Some("V")),
+            ("t/s", "t", Some("s")),
+            ("a/b", "a/b", None),
+            ("a, g", "a", Some("g")),
+            ("a\u{7}b", "a b", None),
+            ("", "", None),
+            ("()", "()", None),
+        ] {
+            let heading = read_heading(text.as_bytes());
+            assert_eq!(
+                (heading.name.as_str(), heading.unit.as_deref()),
+                (name, unit),
+                "{text:?}"
+            );
+        }
+        assert_eq!(read_heading(&[b'x'; 1000]).name.chars().count(), 121);
+        assert_eq!(read_heading(b"Gr\xF6\xDFe [\xB0]").name, "Größe");
+    }
 }

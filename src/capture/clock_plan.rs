@@ -104,14 +104,15 @@ impl ClockProbe {
 }
 
 /// Rows stamped on arrival: many short steps, and most of the time in long
-/// ones, which are too many for gaps.
+/// ones, which are too many and too long for lost samples.
 fn bursts(steps: &[f64], step: f64) -> Option<ClockPlan> {
     const MANY: f64 = 0.05;
+    const LONG: f64 = 5.0;
     let total: f64 = steps.iter().sum();
     let long: Vec<f64> = steps
         .iter()
         .copied()
-        .filter(|&one| one > 1.5 * step)
+        .filter(|&one| one > LONG * step)
         .collect();
     if (long.len() as f64) < MANY * steps.len() as f64 || long.iter().sum::<f64>() < 0.5 * total {
         return None;
@@ -234,4 +235,65 @@ fn quantile(sorted: &[f64], q: f64) -> Option<f64> {
 fn mean(values: impl Iterator<Item = f64>) -> Option<f64> {
     let (sum, n) = values.fold((0.0, 0.0), |(sum, n), value| (sum + value, n + 1.0));
     (n > 0.0).then(|| sum / n)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn plan(stamps: impl Iterator<Item = f64>) -> Option<ClockPlan> {
+        let mut probe = ClockProbe::default();
+        for stamp in stamps {
+            if probe.take(stamp) {
+                break;
+            }
+        }
+        probe.plan()
+    }
+
+    #[test]
+    fn no_time_no_plan() {
+        assert_eq!(plan([].into_iter()), None);
+        assert_eq!(plan([1.0].into_iter()), None);
+        assert_eq!(plan([1.0; 50].into_iter()), None);
+        assert_eq!(plan((0..50).map(|i| f64::from(-i))), None);
+    }
+
+    #[test]
+    fn even_stamps_give_their_step() {
+        for n in [2, 3, 20, 5000] {
+            let plan = plan((0..n).map(|i| 7.0 + f64::from(i) / 128.0)).unwrap();
+            assert_eq!(
+                (plan.period, plan.scatter, plan.shared),
+                (1.0 / 128.0, 0.0, false)
+            );
+            assert_eq!(plan.start, 0.0);
+        }
+    }
+
+    #[test]
+    fn a_comb_with_missing_teeth() {
+        use rand::{RngExt, SeedableRng};
+        let mut random = rand::rngs::StdRng::seed_from_u64(7);
+        let kept: Vec<i32> = (0..6000)
+            .filter(|_| random.random::<f64>() > 0.25)
+            .collect();
+        let stamps = kept.into_iter().map(|n| f64::from(n) * 0.02);
+        let plan = plan(stamps).unwrap();
+        // The comb of 4096 rows is a 4096th of a period wide, searched in fours.
+        assert!(
+            (plan.period / 0.02 - 1.0).abs() < 1.0 / 16_000.0,
+            "{plan:?}"
+        );
+    }
+
+    #[test]
+    fn stamps_rounded_down_start_half_a_step_early() {
+        // 8 rows per stamp of 8 ms: the rows' middle is 3.5 ms after the first.
+        let plan = plan((0..5000).map(|i| f64::from(i / 8) * 0.008)).unwrap();
+        assert!(plan.shared);
+        assert!((plan.period - 0.001).abs() < 1e-12, "{plan:?}");
+        assert!((plan.scatter - 0.008).abs() < 1e-12, "{plan:?}");
+        assert!((plan.start + 0.0035).abs() < 1e-9, "{plan:?}");
+    }
 }

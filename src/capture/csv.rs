@@ -7,16 +7,13 @@ use std::sync::Arc;
 use super::cells::Cell;
 use super::clock::Clock;
 use super::clock_plan::{ClockPlan, ClockProbe};
-use super::csv_rows::{RowCounts, Rows, Source};
+use super::csv_rows::{Rows, Source};
+use super::csv_scan::Scan;
 use super::csv_sniff::{Table, sniff};
-use super::error::{CaptureError, excerpt};
-use super::text::{Encoding, LONGEST_LINE};
+use super::error::CaptureError;
+use super::line_limit::LONGEST_LINE;
+use super::text::Encoding;
 use super::{Block, Channel, OpenOptions, Spec};
-
-/// Share of words in a column, or of bad stamps, that is no longer a slip.
-const MOST_BAD: f64 = 0.2;
-/// Frames missing per row in the file beyond which the stamps are not believed.
-const MOST_MISSING_PER_ROW: u64 = 100;
 
 /// All that is needed to pass over the samples.
 #[derive(Debug, Clone)]
@@ -27,40 +24,54 @@ pub(super) struct CsvRecipe {
     /// Column and offset of each channel.
     channels: Vec<(usize, f64)>,
     frames: u64,
+    gaps: u64,
 }
 
 /// Finds out the table's layout from its first lines, then reads it through
-/// once.
+/// once. A time column that turns out to be none is done without if the rate
+/// is given.
 pub(super) fn open(
     path: PathBuf,
     options: &OpenOptions,
 ) -> Result<(Spec, CsvRecipe), CaptureError> {
     let (source, table) = read_head(path, options)?;
-    let table = Arc::new(table);
-    let plan = match table.time {
-        Some(time) => match plan_clock(&source, &table)? {
-            Ok(plan) => Some(plan),
-            Err(rows) => {
-                return Err(CaptureError::TimeNotIncreasing {
+    match read_through(&source, &table, options) {
+        Err(
+            CaptureError::TimeNotIncreasing { .. }
+            | CaptureError::BadStamps { .. }
+            | CaptureError::GapTooLong { .. },
+        ) if options.rate_hz.is_some() => read_through(&source, &table.without_time(), options),
+        result => result,
+    }
+}
+
+fn read_through(
+    source: &Source,
+    table: &Table,
+    options: &OpenOptions,
+) -> Result<(Spec, CsvRecipe), CaptureError> {
+    let table = Arc::new(table.clone());
+    let plan =
+        match table.time {
+            Some(time) => Some(plan_clock(source, &table)?.map_err(|rows| {
+                CaptureError::TimeNotIncreasing {
                     name: table.column_name(time.column),
                     bad: rows.saturating_sub(1),
                     rows,
                     line: table.first_line + 1,
-                });
-            }
-        },
-        None => None,
-    };
-    let scan = Scan::run(&source, &table, plan)?;
-    let mut notes = table.notes.clone();
+                }
+            })?),
+            None => None,
+        };
+    let scan = Scan::run(source, &table, plan)?;
     scan.check(&table)?;
+    let mut notes = table.notes.clone();
     scan.note(&table, &mut notes);
-    let channels: Vec<(usize, f64)> = scan
-        .columns
-        .iter()
+    let rate_hz = rate(&scan, &table, options, &mut notes)?;
+    let columns = scan.columns.iter();
+    let channels: Vec<(usize, f64)> = columns
         .filter_map(|column| Some((column.column, column.first?)))
         .collect();
-    let rate_hz = rate(&scan, &table, options, &mut notes)?;
     let described = channels.iter().map(|&(column, offset)| Channel {
         name: table.column_name(column),
         unit: table
@@ -78,7 +89,7 @@ pub(super) fn open(
         normalised: false,
         notes,
     };
-    let frames = scan.frames;
+    let source = source.clone();
     Ok((
         spec,
         CsvRecipe {
@@ -86,7 +97,8 @@ pub(super) fn open(
             table,
             plan,
             channels,
-            frames,
+            frames: scan.frames,
+            gaps: scan.clock.map_or(0, |clock| clock.counts.gaps),
         },
     ))
 }
@@ -155,180 +167,11 @@ fn rate(
     }
 }
 
-/// What one pass over all rows found.
-struct Scan {
-    columns: Vec<ColumnScan>,
-    frames: u64,
-    counts: RowCounts,
-    clock: Option<Clock>,
-}
-
-#[derive(Debug, Clone, Default)]
-struct ColumnScan {
-    column: usize,
-    /// First number.
-    first: Option<f64>,
-    numbers: u64,
-    words: u64,
-    /// Line and cell of the first word.
-    word: Option<(u64, String)>,
-}
-
-impl Scan {
-    fn run(
-        source: &Source,
-        table: &Arc<Table>,
-        plan: Option<ClockPlan>,
-    ) -> Result<Scan, CaptureError> {
-        let mut rows = Rows::open(source, table, plan)?;
-        let mut columns: Vec<ColumnScan> = table
-            .values
-            .iter()
-            .map(|&column| ColumnScan {
-                column,
-                ..ColumnScan::default()
-            })
-            .collect();
-        let mut frames = 0u64;
-        // A jump beyond this is refused, even if the file turned out that long.
-        let mut longest_gap = (0, 0);
-        while let Some(row) = rows.next_row()? {
-            frames = frames.saturating_add(row.missing).saturating_add(1);
-            if row.missing > longest_gap.0 {
-                longest_gap = (row.missing, row.line);
-            }
-            for column in &mut columns {
-                match rows.value(column.column) {
-                    Cell::Number(number) => {
-                        column.first.get_or_insert(number);
-                        column.numbers += 1;
-                    }
-                    Cell::Missing => {}
-                    Cell::Word => {
-                        column.words += 1;
-                        if column.word.is_none() {
-                            column.word = Some((row.line, excerpt(rows.bytes(column.column))));
-                        }
-                    }
-                }
-            }
-        }
-        let counts = rows.counts;
-        if longest_gap.0 > counts.rows.saturating_mul(MOST_MISSING_PER_ROW) {
-            let (missing, line) = longest_gap;
-            return Err(CaptureError::GapTooLong {
-                line,
-                missing,
-                rows: counts.rows,
-            });
-        }
-        Ok(Scan {
-            columns,
-            frames,
-            counts,
-            clock: rows.clock,
-        })
-    }
-
-    /// Refuses a file that is mostly something else than it seemed.
-    fn check(&self, table: &Table) -> Result<(), CaptureError> {
-        let rows = self.counts.rows;
-        if rows == 0 {
-            return Err(CaptureError::NoSamples);
-        }
-        for column in &self.columns {
-            let cells = column.numbers + column.words;
-            let Some((line, text)) = &column.word else {
-                continue;
-            };
-            if column.words as f64 > MOST_BAD * cells as f64 {
-                return Err(CaptureError::NotANumber {
-                    line: *line,
-                    column: column.column + 1,
-                    text: text.clone(),
-                    share: format!("nor are {} of {cells} cells in this column", column.words),
-                });
-            }
-        }
-        if self.columns.iter().all(|column| column.first.is_none()) {
-            return Err(CaptureError::NoNumbers);
-        }
-        let (Some(clock), Some(time)) = (&self.clock, table.time) else {
-            return Ok(());
-        };
-        let counts = clock.counts;
-        if 2 * (counts.back + counts.repeated) > rows {
-            return Err(CaptureError::TimeNotIncreasing {
-                name: table.column_name(time.column),
-                bad: counts.back + counts.repeated,
-                rows,
-                line: self.counts.first_back.unwrap_or(table.first_line),
-            });
-        }
-        if counts.unstamped as f64 > MOST_BAD * rows as f64 {
-            return Err(CaptureError::BadStamps {
-                line: self.counts.first_unstamped.unwrap_or(table.first_line),
-                column: time.column + 1,
-                bad: counts.unstamped,
-                rows,
-            });
-        }
-        Ok(())
-    }
-
-    /// Says what was mended.
-    fn note(&self, table: &Table, notes: &mut Vec<String>) {
-        let mut note = |count: u64, what: &str| {
-            if count > 0 {
-                notes.push(format!("{count} {what}"));
-            }
-        };
-        note(self.counts.wordy, "lines without a number were left out");
-        note(
-            self.counts.short,
-            "rows have fewer cells than the others: taken as missing",
-        );
-        note(
-            self.counts.long,
-            "rows have more cells than the others: the surplus was left out",
-        );
-        if let Some(clock) = &self.clock {
-            let counts = clock.counts;
-            note(
-                counts.repeated,
-                "rows repeat the stamp before them: left out",
-            );
-            note(
-                counts.back,
-                "rows step back in time: taken as the next samples",
-            );
-            note(
-                counts.unstamped,
-                "rows have no readable time: taken as the next samples",
-            );
-            if counts.gaps > 0 {
-                notes.push(format!(
-                    "{} gaps in the time column: {} missing samples were filled in as missing",
-                    counts.gaps, counts.missing
-                ));
-            }
-            clock.note(notes);
-        }
-        for column in &self.columns {
-            let name = table.column_name(column.column);
-            if column.first.is_none() {
-                notes.push(format!("column {name:?} holds no numbers: left out"));
-            } else if let Some((line, text)) = &column.word {
-                notes.push(format!(
-                    "{} cells of column {name:?} are no numbers (first: line {line}, {text:?}): taken as missing",
-                    column.words
-                ));
-            }
-        }
-    }
-}
-
 impl CsvRecipe {
+    pub(super) fn gaps(&self) -> u64 {
+        self.gaps
+    }
+
     pub(super) fn blocks(&self, frames_per_block: usize) -> Result<CsvBlocks, CaptureError> {
         Ok(CsvBlocks {
             rows: Rows::open(&self.source, &self.table, self.plan)?,

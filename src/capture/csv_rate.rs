@@ -50,3 +50,32 @@ pub(super) fn read_rate(line: &[u8]) -> Option<f64> {
     };
     (rate.is_finite() && rate > 0.0).then_some(rate)
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn only_a_sample_rate_is_a_sample_rate() {
+        for (line, rate) in [
+            ("Sample rate: 8 kHz", 8000.0),
+            ("\"Sampling Rate (Hz)\",\"51,2\"", 51.2),
+            ("Sample Rate [Hz];48000", 48_000.0),
+            ("fs=12.5", 12.5),
+            ("# Sampling period 2 ms", 500.0),
+        ] {
+            assert_eq!(read_rate(line.as_bytes()), Some(rate), "{line}");
+        }
+        for line in [
+            "",
+            "Rate: 7 Hz",
+            "Sample 7",
+            "Sample rate",
+            "Sample rate: 7 m/s",
+            "Sample rate: 0 Hz",
+            "offs=7",
+        ] {
+            assert_eq!(read_rate(line.as_bytes()), None, "{line}");
+        }
+    }
+}

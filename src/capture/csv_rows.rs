@@ -13,8 +13,9 @@ use super::clock_plan::ClockPlan;
 use super::csv_sniff::Table;
 use super::dates::DAY_S;
 use super::error::CaptureError;
+use super::line_limit::{LONGEST_LINE, LineLimit, TooLong};
 use super::stamps::{Stamp, StampFormat};
-use super::text::{BlankReader, Encoding, LONGEST_LINE, LineLimit, TextReader, TooLong};
+use super::text::{BlankReader, Encoding, TextReader};
 
 /// How the text of a file is read.
 #[derive(Debug, Clone, PartialEq, Eq)]

@@ -4,12 +4,10 @@
 use csv::ByteRecord;
 
 use super::cells::{Cell, Heading, is_remark, is_unit, read_cell, read_heading};
+use super::csv_lines::{Line, physical_lines, split};
 use super::error::CaptureError;
 use super::stamps::StampFormat;
-use super::text::{LONGEST_LINE, squeeze};
 
-/// Lines looked at.
-const MOST_LINES: usize = 1000;
 /// Delimiters, the less ambiguous first.
 const DELIMITERS: &[u8] = b"\t;, ";
 
@@ -39,15 +37,6 @@ pub(super) struct Table {
 pub(super) struct TimeColumn {
     pub column: usize,
     pub format: StampFormat,
-}
-
-struct Line {
-    /// Bytes before it.
-    start: usize,
-    /// 1-based.
-    number: u64,
-    cells: ByteRecord,
-    remark: bool,
 }
 
 /// How the cells of a column mostly read.
@@ -155,59 +144,6 @@ fn rows(data: &[Line]) -> Vec<&ByteRecord> {
         .filter(|line| !line.remark)
         .map(|line| &line.cells)
         .collect()
-}
-
-/// Start and bytes of each line.
-fn physical_lines(head: &[u8], whole: bool) -> Result<Vec<(usize, &[u8])>, CaptureError> {
-    let mut lines = Vec::new();
-    let mut start = 0;
-    for line in head.split_inclusive(|&c| c == b'\n').take(MOST_LINES) {
-        let complete = line.ends_with(b"\n");
-        if line.len() > LONGEST_LINE {
-            let line = lines.len() as u64 + 1;
-            return Err(CaptureError::LineTooLong {
-                line,
-                limit: LONGEST_LINE,
-            });
-        }
-        if complete || whole {
-            lines.push((start, line));
-        }
-        start += line.len();
-    }
-    Ok(lines)
-}
-
-/// Splits each line for itself, so that a stray quote spoils one line only.
-fn split(lines: &[(usize, &[u8])], delimiter: u8) -> Vec<Line> {
-    let mut split = Vec::new();
-    for (&(start, bytes), number) in lines.iter().zip(1..) {
-        let mut cells = ByteRecord::new();
-        let squeezed;
-        let bytes = match delimiter {
-            b' ' => {
-                squeezed = squeeze(bytes);
-                squeezed.as_slice()
-            }
-            _ => bytes,
-        };
-        let read = csv::ReaderBuilder::new()
-            .has_headers(false)
-            .delimiter(delimiter)
-            .buffer_capacity(bytes.len().max(1))
-            .from_reader(bytes)
-            .read_byte_record(&mut cells);
-        if matches!(read, Ok(true)) {
-            let remark = is_remark(cells.get(0).unwrap_or_default(), delimiter);
-            split.push(Line {
-                start,
-                number,
-                cells,
-                remark,
-            });
-        }
-    }
-    split
 }
 
 /// Cells per row, if commas split what are numbers with decimal commas.
@@ -404,6 +340,12 @@ fn is_unit_cell(cell: &[u8]) -> bool {
 /// Columns of numbers are channels; what else there is, is noted.
 fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<(), CaptureError> {
     let time = table.time.map(|time| time.column);
+    let full = tallies
+        .iter()
+        .map(|tally| tally.numbers)
+        .max()
+        .unwrap_or(0)
+        .max(1);
     for (column, tally) in tallies.iter().enumerate() {
         let name = table.column_name(column);
         if Some(column) == time || table.left_out(column) {
@@ -418,7 +360,14 @@ fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<
             table
                 .notes
                 .push(format!("column {name:?} holds {what}: left out"));
-        } else if tally.numbers > 0 || !table.is_unnamed(column) {
+        } else if table.is_unnamed(column) && 2 * tally.numbers < full {
+            // Settings beside the first rows, or a trailing delimiter.
+            if tally.numbers > 0 {
+                table
+                    .notes
+                    .push(format!("column {name:?} is mostly empty: left out"));
+            }
+        } else {
             table.values.push(column);
         }
     }
@@ -435,16 +384,33 @@ fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<
             share: "no column of numbers beside the time".into(),
         })
     });
-    Err(word.unwrap_or(CaptureError::NoNumbers))
+    Err(word.unwrap_or(CaptureError::NoChannels))
 }
 
 impl Table {
-    /// The heading, or "column 2".
+    /// The heading, or "column 2"; with the column's number where two columns
+    /// have the same heading.
     pub(super) fn column_name(&self, column: usize) -> String {
+        let number = column + 1;
         match self.columns.get(column) {
-            Some(heading) if !heading.name.is_empty() => heading.name.clone(),
-            _ => format!("column {}", column + 1),
+            Some(heading) if !heading.name.is_empty() => {
+                let same = |other: &&Heading| other.name == heading.name;
+                match self.columns.iter().filter(same).count() {
+                    1 => heading.name.clone(),
+                    _ => format!("{} (column {number})", heading.name),
+                }
+            }
+            _ => format!("column {number}"),
         }
+    }
+
+    /// The same table, with a time column that is of no use.
+    pub(super) fn without_time(&self) -> Table {
+        let mut table = self.clone();
+        if let Some(time) = table.time.take() {
+            table.leave_out(time.column, "is no usable time");
+        }
+        table
     }
 
     /// Marks a column as neither time nor channel, and says why.

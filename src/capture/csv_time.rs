@@ -54,7 +54,9 @@ pub(super) fn find_time(
             continue;
         }
         let faults = trial.steps.iter().filter(|&&step| step <= 0.0).count();
-        times.push(column);
+        if trial.mostly_ahead() {
+            times.push(column);
+        }
         if best.as_ref().is_none_or(|&(least, _)| faults < least) {
             best = Some((
                 faults,
@@ -95,32 +97,36 @@ pub(super) fn find_time(
     }
 }
 
-/// A first column that runs on in even steps, under no or another name, is
-/// taken as seconds, unless its steps are whole: then nothing says seconds.
+/// The first column of numbers, if it runs on in even steps under no or another
+/// name, is taken as seconds, unless its steps are whole: then nothing says
+/// seconds.
 fn time_in_first_column(table: &mut Table, rows: &[&ByteRecord], rate_known: bool) {
-    let other_unit = table
-        .columns
-        .first()
-        .is_some_and(|heading| heading.unit.is_some());
-    let trial = Trial::of(rows, 0, None);
-    if other_unit || table.columns.len() < 2 || trial.read < rows.len() || !trial.is_steady() {
+    let full = (0..table.columns.len().saturating_sub(1))
+        .map(|column| (column, Trial::of(rows, column, None)))
+        .find(|(_, trial)| trial.read == rows.len());
+    let Some((column, trial)) = full else {
+        return;
+    };
+    let heading = table.columns.get(column);
+    let other_unit = heading.is_some_and(|heading| heading.unit.is_some());
+    if other_unit || table.left_out(column) || !trial.is_steady() {
         return;
     }
     let seconds = trial.format == StampFormat::Decimal { exponent: 0 };
     if seconds && trial.steps.iter().all(|step| step.fract() == 0.0) {
         if rate_known {
-            table.leave_out(0, "runs evenly in an unknown unit");
+            table.leave_out(column, "runs evenly in an unknown unit");
         }
         return;
     }
     table.time = Some(TimeColumn {
-        column: 0,
+        column,
         format: trial.format,
     });
     let unit = if seconds { " in seconds" } else { "" };
     table.notes.push(format!(
         "{:?} taken as the time{unit}",
-        table.column_name(0)
+        table.column_name(column)
     ));
 }
 
@@ -175,7 +181,9 @@ fn named_time(heading: &Heading) -> Option<NamedTime> {
     let short = words
         .first()
         .is_some_and(|word| matches!(word.as_str(), "h" | "min"));
-    (says_time || only_unit && !short).then_some(NamedTime { format, sure: true })
+    // A capital T without a unit is as often a temperature.
+    let sure = heading.name.trim() != "T";
+    (says_time || only_unit && !short).then_some(NamedTime { format, sure })
 }
 
 /// Lower-case words of a name: `Time_Stamp (rel.)` gives time, stamp, rel.
@@ -204,6 +212,12 @@ impl Trial {
             read: stamps.len(),
             steps: steps.collect(),
         }
+    }
+
+    /// Goes ahead or stands still, as a time does, and not only the latter.
+    fn mostly_ahead(&self) -> bool {
+        let back = self.steps.iter().filter(|&&step| step < 0.0).count();
+        back * 20 <= self.steps.len() && self.steps.iter().any(|&step| step > 0.0)
     }
 
     /// Always ahead, and nearly always by the same step.

@@ -95,6 +95,9 @@ pub enum CaptureError {
         "no rows of numbers found (a CSV has one row per sample: time and one column per channel)"
     )]
     NoNumbers,
+    /// A time column and nothing else.
+    #[error("no column of values beside the time")]
+    NoChannels,
     /// The time of the samples is not told.
     #[error("no time column found: give the sample rate with --rate HZ")]
     NoTime,

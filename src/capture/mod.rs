@@ -2,17 +2,26 @@
 //!
 //! A [`Capture`] is opened once and can be passed over as often as needed with
 //! [`Capture::blocks`]; no pass ever holds more than one block of samples.
+//!
+//! WAV: `riff` walks the chunks without trusting a size, `wav` decodes blocks.
+//! CSV: `text` and `line_limit` give bounded lines in UTF-8, `csv_lines`,
+//! `csv_sniff` and `csv_time` find the layout from the first lines, `stamps` and
+//! `dates` read times, `clock_plan` and `clock` turn them into frame numbers and
+//! a rate, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks.
 
 mod cells;
 mod clock;
 mod clock_plan;
 mod csv;
+mod csv_lines;
 mod csv_rate;
 mod csv_rows;
+mod csv_scan;
 mod csv_sniff;
 mod csv_time;
 mod dates;
 mod error;
+mod line_limit;
 mod probe;
 mod riff;
 mod stamps;
@@ -150,6 +159,15 @@ impl Capture {
     /// What the recording is.
     pub fn spec(&self) -> &Spec {
         &self.spec
+    }
+
+    /// Runs of samples missing between time stamps; their frames are NaN.
+    /// 0 for WAV, whose frames have no stamps.
+    pub fn gaps(&self) -> u64 {
+        match &self.recipe {
+            Recipe::Wav(_) => 0,
+            Recipe::Csv(csv) => csv.gaps(),
+        }
     }
 
     /// Starts a pass over all samples, `frames_per_block` frames at a time (at

@@ -1,10 +1,6 @@
-//! Text in any of the encodings that recorders write, as UTF-8 bytes, with a
-//! bound on the length of a line.
+//! Text in any of the encodings that recorders write, as UTF-8 bytes.
 
 use std::io::{self, Read};
-
-/// Longest accepted line, in bytes.
-pub(super) const LONGEST_LINE: usize = 1 << 20;
 
 /// How the characters are coded.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -204,117 +200,6 @@ impl<R: Read> Read for TextReader<R> {
     }
 }
 
-/// What [`LineLimit`] fails with, inside an [`io::Error`].
-#[derive(Debug, thiserror::Error)]
-#[error("line {line} is too long")]
-pub(super) struct TooLong {
-    /// Lines before it, in this reader.
-    pub line: u64,
-}
-
-/// Where a reader of CSV stands within a record.
-#[derive(Debug, Clone, Copy, PartialEq, Eq)]
-enum Place {
-    RecordStart,
-    FieldStart,
-    Plain,
-    Quoted,
-    /// After a quote within quotes: the end, or the first half of a quote.
-    QuoteEnd,
-}
-
-/// Passes bytes through and fails when a CSV record grows beyond
-/// [`LONGEST_LINE`]: a reader that collects records in memory behind it stays
-/// bounded, even if a quote is never closed.
-#[derive(Debug)]
-pub(super) struct LineLimit<R> {
-    inner: R,
-    delimiter: u8,
-    /// Whether cells may be in quotes.
-    quoted: bool,
-    place: Place,
-    length: usize,
-    /// Newlines passed, and those passed when the record began.
-    lines: u64,
-    record_line: u64,
-}
-
-impl<R> LineLimit<R> {
-    pub(super) fn new(inner: R, delimiter: u8, quoted: bool) -> Self {
-        LineLimit {
-            inner,
-            delimiter,
-            quoted,
-            place: Place::RecordStart,
-            length: 0,
-            lines: 0,
-            record_line: 0,
-        }
-    }
-
-    fn pass(&mut self, bytes: &[u8]) -> io::Result<()> {
-        let within = matches!(self.place, Place::Quoted | Place::QuoteEnd);
-        if self.quoted && (within || bytes.contains(&b'"')) {
-            bytes.iter().for_each(|&byte| self.pass_byte(byte));
-        } else {
-            self.pass_plain(bytes);
-        }
-        if self.length > LONGEST_LINE {
-            return Err(io::Error::other(TooLong {
-                line: self.record_line,
-            }));
-        }
-        Ok(())
-    }
-
-    /// As [`Self::pass_byte`] for each, where there is no quote.
-    fn pass_plain(&mut self, bytes: &[u8]) {
-        let line = match bytes.iter().rposition(|&byte| byte == b'\n') {
-            Some(at) => {
-                self.lines += bytes.iter().filter(|&&byte| byte == b'\n').count() as u64;
-                self.record_line = self.lines;
-                self.length = 0;
-                self.place = Place::RecordStart;
-                bytes.get(at + 1..).unwrap_or_default()
-            }
-            None => bytes,
-        };
-        self.length += line.len();
-        if let Some(&last) = line.last() {
-            self.place = if last == self.delimiter {
-                Place::FieldStart
-            } else {
-                Place::Plain
-            };
-        }
-    }
-
-    fn pass_byte(&mut self, byte: u8) {
-        self.length += 1;
-        self.lines += u64::from(byte == b'\n');
-        self.place = match (self.place, byte) {
-            (Place::Quoted, b'"') => Place::QuoteEnd,
-            (Place::Quoted, _) | (Place::QuoteEnd, b'"') => Place::Quoted,
-            (_, b'\n') => {
-                self.length = 0;
-                self.record_line = self.lines;
-                Place::RecordStart
-            }
-            (Place::RecordStart | Place::FieldStart, b'"') => Place::Quoted,
-            (_, byte) if byte == self.delimiter => Place::FieldStart,
-            _ => Place::Plain,
-        };
-    }
-}
-
-impl<R: Read> Read for LineLimit<R> {
-    fn read(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
-        let n = self.inner.read(buffer)?;
-        self.pass(buffer.get(..n).unwrap_or_default())?;
-        Ok(n)
-    }
-}
-
 /// A line with each run of blanks and tabs made one blank, and none at its ends.
 pub(super) fn squeeze(line: &[u8]) -> Vec<u8> {
     let mut squeezed = Vec::with_capacity(line.len());
@@ -405,5 +290,71 @@ impl<R: Read> Read for BlankReader<R> {
         let n = rest.read(buffer)?;
         self.given += n;
         Ok(n)
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::super::line_limit::Drip;
+    use super::*;
+
+    fn converted(bytes: &[u8], encoding: Encoding, step: usize) -> String {
+        let mut bytes_out = Vec::new();
+        let mut reader = TextReader::new(Drip(bytes, step), encoding, false);
+        reader.read_to_end(&mut bytes_out).unwrap();
+        String::from_utf8_lossy(&bytes_out).into_owned()
+    }
+
+    #[test]
+    fn marks_and_pairs_split_over_reads() {
+        let text = "\u{FEFF}a\u{1F50A},ü\n";
+        let little: Vec<u8> = text.encode_utf16().flat_map(u16::to_le_bytes).collect();
+        let big: Vec<u8> = text.encode_utf16().flat_map(u16::to_be_bytes).collect();
+        for step in 1..9 {
+            assert_eq!(converted(text.as_bytes(), Encoding::Bytes, step), text[3..]);
+            assert_eq!(converted(&little, Encoding::Utf16Le, step), text[3..]);
+            assert_eq!(converted(&big, Encoding::Utf16Be, step), text[3..]);
+            // Cut within a pair, and within a unit.
+            assert_eq!(
+                converted(&little[..6], Encoding::Utf16Le, step),
+                "a\u{FFFD}"
+            );
+            assert_eq!(converted(&little[..5], Encoding::Utf16Le, step), "a");
+            assert_eq!(converted(b"\xEF\xBBx", Encoding::Bytes, step), "\u{FFFD}x");
+        }
+    }
+
+    #[test]
+    fn encodings_by_their_first_bytes() {
+        let utf16: Vec<u8> = "t,x\n1,2\n"
+            .encode_utf16()
+            .flat_map(u16::to_be_bytes)
+            .collect();
+        assert_eq!(Encoding::of(&utf16), Some(Encoding::Utf16Be));
+        assert_eq!(Encoding::of(b"t,x"), Some(Encoding::Bytes));
+        assert_eq!(Encoding::of(b"t,\x00\x00\x00\x01x"), None);
+        assert!(Encoding::Bytes.looks_like_text(b"t,x\r\n"));
+        assert!(!Encoding::Bytes.looks_like_text(b"t,x\x01\x02\r\n"));
+    }
+
+    #[test]
+    fn squeezing() {
+        assert_eq!(squeeze(b"  1 \t 2\t3  \n"), b"1 2 3\n");
+        for step in 1..5 {
+            let drip = Drip(b"\t 1  2 \n  3\t4", step);
+            let mut text = String::new();
+            BlankReader::new(drip, true)
+                .read_to_string(&mut text)
+                .unwrap();
+            assert_eq!(text, "1 2\n3 4");
+        }
+    }
+
+    #[test]
+    fn any_bytes_make_a_text() {
+        assert_eq!(to_text(b"\xEF\xBB\xBFx"), "x");
+        assert_eq!(to_text("Größe".as_bytes()), "Größe");
+        assert_eq!(to_text(b"Gr\xF6\xDFe"), "Größe");
+        assert_eq!(to_text(&"ü".as_bytes()[..1]), "");
     }
 }

@@ -181,7 +181,7 @@ fn a_gap_is_filled_so_that_index_and_time_agree() {
         format!("{:.4},{}", frame as f64 / 1000.0, prime(frame) + 3.0)
     });
     let capture = open(&folder.write("gap.csv", &text)).unwrap();
-    assert_eq!(capture.spec().frames, 17_001);
+    assert_eq!((capture.spec().frames, capture.gaps()), (17_001, 2));
     assert_eq!(capture.spec().rate_hz, 1000.0);
     assert!(notes(&capture).contains("2 gaps"), "{}", notes(&capture));
     assert!(notes(&capture).contains("12001 missing samples"));
@@ -309,4 +309,71 @@ fn an_open_quote_or_endless_line_far_down_stops_the_reader() {
         let message = refusal(&path);
         assert!(message.contains("line 100002 is longer"), "{message}");
     }
+}
+
+#[test]
+fn a_useless_time_column_is_done_without_if_the_rate_is_given() {
+    let folder = Folder::new();
+    let jump = table("time,x\n", 50, |i| {
+        format!("{},{}", if i < 9 { i } else { i + 90_000 }, prime(i))
+    });
+    let falling = table("time,x\n", 50, |i| format!("{},{}", 50 - i, prime(i)));
+    let shuffled = table("time,x\n", 5000, |i| {
+        format!("{},{}", i * 1709 % 5000, prime(i))
+    });
+    for (text, fault) in [
+        (jump, "jumps ahead"),
+        (falling, "does not increase"),
+        (shuffled, "does not increase"),
+    ] {
+        let path = folder.write("t.csv", &text);
+        assert!(refusal(&path).contains(fault), "{}", refusal(&path));
+        let capture = open_at(&path, 5.0).unwrap();
+        assert_eq!(
+            notes(&capture),
+            "column \"time\" is no usable time: left out"
+        );
+        assert_eq!(capture.spec().frames, text.lines().count() as u64 - 1);
+        assert_eq!(capture.spec().rate_hz, 5.0);
+        assert_eq!(capture.spec().channels.len(), 1);
+    }
+}
+
+#[test]
+fn a_temperature_is_no_time_and_equal_names_are_numbered() {
+    let folder = Folder::new();
+    let text = table("time,T,a,a\n", 50, |i| {
+        format!(
+            "{},{},{},{}",
+            i as f64 / 64.0,
+            20.0 + f64::from(prime(i)),
+            prime(i),
+            i * i
+        )
+    });
+    let capture = open(&folder.write("t.csv", text)).unwrap();
+    let names: Vec<&str> = capture
+        .spec()
+        .channels
+        .iter()
+        .map(|c| c.name.as_str())
+        .collect();
+    assert_eq!(names, ["T", "a (column 3)", "a (column 4)"]);
+    assert_eq!(notes(&capture), "");
+    let only = folder.write(
+        "only.csv",
+        table("time\n", 50, |i| format!("{}", i as f64 / 64.0)),
+    );
+    assert_eq!(refusal(&only), "no column of values beside the time");
+}
+
+#[test]
+fn gaps_that_add_up_beyond_reason_are_refused() {
+    let folder = Folder::new();
+    let text = table("t,x\n", 100, |i| format!("{},1.5", i + i / 25 * 9000));
+    let message = refusal(&folder.write("jumps.csv", text));
+    assert!(
+        message.contains("jumps ahead by 9000 samples, with 100 rows"),
+        "{message}"
+    );
 }

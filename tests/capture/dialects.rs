@@ -51,6 +51,13 @@ fn lines_before_the_rows() {
         ("semicolon remark", "; remark; more\nt,x\n", "x", None),
         ("units row", "t,x\ns,m/s^2\n", "x", Some("m/s^2")),
         ("units row in brackets", "t,x\n[s],[mV]\n", "x", Some("mV")),
+        (
+            "units row and a blank line",
+            "Time,Channel A\n(s),(mV)\n\n",
+            "Channel A",
+            Some("mV"),
+        ),
+        ("axes above", "x-axis,1\nsecond,Volt\n", "Volt", None),
         ("unit after a slash", "t/s,U/kV\n", "U", Some("kV")),
         ("unit after a comma", "\"t, s\",\"a, g\"\n", "a", Some("g")),
         ("braces", "t (s),x {Pa}\n", "x", Some("Pa")),
@@ -324,4 +331,45 @@ fn garbled_tables_are_an_answer() {
         opened > 100,
         "the cases should be near enough to a table: {opened}"
     );
+}
+
+#[test]
+fn settings_beside_the_first_rows_are_left_out() {
+    let text = table("", 48, |i| {
+        let setting = ["Record length,48,,", "Points,,,", "Trigger,7,,", ",,,"][i.min(3)];
+        format!("{setting}{}", row(i))
+    });
+    let note = assert_primes("settings", text, "column 5", None);
+    assert!(
+        note.contains("\"column 4\" taken as the time in seconds"),
+        "{note}"
+    );
+}
+
+#[test]
+fn any_bytes_are_an_answer() {
+    use rand::{RngExt, SeedableRng};
+    const SEED: u64 = 271;
+    let folder = Folder::new();
+    let mut random = rand::rngs::StdRng::seed_from_u64(SEED);
+    let starts: [&[u8]; 8] = [
+        b"",
+        b"RIFF",
+        b"RIFF\x00\x00\x00\x00WAVEfmt ",
+        b"\xFF\xFE",
+        b"\xFE\xFF",
+        b"\xEF\xBB\xBF",
+        b"t,x\n",
+        b"RF64\xFF\xFF\xFF\xFFWAVEds64",
+    ];
+    for case in 0..1600 {
+        let mut bytes = starts[case % 8].to_vec();
+        let most = [255, 127, 64, 13][case / 8 % 4];
+        let length = random.random_range(0..400);
+        bytes.extend((0..length).map(|_| random.random_range(0..=most)));
+        match open(&folder.write("any.csv", &bytes)) {
+            Ok(capture) => drop(read(&capture, 7)),
+            Err(e) => assert!(!one_line(e).is_empty(), "seed {SEED}, case {case}"),
+        }
+    }
 }

@@ -27,6 +27,9 @@ impl Folder {
 
     fn write(&self, name: &str, bytes: impl AsRef<[u8]>) -> PathBuf {
         let path = self.0.path().join(name);
+        // A file that is truncated and written again waits for the disk on
+        // some file systems: thousands of cases would take seconds.
+        let _ = std::fs::remove_file(&path);
         std::fs::write(&path, bytes).unwrap();
         path
     }
@@ -160,6 +163,14 @@ fn table(header: &str, rows: usize, row: impl Fn(usize) -> String) -> String {
 
 fn prime(i: usize) -> f32 {
     PRIMES[i % 24] as f32
+}
+
+#[test]
+fn captures_are_shared_and_passes_are_sent() {
+    fn shared<T: Send + Sync>() {}
+    fn sent<T: Send>() {}
+    shared::<Capture>();
+    sent::<foldtrace::capture::Blocks>();
 }
 
 #[test]
