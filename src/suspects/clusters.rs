@@ -8,7 +8,8 @@
 use super::prior::Normal;
 use super::strength::{Faintness, PerClass, Strengths};
 use crate::fold::Chain;
-use crate::sources::{LatentId, Site, Steadiness};
+use crate::frontend::Gain;
+use crate::sources::{LatentId, Line, Site, Steadiness};
 use crate::units::TrueHz;
 
 /// A line as a function of its cluster's latents: `a·θ + b`.
@@ -31,6 +32,8 @@ pub(super) struct Member {
     pub source: usize,
     /// Per class: log of the chance that none of its lines shows.
     pub ln_hidden: PerClass,
+    /// Prior probability of each class.
+    pub class_prior: PerClass,
     pub exclusive: Option<usize>,
 }
 
@@ -131,6 +134,13 @@ pub(super) fn plan(site: &Site) -> Vec<Plan> {
     plans
 }
 
+fn frequency(line: &Line, at: &dyn Fn(usize) -> Normal) -> f64 {
+    line.terms
+        .iter()
+        .map(|&(LatentId(l), a)| a * at(l).mean)
+        .sum()
+}
+
 impl Cluster {
     /// Expands a plan. `at(l)` is the best present knowledge of latent `l`.
     pub fn new(
@@ -156,7 +166,22 @@ impl Cluster {
                 continue;
             };
             let mut ln_hidden = [0.0; super::strength::CLASSES];
-            for (j, line) in source.lines.iter().enumerate() {
+            let gains: Vec<Gain> = source
+                .lines
+                .iter()
+                .map(|l| front.gain(TrueHz(frequency(l, at).abs()), rate))
+                .collect();
+            let best = source
+                .lines
+                .iter()
+                .zip(&gains)
+                .max_by(|a, b| {
+                    let level =
+                        |(l, g): (&Line, &Gain)| Faintness::weight_db(l.weight) + g.mean_db;
+                    level(*a).total_cmp(&level(*b))
+                })
+                .map_or(Gain { mean_db: 0.0, sd_db: 0.0 }, |(_, g)| *g);
+            for ((j, line), gain) in source.lines.iter().enumerate().zip(&gains) {
                 let mut a = [0.0; 2];
                 let mut b = 0.0;
                 let mut var = 0.0;
@@ -185,8 +210,7 @@ impl Cluster {
                 if !nominal_hz.is_finite() || nominal_hz > top || nominal_hz == 0.0 {
                     continue;
                 }
-                let gain = front.gain(TrueHz(nominal_hz), rate);
-                let faintness = Faintness::new(line.weight, gain);
+                let faintness = Faintness::new(line.weight, *gain, best);
                 let shown = strengths.shown(&faintness);
                 for (h, s) in ln_hidden.iter_mut().zip(shown) {
                     *h += (-s).ln_1p();
@@ -203,6 +227,7 @@ impl Cluster {
             members.push(Member {
                 source: s,
                 ln_hidden,
+                class_prior: Strengths::class_prior(best),
                 exclusive: source
                     .exclusive_group
                     .as_ref()

@@ -90,8 +90,11 @@ fn base(cluster: &Cluster, beliefs: &[Belief]) -> Vec<MemberBase> {
         .iter()
         .zip(beliefs)
         .map(|(member, belief)| {
-            let ln_prior = (belief.present / CLASSES as f64).max(1e-300).ln();
-            let ln_classes = member.ln_hidden.map(|h| h + ln_prior);
+            let ln_prior = belief.present.max(1e-300).ln();
+            let ln_classes: PerClass = std::array::from_fn(|c| {
+                let get = |v: &PerClass| v.get(c).copied().unwrap_or(0.0);
+                ln_prior + get(&member.class_prior).ln() + get(&member.ln_hidden)
+            });
             let ln_absent = (1.0 - belief.present).max(1e-300).ln();
             // Absence may be out of the range of numbers against a family of
             // thousands of lines, never the classes among themselves.
@@ -356,7 +359,11 @@ fn evaluate_broad(places: &Places, bases: &[MemberBase], others: &[f64], value: 
         };
         let Some(base) = bases.get(m) else { continue };
         let own = entries.get(member.clone()).unwrap_or_default();
-        let mut factor = Factor::new();
+        // Away from every place that is kept, the latents meet as many tones at
+        // once as there are latents: more would have been a place. So the factor is
+        // 1 + e₁ (+ e₂), the elementary symmetric sums of the tones' x.
+        let mut sum = [0.0; CLASSES];
+        let mut squares = [0.0; CLASSES];
         let mut met = Vec::new();
         for run in runs(own, |e| e.tone) {
             let mut x = [0.0; CLASSES];
@@ -366,23 +373,35 @@ fn evaluate_broad(places: &Places, bases: &[MemberBase], others: &[f64], value: 
                     *x += o * d;
                 }
             }
-            factor.meet(&x);
+            for ((s, q), x) in sum.iter_mut().zip(&mut squares).zip(&x) {
+                *s += x;
+                *q += x * x;
+            }
             met.push((run, x));
         }
+        let two = places.latents > 1;
+        let mut factor = Factor::new();
+        for ((p, s), q) in factor.product.iter_mut().zip(&sum).zip(&squares) {
+            *p = 1.0 + s;
+            if two {
+                *p += 0.5 * (s * s - q).max(0.0);
+            }
+        }
+        let totals = factor.product;
         let (ln_factor, classes, absent) = factor.finish(base);
         ln_weight += ln_factor - base.ln_nothing;
         if let Some(p) = value.broad_absent.get_mut(m) {
             *p = absent;
         }
         for (run, x) in met {
+            // Weight with which one unit of odds at this tone counts, per class.
+            let mut unit = classes;
+            for (((u, t), s), x) in unit.iter_mut().zip(&totals).zip(&sum).zip(&x) {
+                *u *= if two { 1.0 + (s - x).max(0.0) } else { 1.0 } / t;
+            }
             for i in run {
                 let Some(e) = own.get(i) else { continue };
-                let r: f64 = classes
-                    .iter()
-                    .zip(&e.odds)
-                    .zip(&x)
-                    .map(|((w, o), x)| w * o / (1.0 + x))
-                    .sum();
+                let r: f64 = unit.iter().zip(&e.odds).map(|(u, o)| u * o).sum();
                 if let Some(slot) = value.broad_responsibility.get_mut(member.start + i) {
                     *slot = r * scaled(e);
                 }

@@ -70,6 +70,8 @@ pub(super) struct Places {
     pub broad: Vec<BroadEntry>,
     /// Prior mass outside the modes.
     pub broad_mass: f64,
+    /// How many latents are free.
+    pub latents: usize,
 }
 
 /// Standard deviations of a meeting within which it counts as one.

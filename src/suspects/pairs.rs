@@ -163,6 +163,7 @@ pub(super) fn find(
         modes,
         broad: broad.finish(),
         broad_mass: (1.0 - inside).max(0.0),
+        latents: 2,
     }
 }
 

@@ -15,7 +15,7 @@ use super::scene::Meeting;
 /// Places kept per cluster.
 const PLACES: usize = 40;
 /// A place this many nats below the best is left to the broad node.
-const DEPTH: f64 = 25.0;
+const DEPTH: f64 = 80.0;
 /// Ratio by which the steps of a grid grow.
 const GROWTH: f64 = 1.4;
 
@@ -134,6 +134,7 @@ pub(super) fn find(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Place
         modes,
         broad: broad.finish(),
         broad_mass: (1.0 - inside).max(0.0),
+        latents: 1,
     }
 }
 

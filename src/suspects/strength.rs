@@ -1,8 +1,9 @@
 //! How strong a source is, and with it which of its lines should show.
 //!
-//! A source's strength is unknown: it is one of a few classes, each a level of its
-//! strongest line over the noise and a rate at which the others fall off. A line
-//! of weight `w` behind a gain `A` dB has the expected SNR
+//! A source's strength is unknown: it is one of a few classes, each a level over
+//! the noise at which its best line is *seen*, and a rate at which the others fall
+//! off. A line of weight `w` that the front end passes by `A` dB better or worse
+//! than the best one has the expected SNR
 //!
 //! ```text
 //! L = level + slope·20·log10(w) + A,
@@ -10,16 +11,24 @@
 //!
 //! the true one spreads about it with [`SPREAD_DB`], and the line shows if that
 //! clears the detector's threshold. So a missing line counts as much as it was
-//! expected, and a tone much stronger than the line it would be is doubted. This
-//! is this project's own model; its constants are broad on purpose.
+//! expected, and a tone much stronger than the line it would be is doubted. What
+//! the front end does to the whole family decides how probable each class is: a
+//! filter nobody described weakens all lines of a clock far above the band alike,
+//! it does not make them differ. This is this project's own model; its constants
+//! are broad on purpose.
 
+use crate::frontend::Gain;
 use statrs::function::erf::erfc;
 
 /// Classes of strength: `(SNR of the strongest line, dB; slope)`.
 pub(super) const CLASSES: usize = 24;
 
-const LEVELS_DB: [f64; 8] = [8.0, 18.0, 28.0, 38.0, 48.0, 58.0, 68.0, 80.0];
+/// The first is a family too weak to be seen at all.
+const LEVELS_DB: [f64; 8] = [-40.0, 8.0, 20.0, 32.0, 44.0, 56.0, 70.0, 86.0];
 const SLOPES: [f64; 3] = [0.7, 1.8, 3.5];
+/// Analog strengths (SNR of the best line before the front end) are spread evenly
+/// between these, dB.
+const STRENGTHS_DB: (f64, f64) = (5.0, 100.0);
 
 /// Standard deviation of a line's level about the expected one, dB.
 const SPREAD_DB: f64 = 8.0;
@@ -81,6 +90,39 @@ impl Strengths {
         level + slope * line.weight_db + line.gain_db
     }
 
+    /// Prior probability of each class where the front end passes the best line with
+    /// `gain`.
+    pub fn class_prior(gain: Gain) -> PerClass {
+        let (low, high) = STRENGTHS_DB;
+        // Share of strengths even in [low, high], weakened by a normal gain, that
+        // come out below x: mean of the normal's distribution function.
+        let below = |x: f64| {
+            let steps = 48;
+            (0..steps)
+                .map(|i| {
+                    let strength = low + (high - low) * (f64::from(i) + 0.5) / f64::from(steps);
+                    normal_above(strength + gain.mean_db - x, gain.sd_db.max(0.5))
+                })
+                .sum::<f64>()
+                / f64::from(steps)
+        };
+        let mut prior = [0.0; CLASSES];
+        let mut before = 0.0;
+        for (i, level) in LEVELS_DB.iter().enumerate() {
+            let upto = match LEVELS_DB.get(i + 1) {
+                // Between a family just seen and one not seen: where it is lost.
+                Some(_) if i == 0 => below(2.0),
+                Some(next) => below(0.5 * (level + next)),
+                None => 1.0,
+            };
+            for slot in prior.iter_mut().skip(i * SLOPES.len()).take(SLOPES.len()) {
+                *slot = ((upto - before) / SLOPES.len() as f64).max(1e-9);
+            }
+            before = upto;
+        }
+        prior
+    }
+
     /// Chance, per class, that a line shows.
     pub fn shown(&self, line: &Faintness) -> PerClass {
         std::array::from_fn(|c| {
@@ -116,19 +158,25 @@ impl Strengths {
 pub(super) struct Faintness {
     /// `20·log10` of the line's weight, ≤ 0.
     weight_db: f64,
-    /// Expected gain of the front end, dB.
+    /// Expected gain of the front end against the family's best line, dB.
     gain_db: f64,
     /// [`SPREAD_DB`] over the spread with the gain's uncertainty, in (0, 1].
     narrowing: f64,
 }
 
 impl Faintness {
-    pub fn new(weight: f64, gain: crate::frontend::Gain) -> Faintness {
+    /// A line of `weight` behind `gain`, in a family whose best line has `best`.
+    pub fn new(weight: f64, gain: Gain, best: Gain) -> Faintness {
         Faintness {
-            weight_db: 20.0 * weight.clamp(1e-6, 1.0).log10(),
-            gain_db: gain.mean_db,
-            narrowing: SPREAD_DB / SPREAD_DB.hypot(gain.sd_db),
+            weight_db: Self::weight_db(weight),
+            gain_db: gain.mean_db - best.mean_db,
+            // One front end: its uncertainty is shared, only the rest is the line's.
+            narrowing: SPREAD_DB / SPREAD_DB.hypot(gain.sd_db - best.sd_db),
         }
+    }
+
+    pub fn weight_db(weight: f64) -> f64 {
+        20.0 * weight.clamp(1e-6, 1.0).log10()
     }
 
     /// Rarer lines are absent for reasons other than their level.

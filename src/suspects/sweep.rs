@@ -31,7 +31,7 @@ const PRESENT: f64 = 0.5;
 /// Of a group of sources that exclude each other, that none is.
 const NONE_OF_GROUP: f64 = 0.1;
 /// Rounds in all.
-const ROUNDS: usize = 7;
+const ROUNDS: usize = 8;
 /// Claims that change by less have settled.
 const SETTLED: f64 = 1e-4;
 /// Scenes with more clusters than this are solved in one order only.
@@ -227,7 +227,8 @@ pub(super) fn solve(scene: &Scene) -> Solution {
     let latents: Vec<Normal> = problem.extended.priors.iter().map(Prior::normal).collect();
     let mut start = Solution {
         unlisted: Rc::new(unlisted::densities(scene, &tones)),
-        unlisted_rate: vec![unlisted_rate(1.0); tones.len()],
+        // Before looking, nothing is explained: sources have to win each tone.
+        unlisted_rate: vec![unlisted_rate(tones.len() as f64); tones.len()],
         level_density: Rc::new(
             tones
                 .iter()
@@ -351,10 +352,20 @@ fn run(
         }
     }
     let mut before = solution.shares();
+    // Anonymous families explain what is left over, unless they come first.
+    let anonymous = |c: &usize| {
+        solution.solved.get(*c).map(|s| s.standing) == Some(Standing::Anonymous)
+    };
+    let from = if order.first().is_some_and(anonymous) {
+        0
+    } else {
+        2
+    };
     for round in 0..ROUNDS {
         for &c in order {
             let renew = match solution.solved.get(c).map(|s| s.standing) {
-                Some(Standing::Anonymous) => round < 3,
+                Some(Standing::Anonymous) if round < from => continue,
+                Some(Standing::Anonymous) => round < from + 3,
                 _ => propose && round == 1,
             };
             if renew {
@@ -374,7 +385,7 @@ fn run(
             .map(|(a, b)| (a - b).abs())
             .fold(0.0, f64::max);
         before = after;
-        if round >= 3 && moved < SETTLED {
+        if round >= from + 2 && moved < SETTLED {
             break;
         }
     }
