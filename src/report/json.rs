@@ -65,6 +65,8 @@ fn recording(result: &Triage, top: usize) -> Value {
                 "from_s": tone.from_s,
                 "to_s": tone.to_s,
                 "wander_hz": tone.wander_hz,
+                "linewidth_hz": tone.linewidth_hz,
+                "track": tone.track,
                 "channels": channels,
                 "verdict": finding.verdict,
                 "folded_probability": finding.folded_probability,

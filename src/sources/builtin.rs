@@ -166,6 +166,11 @@ const OSCILLATORS: [Oscillator; 13] = [
     },
 ];
 
+/// Of a general list few are at any one place: about one of the sixteen that are
+/// no supply mains. (For the two mains, which exclude each other, their group's
+/// prior counts instead.)
+const PRESENCE: f64 = 0.5;
+
 impl Site {
     /// The sources assumed where no site file lists any, and a recorder of which
     /// nothing is known. `mains 50 Hz` and `mains 60 Hz` exclude each other.
@@ -182,6 +187,7 @@ impl Site {
             sources.push(Source {
                 citation: supply.citation.to_owned(),
                 exclusive_group: supply.group.map(str::to_owned),
+                presence: PRESENCE,
                 ..description.expand(&mut latents).1
             });
         }
@@ -196,6 +202,7 @@ impl Site {
             };
             sources.push(Source {
                 citation: oscillator.citation.to_owned(),
+                presence: PRESENCE,
                 ..description.expand(&mut latents)
             });
         }

@@ -137,7 +137,12 @@ pub struct Source {
     pub citation: String,
     /// Sources of one non-empty group exclude each other (mains at 50 or 60 Hz).
     pub exclusive_group: Option<String>,
+    /// Probability that it is there at all, before the recording is looked at.
+    pub presence: f64,
 }
+
+/// What an analyst writes down is there as often as not.
+pub const LISTED_PRESENCE: f64 = 0.5;
 
 /// The kinds of source.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, serde::Serialize)]
@@ -257,6 +262,7 @@ fn source(name: &str, kind: Kind, lines: Vec<Line>) -> Source {
         lines,
         citation: String::new(),
         exclusive_group: None,
+        presence: LISTED_PRESENCE,
     }
 }
 

@@ -35,6 +35,8 @@ pub(super) struct Member {
     /// Prior probability of each class.
     pub class_prior: PerClass,
     pub exclusive: Option<usize>,
+    /// Probability that it is there, before looking.
+    pub presence: f64,
 }
 
 /// Sources solved together.
@@ -176,11 +178,16 @@ impl Cluster {
                 .iter()
                 .zip(&gains)
                 .max_by(|a, b| {
-                    let level =
-                        |(l, g): (&Line, &Gain)| Faintness::weight_db(l.weight) + g.mean_db;
+                    let level = |(l, g): (&Line, &Gain)| Faintness::weight_db(l.weight) + g.mean_db;
                     level(*a).total_cmp(&level(*b))
                 })
-                .map_or(Gain { mean_db: 0.0, sd_db: 0.0 }, |(_, g)| *g);
+                .map_or(
+                    Gain {
+                        mean_db: 0.0,
+                        sd_db: 0.0,
+                    },
+                    |(_, g)| *g,
+                );
             for ((j, line), gain) in source.lines.iter().enumerate().zip(&gains) {
                 let mut a = [0.0; 2];
                 let mut b = 0.0;
@@ -232,6 +239,7 @@ impl Cluster {
                     .exclusive_group
                     .as_ref()
                     .and_then(|g| groups.iter().position(|known| known == g)),
+                presence: source.presence,
             });
         }
         let quartz = |slot: usize| {

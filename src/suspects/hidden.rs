@@ -93,6 +93,7 @@ pub(super) fn extend(scene: &Scene, clock_sd: f64) -> Extended {
                 .collect(),
             citation: String::new(),
             exclusive_group: None,
+            presence: ANONYMOUS_PRESENT,
         });
         standing.push(Standing::Anonymous);
         priors.push(Prior::Anywhere { low, high: half });

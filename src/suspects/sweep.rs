@@ -26,8 +26,6 @@ use super::unlisted::{self, Unlisted};
 use super::{clock, clusters, pairs, places};
 use std::rc::Rc;
 
-/// Probability that a listed source is present, before looking.
-const PRESENT: f64 = 0.5;
 /// Of a group of sources that exclude each other, that none is.
 const NONE_OF_GROUP: f64 = 0.1;
 /// Rounds in all.
@@ -353,9 +351,8 @@ fn run(
     }
     let mut before = solution.shares();
     // Anonymous families explain what is left over, unless they come first.
-    let anonymous = |c: &usize| {
-        solution.solved.get(*c).map(|s| s.standing) == Some(Standing::Anonymous)
-    };
+    let anonymous =
+        |c: &usize| solution.solved.get(*c).map(|s| s.standing) == Some(Standing::Anonymous);
     let from = if order.first().is_some_and(anonymous) {
         0
     } else {
@@ -413,9 +410,8 @@ fn beliefs(c: usize, solution: &Solution) -> Vec<Belief> {
         .iter()
         .map(|member| {
             let (plain, none) = match own.standing {
-                Standing::Listed => (PRESENT, NONE_OF_GROUP),
                 Standing::Supply => (hidden::SUPPLY_PRESENT, 1.0 - hidden::SUPPLY_PRESENT),
-                Standing::Anonymous => (hidden::ANONYMOUS_PRESENT, 0.0),
+                Standing::Listed | Standing::Anonymous => (member.presence, NONE_OF_GROUP),
             };
             let Some(group) = member.exclusive else {
                 return Belief { present: plain };

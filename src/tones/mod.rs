@@ -27,6 +27,17 @@ pub struct ChannelLevel {
     pub snr_db: f64,
 }
 
+/// A tone's frequency in one stretch of time.
+#[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
+pub struct TrackPoint {
+    /// Middle of the stretch, seconds from the start.
+    pub at_s: f64,
+    /// Seen frequency.
+    pub seen_hz: SeenHz,
+    /// Its standard deviation, Hz.
+    pub sd_hz: f64,
+}
+
 /// One spectral line that was seen.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Tone {
@@ -47,6 +58,12 @@ pub struct Tone {
     /// rms deviation of the tone's frequency from its mean, Hz; 0 when steady
     /// within what can be resolved.
     pub wander_hz: f64,
+    /// Full width at half height of a line broadened by normal wander: 2.355 × the
+    /// rms wander, Hz; 0 when steady.
+    pub linewidth_hz: f64,
+    /// Frequency over time of a tone that wanders or comes and goes; empty for a
+    /// steady one.
+    pub track: Vec<TrackPoint>,
     /// Every channel in which it was seen, strongest first.
     pub channels: Vec<ChannelLevel>,
 }
@@ -162,18 +179,23 @@ fn tones_of(
 ) -> Vec<Tone> {
     let bin_hz = band.bin_hz();
     let duration = band.samples as f64 / band.rate_hz;
+    // The noise is itself an estimate, worth about 93 cells: Student's factor to
+    // first order, 1 + (z² + 1)/4n.
+    let student = 1.0 + (U95 * U95 + 1.0) / (4.0 * 93.0);
     let tone = |bin: f64, sd: f64, strength: f64, noise: f64, present: (f64, f64), wander: f64| {
         let level_dbfs = amplitude_db(2.0 * strength / band.samples as f64 / full_scale);
         let snr_db = power_db(strength * strength / noise);
         Tone {
             number: 0,
             seen_hz: SeenHz((bin * bin_hz).clamp(0.0, band.rate_hz / 2.0)),
-            seen_hz_u95: U95 * sd * bin_hz,
+            seen_hz_u95: student * U95 * sd * bin_hz,
             level_dbfs,
             snr_db,
             from_s: present.0 * duration,
             to_s: present.1 * duration,
             wander_hz: wander * bin_hz,
+            linewidth_hz: 2.355 * wander * bin_hz,
+            track: Vec::new(),
             channels: vec![ChannelLevel {
                 channel,
                 level_dbfs,
@@ -185,9 +207,17 @@ fn tones_of(
         let strength = l.c.norm() * band.samples as f64;
         tone(l.bin, l.bin_sd, strength, l.noise, (0.0, 1.0), 0.0)
     });
-    let moving = found
-        .wanderers
-        .iter()
-        .map(|w| tone(w.bin, w.bin_sd, w.strength, w.noise, w.present, w.wander));
+    let moving = found.wanderers.iter().map(|w| Tone {
+        track: w
+            .track
+            .iter()
+            .map(|p| TrackPoint {
+                at_s: p.at * duration,
+                seen_hz: SeenHz((p.bin * bin_hz).clamp(0.0, band.rate_hz / 2.0)),
+                sd_hz: p.sd * bin_hz,
+            })
+            .collect(),
+        ..tone(w.bin, w.bin_sd, w.strength, w.noise, w.present, w.wander)
+    });
     steady.chain(moving).collect()
 }
