@@ -169,7 +169,7 @@ const OSCILLATORS: [Oscillator; 13] = [
 /// Of a general list few are at any one place: about one of the sixteen that are
 /// no supply mains. (For the two mains, which exclude each other, their group's
 /// prior counts instead.)
-const PRESENCE: f64 = 0.5;
+const PRESENCE: f64 = 0.06;
 
 impl Site {
     /// The sources assumed where no site file lists any, and a recorder of which

@@ -8,7 +8,7 @@
 use super::hidden::Standing;
 use super::prior::Normal;
 use super::scene::Scene;
-use super::sweep::Solved;
+use super::solution::Solved;
 
 /// Clock tolerance where none is described, ± ppm (95 %).
 const UNDESCRIBED_PPM: f64 = 100.0;

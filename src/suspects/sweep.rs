@@ -6,8 +6,8 @@
 //! everything else, `others = unlisted + Σ m` of the other clusters.
 //!
 //! Where families compete for the same tones there is more than one way to agree.
-//! Several orders are tried and the one with the greatest evidence (Bethe's
-//! approximation, Yedidia, Freeman & Weiss 2005, from memory) is kept:
+//! Several orders are tried and weighed by their evidence (Bethe's approximation,
+//! Yedidia, Freeman & Weiss 2005, from memory; mixed in [`super::mixture`]):
 //!
 //! ```text
 //! ln Z = Σ_c ln Z_c + Σ_i ln T_i − Σ_c Σ_i ln(T_i / others_ci),
@@ -20,10 +20,10 @@ use super::evaluate::{Belief, Value, evaluate};
 use super::hidden::{self, Extended, Standing};
 use super::modes::{Places, Setting};
 use super::prior::{Normal, Prior};
-use super::scene::{Ladders, Measured, Scene, measure};
+use super::scene::{Ladders, Scene, measure};
+use super::solution::{Solution, Solved, unlisted_rate};
 use super::strength::Strengths;
-use super::unlisted::{self, Unlisted};
-use super::{clock, clusters, pairs, places};
+use super::{clock, clusters, mixture, pairs, places, unlisted};
 use std::rc::Rc;
 
 /// Of a group of sources that exclude each other, that none is.
@@ -33,90 +33,7 @@ const ROUNDS: usize = 8;
 /// Claims that change by less have settled.
 const SETTLED: f64 = 1e-4;
 /// Scenes with more clusters than this are solved in one order only.
-const MANY: usize = 24;
-
-/// A cluster with its latents' posterior.
-#[derive(Debug, Clone)]
-pub(super) struct Solved {
-    pub cluster: Rc<Cluster>,
-    pub prior: Vec<Prior>,
-    pub standing: Standing,
-    pub places: Rc<Places>,
-    pub value: Value,
-    /// What it tells each tone.
-    pub message: Vec<f64>,
-}
-
-/// Everything solved.
-#[derive(Debug, Clone)]
-pub(super) struct Solution {
-    pub tones: Rc<Vec<Measured>>,
-    pub unlisted: Rc<Vec<Unlisted>>,
-    /// Expected number of unlisted tones, seen from each tone.
-    pub unlisted_rate: Vec<f64>,
-    /// Background density of each tone's strength, per dB.
-    pub level_density: Rc<Vec<f64>>,
-    pub solved: Vec<Solved>,
-    /// Best present knowledge of each latent, on the recorder's scale.
-    pub latents: Vec<Normal>,
-}
-
-/// Expected number of unlisted tones from how many there seem to be: gamma prior.
-fn unlisted_rate(count: f64) -> f64 {
-    (1.0 + count) / 1.3
-}
-
-impl Solution {
-    /// Density of unlisted tones like tone `i`, per Hz and dB.
-    pub fn background(&self, i: usize) -> f64 {
-        let get = |v: &[f64]| v.get(i).copied().unwrap_or(0.0);
-        let density = self.unlisted.get(i).map_or(0.0, Unlisted::total);
-        (get(&self.unlisted_rate) * density * get(&self.level_density)).max(1e-300)
-    }
-
-    /// Everything but cluster `but` at tone `i`.
-    pub fn others(&self, i: usize, but: Option<usize>) -> f64 {
-        self.background(i)
-            + self
-                .solved
-                .iter()
-                .enumerate()
-                .filter(|(c, _)| Some(*c) != but)
-                .filter_map(|(_, s)| s.message.get(i))
-                .sum::<f64>()
-    }
-
-    fn all_others(&self, but: Option<usize>) -> Vec<f64> {
-        (0..self.tones.len()).map(|i| self.others(i, but)).collect()
-    }
-
-    /// Share of each cluster in each tone.
-    fn shares(&self) -> Vec<f64> {
-        let total = self.all_others(None);
-        self.solved
-            .iter()
-            .flat_map(|s| s.message.iter().zip(&total).map(|(m, t)| m / t))
-            .collect()
-    }
-
-    /// Bethe's approximation of the log evidence.
-    fn ln_evidence(&self) -> f64 {
-        let total = self.all_others(None);
-        let mut ln = total.iter().map(|t| t.ln()).sum::<f64>();
-        for s in &self.solved {
-            ln += s.value.ln_evidence;
-            for (t, m) in total.iter().zip(&s.message) {
-                // ln(others/T) without cancellation where the message is small.
-                ln += if *m < 0.5 * t {
-                    (-m / t).ln_1p()
-                } else {
-                    ((t - m).max(1e-300) / t).ln()
-                };
-            }
-        }
-        ln
-    }
-}
+pub(super) const MANY: usize = 24;
 
 /// Detection threshold of the SNR in one resolution cell, dB: the level that noise
 /// passes in one of a hundred recordings of so many cells, at most what was seen.
@@ -133,9 +50,9 @@ fn threshold_db(scene: &Scene) -> f64 {
 }
 
 /// What does not change while sweeping.
-struct Problem<'a> {
+pub(super) struct Problem<'a> {
     scene: &'a Scene<'a>,
-    extended: Extended,
+    pub extended: Extended,
     plans: Vec<Plan>,
     strengths: Strengths,
     ladders: Ladders,
@@ -165,10 +82,14 @@ impl Problem<'_> {
     }
 
     fn places(&self, c: usize, solution: &Solution) -> Places {
-        let Some(solved) = solution.solved.get(c) else {
-            return Places::default();
-        };
-        let others = solution.all_others(Some(c));
+        match solution.solved.get(c) {
+            Some(solved) => self.places_of(solved, solution, &solution.all_others(Some(c))),
+            None => Places::default(),
+        }
+    }
+
+    /// Places of a cluster where everything else at the tones is `others`.
+    pub fn places_of(&self, solved: &Solved, solution: &Solution, others: &[f64]) -> Places {
         let background: Vec<f64> = (0..solution.tones.len())
             .map(|i| solution.background(i))
             .collect();
@@ -176,7 +97,7 @@ impl Problem<'_> {
             tones: &solution.tones,
             ladders: &self.ladders,
             strengths: &self.strengths,
-            others: &others,
+            others,
             background: &background,
             half_hz: self.scene.chain.file_rate_hz() / 2.0,
         };
@@ -193,7 +114,7 @@ impl Problem<'_> {
     }
 }
 
-pub(super) fn solve(scene: &Scene) -> Solution {
+pub(super) fn solve(scene: &Scene) -> Vec<(f64, Solution)> {
     let tones = measure(scene);
     let strengths = Strengths::new(threshold_db(scene));
     let extended = hidden::extend(scene, clock::prior_sd(scene));
@@ -255,15 +176,15 @@ pub(super) fn solve(scene: &Scene) -> Solution {
             places: Rc::default(),
             value: Value::default(),
             message: vec![0.0; start.tones.len()],
+            share: Vec::new(),
         });
     }
     first_look(&problem, &mut start);
     let orders = orders(&start);
-    let mut best: Option<(f64, Solution)> = None;
-    let dbg = std::env::var_os("DBG").is_some();
+    let mut found: Vec<(f64, Solution)> = Vec::new();
     for (parallel, order) in orders {
-        let solution = run(&problem, start.clone(), parallel, &order, best.is_none());
-        if best.is_none() {
+        let mut solution = run(&problem, start.clone(), parallel, &order, found.is_empty());
+        if found.is_empty() {
             // Proposals made against rivals serve the other orders too.
             for (s, solved) in start.solved.iter_mut().zip(&solution.solved) {
                 if s.standing != Standing::Anonymous {
@@ -272,15 +193,10 @@ pub(super) fn solve(scene: &Scene) -> Solution {
                 }
             }
         }
-        let ln = solution.ln_evidence();
-        if dbg {
-            eprintln!("order {parallel} {order:?}: {ln}");
-        }
-        if best.as_ref().is_none_or(|(b, _)| ln > *b) || !ln.is_finite() {
-            best = Some((ln, solution));
-        }
+        solution.settle();
+        found.push((solution.ln_evidence(), solution));
     }
-    best.map_or(start, |b| b.1)
+    mixture::mix(&problem, found)
 }
 
 /// Every cluster but the anonymous ones alone against the background.
@@ -401,7 +317,7 @@ fn renew_pinned(problem: &Problem, c: usize, solution: &mut Solution) {
 }
 
 /// Probability of presence of each member, given what excludes it.
-fn beliefs(c: usize, solution: &Solution) -> Vec<Belief> {
+pub(super) fn beliefs(c: usize, solution: &Solution) -> Vec<Belief> {
     let Some(own) = solution.solved.get(c) else {
         return Vec::new();
     };
@@ -442,13 +358,16 @@ fn message(c: usize, solution: &Solution) -> Option<Vec<f64>> {
     let others = solution.all_others(Some(c));
     let solved = solution.solved.get(c)?;
     let claims = solved.value.claims(&solved.places, others.len());
-    Some(
-        claims
-            .iter()
-            .zip(&others)
-            .map(|(p, o)| o * p / (1.0 - p).max(1e-12))
-            .collect(),
-    )
+    Some(messages(&claims, &others))
+}
+
+/// Claims with the tones' own evidence divided out.
+fn messages(claims: &[f64], others: &[f64]) -> Vec<f64> {
+    claims
+        .iter()
+        .zip(others)
+        .map(|(p, o)| o * p / (1.0 - p).max(1e-12))
+        .collect()
 }
 
 fn update(c: usize, solution: &mut Solution) {
@@ -481,68 +400,4 @@ fn update_unlisted(solution: &mut Solution) {
     let total: f64 = shares.iter().sum();
     // A tone may not vouch for itself here either.
     solution.unlisted_rate = shares.iter().map(|s| unlisted_rate(total - s)).collect();
-}
-
-impl Solved {
-    /// Mean and standard deviation of each latent: the best mode's where one
-    /// stands out, the prior's otherwise.
-    pub fn posterior(&self) -> Vec<Normal> {
-        self.fit()
-            .unwrap_or_else(|| self.prior.iter().map(Prior::normal).collect())
-    }
-
-    /// [`posterior`](Solved::posterior) where the modes agree on one place.
-    pub fn fit(&self) -> Option<Vec<Normal>> {
-        let all =
-            |k: usize| {
-                self.places.modes.iter().zip(&self.value.weights).flat_map(
-                    move |(mode, weights)| {
-                        mode.nodes.iter().zip(weights).map(move |(n, w)| {
-                            let along = |axis: [f64; 2]| axis.get(k).map_or(0.0, |a| a * a);
-                            let cell = along(mode.axes[0]) * n.cell_var[0]
-                                + along(mode.axes[1]) * n.cell_var[1];
-                            (*w, n.theta.get(k).copied().unwrap_or(0.0), cell)
-                        })
-                    },
-                )
-            };
-        // The best mode and all others whose middle lies with it.
-        let masses: Vec<f64> = self.value.weights.iter().map(|w| w.iter().sum()).collect();
-        let best = masses
-            .iter()
-            .enumerate()
-            .max_by(|a, b| a.1.total_cmp(b.1))?;
-        let mode = self.places.modes.get(best.0)?;
-        let middle = mode.nodes.get(mode.nodes.len() / 2)?.theta;
-        let extent = |k: usize| {
-            mode.nodes
-                .iter()
-                .filter_map(|n| n.theta.get(k))
-                .map(|t| (t - middle.get(k).copied().unwrap_or(0.0)).abs())
-                .fold(0.0, f64::max)
-        };
-        let mut mass = 0.0;
-        let fitted: Vec<Normal> = (0..self.prior.len())
-            .map(|k| {
-                let reach = extent(k);
-                let pivot = middle.get(k).copied().unwrap_or(0.0);
-                let (mut m, mut first, mut second) = (0.0, 0.0, 0.0);
-                for (w, theta, cell) in all(k) {
-                    let d = theta - pivot;
-                    if d.abs() <= reach {
-                        m += w;
-                        first += w * d;
-                        second += w * (d * d + cell);
-                    }
-                }
-                mass = m;
-                let d = first / m;
-                Normal {
-                    mean: pivot + d,
-                    sd: (second / m - d * d).max(0.0).sqrt(),
-                }
-            })
-            .collect();
-        (mass > 0.5 && fitted.iter().all(|f| f.mean.is_finite())).then_some(fitted)
-    }
 }

@@ -88,3 +88,79 @@ pub(super) fn densities(scene: &Scene, tones: &[Measured]) -> Vec<Unlisted> {
         })
         .collect()
 }
+
+/// Where tones that nothing listed made come from: direct or folded.
+///
+/// A lone stray is judged within the band it was looked for in: analog frequencies
+/// relative to the rate. Many unlisted tones are families, and machines do not know
+/// the recorder's rate: theirs are judged on an absolute scale, frequencies being
+/// spread evenly over the logarithm from [`SLOWEST_HZ`] up to [`FASTEST_HZ`].
+#[derive(Debug)]
+pub(super) struct Origins<'a> {
+    scene: &'a Scene<'a>,
+    front: PreparedFrontEnd,
+    /// Expected number of unlisted tones.
+    count: f64,
+}
+
+/// Machines and supplies seldom make anything slower.
+const SLOWEST_HZ: f64 = 8.0;
+/// Lines above this are rarely looked at.
+const FASTEST_HZ: f64 = 2e5;
+/// Lone strays expected in a recording.
+const STRAYS: f64 = 2.0;
+
+impl<'a> Origins<'a> {
+    pub fn new(scene: &'a Scene<'a>, count: f64) -> Self {
+        Origins {
+            scene,
+            front: scene.site.recorder.front_end.prepared(),
+            count,
+        }
+    }
+
+    fn share(&self, nu: f64, density: impl Fn(f64) -> f64) -> f64 {
+        let half = self.scene.chain.file_rate_hz() / 2.0;
+        let nu = nu.clamp(0.0, half);
+        let direct = density(nu.max(1e-3 * half));
+        let top = TrueHz(MOST_RUNGS * half);
+        let folded: f64 = self
+            .scene
+            .chain
+            .unfold(SeenHz(nu), top)
+            .map(|rungs| {
+                rungs
+                    .iter()
+                    .filter(|r| r.zone > 1)
+                    .map(|r| passing(self.scene, &self.front, r.true_hz.0) * density(r.true_hz.0))
+                    .sum()
+            })
+            .unwrap_or(0.0);
+        folded / (direct + folded)
+    }
+
+    /// Chance that a family with its fundamental seen at `nu` is folded as a whole.
+    pub fn family_folded(&self, nu: f64) -> f64 {
+        self.share(nu, |f| {
+            1.0 / (f * (1.0 + (SLOWEST_HZ / f).powi(2)) * (1.0 + f / FASTEST_HZ))
+        })
+    }
+
+    /// Chance that an unlisted tone at `nu` is folded.
+    pub fn folded(&self, nu: f64) -> f64 {
+        let half = self.scene.chain.file_rate_hz() / 2.0;
+        let low = LOWEST * half;
+        let stray = self.share(nu, |f| {
+            if f <= half {
+                let spread = 1.0 / ((f + low) * ((half + low) / low).ln());
+                (EVEN / half + (1.0 - EVEN) * spread) * LOWEST.recip().ln()
+            } else if f <= HIGHEST * half {
+                1.0 / f
+            } else {
+                0.0
+            }
+        });
+        let weight = STRAYS / STRAYS.max(self.count);
+        weight * stray + (1.0 - weight) * self.family_folded(nu)
+    }
+}
