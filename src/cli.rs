@@ -58,7 +58,7 @@ pub struct Triage {
     #[arg(long, value_name = "FILE")]
     pub site: Option<PathBuf>,
     /// Sample rate, where the file does not tell it or tells it wrong
-    #[arg(long, value_name = "HZ", value_parser = positive)]
+    #[arg(long, value_name = "HZ", allow_negative_numbers = true, value_parser = positive)]
     pub rate: Option<f64>,
     /// One channel, counted from 1, or all of them merged
     #[arg(long, value_name = "N|all", default_value = "all", value_parser = channel)]
@@ -70,7 +70,7 @@ pub struct Triage {
     #[arg(long, value_name = "FILE")]
     pub json: Option<PathBuf>,
     /// Suspects listed per tone
-    #[arg(long, value_name = "N", default_value = "5")]
+    #[arg(long, value_name = "N", default_value = "5", value_parser = how_many)]
     pub top: NonZeroUsize,
 }
 
@@ -78,7 +78,7 @@ pub struct Triage {
 #[derive(Debug, Args)]
 pub struct Fold {
     /// Analog frequencies
-    #[arg(value_name = "HZ", required = true, value_parser = not_negative)]
+    #[arg(value_name = "HZ", required = true, allow_negative_numbers = true, value_parser = not_negative)]
     pub hz: Vec<f64>,
     #[command(flatten)]
     pub rates: Rates,
@@ -88,12 +88,12 @@ pub struct Fold {
 #[derive(Debug, Args)]
 pub struct Unfold {
     /// Seen frequencies, up to half the sample rate
-    #[arg(value_name = "HZ", required = true, value_parser = not_negative)]
+    #[arg(value_name = "HZ", required = true, allow_negative_numbers = true, value_parser = not_negative)]
     pub hz: Vec<f64>,
     #[command(flatten)]
     pub rates: Rates,
     /// Highest analog frequency listed
-    #[arg(long, value_name = "HZ", value_parser = positive)]
+    #[arg(long, value_name = "HZ", allow_negative_numbers = true, value_parser = positive)]
     pub up_to: f64,
 }
 
@@ -101,10 +101,10 @@ pub struct Unfold {
 #[derive(Debug, Args)]
 pub struct Rates {
     /// Sample rate of the file
-    #[arg(long, value_name = "HZ", value_parser = positive)]
+    #[arg(long, value_name = "HZ", allow_negative_numbers = true, value_parser = positive)]
     pub rate: f64,
     /// An earlier rate the signal went through, first the converter's; may be repeated
-    #[arg(long, value_name = "HZ", value_parser = positive)]
+    #[arg(long, value_name = "HZ", allow_negative_numbers = true, value_parser = positive)]
     pub stage: Vec<f64>,
 }
 
@@ -134,18 +134,30 @@ fn channel(text: &str) -> Result<Channel, String> {
         .map_err(|_| "give a channel number from 1, or `all`".to_owned())
 }
 
+/// Beyond any signal there is; keeps zones within what a number can count.
+const HIGHEST_HZ: f64 = 1e12;
+/// One sample in twelve days.
+const LOWEST_RATE_HZ: f64 = 1e-6;
+
 fn finite(text: &str) -> Result<f64, String> {
     match text.parse::<f64>() {
-        Ok(v) if v.is_finite() => Ok(v),
+        Ok(v) if v.is_finite() && v <= HIGHEST_HZ => Ok(v),
+        Ok(v) if v.is_finite() => Err(format!("must be at most {HIGHEST_HZ:e} Hz")),
         _ => Err("give a number in Hz, such as 8000 or 0.5".into()),
     }
 }
 
 fn positive(text: &str) -> Result<f64, String> {
     match finite(text)? {
-        v if v > 0.0 => Ok(v),
+        v if v >= LOWEST_RATE_HZ => Ok(v),
+        v if v > 0.0 => Err(format!("must be at least {LOWEST_RATE_HZ:e} Hz")),
         _ => Err("must be above 0".into()),
     }
+}
+
+fn how_many(text: &str) -> Result<NonZeroUsize, String> {
+    text.parse()
+        .map_err(|_| "give a whole number from 1".to_owned())
 }
 
 fn not_negative(text: &str) -> Result<f64, String> {

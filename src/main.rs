@@ -17,6 +17,12 @@ fn main() -> ExitCode {
                 let _ = error.print();
                 ExitCode::SUCCESS
             }
+            ErrorKind::DisplayHelpOnMissingArgumentOrSubcommand => {
+                run::complain(
+                    &"say what to do: triage, fold, unfold or sources (see foldtrace --help)",
+                );
+                ExitCode::from(run::WRONG_USAGE)
+            }
             _ => {
                 run::complain(&run::one_line(&error));
                 ExitCode::from(run::WRONG_USAGE)

@@ -103,6 +103,12 @@ fn to_file(path: &Path, write: impl FnOnce(&mut dyn Write) -> io::Result<()>) ->
         Some(p) if !p.as_os_str().is_empty() => p,
         _ => Path::new("."),
     };
+    if !folder.is_dir() {
+        return Err(Stop(
+            SOME_FAILED,
+            format!("{}: there is no such folder to write into", shown(path)),
+        ));
+    }
     let mut file = tempfile::Builder::new()
         .permissions_from_umask()
         .tempfile_in(folder)
@@ -161,6 +167,7 @@ fn run_triage(arguments: &Triage) -> Result<ExitCode, Stop> {
         return Err(usage("--suspects - and --json - cannot share stdout"));
     }
     let with_table = !is_stdout(suspects) && !is_stdout(json);
+    spare_inputs(arguments)?;
     let (site, site_name) = load_site(arguments.site.as_deref())?;
     let options = triage::Options {
         rate_hz: arguments.rate,
@@ -170,6 +177,11 @@ fn run_triage(arguments: &Triage) -> Result<ExitCode, Stop> {
         },
     };
     let top = arguments.top.get();
+    let width = io::stdout()
+        .is_terminal()
+        .then(terminal_size::terminal_size)
+        .flatten()
+        .map(|(w, _)| usize::from(w.0));
     let mut results = Vec::new();
     let mut failed = false;
     for (i, path) in arguments.recordings.iter().enumerate() {
@@ -183,7 +195,7 @@ fn run_triage(arguments: &Triage) -> Result<ExitCode, Stop> {
                         if i > 0 {
                             writeln!(out)?;
                         }
-                        table::write(&result, &site_name, top, out)
+                        table::write(&result, &site_name, top, width, out)
                     })?;
                 }
                 if suspects.is_some() || json.is_some() {
@@ -210,6 +222,33 @@ fn run_triage(arguments: &Triage) -> Result<ExitCode, Stop> {
         None => {}
     }
     Ok(ExitCode::from(if failed { SOME_FAILED } else { 0 }))
+}
+
+/// Refuses an export that would replace what is read, or another export.
+fn spare_inputs(arguments: &Triage) -> Result<(), Stop> {
+    let exports: Vec<&Path> = [arguments.suspects.as_deref(), arguments.json.as_deref()]
+        .into_iter()
+        .flatten()
+        .filter(|p| !is_stdout(Some(p)))
+        .collect();
+    // Files that do not exist yet cannot be the same one; two names for one file
+    // to come can only be caught by their text.
+    let same = |a: &Path, b: &Path| a == b || same_file::is_same_file(a, b).unwrap_or(false);
+    if let [a, b] = exports.as_slice()
+        && same(a, b)
+    {
+        return Err(usage(format!("{}: both exports would go there", shown(a))));
+    }
+    let inputs = arguments.recordings.iter().chain(&arguments.site);
+    for input in inputs {
+        if let Some(export) = exports.iter().find(|e| same(e, input)) {
+            return Err(usage(format!(
+                "{}: is an input; exporting there would destroy it (give another file)",
+                shown(export)
+            )));
+        }
+    }
+    Ok(())
 }
 
 /// The converter's rate first, the file's last.

@@ -29,9 +29,15 @@ pub struct Triage {
     pub tones: ToneSet,
     /// Names of the listed sources, in the catalogue's order.
     pub sources: Vec<String>,
+    /// What was assumed of the clock before, ± parts per million.
+    pub clock_described_ppm: f64,
     /// Suspects and fitted sources.
     pub inference: Inference,
 }
+
+/// ± parts per million (95 %) of a clock that is not described: an ordinary crystal
+/// (common practice).
+const DEFAULT_CLOCK_PPM: f64 = 100.0;
 
 /// Why a recording could not be triaged.
 #[derive(Debug, thiserror::Error)]
@@ -111,6 +117,7 @@ pub fn run(
             .iter()
             .map(|s| s.name.clone())
             .collect(),
+        clock_described_ppm: site.recorder.clock_ppm.unwrap_or(DEFAULT_CLOCK_PPM),
         inference,
     })
 }

@@ -129,6 +129,11 @@ fn wrong_usage_and_bad_site_files_exit_2() {
         vec!["no-such-command"],
         vec!["fold", "abc", "--rate", "8000"],
         vec!["fold", "100", "--rate", "0"],
+        vec!["fold", "-5", "--rate", "80"],
+        vec!["fold", "5", "--rate", "-80"],
+        vec!["fold", "1e300", "--rate", "80"],
+        vec!["fold", "nan", "--rate", "80"],
+        vec![],
         vec!["unfold", "9000", "--rate", "8000", "--up-to", "20000"],
         vec!["triage", text(&good), "--top", "0"],
         vec!["triage", text(&good), "--suspects", "-", "--json", "-"],
@@ -181,6 +186,33 @@ fn exports_to_files_leave_the_table() {
     let output = foldtrace(&["triage", text(&good), "--suspects", text(&nowhere)]);
     complaint(&output);
     assert_eq!(output.status.code(), Some(1));
+}
+
+#[test]
+fn an_export_never_replaces_what_is_read() {
+    let folder = tempfile::tempdir().unwrap();
+    let good = wav(&folder, "good.wav", 8000, 0.1234);
+    let before = std::fs::read(&good).unwrap();
+    let linked = folder.path().join("linked.csv");
+    std::fs::hard_link(&good, &linked).unwrap();
+    for target in [&good, &linked] {
+        let output = foldtrace(&["triage", text(&good), "--suspects", text(target)]);
+        assert!(complaint(&output).contains("input"));
+        assert_eq!(output.status.code(), Some(2));
+    }
+    assert_eq!(std::fs::read(&good).unwrap(), before);
+    let both = folder.path().join("both");
+    let output = foldtrace(&[
+        "triage",
+        text(&good),
+        "--suspects",
+        text(&both),
+        "--json",
+        text(&both),
+    ]);
+    complaint(&output);
+    assert_eq!(output.status.code(), Some(2));
+    assert!(!both.exists());
 }
 
 #[test]

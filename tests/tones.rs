@@ -207,6 +207,18 @@ fn a_tone_that_comes_and_goes_is_timed() {
 }
 
 #[test]
+fn fewer_periods_than_tell_a_tone_from_drift_make_none() {
+    let mut rng = StdRng::seed_from_u64(109);
+    let n = 20_000;
+    for periods in [0.4, 1.3, 2.2, 3.1] {
+        let mut x = noise(&mut rng, n);
+        add(&mut x, 1.0, periods / n as f64, 30.0, 0.7);
+        let set = run(1.0, vec![x]);
+        assert!(set.tones.is_empty(), "{periods} periods: {:?}", set.tones);
+    }
+}
+
+#[test]
 fn next_to_either_end_intervals_are_honest() {
     let mut rng = StdRng::seed_from_u64(108);
     let (rate, n) = (1000.0, 20_000);

@@ -89,6 +89,7 @@ fn recording(result: &Triage, top: usize) -> Value {
         "channels": spec.channels.iter().map(|c| json!({"name": c.name, "unit": c.unit})).collect::<Vec<_>>(),
         "full_scale": result.full_scale.as_ref().map(|(value, unit)| json!({"value": value, "unit": unit})),
         "notes": spec.notes,
+        "tones_left_out": result.tones.left_out,
         "missing_samples": result.tones.missing,
         "analysis": result.tones.plan,
         "tones": tones,

@@ -30,18 +30,43 @@ fn verdict(v: Verdict) -> (&'static str, Style) {
 }
 
 /// Writes one result. Styled with ANSI sequences; a stream that is not a colour
-/// terminal must strip them.
+/// terminal must strip them. On a terminal of `width` columns that is too narrow
+/// for one line per suspect, suspects stand below their tone.
 ///
 /// # Errors
 /// If `out` cannot be written.
-pub fn write(result: &Triage, site_name: &str, top: usize, out: &mut dyn Write) -> io::Result<()> {
+pub fn write(
+    result: &Triage,
+    site_name: &str,
+    top: usize,
+    width: Option<usize>,
+    out: &mut dyn Write,
+) -> io::Result<()> {
     what_was_read(result, site_name, out)?;
     let rows: Vec<(&Tone, &Finding)> = result.rows().collect();
     if !rows.is_empty() {
-        tones(&rows, top, out)?;
+        tones(&rows, top, width, out)?;
+        if result.tones.left_out > 0 {
+            writeln!(
+                out,
+                "{} weaker ones are left out",
+                count(result.tones.left_out, "more tone,", "more tones,")
+            )?;
+        }
         sources(result, out)?;
     }
-    writeln!(out, "\n{HEAD}In short:{HEAD:#} {}.", result.summary())
+    writeln!(out)?;
+    let summary = format!("In short: {}.", result.summary());
+    for (i, line) in wrapped(&summary, width.unwrap_or(usize::MAX))
+        .iter()
+        .enumerate()
+    {
+        match line.strip_prefix("In short:").filter(|_| i == 0) {
+            Some(rest) => writeln!(out, "{HEAD}In short:{HEAD:#}{rest}")?,
+            None => writeln!(out, "{line}")?,
+        }
+    }
+    Ok(())
 }
 
 fn what_was_read(result: &Triage, site_name: &str, out: &mut dyn Write) -> io::Result<()> {
@@ -153,52 +178,62 @@ fn interval((value, u95): &(String, String)) -> String {
     format!("{value} ± {u95}")
 }
 
-fn tones(found: &[(&Tone, &Finding)], top: usize, out: &mut dyn Write) -> io::Result<()> {
+const HEADINGS: [&str; 9] = [
+    "tone",
+    "seen Hz ± 95 %",
+    "dBFS",
+    "verdict",
+    "could be",
+    "chance",
+    "true Hz ± 95 %",
+    "zone",
+    "by luck",
+];
+
+fn tones(
+    found: &[(&Tone, &Finding)],
+    top: usize,
+    width: Option<usize>,
+    out: &mut dyn Write,
+) -> io::Result<()> {
     let rows = rows(found, top);
-    let widest = |heading: &str, cell: &dyn Fn(&Row) -> Option<usize>| {
+    let widest = |heading: usize, cell: &dyn Fn(&Row) -> Option<usize>| {
         rows.iter()
             .filter_map(cell)
-            .chain([heading.chars().count()])
+            .chain([HEADINGS[heading].chars().count()])
             .max()
             .unwrap_or(0)
     };
     let of_tone = |i: usize| move |r: &Row| r.tone.as_ref().map(|t| t[i].chars().count());
     let of_rest = |i: usize| move |r: &Row| r.rest.as_ref().ok().map(|t| t[i].chars().count());
-    let headings = [
-        "tone",
-        "seen Hz ± 95 %",
-        "dBFS",
-        "verdict",
-        "could be",
-        "chance",
-        "true Hz ± 95 %",
-        "zone",
-        "by luck",
-    ];
-    let widths = [
-        widest(headings[0], &of_tone(0)),
-        widest(headings[1], &of_tone(1)),
-        widest(headings[2], &of_tone(2)),
-        headings[3].len(),
-        widest(headings[4], &|r| Some(r.suspect.chars().count())),
-        headings[5].len(),
-        widest(headings[6], &of_rest(0)),
-        widest(headings[7], &of_rest(1)),
-        headings[8].len(),
-    ];
-    let [n, seen, dbfs, word, name, chance, truth, zone, by_luck] = widths;
+    let n = widest(0, &of_tone(0));
+    let seen = widest(1, &of_tone(1));
+    let dbfs = widest(2, &of_tone(2));
+    let word = HEADINGS[3].len();
+    let name = widest(4, &|r| Some(r.suspect.chars().count()));
+    let chance = HEADINGS[5].len();
+    let truth = widest(6, &of_rest(0));
+    let zone = widest(7, &of_rest(1));
+    let by_luck = HEADINGS[8].len();
+    let left = n + seen + dbfs + word + 6;
+    let right = name + chance + truth + zone + by_luck + 8;
+    // Beside each other if they fit, else suspects below their tone.
+    let below = width.is_some_and(|w| left + 2 + right > w);
+    let indent = if below { n + 2 } else { left + 2 };
+    write!(
+        out,
+        "\n{QUIET}{:>n$}  {:>seen$}  {:>dbfs$}  {:<word$}",
+        HEADINGS[0], HEADINGS[1], HEADINGS[2], HEADINGS[3],
+    )?;
+    let gap = if below {
+        format!("\n{:indent$}", "")
+    } else {
+        "  ".into()
+    };
     writeln!(
         out,
-        "\n{QUIET}{:>n$}  {:>seen$}  {:>dbfs$}  {:<word$}  {:<name$}  {:>chance$}  {:>truth$}  {:<zone$}  {:>by_luck$}{QUIET:#}",
-        headings[0],
-        headings[1],
-        headings[2],
-        headings[3],
-        headings[4],
-        headings[5],
-        headings[6],
-        headings[7],
-        headings[8],
+        "{gap}{:<name$}  {:>chance$}  {:>truth$}  {:<zone$}  {:>by_luck$}{QUIET:#}",
+        HEADINGS[4], HEADINGS[5], HEADINGS[6], HEADINGS[7], HEADINGS[8],
     )?;
     for row in &rows {
         match (&row.tone, row.verdict) {
@@ -206,12 +241,12 @@ fn tones(found: &[(&Tone, &Finding)], top: usize, out: &mut dyn Write) -> io::Re
                 let (text, style) = verdict(v);
                 write!(
                     out,
-                    "{number:>n$}  {seen_hz:>seen$}  {level:>dbfs$}  {style}{text:<word$}{style:#}"
+                    "{number:>n$}  {seen_hz:>seen$}  {level:>dbfs$}  {style}{text:<word$}{style:#}{gap}"
                 )?;
             }
-            _ => write!(out, "{:indent$}", "", indent = n + seen + dbfs + word + 6)?,
+            _ => write!(out, "{:indent$}", "")?,
         }
-        write!(out, "  {:<name$}  {:>chance$}  ", row.suspect, row.chance)?;
+        write!(out, "{:<name$}  {:>chance$}  ", row.suspect, row.chance)?;
         match &row.rest {
             Ok([true_hz, in_zone, lucky]) => {
                 writeln!(
@@ -222,10 +257,29 @@ fn tones(found: &[(&Tone, &Finding)], top: usize, out: &mut dyn Write) -> io::Re
             Err(words) => writeln!(out, "{QUIET}{words}{QUIET:#}")?,
         }
     }
-    writeln!(
-        out,
-        "{QUIET}by luck: listed lines expected this close by pure chance. inv: inverted, what rises is seen to fall.{QUIET:#}"
-    )
+    for line in wrapped(
+        "seen Hz is as the recorder's clock has it; a clock error moves all tones alike. by luck: listed lines expected this close by pure chance. inv: inverted, what rises is seen to fall.",
+        width.unwrap_or(110),
+    ) {
+        writeln!(out, "{QUIET}{line}{QUIET:#}")?;
+    }
+    Ok(())
+}
+
+/// Breaks `text` at blanks into lines of at most `width` characters, where words
+/// allow it.
+fn wrapped(text: &str, width: usize) -> Vec<String> {
+    let mut lines: Vec<String> = Vec::new();
+    for word in text.split(' ') {
+        match lines.last_mut() {
+            Some(line) if line.chars().count() + 1 + word.chars().count() <= width => {
+                line.push(' ');
+                line.push_str(word);
+            }
+            _ => lines.push(word.to_owned()),
+        }
+    }
+    lines
 }
 
 fn shown(finding: &Finding, top: usize) -> impl Iterator<Item = &Suspect> {
@@ -306,7 +360,8 @@ fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
         )?;
     }
     let clock = &result.inference.clock;
-    if clock.latents > 0 {
+    // Worth a line where the recording itself narrows it.
+    if clock.latents > 0 && clock.ppm_u95 < 0.8 * result.clock_described_ppm {
         let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
         writeln!(out, "recorder's clock: {ppm} ± {u95} ppm")?;
     }

@@ -13,6 +13,8 @@ use crate::spectrum::Band;
 use crate::spectrum::fft::Complex64;
 use std::ops::Range;
 
+/// Periods in the whole recording below which a fitted line is drift.
+const SLOWEST: f64 = LOWEST as f64 - 0.5;
 /// Peaks this close, in cells, belong to one bunch.
 const BUNCH: usize = 10;
 /// A bunch of this many peaks is not a set of steady tones.
@@ -91,7 +93,7 @@ pub fn detect(band: &Band, false_alarms: f64) -> Found {
         wanderers,
         ..
     } = search;
-    lines.retain(|l| l.bin.is_finite() && stands_out(l, band.samples, &level));
+    lines.retain(|l| l.bin.is_finite() && l.bin >= SLOWEST && stands_out(l, band.samples, &level));
     Found { lines, wanderers }
 }
 
@@ -131,6 +133,7 @@ fn start(band: &Band, fine: &Fine, i: usize) -> Line {
         View::Plain
     };
     Line {
+        peak: k + f64::from(shift),
         bin: k + f64::from(shift),
         bin_sd: 0.0,
         c: Complex64::default(),

@@ -4,8 +4,13 @@ use super::Tone;
 
 /// Merges tones of different channels that lie within each other's uncertainty,
 /// wander, or a resolution cell; the strongest channel's measurement stands for
-/// all. Returns them numbered by rising frequency.
-pub fn across_channels(per_channel: Vec<(usize, Vec<Tone>)>, cell_hz: f64) -> Vec<Tone> {
+/// all. Returns the `most` strongest, numbered by rising frequency, and how many more
+/// there were.
+pub fn across_channels(
+    per_channel: Vec<(usize, Vec<Tone>)>,
+    cell_hz: f64,
+    most: usize,
+) -> (Vec<Tone>, usize) {
     let mut all: Vec<Tone> = per_channel.into_iter().flat_map(|(_, t)| t).collect();
     // strongest first, so that it takes the others in
     all.sort_by(|a, b| {
@@ -35,9 +40,12 @@ pub fn across_channels(per_channel: Vec<(usize, Vec<Tone>)>, cell_hz: f64) -> Ve
             None => merged.push(tone),
         }
     }
+    // Still strongest first.
+    let left_out = merged.len().saturating_sub(most);
+    merged.truncate(most);
     merged.sort_by(|a, b| a.seen_hz.0.total_cmp(&b.seen_hz.0));
     for (i, tone) in merged.iter_mut().enumerate() {
         tone.number = i + 1;
     }
-    merged
+    (merged, left_out)
 }

@@ -100,7 +100,13 @@ pub struct ToneSet {
     pub cell_hz: f64,
     /// Missing samples bridged, per channel.
     pub missing: Vec<u64>,
+    /// Weaker tones left out beyond [`MOST_TONES`].
+    pub left_out: usize,
 }
+
+/// Most tones reported of a recording, the strongest: a noiseless test signal can
+/// have thousands of lines of its own quantising.
+pub const MOST_TONES: usize = 500;
 
 /// Finds and measures the tones of a recording.
 ///
@@ -162,11 +168,13 @@ pub fn find<P: Passes>(
         }
     }
     let cell_hz = recording.rate_hz() / frames.max(1) as f64;
+    let (tones, left_out) = merge::across_channels(per_channel, cell_hz, MOST_TONES);
     Ok(ToneSet {
-        tones: merge::across_channels(per_channel, cell_hz),
+        tones,
         plan,
         cell_hz,
         missing,
+        left_out,
     })
 }
 

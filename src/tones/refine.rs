@@ -34,6 +34,8 @@ pub enum View {
 /// A steady tone in bins of the band's grid.
 #[derive(Debug, Clone)]
 pub struct Line {
+    /// Where it was first seen, bins.
+    pub peak: f64,
     /// Frequency, bins.
     pub bin: f64,
     /// Standard deviation of `bin`.
@@ -152,7 +154,6 @@ impl Residual {
         };
         let range = self.range(line.bin, reach);
         let mirror = self.mirror_matters(line.bin, 4 * reach);
-        let start = line.bin;
         for step in 0..6 {
             let mut normal = [[0.0; 3]; 3];
             let mut right = [0.0; 3];
@@ -186,10 +187,11 @@ impl Residual {
                 std::array::from_fn(|i| (0..3).map(|j| inverse[i][j] * right[j]).sum());
             line.c += Complex64::new(delta[0], delta[1]);
             line.bin += delta[2].clamp(-0.3, 0.3);
-            // A real tone shows in [0, grid/2]; one cell is as far as a peak errs.
+            // A real tone shows in [0, grid/2]; a cell and a half is as far as a peak
+            // errs, however often it is refitted.
             line.bin = line
                 .bin
-                .clamp(start - 1.0, start + 1.0)
+                .clamp(line.peak - 1.5, line.peak + 1.5)
                 .clamp(0.0, self.band.grid as f64 / 2.0);
             line.bin_sd = (0.5 * line.noise * inverse[2][2]).sqrt() * view_factor(line.view);
             if delta[2].abs() < 1e-3 * line.bin_sd {
@@ -280,6 +282,12 @@ pub fn refine(band: &Band, lines: &mut [Line]) -> Residual {
             .map(|z| z.norm_sqr())
             .collect();
         line.leftover = around.iter().sum::<f64>() / (around.len().max(1) as f64 * line.noise);
+        // More left than noise explains: the tone strayed a little, and its mean is
+        // not where a steady one fits best. What is left is the square of the
+        // phase it strayed by; about a third of that may pass for frequency.
+        let strayed = (line.leftover - 1.5).max(0.0) * around.len() as f64
+            / line.snr(band.samples).max(1e-300);
+        line.bin_sd = line.bin_sd.hypot(0.3 * strayed.sqrt());
     }
     residual
 }

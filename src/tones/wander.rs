@@ -245,6 +245,9 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
     })
 }
 
+/// Turns of doubt between two windows up to which they can be counted.
+const SURE_OF_TURNS: f64 = 0.12;
+
 /// A tone followed through time.
 struct Track {
     points: Vec<TrackPoint>,
@@ -295,35 +298,50 @@ fn track(patch: &Patch, from: usize, to: usize, tone_power: f64) -> Option<Track
     // 6/(η·m³), var(φ at the middle) = 1/(2·η·m).
     let sd = (6.0 / (eta * m.powi(3))).sqrt() / std::f64::consts::TAU;
     let phase_sd = (0.5 / (eta * m)).sqrt() / std::f64::consts::TAU;
-    // The phase gained from the first window's middle to the last one's is exact
-    // up to whole turns, which the windows' own frequencies settle; what lies
-    // outside the middles goes with the outer windows' frequencies.
-    let turns: f64 = found
-        .windows(2)
-        .map(|w| {
-            let (a, b) = (&w[0], &w[1]);
-            let expected = 0.5 * (a.cycles + b.cycles) * (b.middle - a.middle);
-            let gained = b.phase - a.phase;
-            gained + (expected - gained).round()
-        })
-        .sum();
-    let first = &found[0];
-    let last = &found[found.len() - 1];
-    let before = (start - from) as f64 + first.middle + 0.5;
-    let after = (to - start) as f64 - 0.5 - last.middle;
-    let length = (to - from) as f64;
-    let mean = (first.cycles * before + turns + last.cycles * after) / length;
-    let variance = found.iter().map(|w| (w.cycles - mean).powi(2)).sum::<f64>() / k;
+    let average = found.iter().map(|w| w.cycles).sum::<f64>() / k;
+    let variance = found
+        .iter()
+        .map(|w| (w.cycles - average).powi(2))
+        .sum::<f64>()
+        / k;
     let step = found
         .windows(2)
         .map(|w| (w[1].cycles - w[0].cycles).powi(2))
         .sum::<f64>()
         / (k - 1.0).max(1.0);
-    // Noise, and what the tone may have done in the outer half windows: a step's
-    // worth of wander spread evenly over one.
-    let moved = (step - 2.0 * sd * sd).max(0.0) / 12.0;
-    let ends = (before * before + after * after) * (sd * sd + moved);
-    let mean_sd = (2.0 * phase_sd * phase_sd + ends).sqrt() / length;
+    // How far the tone moves from window to window, beyond the noise.
+    let moved = (step - 2.0 * sd * sd).max(0.0);
+    let length = (to - from) as f64;
+    // Between two middles the frequency is known to this many turns.
+    let doubt = m * (moved / 12.0 + sd * sd / 2.0).sqrt();
+    let (mean, mean_sd) = if doubt < SURE_OF_TURNS {
+        // The phase gained from the first window's middle to the last one's is
+        // exact up to whole turns, which the windows' own frequencies settle; what
+        // lies outside the middles goes with the outer windows' frequencies.
+        let turns: f64 = found
+            .windows(2)
+            .map(|w| {
+                let (a, b) = (&w[0], &w[1]);
+                let expected = 0.5 * (a.cycles + b.cycles) * (b.middle - a.middle);
+                let gained = b.phase - a.phase;
+                gained + (expected - gained).round()
+            })
+            .sum();
+        let first = &found[0];
+        let last = &found[found.len() - 1];
+        let before = (start - from) as f64 + first.middle + 0.5;
+        let after = (to - start) as f64 - 0.5 - last.middle;
+        // What the tone may have done out there: its movement spread evenly.
+        let ends = (before * before + after * after) * (sd * sd + moved / 12.0);
+        (
+            (first.cycles * before + turns + last.cycles * after) / length,
+            (2.0 * phase_sd * phase_sd + ends).sqrt() / length,
+        )
+    } else {
+        // Too lively to count turns: the windows' frequencies averaged. Each is
+        // where the tone was longest, which may be half its movement off the mean.
+        (average, ((sd * sd + moved / 4.0) / k).sqrt())
+    };
     let width = patch.width as f64;
     let n_all = patch.z.len() as f64;
     Some(Track {
