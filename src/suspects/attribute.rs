@@ -1,14 +1,15 @@
 //! From the solutions to findings: suspects with rungs and zones, fitted sources,
 //! the clock.
 
+use super::byproducts::Maker;
 use super::prior::Normal;
 use super::scene::Scene;
 use super::shares::{Shares, collect};
 use super::solution::Solution;
 use super::unlisted::Origins;
 use super::{Cause, ClockFit, Finding, Inference, SourceFit, Suspect, Verdict, clock};
-use crate::sources::LatentId;
-use crate::units::{TrueHz, U95};
+use crate::sources::{LatentId, Line};
+use crate::units::{Sense, TrueHz, U95};
 
 /// Suspects less probable than this are not worth a row.
 const LEAST: f64 = 1e-6;
@@ -31,7 +32,12 @@ pub(super) fn attribute(scene: &Scene, solutions: &[(f64, Solution)]) -> Inferen
         ),
     };
     let unlisted: Vec<f64> = (0..scene.tones.len())
-        .map(|i| solutions.iter().map(|(w, s)| w * s.unlisted_share(i)).sum())
+        .map(|i| {
+            solutions
+                .iter()
+                .map(|(w, s)| w * s.left_over(i).0)
+                .sum()
+        })
         .collect();
     let origins = Origins::new(scene, unlisted.iter().sum());
     let mut findings: Vec<Finding> = scene
@@ -52,6 +58,7 @@ pub(super) fn attribute(scene: &Scene, solutions: &[(f64, Solution)]) -> Inferen
         })
         .collect();
     let explained = propose(scene, &shares, &origins, epsilon, &mut findings);
+    name_byproducts(scene, solutions, &mut findings);
     for finding in &mut findings {
         finding
             .suspects
@@ -135,6 +142,164 @@ fn propose(
         });
     }
     explained
+}
+
+/// Rows of by-products, by falling probability: at most this many of a tone.
+const MOST_BYPRODUCTS: usize = 4;
+
+/// Enters products of tones and artefacts of the recorder. A product whose parents
+/// are lines of one listed source, and which is a line of that source itself, goes
+/// under the source's name.
+fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut [Finding]) {
+    let Some((_, first)) = solutions.first() else {
+        return;
+    };
+    let mut entered: Vec<(usize, Suspect)> = Vec::new();
+    for b in first.byproducts.iter() {
+        let probability: f64 = solutions
+            .iter()
+            .map(|(w, s)| w * s.left_over(b.tone).1 * b.density)
+            .sum();
+        if probability < LEAST {
+            continue;
+        }
+        let nu = scene.tones.get(b.tone).map_or(0.0, |t| t.seen_hz.0);
+        let u95 = scene.tones.get(b.tone).map_or(0.0, |t| t.seen_hz_u95);
+        let suspect = match &b.maker {
+            Maker::Recorder => Suspect {
+                cause: Cause::Recorder,
+                line: b.label.clone(),
+                true_hz: TrueHz(nu),
+                true_hz_u95: u95,
+                zone: 1,
+                sense: Sense::Upright,
+                probability,
+                coincidence: chance_of_byproduct(scene, first, b.tone),
+            },
+            Maker::Parents(recipe) => {
+                // As far as known, the parents are where their best suspects say.
+                let f: f64 = recipe
+                    .iter()
+                    .map(|&(i, k)| f64::from(k) * parent_hz(scene, findings, i))
+                    .sum();
+                let f = f.abs();
+                let seen = scene.chain.see(TrueHz(f));
+                let own = own_line(scene, findings, recipe);
+                let cause = own.as_ref().map_or_else(
+                    || {
+                        let number = |i: usize| scene.tones.get(i).map_or(i + 1, |t| t.number);
+                        Cause::Parents(recipe.iter().map(|r| number(r.0)).collect())
+                    },
+                    |o| o.0.clone(),
+                );
+                Suspect {
+                    cause,
+                    line: own.map_or_else(|| b.label.clone(), |o| o.1),
+                    true_hz: TrueHz(f),
+                    true_hz_u95: u95,
+                    zone: seen.zone,
+                    sense: seen.sense,
+                    probability,
+                    coincidence: chance_of_byproduct(scene, first, b.tone),
+                }
+            }
+        };
+        entered.push((b.tone, suspect));
+    }
+    entered.sort_by(|a, b| b.1.probability.total_cmp(&a.1.probability));
+    for (tone, suspect) in entered {
+        let Some(finding) = findings.get_mut(tone) else {
+            continue;
+        };
+        if suspect.zone > 1 {
+            finding.folded_probability += suspect.probability;
+        }
+        let same = finding
+            .suspects
+            .iter_mut()
+            .find(|s| s.cause == suspect.cause && s.line == suspect.line);
+        let byproduct = |s: &&Suspect| !matches!(s.cause, Cause::Source { .. });
+        if let Some(same) = same {
+            same.probability += suspect.probability;
+        } else if finding.suspects.iter().filter(byproduct).count() < MOST_BYPRODUCTS {
+            finding.suspects.push(suspect);
+        } else if let Some(least) = finding
+            .suspects
+            .iter_mut()
+            .rev()
+            .find(|s| !matches!(s.cause, Cause::Source { .. }))
+        {
+            // Too faint for a row of its own, but not lost.
+            least.probability += suspect.probability;
+        }
+    }
+}
+
+/// By-products expected this close by chance.
+fn chance_of_byproduct(scene: &Scene, solution: &Solution, tone: usize) -> f64 {
+    let half = scene.chain.file_rate_hz() / 2.0;
+    let var = solution.tones.get(tone).map_or(0.0, |t| t.var);
+    solution.byproducts.len() as f64 * (2.0 * U95 * var.sqrt() / half).min(1.0)
+}
+
+fn parent_hz(scene: &Scene, findings: &[Finding], i: usize) -> f64 {
+    let seen = scene.tones.get(i).map_or(0.0, |t| t.seen_hz.0);
+    findings
+        .get(i)
+        .and_then(|f| f.suspects.iter().find(|s| s.probability > 0.5))
+        .map_or(seen, |s| s.true_hz.0)
+}
+
+/// The listed source and line that a product of its own lines is.
+fn own_line(
+    scene: &Scene,
+    findings: &[Finding],
+    recipe: &[(usize, i32)],
+) -> Option<(Cause, String)> {
+    let catalogue = &scene.site.catalogue;
+    let mut terms: Vec<(LatentId, f64)> = Vec::new();
+    let mut owner: Option<(usize, &Cause)> = None;
+    for &(i, k) in recipe {
+        let best = findings.get(i)?.suspects.iter().find(|s| s.probability > 0.5)?;
+        let Cause::Source { source, line, .. } = &best.cause else {
+            return None;
+        };
+        if owner.is_some_and(|o| o.0 != *source) {
+            return None;
+        }
+        owner = Some((*source, &best.cause));
+        for &(l, a) in &catalogue.sources.get(*source)?.lines.get(*line)?.terms {
+            let a = f64::from(k) * a;
+            match terms.iter_mut().find(|t| t.0 == l) {
+                Some(t) => t.1 += a,
+                None => terms.push((l, a)),
+            }
+        }
+    }
+    terms.retain(|t| t.1.abs() > 1e-9);
+    let (source, cause) = owner?;
+    let lines = &catalogue.sources.get(source)?.lines;
+    let same = |line: &&Line| {
+        line.terms.len() == terms.len()
+            && [1.0, -1.0].iter().any(|sign| {
+                line.terms
+                    .iter()
+                    .all(|(l, a)| terms.iter().any(|t| t.0 == *l && (sign * t.1 - a).abs() < 1e-9))
+            })
+    };
+    let index = lines.iter().position(|l| same(&l))?;
+    let Cause::Source { name, kind, .. } = cause else {
+        return None;
+    };
+    Some((
+        Cause::Source {
+            source,
+            line: index,
+            name: name.clone(),
+            kind: *kind,
+        },
+        lines.get(index)?.label.clone(),
+    ))
 }
 
 fn source_fits(

@@ -217,7 +217,7 @@ impl Cluster {
                 if !nominal_hz.is_finite() || nominal_hz > top || nominal_hz == 0.0 {
                     continue;
                 }
-                let faintness = Faintness::new(line.weight, *gain, best);
+                let faintness = strengths.prepare(Faintness::new(line.weight, *gain, best));
                 let shown = strengths.shown(&faintness);
                 for (h, s) in ln_hidden.iter_mut().zip(shown) {
                     *h += (-s).ln_1p();

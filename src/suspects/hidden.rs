@@ -12,7 +12,7 @@ use crate::sources::{
 };
 
 /// Anonymous harmonic families looked for.
-const ANONYMOUS: usize = 2;
+const ANONYMOUS: usize = 4;
 /// Multiples of each.
 const MULTIPLES: u32 = 12;
 /// Probability that an anonymous family is there, before looking; of each of two.

@@ -80,7 +80,7 @@ fn replace(
             }
         })
         .enumerate()
-        .map(|(i, o)| o.max(solution.background(i)))
+        .map(|(i, o)| o.max(solution.sourceless(i)))
         .collect();
     let places = problem.places_of(comer, solution, &others);
     let value = evaluate(&places, &comer.cluster, &beliefs(comes, solution), &others);

@@ -5,9 +5,12 @@
 //! is found from where its lines meet tones (`places`, `pairs`); the likelihood
 //! there, and who explains which tone, is `evaluate`; clusters are reconciled
 //! with one another, with `unlisted` tones and with the recorder's `clock` in
-//! `sweep`; `attribute` puts the result into words.
+//! `sweep` and `mixture`; `attribute` puts the result into words. Harmonics
+//! of other tones and the recorder's own artefacts are `byproducts`; families that
+//! nobody listed are `hidden` beside the listed ones.
 
 mod attribute;
+mod byproducts;
 mod clock;
 mod clusters;
 mod evaluate;

@@ -88,8 +88,32 @@ pub(super) struct Setting<'a> {
     pub others: &'a [f64],
     /// Density of unlisted tones alone.
     pub background: &'a [f64],
+    /// The least it can become.
+    pub least: &'a [f64],
+    pub mean_ratios: &'a wander::MeanRatios,
+    /// Meetings looked at and places kept per cluster.
+    pub effort: Effort,
     /// Half the file's rate, Hz.
     pub half_hz: f64,
+}
+
+/// How hard to look: less per cluster where there are many, so that the whole stays
+/// within bounds.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub(super) struct Effort {
+    pub meetings: usize,
+    pub places: usize,
+}
+
+impl Effort {
+    pub fn new(clusters: usize, tones: usize) -> Effort {
+        let share = 1 + clusters / 10;
+        Effort {
+            // At least a few for each tone.
+            meetings: (200_000 / share).max(8 * tones),
+            places: (40 / share).max(6),
+        }
+    }
 }
 
 impl Setting<'_> {
@@ -98,12 +122,12 @@ impl Setting<'_> {
     }
 
     pub fn odds(&self, line: &ClusterLine, tone: &Measured, image: bool) -> PerClass {
-        let faintness = if image {
-            line.faintness.fainter(IMAGE_DB)
+        if image {
+            let fainter = line.faintness.fainter(IMAGE_DB);
+            self.strengths.odds(&fainter, tone.snr_db)
         } else {
-            line.faintness
-        };
-        self.strengths.odds(&faintness, tone.snr_db)
+            self.strengths.odds(&line.faintness, tone.snr_db)
+        }
     }
 
     /// The entry of a line at a meeting.
@@ -176,7 +200,12 @@ pub(super) struct Broad {
     /// `1 +` index into `entries`, by line and tone.
     slots: Vec<u32>,
     entries: Vec<BroadEntry>,
+    /// Least density of everything else at each tone.
+    least: Vec<f64>,
 }
+
+/// Odds below which a meeting is not worth an entry in the broad node.
+const NEGLIGIBLE: f64 = 1e-5;
 
 impl Broad {
     pub fn new(cluster: &Cluster, setting: &Setting) -> Broad {
@@ -185,6 +214,7 @@ impl Broad {
             tones,
             slots: vec![0; tones * cluster.lines.len()],
             entries: Vec::new(),
+            least: setting.least.to_vec(),
         }
     }
 
@@ -218,7 +248,7 @@ impl Broad {
         if *slot == 0 {
             let centre = |k: usize| prior.get(k).map_or(0.0, |p| p.normal().mean);
             let scale = [line.a[0] * centre(0), line.a[1] * centre(1)];
-            let ratio = wander::mean_ratio(tone, scale, cluster.quartz);
+            let ratio = setting.mean_ratios.get(tone, scale, cluster.quartz);
             self.entries.push(BroadEntry {
                 line: j,
                 member: line.member,
@@ -242,9 +272,61 @@ impl Broad {
         }
     }
 
+    /// Lines that the prior spreads over more than the band land on any tone alike:
+    /// one entry per member and tone stands for all of them, under the name of the
+    /// likeliest.
+    pub fn add_diffuse(&mut self, cluster: &Cluster, prior: &Prior, setting: &Setting, lines: &[usize]) {
+        for member in 0..cluster.members.len() {
+            let own: Vec<(usize, &ClusterLine)> = lines
+                .iter()
+                .filter_map(|&j| Some((j, cluster.lines.get(j)?)))
+                .filter(|(_, l)| l.member == member)
+                .collect();
+            let Some(&(first, line)) = own
+                .iter()
+                .max_by(|a, b| a.1.faintness.better(&b.1.faintness))
+            else {
+                continue;
+            };
+            let centre = prior.normal().mean;
+            let nominal = line.a[0] * centre + line.b;
+            let mut table: std::collections::BTreeMap<i64, PerClass> = Default::default();
+            for (tone, t) in setting.tones.iter().enumerate() {
+                let odds = table.entry((t.snr_db / 2.0).round() as i64).or_insert_with(|| {
+                    let mut sum = [0.0; super::strength::CLASSES];
+                    for (_, l) in &own {
+                        let odds = setting.strengths.odds(&l.faintness, t.snr_db);
+                        for (s, o) in sum.iter_mut().zip(odds) {
+                            *s += o;
+                        }
+                    }
+                    sum
+                });
+                let scale = [line.a[0] * centre, 0.0];
+                let ratio = setting.mean_ratios.get(t, scale, cluster.quartz);
+                // The rung nearest to where the line is expected.
+                let best = (2.0 * setting.half_hz * (nominal / (2.0 * setting.half_hz)).floor()
+                    + t.nu)
+                    .max(t.nu);
+                self.entries.push(BroadEntry {
+                    line: first,
+                    member,
+                    tone,
+                    density: 1.0 / setting.half_hz,
+                    best: (best, 1.0 / setting.half_hz),
+                    folded: if best > setting.half_hz { 1.0 / setting.half_hz } else { 0.0 },
+                    odds: odds.map(|o| o * ratio),
+                });
+            }
+        }
+    }
+
     pub fn finish(self) -> Vec<BroadEntry> {
         let mut all = self.entries;
-        all.retain(|e| e.density > 0.0);
+        all.retain(|e| {
+            let others = self.least.get(e.tone).copied().unwrap_or(1.0);
+            e.density * mean(&e.odds) > NEGLIGIBLE * others
+        });
         all.sort_by_key(|e| (e.member, e.tone));
         all
     }

@@ -8,12 +8,10 @@
 //! the bluntest: taking any one tone away leaves a distribution the grid holds.
 
 use super::clusters::Cluster;
-use super::modes::{Broad, Mode, Node, Places, REACH, Setting, gaussian, mean, meetings};
+use super::modes::{Broad, Entry, Mode, Node, Places, REACH, Setting, gaussian, mean, meetings};
 use super::prior::Prior;
 use super::scene::Meeting;
 
-/// Places kept per cluster.
-const PLACES: usize = 40;
 /// A place this many nats below the best is left to the broad node.
 const DEPTH: f64 = 80.0;
 /// Ratio by which the steps of a grid grow.
@@ -33,21 +31,75 @@ struct Candidate {
     mean_odds: f64,
 }
 
+/// Which lines propose places, and which are too diffuse to say where they are.
+struct Roles {
+    proposing: Vec<usize>,
+    /// Lines to be entered in the broad node one by one.
+    broad: Vec<usize>,
+    diffuse: Vec<usize>,
+    fixed: Vec<usize>,
+}
+
+/// A line is diffuse when the prior spreads it over this much of the band (one
+/// standard deviation).
+const DIFFUSE: f64 = 0.5;
+
+fn roles(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Roles {
+    let (low, high) = prior.range();
+    let mut roles = Roles {
+        proposing: Vec::new(),
+        broad: Vec::new(),
+        diffuse: Vec::new(),
+        fixed: Vec::new(),
+    };
+    let mut order: Vec<(f64, usize)> = Vec::new();
+    for (j, line) in cluster.lines.iter().enumerate() {
+        let a = line.a[0].abs();
+        if a == 0.0 {
+            roles.fixed.push(j);
+            continue;
+        }
+        let spread = match prior {
+            Prior::Normal(n) => a * n.sd,
+            Prior::Anywhere { .. } => 0.0,
+        };
+        if spread > DIFFUSE * setting.half_hz {
+            roles.diffuse.push(j);
+        } else {
+            roles.broad.push(j);
+        }
+        order.push((a * (high - low) / setting.half_hz, j));
+    }
+    // Likely lines first, as many as there is time for.
+    order.sort_by(|p, q| match (cluster.lines.get(p.1), cluster.lines.get(q.1)) {
+        (Some(p), Some(q)) => q.faintness.better(&p.faintness),
+        _ => std::cmp::Ordering::Equal,
+    });
+    let mut left = setting.effort.meetings as f64;
+    for (bands, j) in order {
+        let cost = setting.tones.len() as f64 * bands.max(0.01) + 1.0;
+        if cost <= left {
+            left -= cost;
+            roles.proposing.push(j);
+        }
+    }
+    roles
+}
+
 /// Places of a one-latent cluster.
 pub(super) fn find(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Places {
     let mut candidates: Vec<Candidate> = Vec::new();
-    let mut fixed: Vec<(usize, Meeting)> = Vec::new();
     let priors = [*prior];
+    let roles = roles(cluster, prior, setting);
     // A tone meets a line on many rungs; its odds are the same on each.
     let mut odds_of_tone = vec![f64::NAN; setting.tones.len()];
-    for (j, line) in cluster.lines.iter().enumerate() {
+    for &j in &roles.proposing {
+        let Some(line) = cluster.lines.get(j) else {
+            continue;
+        };
         odds_of_tone.fill(f64::NAN);
         meetings(line, &priors, setting, &mut |meeting, tone, others| {
             let a = line.a[0];
-            if a == 0.0 {
-                fixed.push((j, meeting));
-                return;
-            }
             let var = tone.var + line.var;
             let odds = || mean(&setting.odds(line, tone, meeting.image));
             let mean_odds = match odds_of_tone.get_mut(meeting.tone) {
@@ -72,11 +124,12 @@ pub(super) fn find(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Place
             });
         });
     }
-    candidates.sort_by(|p, q| p.theta.total_cmp(&q.theta));
+    candidates.sort_unstable_by(|p, q| p.theta.total_cmp(&q.theta));
     let widest = candidates.iter().map(|c| c.half_width).fold(0.0, f64::max);
-    let mut found = peaks(&candidates, prior, |c| c.gain);
+    let places = setting.effort.places;
+    let mut found = peaks(&candidates, prior, places, |c| c.gain);
     if candidates.iter().any(|c| c.free_gain > c.gain + 0.5) {
-        found.extend(peaks(&candidates, prior, |c| c.free_gain));
+        found.extend(peaks(&candidates, prior, places, |c| c.free_gain));
     }
     let mut centres: Vec<(f64, f64)> = found
         .into_iter()
@@ -98,18 +151,11 @@ pub(super) fn find(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Place
             .min(12.0 * prior.normal().sd);
         let low = (centre - 1.2 * reach).max(left.unwrap_or(f64::NEG_INFINITY));
         let high = (centre + 1.2 * reach).min(right.unwrap_or(f64::INFINITY));
-        let nodes = grid(centre, width, low, high, prior);
-        let middle = 0.5 * (low + high);
-        let entries = near(&candidates, widest, middle, 0.5 * (high - low))
-            .map(|c| (c.line, &c.meeting))
-            .chain(fixed.iter().map(|(j, m)| (*j, m)))
-            .filter_map(|(j, m)| setting.entry(cluster, j, m))
-            .collect();
         covered.push((low, high));
         modes.extend(Mode::variants(
             [[1.0, 0.0], [0.0, 1.0]],
-            nodes,
-            entries,
+            grid(centre, width, low, high, prior),
+            entries(cluster, low, high, setting),
             [centre, 0.0],
             cluster,
             setting,
@@ -117,25 +163,47 @@ pub(super) fn find(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Place
     }
     let inside: f64 = covered.iter().map(|&(l, h)| prior.mass(l, h)).sum();
     let mut broad = Broad::new(cluster, setting);
-    let mut at = 0;
-    for c in &candidates {
-        while covered.get(at).is_some_and(|w| w.1 < c.theta) {
-            at += 1;
-        }
-        if covered.get(at).is_some_and(|w| w.0 <= c.theta) {
+    for &j in roles.broad.iter().chain(&roles.fixed) {
+        let Some(line) = cluster.lines.get(j) else {
             continue;
-        }
-        broad.add(cluster, &priors, setting, c.line, &c.meeting);
+        };
+        meetings(line, &priors, setting, &mut |meeting, _, _| {
+            let theta = (meeting.rung_hz - line.b) / line.a[0];
+            let at = covered.partition_point(|w| w.1 < theta);
+            let inside = line.a[0] != 0.0 && covered.get(at).is_some_and(|w| w.0 <= theta);
+            if !inside {
+                broad.add(cluster, &priors, setting, j, &meeting);
+            }
+        });
     }
-    for (j, meeting) in &fixed {
-        broad.add(cluster, &priors, setting, *j, meeting);
-    }
+    broad.add_diffuse(cluster, prior, setting, &roles.diffuse);
     Places {
         modes,
         broad: broad.finish(),
         broad_mass: (1.0 - inside).max(0.0),
         latents: 1,
     }
+}
+
+/// Every meeting of any line within a window of the latent.
+fn entries(cluster: &Cluster, low: f64, high: f64, setting: &Setting) -> Vec<Entry> {
+    let mut found = Vec::new();
+    let worst = setting.tones.iter().map(|t| t.var).fold(0.0, f64::max);
+    for (j, line) in cluster.lines.iter().enumerate() {
+        let (p, q) = (line.a[0] * low + line.b, line.a[0] * high + line.b);
+        let (p, q) = (p.min(q), p.max(q));
+        let reach = REACH * (line.var + worst).sqrt();
+        setting.ladders.between(p - reach, q + reach, &mut |m| {
+            let Some((tone, _)) = setting.tone(m.tone) else {
+                return;
+            };
+            let own = REACH * (line.var + tone.var).sqrt();
+            if m.rung_hz >= p - own && m.rung_hz <= q + own {
+                found.extend(setting.entry(cluster, j, &m));
+            }
+        });
+    }
+    found
 }
 
 /// Candidates whose interval reaches into `theta ± half`.
@@ -154,7 +222,12 @@ fn near(
 }
 
 /// Places where the summed gain peaks, best first.
-fn peaks(candidates: &[Candidate], prior: &Prior, gain: impl Fn(&Candidate) -> f64) -> Vec<f64> {
+fn peaks(
+    candidates: &[Candidate],
+    prior: &Prior,
+    places: usize,
+    gain: impl Fn(&Candidate) -> f64,
+) -> Vec<f64> {
     // (position, gain); leaving an interval subtracts.
     let mut events: Vec<(f64, f64)> = Vec::with_capacity(2 * candidates.len());
     for c in candidates {
@@ -189,7 +262,7 @@ fn peaks(candidates: &[Candidate], prior: &Prior, gain: impl Fn(&Candidate) -> f
     let best = found.first().map_or(0.0, |f| f.1);
     let mut kept: Vec<(f64, f64, f64)> = Vec::new();
     for f in found {
-        if kept.len() >= PLACES || f.1 < best - DEPTH {
+        if kept.len() >= places || f.1 < best - DEPTH {
             break;
         }
         if kept.iter().all(|k| (k.0 - f.0).abs() > 0.5 * (k.2 + f.2)) {

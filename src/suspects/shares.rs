@@ -112,6 +112,9 @@ impl Collector<'_> {
     }
 }
 
+/// Mass of a piece that is not worth collecting.
+const NEGLIGIBLE: f64 = 1e-7;
+
 /// Best estimate of a line's own frequency where its source says `f` and its tone
 /// `rung`: a line that strays from its latents by `line_var` is where it is seen.
 fn between(f: f64, f_var: f64, rung: f64, tone_var: f64, line_var: f64) -> (f64, f64) {
@@ -161,13 +164,13 @@ impl Collector<'_> {
                 .map(|e| coincidence(self.scene, solution, s, &fit, e.line, e.tone))
                 .collect();
             for (n, (node, w)) in mode.nodes.iter().zip(weights).enumerate() {
-                if *w < 1e-12 {
+                if *w < 0.01 * NEGLIGIBLE {
                     continue;
                 }
                 for (k, (e, chance)) in mode.entries.iter().zip(&chance).enumerate() {
                     let r = value.responsibility.get(n * count + k);
                     let mass = w * r.copied().unwrap_or(0.0) * scaled(e.tone);
-                    if mass < 1e-12 {
+                    if mass < 0.01 * NEGLIGIBLE {
                         continue;
                     }
                     let (f, var) = line_frequency(s, e, node.theta, mode.axes, node.cell_var);
@@ -186,7 +189,7 @@ impl Collector<'_> {
         }
         for (e, r) in s.places.broad.iter().zip(&s.value.broad_responsibility) {
             let mass = s.value.broad_weight * r * scaled(e.tone);
-            if mass < 1e-12 {
+            if mass < NEGLIGIBLE {
                 continue;
             }
             let chance = coincidence(self.scene, solution, s, &None, e.line, e.tone);

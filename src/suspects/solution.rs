@@ -1,5 +1,6 @@
 //! A solution: every cluster's posterior and what it tells each tone.
 
+use super::byproducts::Byproduct;
 use super::clusters::Cluster;
 use super::evaluate::Value;
 use super::hidden::Standing;
@@ -17,6 +18,10 @@ pub(super) struct Solved {
     pub standing: Standing,
     pub places: Rc<Places>,
     pub value: Value,
+    /// Tones it would claim if it were alone.
+    pub first_claims: f64,
+    /// Everything else at each tone when it was last evaluated.
+    pub met: Vec<f64>,
     /// What it tells each tone.
     pub message: Vec<f64>,
     /// Its share in each tone, once everything is settled.
@@ -32,7 +37,14 @@ pub(super) struct Solution {
     pub unlisted_rate: Vec<f64>,
     /// Background density of each tone's strength, per dB.
     pub level_density: Rc<Vec<f64>>,
+    /// The least the density of unlisted tones can become at each tone.
+    pub least: Rc<Vec<f64>>,
+    pub byproducts: Rc<Vec<Byproduct>>,
+    /// Their density at each tone.
+    pub byproduct_density: Rc<Vec<f64>>,
     pub solved: Vec<Solved>,
+    /// Sum of all messages at each tone.
+    pub told: Vec<f64>,
     /// Best present knowledge of each latent, on the recorder's scale.
     pub latents: Vec<Normal>,
 }
@@ -50,16 +62,61 @@ impl Solution {
         (get(&self.unlisted_rate) * density * get(&self.level_density)).max(1e-300)
     }
 
+    /// Density of all that is no source: unlisted tones and by-products.
+    pub fn sourceless(&self, i: usize) -> f64 {
+        self.background(i) + self.byproduct_density.get(i).copied().unwrap_or(0.0)
+    }
+
     /// Everything but cluster `but` at tone `i`.
     pub fn others(&self, i: usize, but: Option<usize>) -> f64 {
-        self.background(i)
-            + self
-                .solved
+        let told = self.told.get(i).copied().unwrap_or(0.0);
+        let own = but
+            .and_then(|c| self.solved.get(c)?.message.get(i))
+            .copied()
+            .unwrap_or(0.0);
+        let rest = if own == 0.0 {
+            told
+        } else if own < 0.5 * told {
+            told - own
+        } else {
+            // The difference would cancel: add the others up.
+            self.solved
                 .iter()
                 .enumerate()
                 .filter(|(c, _)| Some(*c) != but)
                 .filter_map(|(_, s)| s.message.get(i))
-                .sum::<f64>()
+                .sum()
+        };
+        self.sourceless(i) + rest
+    }
+
+    /// Gives cluster `c` a new message.
+    pub fn tell(&mut self, c: usize, message: Vec<f64>) {
+        let Some(s) = self.solved.get_mut(c) else {
+            return;
+        };
+        let changes = message.iter().zip(&s.message).zip(&mut self.told);
+        let mut exact = true;
+        for ((new, old), told) in changes {
+            // Taking a large part away would leave rounding errors.
+            exact &= *old < 0.5 * *told || old == new;
+            *told += new - old;
+        }
+        s.message = message;
+        if !exact {
+            self.add_up();
+        }
+    }
+
+    /// Adds the messages up anew.
+    pub fn add_up(&mut self) {
+        let mut told = vec![0.0; self.tones.len()];
+        for s in &self.solved {
+            for (t, m) in told.iter_mut().zip(&s.message) {
+                *t += m;
+            }
+        }
+        self.told = told;
     }
 
     pub fn all_others(&self, but: Option<usize>) -> Vec<f64> {
@@ -75,10 +132,13 @@ impl Solution {
             .collect()
     }
 
-    /// What is left of each tone for the unlisted.
-    pub fn unlisted_share(&self, i: usize) -> f64 {
+    /// What is left of each tone for the unlisted and for by-products: the first,
+    /// and per unit of density of the second.
+    pub fn left_over(&self, i: usize) -> (f64, f64) {
         let claimed: f64 = self.solved.iter().filter_map(|s| s.share.get(i)).sum();
-        (1.0 - claimed).max(0.0)
+        let left = (1.0 - claimed).max(0.0);
+        let all = self.sourceless(i);
+        (left * self.background(i) / all, left / all)
     }
 
     /// Settles the shares from the messages.

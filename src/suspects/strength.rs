@@ -83,11 +83,7 @@ impl Strengths {
 
     /// Expected SNR of a line per class, dB.
     fn expected(line: &Faintness, class: usize) -> f64 {
-        let (level, slope) = (
-            LEVELS_DB.get(class / SLOPES.len()).copied().unwrap_or(0.0),
-            SLOPES.get(class % SLOPES.len()).copied().unwrap_or(1.0),
-        );
-        level + slope * line.weight_db + line.gain_db
+        Self::level(class, line.weight_db) + line.gain_db
     }
 
     /// Prior probability of each class where the front end passes the best line with
@@ -128,22 +124,36 @@ impl Strengths {
         std::array::from_fn(|c| {
             let need = self.threshold_db - Self::expected(line, c);
             let above = self.above.get(slot(need * line.narrowing)).copied();
-            line.most_shown() * above.unwrap_or(0.0)
+            line.most_shown * above.unwrap_or(0.0)
         })
     }
 
     /// Per class: density (per dB) of the line showing at `snr_db`, over the chance
     /// of it not showing at all.
     pub fn odds(&self, line: &Faintness, snr_db: f64) -> PerClass {
+        let scale = line.most_shown * line.narrowing;
+        // Position in the table, for a class of level 0 and slope 0.
+        let at = (snr_db - line.gain_db) * line.narrowing;
         std::array::from_fn(|c| {
-            let expected = Self::expected(line, c);
-            let get =
-                |table: &[f64], x: f64| table.get(slot(x * line.narrowing)).copied().unwrap_or(0.0);
-            let most = line.most_shown();
-            let density = most * line.narrowing * get(&self.density, snr_db - expected);
-            let hidden = 1.0 - most * get(&self.above, self.threshold_db - expected);
-            density / hidden
+            let below = line.narrowing * Self::level(c, line.weight_db);
+            let density = self.density.get(slot(at - below)).copied().unwrap_or(0.0);
+            scale * density * line.per_hidden.get(c).copied().unwrap_or(1.0)
         })
+    }
+
+    /// Fills in what [`Strengths::odds`] needs of a line.
+    pub fn prepare(&self, mut line: Faintness) -> Faintness {
+        let shown = self.shown(&line);
+        line.per_hidden = shown.map(|s| 1.0 / (1.0 - s));
+        line
+    }
+
+    fn level(class: usize, weight_db: f64) -> f64 {
+        let (level, slope) = (
+            LEVELS_DB.get(class / SLOPES.len()).copied().unwrap_or(0.0),
+            SLOPES.get(class % SLOPES.len()).copied().unwrap_or(1.0),
+        );
+        level + slope * weight_db
     }
 
     /// Density (per dB) of the SNR of a tone that nothing listed made.
@@ -162,6 +172,10 @@ pub(super) struct Faintness {
     gain_db: f64,
     /// [`SPREAD_DB`] over the spread with the gain's uncertainty, in (0, 1].
     narrowing: f64,
+    /// Rarer lines are absent for reasons other than their level.
+    most_shown: f64,
+    /// One over the chance of not showing, per class.
+    per_hidden: PerClass,
 }
 
 impl Faintness {
@@ -172,6 +186,8 @@ impl Faintness {
             gain_db: gain.mean_db - best.mean_db,
             // One front end: its uncertainty is shared, only the rest is the line's.
             narrowing: SPREAD_DB / SPREAD_DB.hypot(gain.sd_db - best.sd_db),
+            most_shown: MOST_SHOWN * 10f64.powf(Self::weight_db(weight) / 40.0).max(0.3),
+            per_hidden: [1.0; CLASSES],
         }
     }
 
@@ -179,16 +195,17 @@ impl Faintness {
         20.0 * weight.clamp(1e-6, 1.0).log10()
     }
 
-    /// Rarer lines are absent for reasons other than their level.
-    fn most_shown(&self) -> f64 {
-        MOST_SHOWN * 10f64.powf(self.weight_db / 40.0).max(0.3)
+    /// Orders lines by how likely they show.
+    pub fn better(&self, other: &Faintness) -> std::cmp::Ordering {
+        let level = |f: &Faintness| f.weight_db + f.gain_db;
+        level(self).total_cmp(&level(other))
     }
 
     /// A line `by_db` fainter.
-    pub fn fainter(self, by_db: f64) -> Faintness {
+    pub fn fainter(&self, by_db: f64) -> Faintness {
         Faintness {
             gain_db: self.gain_db - by_db,
-            ..self
+            ..*self
         }
     }
 }

@@ -18,12 +18,13 @@
 use super::clusters::{Cluster, Plan};
 use super::evaluate::{Belief, Value, evaluate};
 use super::hidden::{self, Extended, Standing};
-use super::modes::{Places, Setting};
+use super::modes::{Effort, Places, Setting};
 use super::prior::{Normal, Prior};
 use super::scene::{Ladders, Scene, measure};
 use super::solution::{Solution, Solved, unlisted_rate};
 use super::strength::Strengths;
-use super::{clock, clusters, mixture, pairs, places, unlisted};
+use super::wander::MeanRatios;
+use super::{byproducts, clock, clusters, mixture, pairs, places, unlisted};
 use std::rc::Rc;
 
 /// Of a group of sources that exclude each other, that none is.
@@ -55,6 +56,7 @@ pub(super) struct Problem<'a> {
     pub extended: Extended,
     plans: Vec<Plan>,
     strengths: Strengths,
+    mean_ratios: MeanRatios,
     ladders: Ladders,
     groups: Vec<String>,
 }
@@ -91,7 +93,7 @@ impl Problem<'_> {
     /// Places of a cluster where everything else at the tones is `others`.
     pub fn places_of(&self, solved: &Solved, solution: &Solution, others: &[f64]) -> Places {
         let background: Vec<f64> = (0..solution.tones.len())
-            .map(|i| solution.background(i))
+            .map(|i| solution.sourceless(i))
             .collect();
         let setting = Setting {
             tones: &solution.tones,
@@ -99,6 +101,9 @@ impl Problem<'_> {
             strengths: &self.strengths,
             others,
             background: &background,
+            least: &solution.least,
+            mean_ratios: &self.mean_ratios,
+            effort: Effort::new(solution.solved.len(), solution.tones.len()),
             half_hz: self.scene.chain.file_rate_hz() / 2.0,
         };
         match solved.prior.as_slice() {
@@ -140,20 +145,37 @@ pub(super) fn solve(scene: &Scene) -> Vec<(f64, Solution)> {
         plans: clusters::plan(&extended.site),
         ladders: Ladders::new(scene.chain, &tones, up_to),
         strengths,
+        mean_ratios: MeanRatios::new(),
         groups,
         extended,
     };
     let latents: Vec<Normal> = problem.extended.priors.iter().map(Prior::normal).collect();
+    let unlisted = unlisted::densities(scene, &tones);
+    let level_density: Vec<f64> = tones
+        .iter()
+        .map(|t| problem.strengths.background(t.snr_db))
+        .collect();
+    let one: Vec<f64> = unlisted
+        .iter()
+        .zip(&level_density)
+        .map(|(u, l)| (u.total() * l).max(1e-300))
+        .collect();
+    let byproducts = byproducts::find(scene, &tones, &one);
+    let mut byproduct_density = vec![0.0; tones.len()];
+    for b in &byproducts {
+        if let Some(d) = byproduct_density.get_mut(b.tone) {
+            *d += b.density;
+        }
+    }
     let mut start = Solution {
-        unlisted: Rc::new(unlisted::densities(scene, &tones)),
+        byproducts: Rc::new(byproducts),
+        byproduct_density: Rc::new(byproduct_density),
         // Before looking, nothing is explained: sources have to win each tone.
         unlisted_rate: vec![unlisted_rate(tones.len() as f64); tones.len()],
-        level_density: Rc::new(
-            tones
-                .iter()
-                .map(|t| problem.strengths.background(t.snr_db))
-                .collect(),
-        ),
+        least: Rc::new(one.iter().map(|d| unlisted_rate(0.0) * d).collect()),
+        told: vec![0.0; tones.len()],
+        unlisted: Rc::new(unlisted),
+        level_density: Rc::new(level_density),
         tones: Rc::new(tones),
         solved: Vec::new(),
         latents,
@@ -176,6 +198,8 @@ pub(super) fn solve(scene: &Scene) -> Vec<(f64, Solution)> {
             places: Rc::default(),
             value: Value::default(),
             message: vec![0.0; start.tones.len()],
+            met: Vec::new(),
+            first_claims: 0.0,
             share: Vec::new(),
         });
     }
@@ -210,6 +234,7 @@ fn first_look(problem: &Problem, solution: &mut Solution) {
         let others = solution.all_others(Some(c));
         if let Some(s) = solution.solved.get_mut(c) {
             s.value = evaluate(&places, &s.cluster, &beliefs, &others);
+            s.first_claims = s.value.claims(&places, others.len()).iter().sum();
             s.places = Rc::new(places);
         }
     }
@@ -264,6 +289,7 @@ fn run(
                 s.message = m;
             }
         }
+        solution.add_up();
     }
     let mut before = solution.shares();
     // Anonymous families explain what is left over, unless they come first.
@@ -274,22 +300,25 @@ fn run(
     } else {
         2
     };
+    let many = solution.solved.len() > MANY;
     for round in 0..ROUNDS {
         for &c in order {
             let renew = match solution.solved.get(c).map(|s| s.standing) {
                 Some(Standing::Anonymous) if round < from => continue,
-                Some(Standing::Anonymous) => round < from + 3,
-                _ => propose && round == 1,
+                Some(Standing::Anonymous) => round < from + if many { 1 } else { 3 },
+                _ => propose && round == 1 && (!many || lost(c, &solution)),
             };
             if renew {
                 renew_pinned(problem, c, &mut solution);
                 let places = problem.places(c, &solution);
                 if let Some(s) = solution.solved.get_mut(c) {
                     s.places = Rc::new(places);
+                    s.met.clear();
                 }
             }
             update(c, &mut solution);
         }
+        solution.add_up();
         update_unlisted(&mut solution);
         let after = solution.shares();
         let moved = before
@@ -370,26 +399,53 @@ fn messages(claims: &[f64], others: &[f64]) -> Vec<f64> {
         .collect()
 }
 
+/// Others that moved by less than this, relatively, leave a value as it is.
+const UNMOVED: f64 = 1e-3;
+
 fn update(c: usize, solution: &mut Solution) {
     let beliefs = beliefs(c, solution);
     let others = solution.all_others(Some(c));
     let Some(solved) = solution.solved.get_mut(c) else {
         return;
     };
+    let same_beliefs = beliefs.len() == solved.value.beliefs.len()
+        && beliefs
+            .iter()
+            .zip(&solved.value.beliefs)
+            .all(|(a, b)| (a.present / b.present).ln().abs() < UNMOVED);
+    let unmoved = solved.met.len() == others.len()
+        && solved
+            .met
+            .iter()
+            .zip(&others)
+            .all(|(a, b)| (a - b).abs() < UNMOVED * b);
+    if unmoved && same_beliefs {
+        return;
+    }
     solved.value = evaluate(&solved.places, &solved.cluster, &beliefs, &others);
-    let Some(message) = message(c, solution) else {
-        return;
-    };
-    let Some(solved) = solution.solved.get_mut(c) else {
-        return;
-    };
-    solved.message = message;
+    let claims = solved.value.claims(&solved.places, others.len());
+    let message = messages(&claims, &others);
+    solved.met = others;
     let posterior = solved.posterior();
     for (&l, p) in solved.cluster.latents.iter().zip(posterior) {
         if let Some(slot) = solution.latents.get_mut(l) {
             *slot = p;
         }
     }
+    solution.tell(c, message);
+}
+
+/// A cluster that alone would claim tones, but now has less than half of them.
+fn lost(c: usize, solution: &Solution) -> bool {
+    let Some(s) = solution.solved.get(c) else {
+        return false;
+    };
+    let claims: f64 = s
+        .value
+        .claims(&s.places, solution.tones.len())
+        .iter()
+        .sum();
+    s.first_claims > 1.0 && claims < 0.5 * s.first_claims
 }
 
 fn update_unlisted(solution: &mut Solution) {

@@ -43,8 +43,13 @@ pub(super) fn ladder(quartz: bool) -> Vec<(f64, f64)> {
 /// that nothing listed made.
 pub(super) fn ratio(tone: &Measured, line_hz: f64) -> f64 {
     let floor = tone.wander_floor_hz;
-    let measured = (tone.wander_hz.hypot(floor) / floor).ln();
-    let expected = (line_hz.hypot(floor) / floor).ln();
+    ratio_of(
+        (tone.wander_hz.hypot(floor) / floor).ln(),
+        (line_hz.hypot(floor) / floor).ln(),
+    )
+}
+
+fn ratio_of(measured: f64, expected: f64) -> f64 {
     let other = STEADY * normal(measured, SPREAD) + (1.0 - STEADY) / RANGE;
     (1.0 - ODD) * normal(measured - expected, SPREAD) / other + ODD
 }
@@ -121,14 +126,54 @@ pub(super) fn variants(
 }
 
 /// Mean over the ladder of [`ratio`]: where nothing is known of the latents.
-pub(super) fn mean_ratio(tone: &Measured, scale: [f64; 2], quartz: [bool; 2]) -> f64 {
-    // With two latents the one that moves the line more decides.
-    let axis = usize::from(scale[1].abs() > scale[0].abs());
-    let (scale, quartz) = (scale[axis].abs(), quartz[axis]);
-    ladder(quartz)
-        .into_iter()
-        .map(|(w, p)| p * ratio(tone, scale * w))
-        .sum()
+///
+/// Tabulated over the logarithms of the tone's wander and of the line's scale, both
+/// over what can be resolved.
+#[derive(Debug, Clone)]
+pub(super) struct MeanRatios {
+    free: Vec<f64>,
+}
+
+const MEASURED_STEP: f64 = 0.2;
+const MEASURED_STEPS: usize = 45;
+const SCALE_STEP: f64 = 0.5;
+const SCALE_FROM: f64 = -4.0;
+const SCALE_STEPS: usize = 64;
+
+impl MeanRatios {
+    pub fn new() -> MeanRatios {
+        let ladder = ladder(false);
+        let mut free = Vec::with_capacity(MEASURED_STEPS * SCALE_STEPS);
+        for m in 0..MEASURED_STEPS {
+            let measured = m as f64 * MEASURED_STEP;
+            for s in 0..SCALE_STEPS {
+                let scale = (SCALE_FROM + s as f64 * SCALE_STEP).exp();
+                free.push(
+                    ladder
+                        .iter()
+                        .map(|(w, p)| p * ratio_of(measured, (scale * w).hypot(1.0).ln()))
+                        .sum(),
+                );
+            }
+        }
+        MeanRatios { free }
+    }
+
+    /// `scale`: wander of the line per unit of each latent's relative wander, Hz.
+    pub fn get(&self, tone: &Measured, scale: [f64; 2], quartz: [bool; 2]) -> f64 {
+        // With two latents the one that moves the line more decides.
+        let axis = usize::from(scale[1].abs() > scale[0].abs());
+        if quartz[axis] {
+            return ratio(tone, 0.0);
+        }
+        let floor = tone.wander_floor_hz;
+        let measured = (tone.wander_hz.hypot(floor) / floor).ln();
+        let m = (measured / MEASURED_STEP).round() as usize;
+        let scale = (scale[axis].abs() / floor).max(1e-12).ln();
+        let s = ((scale - SCALE_FROM) / SCALE_STEP).round().max(0.0) as usize;
+        let slot = m.min(MEASURED_STEPS - 1) * SCALE_STEPS + s.min(SCALE_STEPS - 1);
+        self.free.get(slot).copied().unwrap_or(1.0)
+    }
 }
 
 #[cfg(test)]
@@ -148,8 +193,8 @@ mod tests {
 
     #[test]
     fn a_wandering_tone_is_not_a_crystals() {
-        let wandering = mean_ratio(&tone(1.0), [1e5, 0.0], [true, false]);
-        let steady = mean_ratio(&tone(0.0), [1e5, 0.0], [true, false]);
+        let wandering = MeanRatios::new().get(&tone(1.0), [1e5, 0.0], [true, false]);
+        let steady = MeanRatios::new().get(&tone(0.0), [1e5, 0.0], [true, false]);
         assert!(wandering < 0.1 && steady > 1.0, "{wandering} {steady}");
     }
 
