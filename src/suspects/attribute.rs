@@ -32,12 +32,7 @@ pub(super) fn attribute(scene: &Scene, solutions: &[(f64, Solution)]) -> Inferen
         ),
     };
     let unlisted: Vec<f64> = (0..scene.tones.len())
-        .map(|i| {
-            solutions
-                .iter()
-                .map(|(w, s)| w * s.left_over(i).0)
-                .sum()
-        })
+        .map(|i| solutions.iter().map(|(w, s)| w * s.left_over(i).0).sum())
         .collect();
     let origins = Origins::new(scene, unlisted.iter().sum());
     let mut findings: Vec<Finding> = scene
@@ -260,7 +255,11 @@ fn own_line(
     let mut terms: Vec<(LatentId, f64)> = Vec::new();
     let mut owner: Option<(usize, &Cause)> = None;
     for &(i, k) in recipe {
-        let best = findings.get(i)?.suspects.iter().find(|s| s.probability > 0.5)?;
+        let best = findings
+            .get(i)?
+            .suspects
+            .iter()
+            .find(|s| s.probability > 0.5)?;
         let Cause::Source { source, line, .. } = &best.cause else {
             return None;
         };
@@ -282,9 +281,11 @@ fn own_line(
     let same = |line: &&Line| {
         line.terms.len() == terms.len()
             && [1.0, -1.0].iter().any(|sign| {
-                line.terms
-                    .iter()
-                    .all(|(l, a)| terms.iter().any(|t| t.0 == *l && (sign * t.1 - a).abs() < 1e-9))
+                line.terms.iter().all(|(l, a)| {
+                    terms
+                        .iter()
+                        .any(|t| t.0 == *l && (sign * t.1 - a).abs() < 1e-9)
+                })
             })
     };
     let index = lines.iter().position(|l| same(&l))?;

@@ -38,10 +38,17 @@ pub(super) struct Byproduct {
 /// Tones that can be parents, and the least SNR for it, dB.
 const PARENTS: usize = 6;
 const PARENT_SNR_DB: f64 = 35.0;
-/// A product is this much weaker than its weakest parent, dB: at least, at most.
-const WEAKER_DB: (f64, f64) = (10.0, 80.0);
-/// Chance that a given product shows, by its order (2, 3, 4, 5).
-const PRODUCT: [f64; 4] = [0.02, 0.02, 0.008, 0.008];
+/// A product is at least this much weaker than its weakest parent, dB: a distortion
+/// of 4 % is already a bad one, unless the input clips.
+const WEAKER_DB: f64 = 28.0;
+/// The same for a parent at the clipping level, and what level that is, dBFS.
+const CLIPPED_WEAKER_DB: f64 = 8.0;
+const CLIPPING_DBFS: f64 = -6.0;
+/// A product is at most this much weaker, dB.
+const WEAKEST_DB: f64 = 90.0;
+/// Chance that a given product shows, by its order (2, 3, 4, 5). Families of sources
+/// make the same patterns and are far more common than distortion.
+const PRODUCT: [f64; 4] = [0.01, 0.01, 0.004, 0.004];
 /// Chance of a spur at a given fraction of the rate.
 const SPUR: f64 = 0.01;
 /// Chance of a copy about half or a quarter of the rate, of a given tone.
@@ -60,12 +67,11 @@ fn gaussian(x: f64, var: f64) -> f64 {
 }
 
 /// Density (per dB) of a by-product's SNR below that of what it comes from.
-fn weaker(parent_db: f64, snr_db: f64) -> f64 {
-    let (least, most) = WEAKER_DB;
+fn weaker(parent_db: f64, least_db: f64, snr_db: f64) -> f64 {
     let below = parent_db - snr_db;
     // Flat with soft edges of a few dB.
-    let edge = |x: f64| 1.0 / (1.0 + (-x / 2.0).exp());
-    edge(below - least) * edge(most - below) / (most - least)
+    let edge = |x: f64| 1.0 / (1.0 + (-x / 1.5).exp());
+    edge(below - least_db) * edge(WEAKEST_DB - below) / (WEAKEST_DB - least_db)
 }
 
 /// Every by-product worth a thought. `background` is the density of one unlisted
@@ -111,6 +117,7 @@ fn products(scene: &Scene, tones: &[Measured], found: &mut Vec<Byproduct>) {
         let mut f = 0.0;
         let mut var = 0.0;
         let mut level = f64::INFINITY;
+        let mut least = CLIPPED_WEAKER_DB;
         let mut order = 0;
         for &(i, k) in &recipe {
             if let Some(t) = tones.get(i) {
@@ -118,6 +125,9 @@ fn products(scene: &Scene, tones: &[Measured], found: &mut Vec<Byproduct>) {
                 // What wanders takes its product along.
                 var += f64::from(k).powi(2) * t.var;
                 level = level.min(t.snr_db);
+                if t.level_dbfs < CLIPPING_DBFS {
+                    least = WEAKER_DB;
+                }
                 order += k.unsigned_abs() as usize;
             }
         }
@@ -133,7 +143,7 @@ fn products(scene: &Scene, tones: &[Measured], found: &mut Vec<Byproduct>) {
                 tone: i,
                 maker: Maker::Parents(recipe.clone()),
                 label: label.clone(),
-                density: chance * gaussian(off, var) * weaker(level, t.snr_db),
+                density: chance * gaussian(off, var) * weaker(level, least, t.snr_db),
             });
         }
     }
@@ -186,7 +196,7 @@ fn spurs(scene: &Scene, tones: &[Measured], background: &[f64], found: &mut Vec<
                             if sign < 0.0 { '-' } else { '+' },
                             parent + 1
                         ),
-                        density: COPY * gaussian(off, var) * weaker(p.snr_db, t.snr_db),
+                        density: COPY * gaussian(off, var) * weaker(p.snr_db, WEAKER_DB, t.snr_db),
                     });
                 }
             }

@@ -275,7 +275,13 @@ impl Broad {
     /// Lines that the prior spreads over more than the band land on any tone alike:
     /// one entry per member and tone stands for all of them, under the name of the
     /// likeliest.
-    pub fn add_diffuse(&mut self, cluster: &Cluster, prior: &Prior, setting: &Setting, lines: &[usize]) {
+    pub fn add_diffuse(
+        &mut self,
+        cluster: &Cluster,
+        prior: &Prior,
+        setting: &Setting,
+        lines: &[usize],
+    ) {
         for member in 0..cluster.members.len() {
             let own: Vec<(usize, &ClusterLine)> = lines
                 .iter()
@@ -292,16 +298,18 @@ impl Broad {
             let nominal = line.a[0] * centre + line.b;
             let mut table: std::collections::BTreeMap<i64, PerClass> = Default::default();
             for (tone, t) in setting.tones.iter().enumerate() {
-                let odds = table.entry((t.snr_db / 2.0).round() as i64).or_insert_with(|| {
-                    let mut sum = [0.0; super::strength::CLASSES];
-                    for (_, l) in &own {
-                        let odds = setting.strengths.odds(&l.faintness, t.snr_db);
-                        for (s, o) in sum.iter_mut().zip(odds) {
-                            *s += o;
+                let odds = table
+                    .entry((t.snr_db / 2.0).round() as i64)
+                    .or_insert_with(|| {
+                        let mut sum = [0.0; super::strength::CLASSES];
+                        for (_, l) in &own {
+                            let odds = setting.strengths.odds(&l.faintness, t.snr_db);
+                            for (s, o) in sum.iter_mut().zip(odds) {
+                                *s += o;
+                            }
                         }
-                    }
-                    sum
-                });
+                        sum
+                    });
                 let scale = [line.a[0] * centre, 0.0];
                 let ratio = setting.mean_ratios.get(t, scale, cluster.quartz);
                 // The rung nearest to where the line is expected.
@@ -314,7 +322,11 @@ impl Broad {
                     tone,
                     density: 1.0 / setting.half_hz,
                     best: (best, 1.0 / setting.half_hz),
-                    folded: if best > setting.half_hz { 1.0 / setting.half_hz } else { 0.0 },
+                    folded: if best > setting.half_hz {
+                        1.0 / setting.half_hz
+                    } else {
+                        0.0
+                    },
                     odds: odds.map(|o| o * ratio),
                 });
             }

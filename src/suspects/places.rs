@@ -71,10 +71,12 @@ fn roles(cluster: &Cluster, prior: &Prior, setting: &Setting) -> Roles {
         order.push((a * (high - low) / setting.half_hz, j));
     }
     // Likely lines first, as many as there is time for.
-    order.sort_by(|p, q| match (cluster.lines.get(p.1), cluster.lines.get(q.1)) {
-        (Some(p), Some(q)) => q.faintness.better(&p.faintness),
-        _ => std::cmp::Ordering::Equal,
-    });
+    order.sort_by(
+        |p, q| match (cluster.lines.get(p.1), cluster.lines.get(q.1)) {
+            (Some(p), Some(q)) => q.faintness.better(&p.faintness),
+            _ => std::cmp::Ordering::Equal,
+        },
+    );
     let mut left = setting.effort.meetings as f64;
     for (bands, j) in order {
         let cost = setting.tones.len() as f64 * bands.max(0.01) + 1.0;

@@ -440,11 +440,7 @@ fn lost(c: usize, solution: &Solution) -> bool {
     let Some(s) = solution.solved.get(c) else {
         return false;
     };
-    let claims: f64 = s
-        .value
-        .claims(&s.places, solution.tones.len())
-        .iter()
-        .sum();
+    let claims: f64 = s.value.claims(&s.places, solution.tones.len()).iter().sum();
     s.first_claims > 1.0 && claims < 0.5 * s.first_claims
 }
 
