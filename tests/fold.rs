@@ -303,7 +303,7 @@ fn inversion_is_the_slope_of_the_map() {
             "case {case}: {f} in {chain:?}"
         );
         assert_eq!(
-            seen.zone % 2 == 0,
+            seen.zone.is_multiple_of(2),
             slope < 0.0,
             "case {case}: {f} in {chain:?}"
         );

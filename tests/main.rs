@@ -1,6 +1,12 @@
 //! Integration tests: the program and the library seen from outside.
+#![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
+mod capture;
+mod cli;
 mod fold;
 mod frontend;
+mod sample_data;
 mod sources;
+mod spectrum;
+mod tones;
 mod windows;

@@ -2,8 +2,50 @@
 //!
 //! A [`Capture`] is opened once and can be passed over as often as needed with
 //! [`Capture::blocks`]; no pass ever holds more than one block of samples.
+//!
+//! WAV: `riff` walks the chunks without trusting a size, `wav` decodes blocks.
+//! CSV: `text` and `line_limit` give bounded lines in UTF-8, `csv_lines`,
+//! `csv_sniff` and `csv_time` find the layout from the first lines, `stamps` and
+//! `dates` read times, `clock_plan` and `clock` turn them into frame numbers and
+//! a rate, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks.
 
-use std::path::PathBuf;
+mod cells;
+mod clock;
+mod clock_plan;
+mod csv;
+mod csv_lines;
+mod csv_rate;
+mod csv_rows;
+mod csv_scan;
+mod csv_sniff;
+mod csv_time;
+mod dates;
+mod error;
+mod line_limit;
+mod probe;
+mod riff;
+mod stamps;
+mod text;
+mod wav;
+
+use std::fs::File;
+use std::path::{Path, PathBuf};
+
+pub use error::CaptureError;
+
+use probe::Kind;
+
+/// Fewest samples per channel that are worth a look.
+const LEAST_FRAMES: u64 = 16;
+/// Most channels, so that no header makes us allocate without bound.
+const MOST_CHANNELS: u64 = 4096;
+
+/// What the user says about a recording.
+#[derive(Debug, Clone, Copy, Default, PartialEq)]
+pub struct OpenOptions {
+    /// Sample rate in hertz; goes before what the file says. Need not be whole.
+    pub rate_hz: Option<f64>,
+}
 
 /// One channel of a recording.
 #[derive(Debug, Clone, PartialEq)]
@@ -50,4 +92,149 @@ pub struct Block {
     pub first_frame: u64,
     /// `samples[channel][i]`; NaN where a value is missing.
     pub samples: Vec<Vec<f32>>,
+}
+
+impl Block {
+    /// Frames in the block.
+    pub fn frames(&self) -> usize {
+        self.samples.first().map_or(0, Vec::len)
+    }
+
+    /// Empties the block for `channels` channels and keeps its memory.
+    fn start(&mut self, first_frame: u64, channels: usize) {
+        self.first_frame = first_frame;
+        self.samples.resize_with(channels, Vec::new);
+        self.samples.iter_mut().for_each(Vec::clear);
+    }
+}
+
+/// An opened recording: what it is, and how to pass over its samples.
+///
+/// Holds no samples and no open file; [`Capture::blocks`] opens it anew.
+#[derive(Debug, Clone)]
+pub struct Capture {
+    spec: Spec,
+    recipe: Recipe,
+}
+
+#[derive(Debug, Clone)]
+enum Recipe {
+    Wav(wav::WavRecipe),
+    Csv(csv::CsvRecipe),
+}
+
+impl Capture {
+    /// Finds out what the file at `path` is. Its content decides, not its
+    /// name, but text named `.wav` is refused. A CSV is read through once: its
+    /// rows are counted and its sample rate is measured.
+    ///
+    /// # Errors
+    /// Where the file cannot be read or is no recording; see [`CaptureError`].
+    pub fn open(path: &Path, options: &OpenOptions) -> Result<Capture, CaptureError> {
+        if let Some(rate_hz) = options.rate_hz {
+            if !(rate_hz.is_finite() && rate_hz > 0.0) {
+                return Err(CaptureError::BadRate { rate_hz });
+            }
+        }
+        let (mut file, length) = open_file(path)?;
+        let (spec, recipe) = match probe::probe(&mut file, path)? {
+            Kind::Wav => {
+                let (spec, recipe) = wav::open(path.to_owned(), file, length, options)?;
+                (spec, Recipe::Wav(recipe))
+            }
+            Kind::Text => {
+                let (spec, recipe) = csv::open(path.to_owned(), options)?;
+                (spec, Recipe::Csv(recipe))
+            }
+        };
+        if spec.frames < LEAST_FRAMES {
+            return Err(CaptureError::TooShort {
+                frames: spec.frames,
+                least: LEAST_FRAMES,
+            });
+        }
+        Ok(Capture { spec, recipe })
+    }
+
+    /// What the recording is.
+    pub fn spec(&self) -> &Spec {
+        &self.spec
+    }
+
+    /// Runs of samples missing between time stamps; their frames are NaN.
+    /// 0 for WAV, whose frames have no stamps.
+    pub fn gaps(&self) -> u64 {
+        match &self.recipe {
+            Recipe::Wav(_) => 0,
+            Recipe::Csv(csv) => csv.gaps(),
+        }
+    }
+
+    /// Starts a pass over all samples, `frames_per_block` frames at a time (at
+    /// least 1). Every pass gives the same samples.
+    ///
+    /// # Errors
+    /// Where the file can no longer be opened.
+    pub fn blocks(&self, frames_per_block: usize) -> Result<Blocks, CaptureError> {
+        let frames_per_block = frames_per_block.max(1);
+        Ok(Blocks(match &self.recipe {
+            Recipe::Wav(wav) => Pass::Wav(wav.blocks(frames_per_block)?),
+            Recipe::Csv(csv) => Pass::Csv(Box::new(csv.blocks(frames_per_block)?)),
+        }))
+    }
+}
+
+/// A pass over the samples of a [`Capture`].
+#[derive(Debug)]
+pub struct Blocks(Pass);
+
+#[derive(Debug)]
+enum Pass {
+    Wav(wav::WavBlocks),
+    Csv(Box<csv::CsvBlocks>),
+}
+
+impl Blocks {
+    /// Fills `block` with the next frames, reusing its memory; every block is
+    /// full but the last. `false`, and an empty block, at the end.
+    ///
+    /// # Errors
+    /// Where the file cannot be read on, or is not what it was when opened.
+    pub fn next_into(&mut self, block: &mut Block) -> Result<bool, CaptureError> {
+        match &mut self.0 {
+            Pass::Wav(wav) => wav.next_into(block),
+            Pass::Csv(csv) => csv.next_into(block),
+        }
+    }
+}
+
+/// Opens a regular file and tells its length in bytes.
+fn open_file(path: &Path) -> Result<(File, u64), CaptureError> {
+    // Before opening: opening a pipe would wait for its writer.
+    let meta = std::fs::metadata(path)?;
+    if meta.is_dir() {
+        return Err(CaptureError::NotAFile {
+            what: "a directory",
+        });
+    }
+    if !meta.is_file() {
+        return Err(CaptureError::NotAFile {
+            what: "a pipe or device",
+        });
+    }
+    let file = File::open(path)?;
+    if meta.len() == 0 {
+        return Err(CaptureError::Empty);
+    }
+    Ok((file, meta.len()))
+}
+
+fn limit_channels(count: u64) -> Result<(), CaptureError> {
+    if count > MOST_CHANNELS {
+        return Err(CaptureError::TooManyChannels {
+            count,
+            limit: MOST_CHANNELS,
+        });
+    }
+    Ok(())
 }

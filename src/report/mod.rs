@@ -1,4 +1,9 @@
-//! report
+//! Results out: the terminal table, the suspect list as CSV, everything as JSON.
+//! Nothing here computes; it formats.
 
+pub mod json;
 pub mod ladder;
 pub mod sources_table;
+pub mod suspect_list;
+pub mod table;
+pub mod text;

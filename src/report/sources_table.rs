@@ -25,12 +25,8 @@ pub fn write(site: &Site, out: &mut dyn Write) -> io::Result<()> {
 fn write_source(catalogue: &Catalogue, source: &Source, out: &mut dyn Write) -> io::Result<()> {
     let count = source.lines.len();
     let plural = if count == 1 { "" } else { "s" };
-    writeln!(
-        out,
-        "{}, {}, {count} line{plural}",
-        printable(&source.name),
-        source.kind
-    )?;
+    let (name, kind) = (printable(&source.name), source.kind);
+    writeln!(out, "{name} ({kind}, {count} line{plural})")?;
     for latent in latents_of(catalogue, source) {
         writeln!(out, "  {}", describe(latent))?;
     }
@@ -40,13 +36,9 @@ fn write_source(catalogue: &Catalogue, source: &Source, out: &mut dyn Write) -> 
     if !source.citation.is_empty() {
         writeln!(out, "  after: {}", printable(&source.citation))?;
     }
-    let rows: Vec<[String; 3]> = source
-        .lines
-        .iter()
-        .map(|line| row(catalogue, line))
-        .collect();
+    let rows = rows(catalogue, &source.lines);
     let heading = ["line", "hz", "u95_hz"].map(str::to_owned);
-    let widths: [usize; 3] = std::array::from_fn(|column| {
+    let [label_width, hz_width, u95_width]: [usize; 3] = std::array::from_fn(|column| {
         rows.iter()
             .chain([&heading])
             .filter_map(|row| row.get(column))
@@ -54,7 +46,6 @@ fn write_source(catalogue: &Catalogue, source: &Source, out: &mut dyn Write) -> 
             .max()
             .unwrap_or(0)
     });
-    let [label_width, hz_width, u95_width] = widths;
     for [label, hz, u95] in std::iter::once(&heading).chain(&rows) {
         writeln!(
             out,
@@ -64,12 +55,25 @@ fn write_source(catalogue: &Catalogue, source: &Source, out: &mut dyn Write) -> 
     Ok(())
 }
 
-fn row(catalogue: &Catalogue, line: &Line) -> [String; 3] {
-    let (hz, u95) = digits(
-        catalogue.nominal_hz(line).abs(),
-        U95 * catalogue.prior_sd_hz(line),
-    );
-    [printable(&line.label), hz, u95]
+/// Label, frequency and ± of each line. Nominal values are exact: they keep three
+/// decimals even where the tolerance is wider, and a source's points line up.
+fn rows(catalogue: &Catalogue, lines: &[Line]) -> Vec<[String; 3]> {
+    let u95 = |line: &Line| U95 * catalogue.prior_sd_hz(line);
+    let decimals = lines
+        .iter()
+        .map(|line| decimals(u95(line)))
+        .fold(3, usize::max);
+    lines
+        .iter()
+        .map(|line| {
+            let hz = catalogue.nominal_hz(line).abs();
+            [
+                printable(&line.label),
+                format!("{hz:.decimals$}"),
+                two_digits(u95(line)),
+            ]
+        })
+        .collect()
 }
 
 /// Latents that the lines of a source rest on, each once.
@@ -87,7 +91,7 @@ fn latents_of<'c>(
 
 fn describe(latent: &Latent) -> String {
     let half_width = U95 * latent.sd_hz;
-    let (hz, u95) = digits(latent.nominal_hz, half_width);
+    let decimals = decimals(half_width).max(3);
     let relative = half_width / latent.nominal_hz;
     let relative = if relative < 0.001 {
         format!("{} ppm", significant(relative * 1e6))
@@ -98,20 +102,28 @@ fn describe(latent: &Latent) -> String {
         Steadiness::Quartz => "crystal-locked",
         Steadiness::Free => "may wander",
     };
-    let name = printable(&latent.name);
-    format!("rests on {name}: {hz} Hz ± {u95} Hz ({relative}), {moves}")
+    format!(
+        "rests on {}: {:.decimals$} Hz ± {} Hz ({relative}), {moves}",
+        printable(&latent.name),
+        latent.nominal_hz,
+        two_digits(half_width),
+    )
 }
 
-/// A value and its uncertainty, to two digits of the latter, at least to the unit.
-fn digits(value: f64, u95: f64) -> (String, String) {
+/// Decimals that show two digits of an uncertainty, at least down to the unit.
+fn decimals(u95: f64) -> usize {
     // Rounding to two digits may carry into a third (0.0996 is 0.10): rounded first.
     let rounded: f64 = format!("{u95:.1e}").parse().unwrap_or(u95);
-    let decimals = if rounded > 0.0 {
+    if rounded > 0.0 {
         (1.0 - rounded.log10().floor()).clamp(0.0, 12.0) as usize
     } else {
-        6
-    };
-    (format!("{value:.decimals$}"), format!("{u95:.decimals$}"))
+        0
+    }
+}
+
+fn two_digits(u95: f64) -> String {
+    let decimals = decimals(u95);
+    format!("{u95:.decimals$}")
 }
 
 /// Two significant digits, without trailing zeros.
@@ -138,16 +150,17 @@ mod tests {
 
     #[test]
     fn two_digits_of_the_uncertainty() {
-        let pair = |value, u95| {
-            let (value, u95) = digits(value, u95);
-            format!("{value} {u95}")
-        };
-        assert_eq!(pair(50.0, 0.5), "50.00 0.50");
-        assert_eq!(pair(1447.0, 28.94), "1447 29");
-        assert_eq!(pair(1447.3, 144.7), "1447 145");
-        assert_eq!(pair(1.0, 0.0996), "1.00 0.10");
-        assert_eq!(pair(32_768.0, 3.2768), "32768.0 3.3");
-        assert_eq!(pair(1.0, 0.0), "1.000000 0.000000");
+        for (u95, shown) in [
+            (0.5, "0.50"),
+            (28.94, "29"),
+            (144.7, "145"),
+            (0.0996, "0.10"),
+            (3.2768, "3.3"),
+            (1e-7, "0.00000010"),
+            (0.0, "0"),
+        ] {
+            assert_eq!(two_digits(u95), shown);
+        }
     }
 
     #[test]
@@ -159,9 +172,21 @@ mod tests {
         let rows = text.lines().filter(|l| l.starts_with("    ")).count();
         let lines: usize = site.catalogue.sources.iter().map(|s| s.lines.len()).sum();
         assert_eq!(rows, lines + site.catalogue.sources.len());
-        assert!(text.contains("mains 50 Hz, mains, 50 lines\n"));
+        assert!(text.contains("mains 50 Hz (mains, 50 lines)\n"));
+        // EN 50160: 50 Hz ± 1 % (from memory).
+        let cells = |n: usize| {
+            text.lines()
+                .nth(n)
+                .unwrap()
+                .split_whitespace()
+                .collect::<Vec<_>>()
+        };
+        assert_eq!(cells(4), ["line", "hz", "u95_hz"]);
+        assert_eq!(cells(5), ["1x", "50.000", "0.50"]);
         assert!(
-            text.contains("rests on watch crystal: 32768.0 Hz ± 3.3 Hz (100 ppm), crystal-locked")
+            text.contains(
+                "rests on watch crystal: 32768.000 Hz ± 3.3 Hz (100 ppm), crystal-locked"
+            )
         );
     }
 }

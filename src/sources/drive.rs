@@ -159,19 +159,39 @@ mod tests {
         }
     }
 
+    fn drive(orders: u32) -> Source {
+        let drive = Drive {
+            name: "fan drive".to_owned(),
+            carrier_hz: 4000.0,
+            carrier_tolerance: CARRIER_TOLERANCE,
+            output_hz: 42.0,
+            output_tolerance: OUTPUT_TOLERANCE,
+            orders,
+        };
+        drive.expand(&mut Vec::new()).1
+    }
+
     #[test]
     fn line_count_is_what_expands() {
         for orders in [1, 2, 3, 10, 11] {
-            let drive = Drive {
-                name: "fan drive".to_owned(),
-                carrier_hz: 4000.0,
-                carrier_tolerance: CARRIER_TOLERANCE,
-                output_hz: 42.0,
-                output_tolerance: OUTPUT_TOLERANCE,
-                orders,
-            };
-            let (_, source) = drive.expand(&mut Vec::new());
-            assert_eq!(source.lines.len() as u64, line_count(orders));
+            assert_eq!(drive(orders).lines.len() as u64, line_count(orders));
         }
+    }
+
+    /// By hand from J0(1.4) = 0.56686, J1(1.4) = 0.54195, J1(2.8) = 0.40971 and
+    /// J0(2.8) = −0.18504 (Abramowitz & Stegun, table 9.1, from memory), each carried
+    /// on to M = 0.9 by its derivative: 4/π·0.5594/0.9 and 2/π·0.4006/0.9.
+    #[test]
+    fn weights_follow_the_double_fourier_series() {
+        let source = drive(2);
+        let weight = |label: &str| {
+            let line = source.lines.iter().find(|line| line.label == label);
+            line.unwrap().weight
+        };
+        assert_eq!(weight("1o"), 1.0);
+        assert!((weight("1c") - 0.7914).abs() < 1e-3);
+        assert!((weight("2c+1o") - 0.2834).abs() < 1e-3);
+        assert_eq!(weight("2c+1o"), weight("2c-1o"));
+        assert_eq!(weight("1c+6o"), LEAST_WEIGHT);
     }
 }

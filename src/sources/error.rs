@@ -195,10 +195,14 @@ fn hint(nearest: Option<&str>, heading: &str, known: &[&'static str]) -> String 
 /// Text of the file made fit for one line: control characters escaped, at most
 /// 60 characters.
 pub(super) fn shown(text: &str) -> String {
-    const MOST: usize = 60;
+    shown_up_to(60, text)
+}
+
+/// As [`shown`], with at most `most` characters.
+pub(super) fn shown_up_to(most: usize, text: &str) -> String {
     let mut out = String::new();
     for (n, c) in text.chars().enumerate() {
-        if n == MOST {
+        if n == most {
             out.push('…');
             break;
         }
@@ -219,7 +223,7 @@ pub(super) fn is_unprintable(c: char) -> bool {
 }
 
 /// The candidate most like `word`, if any is like it: at most two edits, and no
-/// more than half the word's letters (edit distance of Levenshtein 1966).
+/// more than half the word's letters (edits and swaps of neighbours, Damerau 1964).
 pub(super) fn nearest<'a>(
     word: &str,
     candidates: impl IntoIterator<Item = &'a str>,
@@ -234,21 +238,35 @@ pub(super) fn nearest<'a>(
         .map(|(_, candidate)| candidate.to_owned())
 }
 
+/// Insertions, deletions, changes and swaps of neighbours that lead from one word
+/// to the other.
 fn edits(word: &[char], other: &str) -> usize {
-    let mut row: Vec<usize> = (0..=word.len()).collect();
-    for (i, c) in other.chars().take(100).enumerate() {
-        let mut next = Vec::with_capacity(row.len());
-        let mut left = i + 1;
-        next.push(left);
-        for ((&w, &diagonal), &above) in word.iter().zip(&row).zip(row.iter().skip(1)) {
-            left = (diagonal + usize::from(w != c))
-                .min(above + 1)
+    let other: Vec<char> = other.chars().take(100).collect();
+    // Row i holds the distances of other[..i] from each word[..j].
+    let mut rows: Vec<Vec<usize>> = vec![(0..=word.len()).collect()];
+    let cell = |rows: &[Vec<usize>], i: usize, j: usize| {
+        let row = rows.get(i);
+        row.and_then(|row| row.get(j))
+            .copied()
+            .unwrap_or(usize::MAX / 2)
+    };
+    for (i, c) in other.iter().enumerate() {
+        let mut row = vec![i + 1];
+        for (j, w) in word.iter().enumerate() {
+            let left = row.last().copied().unwrap_or(usize::MAX / 2);
+            let mut least = (cell(&rows, i, j) + usize::from(w != c))
+                .min(cell(&rows, i, j + 1) + 1)
                 .min(left + 1);
-            next.push(left);
+            let swapped =
+                i > 0 && j > 0 && word.get(j - 1) == Some(c) && other.get(i - 1) == Some(w);
+            if swapped {
+                least = least.min(cell(&rows, i - 1, j - 1) + 1);
+            }
+            row.push(least);
         }
-        row = next;
+        rows.push(row);
     }
-    row.last().copied().unwrap_or(usize::MAX)
+    cell(&rows, other.len(), word.len())
 }
 
 #[cfg(test)]
@@ -261,6 +279,7 @@ mod tests {
         assert_eq!(edits(&kitten, "sitting"), 3);
         assert_eq!(edits(&kitten, "kitten"), 0);
         assert_eq!(edits(&kitten, ""), 6);
+        assert_eq!(edits(&kitten, "iktten"), 1);
     }
 
     #[test]

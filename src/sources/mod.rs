@@ -10,6 +10,53 @@
 //! [`bearing`], [`tone`]. [`Site::load`] reads a site file or a plain list;
 //! [`Site::builtin`] stands in where there is none.
 //!
+//! # Site file
+//! Two tables, `[recorder]` and `[[source]]`. Every source has a `name` and a
+//! `kind`; the other keys, with their defaults in parentheses:
+//!
+//! | kind | keys |
+//! |---|---|
+//! | `mains` | `hz`, `tolerance` (1 %), `orders` (50) |
+//! | `shaft` | `rpm` or `hz`, `tolerance` (3 %), `orders` (10), `vanes` |
+//! | `clock` | `hz`, `tolerance` (100 ppm), `orders` (10), `sideband_hz`, `sideband_tolerance` (1 %), `sidebands` (3) |
+//! | `drive` | `carrier_hz`, `carrier_tolerance` (3 %), `output_hz`, `output_tolerance` (5 %), `orders` (10); `tolerance` is of both |
+//! | `motor` | `mains_hz` with `mains_tolerance` (1 %), or `fed_by`; `poles`; `rpm` with `tolerance` (the slip, and the supply's), or `slip`; `rotor_bars` |
+//! | `gear` | `on`, `teeth`, `ratio` (1) |
+//! | `bearing` | `on`, `balls`, `ball_mm`, `pitch_mm`, `angle_deg` (0), `tolerance` of each line (2 %) |
+//! | `tone` | `hz`, `tolerance` (1 %) |
+//!
+//! `fed_by` names a mains or a drive, `on` a shaft, a motor or a gear (which then
+//! carries on its own shaft). A motor on a drive may give `mains_hz` too: the
+//! frequency its nameplate's `rpm` is stated for, where that is not 50 or 60 Hz.
+//! Tolerances are ± with 95 %: `"1 %"`, `"100 ppm"`, `"0.5 Hz"`. A range of slip is
+//! `"2..5 %"` or `[0.02, 0.05]`.
+//!
+//! `[recorder]` takes `clock_ppm`, `bandwidth_hz`, `aperture_s`, `stages`,
+//! `full_scale`, and `antialias` with `family`, `order`, `corner_hz` and, as the
+//! family needs them, `ripple_db` and `stop_db`.
+//!
+//! ```
+//! use foldtrace::sources::Site;
+//!
+//! let site = Site::from_toml(
+//!     r#"
+//!     [[source]]
+//!     name = "fan shaft"
+//!     kind = "shaft"
+//!     rpm = 1740
+//!     vanes = 7
+//!     "#,
+//! )?;
+//! let fan = &site.catalogue.sources[0];
+//! let vane_pass = fan.lines.iter().find(|line| line.label == "7x").unwrap();
+//! assert_eq!(site.catalogue.nominal_hz(vane_pass), 203.0);
+//!
+//! let error = Site::from_toml("[[source]]\nkind = \"shaft\"\nrmp = 1740").unwrap_err();
+//! assert!(error.to_string().starts_with("line 3: key `rmp`: is not known here, did you mean `rpm`?"));
+//! # Ok::<(), foldtrace::sources::SiteError>(())
+//! ```
+//!
+//! # Weights
 //! Line weights say how often a line shows, not how strong it is. Whether a line
 //! clears the noise goes with the logarithm of its amplitude, so a family whose
 //! amplitudes fall as 1/k shows its multiples less and less, but more slowly than
@@ -90,7 +137,12 @@ pub struct Source {
     pub citation: String,
     /// Sources of one non-empty group exclude each other (mains at 50 or 60 Hz).
     pub exclusive_group: Option<String>,
+    /// Probability that it is there at all, before the recording is looked at.
+    pub presence: f64,
 }
+
+/// What an analyst writes down is there as often as not.
+pub const LISTED_PRESENCE: f64 = 0.5;
 
 /// The kinds of source.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, serde::Serialize)]
@@ -210,6 +262,7 @@ fn source(name: &str, kind: Kind, lines: Vec<Line>) -> Source {
         lines,
         citation: String::new(),
         exclusive_group: None,
+        presence: LISTED_PRESENCE,
     }
 }
 

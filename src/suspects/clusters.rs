@@ -35,6 +35,8 @@ pub(super) struct Member {
     /// Prior probability of each class.
     pub class_prior: PerClass,
     pub exclusive: Option<usize>,
+    /// Probability that it is there, before looking.
+    pub presence: f64,
 }
 
 /// Sources solved together.
@@ -237,6 +239,7 @@ impl Cluster {
                     .exclusive_group
                     .as_ref()
                     .and_then(|g| groups.iter().position(|known| known == g)),
+                presence: source.presence,
             });
         }
         let quartz = |slot: usize| {

@@ -3,8 +3,10 @@
 //! At given latents and strengths each tone is either a line's or something
 //! else's, and each line shows or hides:
 //!
-//!     L(θ, class) = Π_j (1 − d_j) · Π_i (1 + Σ_j x_ij),
-//!     x_ij = d_j/(1 − d_j) · N(ν_i; g(a_j·θ), σ_ij²) / others_i
+//! ```text
+//! L(θ, class) = Π_j (1 − d_j) · Π_i (1 + Σ_j x_ij),
+//! x_ij = d_j/(1 − d_j) · N(ν_i; g(a_j·θ), σ_ij²) / others_i
+//! ```
 //!
 //! and tone `i` is line `j` with probability `x_ij / (1 + Σ_j x_ij)` there.
 //! Averaged over the whole posterior, the broad node included, this *is* the

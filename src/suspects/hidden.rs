@@ -12,7 +12,7 @@ use crate::sources::{
 };
 
 /// Anonymous harmonic families looked for.
-const ANONYMOUS: usize = 2;
+const ANONYMOUS: usize = 4;
 /// Multiples of each.
 const MULTIPLES: u32 = 12;
 /// Probability that an anonymous family is there, before looking; of each of two.
@@ -93,6 +93,7 @@ pub(super) fn extend(scene: &Scene, clock_sd: f64) -> Extended {
                 .collect(),
             citation: String::new(),
             exclusive_group: None,
+            presence: ANONYMOUS_PRESENT,
         });
         standing.push(Standing::Anonymous);
         priors.push(Prior::Anywhere { low, high: half });

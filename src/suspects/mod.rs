@@ -1,13 +1,13 @@
 //! Which sources could have made each tone, and how probable each is.
 //!
 //! Joint inference over all tones and all listed sources. Sources that share
-//! latent frequencies form a *cluster* ([`clusters`]); where its latents could be
-//! is found from where its lines meet tones ([`places`], [`pairs`]); the likelihood
-//! there, and who explains which tone, is [`evaluate`]; clusters are reconciled
-//! with one another, with [`unlisted`] tones and with the recorder's [`clock`] in
-//! [`sweep`] and [`mixture`]; [`attribute`] puts the result into words. Harmonics
-//! of other tones and the recorder's own artefacts are [`byproducts`]; families that
-//! nobody listed are [`hidden`] beside the listed ones.
+//! latent frequencies form a *cluster* (`clusters`); where its latents could be
+//! is found from where its lines meet tones (`places`, `pairs`); the likelihood
+//! there, and who explains which tone, is `evaluate`; clusters are reconciled
+//! with one another, with `unlisted` tones and with the recorder's `clock` in
+//! `sweep` and `mixture`; `attribute` puts the result into words. Harmonics
+//! of other tones and the recorder's own artefacts are `byproducts`; families that
+//! nobody listed are `hidden` beside the listed ones.
 
 mod attribute;
 mod byproducts;

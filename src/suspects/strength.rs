@@ -5,7 +5,9 @@
 //! off. A line of weight `w` that the front end passes by `A` dB better or worse
 //! than the best one has the expected SNR
 //!
-//!     L = level + slope·20·log10(w) + A,
+//! ```text
+//! L = level + slope·20·log10(w) + A,
+//! ```
 //!
 //! the true one spreads about it with [`SPREAD_DB`], and the line shows if that
 //! clears the detector's threshold. So a missing line counts as much as it was

@@ -9,7 +9,9 @@
 //! Several orders are tried and weighed by their evidence (Bethe's approximation,
 //! Yedidia, Freeman & Weiss 2005, from memory; mixed in [`super::mixture`]):
 //!
-//!     ln Z = Σ_c ln Z_c + Σ_i ln T_i − Σ_c Σ_i ln(T_i / others_ci),
+//! ```text
+//! ln Z = Σ_c ln Z_c + Σ_i ln T_i − Σ_c Σ_i ln(T_i / others_ci),
+//! ```
 //!
 //! `T_i` the sum of everything at tone i, `Z_c` the evidence of cluster c.
 
@@ -25,8 +27,6 @@ use super::wander::MeanRatios;
 use super::{byproducts, clock, clusters, mixture, pairs, places, unlisted};
 use std::rc::Rc;
 
-/// Probability that a listed source is present, before looking.
-const PRESENT: f64 = 0.5;
 /// Of a group of sources that exclude each other, that none is.
 const NONE_OF_GROUP: f64 = 0.1;
 /// Rounds in all.
@@ -355,9 +355,8 @@ pub(super) fn beliefs(c: usize, solution: &Solution) -> Vec<Belief> {
         .iter()
         .map(|member| {
             let (plain, none) = match own.standing {
-                Standing::Listed => (PRESENT, NONE_OF_GROUP),
                 Standing::Supply => (hidden::SUPPLY_PRESENT, 1.0 - hidden::SUPPLY_PRESENT),
-                Standing::Anonymous => (hidden::ANONYMOUS_PRESENT, 0.0),
+                Standing::Listed | Standing::Anonymous => (member.presence, NONE_OF_GROUP),
             };
             let Some(group) = member.exclusive else {
                 return Belief { present: plain };

@@ -12,6 +12,7 @@ const TAKEN: [&str; 2] = ["unlisted", "recorder"];
 
 pub(super) fn link(mut entries: Vec<Entry>) -> Result<Catalogue, SiteError> {
     let index = by_name(&entries)?;
+    check_total(&entries)?;
     let mut latents = Vec::new();
     // What can be ridden on or fed from, and the finished sources, each in the place
     // of its entry.
@@ -77,10 +78,10 @@ pub(super) fn link(mut entries: Vec<Entry>) -> Result<Catalogue, SiteError> {
     for (i, entry) in entries.iter().enumerate() {
         let source = match &entry.description {
             Description::Gear { gear, on } => {
-                gear.expand(turning(&entries, &latent_of, i, on, &find)?).1
+                gear.expand(turning(&entries, &latent_of, on, &find)?).1
             }
             Description::Bearing { bearing, on } => {
-                bearing.expand(turning(&entries, &latent_of, i, on, &find)?)
+                bearing.expand(turning(&entries, &latent_of, on, &find)?)
             }
             _ => continue,
         };
@@ -89,9 +90,10 @@ pub(super) fn link(mut entries: Vec<Entry>) -> Result<Catalogue, SiteError> {
         }
     }
 
-    let sources: Vec<Source> = sources.into_iter().flatten().collect();
-    check_total(&entries, &sources)?;
-    Ok(Catalogue { latents, sources })
+    Ok(Catalogue {
+        latents,
+        sources: sources.into_iter().flatten().collect(),
+    })
 }
 
 fn with_latent((latent, source): (LatentId, Source)) -> (Option<LatentId>, Option<Source>) {
@@ -192,18 +194,13 @@ fn settle(
 fn turning(
     entries: &[Entry],
     latent_of: &[Option<LatentId>],
-    rider: usize,
     on: &Reference,
     find: &impl Fn(&Reference, &'static str) -> Result<Found, SiteError>,
 ) -> Result<Turning, SiteError> {
     let mut at = find(on, "on")?.at;
     let mut ratio = 1.0;
-    // A chain longer than the list goes round in a circle, perhaps one that this
-    // rider is not itself part of.
+    // A chain longer than the list goes round in a circle.
     for _ in 0..=entries.len() {
-        if at == rider {
-            break;
-        }
         if let Some(latent) = latent_of.get(at).copied().flatten() {
             return Ok(Turning { latent, ratio });
         }
@@ -218,10 +215,11 @@ fn turning(
     Err(SiteError::key(on.line, "on", Problem::Cycle { got }))
 }
 
-fn check_total(entries: &[Entry], sources: &[Source]) -> Result<(), SiteError> {
+/// Before anything is expanded, so that no file can ask for more memory than this.
+fn check_total(entries: &[Entry]) -> Result<(), SiteError> {
     let mut total = 0;
-    for (entry, source) in entries.iter().zip(sources) {
-        total += source.lines.len();
+    for entry in entries {
+        total += entry.most_lines();
         if total > MAX_LINES {
             return Err(SiteError::key(
                 entry.line,

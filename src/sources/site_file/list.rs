@@ -1,7 +1,7 @@
 //! A plain list: `name,hz,tolerance,orders`.
 
 use super::table::{out_of_range, printable, tolerance_of};
-use super::{Description, Entry, MAX_LINES_PER_SOURCE};
+use super::{Description, Entry, Lines, MAX_LINES_PER_SOURCE};
 use crate::sources::Steadiness;
 use crate::sources::clock::Clock;
 use crate::sources::error::{Problem, SiteError, nearest, shown};
@@ -23,7 +23,8 @@ pub(super) fn is_list(text: &str) -> bool {
     })
 }
 
-fn heading(text: &str) -> Option<&str> {
+/// The first line with anything on it.
+pub(super) fn heading(text: &str) -> Option<&str> {
     super::without_mark(text)
         .lines()
         .find(|line| !line.trim().is_empty() && !line.starts_with('#'))
@@ -55,16 +56,19 @@ pub(super) fn read(text: &str) -> Result<Vec<Entry>, SiteError> {
         .has_headers(false)
         .trim(csv::Trim::All)
         .from_reader(text.as_bytes());
+    let lines = Lines::of(text.as_bytes());
     let mut layout = None;
     let mut entries = Vec::new();
     for record in reader.records() {
         let record = record.map_err(|error| SiteError::Syntax {
             line: error
                 .position()
-                .map_or(1, |position| record_line(text, position)),
+                .map_or(1, |position| record_line(text, &lines, position)),
             message: "cannot be read as a row of the list (check its quotes)".to_owned(),
         })?;
-        let line = record.position().map_or(1, |p| record_line(text, p));
+        let line = record
+            .position()
+            .map_or(1, |p| record_line(text, &lines, p));
         if record.iter().all(str::is_empty) {
             continue;
         }
@@ -80,7 +84,7 @@ pub(super) fn read(text: &str) -> Result<Vec<Entry>, SiteError> {
 }
 
 /// Line on which a record starts, past the blank lines and comments before it.
-fn record_line(text: &str, position: &csv::Position) -> usize {
+fn record_line(text: &str, lines: &Lines, position: &csv::Position) -> usize {
     let mut offset = usize::try_from(position.byte()).unwrap_or(usize::MAX);
     while let Some(rest) = text.get(offset..) {
         let line = rest.split_inclusive('\n').next().unwrap_or("");
@@ -90,7 +94,7 @@ fn record_line(text: &str, position: &csv::Position) -> usize {
         }
         offset += line.len();
     }
-    super::line_at(text.as_bytes(), offset)
+    lines.at(offset)
 }
 
 impl Layout {

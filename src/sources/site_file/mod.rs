@@ -17,7 +17,7 @@ use std::path::Path;
 /// Most lines that one source may list.
 pub const MAX_LINES_PER_SOURCE: u32 = 10_000;
 /// Most lines that a whole site may list.
-const MAX_LINES: usize = 200_000;
+const MAX_LINES: u64 = 200_000;
 /// Longest site file, bytes.
 const MAX_BYTES: u64 = 8 << 20;
 
@@ -81,6 +81,24 @@ impl Entry {
         }
     }
 
+    /// How many lines it expands to, at most.
+    fn most_lines(&self) -> u64 {
+        match &self.description {
+            Description::Mains(d) => u64::from(d.orders),
+            Description::Shaft(d) => u64::from(d.orders) + u64::from(shaft::VANE_MULTIPLES),
+            Description::Clock(d) => {
+                let sidebands = d.sidebands.as_ref().map_or(0, |s| u64::from(s.count));
+                u64::from(d.orders) * (1 + 2 * sidebands)
+            }
+            Description::Drive(d) => drive::line_count(d.orders),
+            // Fixed families, none as long as this.
+            Description::Motor { .. } | Description::Gear { .. } | Description::Bearing { .. } => {
+                50
+            }
+            Description::Tone(_) => 1,
+        }
+    }
+
     fn kind(&self) -> Kind {
         match &self.description {
             Description::Mains(_) => Kind::Mains,
@@ -115,8 +133,9 @@ impl Site {
         }
         let text = String::from_utf8(bytes).map_err(|error| {
             let good = error.utf8_error().valid_up_to();
-            let line = line_at(error.as_bytes(), good);
-            SiteError::NotUtf8 { line }
+            SiteError::NotUtf8 {
+                line: Lines::of(error.as_bytes()).at(good),
+            }
         })?;
         let named_as_list = path
             .extension()
@@ -140,8 +159,9 @@ impl Site {
     /// Whatever is wrong, with its line and key; see [`SiteError`].
     pub fn from_toml(text: &str) -> Result<Site, SiteError> {
         let text = without_mark(text);
-        let document = table::parse(text)?;
-        let root = table::Table::root(text, document.get_ref());
+        let lines = Lines::of(text.as_bytes());
+        let document = table::parse(text, &lines)?;
+        let root = table::Table::root(&lines, document.get_ref());
         root.allow(&["recorder", "source"])?;
         let recorder = match root.table("recorder")? {
             Some(table) => Some(recorder::read(&table)?),
@@ -181,8 +201,22 @@ fn without_mark(text: &str) -> &str {
     text.strip_prefix('\u{feff}').unwrap_or(text)
 }
 
-/// The line, from 1, of a byte of the text.
-fn line_at(text: &[u8], offset: usize) -> usize {
-    let before = text.get(..offset).unwrap_or(text);
-    1 + before.iter().filter(|&&byte| byte == b'\n').count()
+/// Where the lines of a text start, to find the line of a byte.
+struct Lines {
+    /// Offset past each newline, rising.
+    starts: Vec<usize>,
+}
+
+impl Lines {
+    fn of(text: &[u8]) -> Self {
+        let newlines = text.iter().enumerate().filter(|&(_, &byte)| byte == b'\n');
+        Lines {
+            starts: newlines.map(|(at, _)| at + 1).collect(),
+        }
+    }
+
+    /// The line, from 1, of a byte.
+    fn at(&self, offset: usize) -> usize {
+        1 + self.starts.partition_point(|&start| start <= offset)
+    }
 }

@@ -1,24 +1,32 @@
 //! A TOML table with its line numbers, and typed access to its keys.
 
-use super::line_at;
-use crate::sources::error::{Problem, SiteError, is_unprintable, nearest, shown};
+use super::Lines;
+use crate::sources::error::{Problem, SiteError, is_unprintable, nearest, shown, shown_up_to};
 use crate::sources::quantity::{MAX_HZ, MIN_HZ, Tolerance, parse_tolerance};
 use toml::Spanned;
 use toml::de::{DeInteger, DeTable, DeValue};
 
 /// Parses a document.
-pub(super) fn parse(text: &str) -> Result<Spanned<DeTable<'_>>, SiteError> {
-    DeTable::parse(text).map_err(|error| SiteError::Syntax {
-        line: error
-            .span()
-            .map_or(1, |span| line_at(text.as_bytes(), span.start)),
-        message: shown(error.message()),
+pub(super) fn parse<'t>(text: &'t str, lines: &Lines) -> Result<Spanned<DeTable<'t>>, SiteError> {
+    DeTable::parse(text).map_err(|error| {
+        let said = shown_up_to(200, error.message());
+        let looks_like_a_list = super::list::heading(text)
+            .is_some_and(|heading| heading.contains([',', ';', '\t']) && !heading.contains('='));
+        let hint = if looks_like_a_list {
+            " (a plain list starts with the heading name,hz,tolerance,orders)"
+        } else {
+            ""
+        };
+        SiteError::Syntax {
+            line: error.span().map_or(1, |span| lines.at(span.start)),
+            message: format!("is not TOML: {said}{hint}"),
+        }
     })
 }
 
 /// A table of the document.
 pub(super) struct Table<'a> {
-    text: &'a str,
+    lines: &'a Lines,
     entries: &'a DeTable<'a>,
     /// Line of its heading, from 1.
     pub(super) line: usize,
@@ -31,9 +39,9 @@ pub(super) struct At<T> {
 }
 
 impl<'a> Table<'a> {
-    pub(super) fn root(text: &'a str, entries: &'a DeTable<'a>) -> Self {
+    pub(super) fn root(lines: &'a Lines, entries: &'a DeTable<'a>) -> Self {
         Table {
-            text,
+            lines,
             entries,
             line: 1,
         }
@@ -50,7 +58,7 @@ impl<'a> Table<'a> {
     }
 
     fn line_of(&self, offset: usize) -> usize {
-        line_at(self.text.as_bytes(), offset)
+        self.lines.at(offset)
     }
 
     pub(super) fn has(&self, key: &str) -> bool {
@@ -112,7 +120,7 @@ impl<'a> Table<'a> {
                 value: DeValue::Table(entries),
                 line,
             }) => Ok(Some(Table {
-                text: self.text,
+                lines: self.lines,
                 entries,
                 line,
             })),
@@ -132,7 +140,7 @@ impl<'a> Table<'a> {
         list.iter()
             .map(|item| match item.get_ref() {
                 DeValue::Table(entries) => Ok(Table {
-                    text: self.text,
+                    lines: self.lines,
                     entries,
                     line: self.line_of(item.span().start),
                 }),

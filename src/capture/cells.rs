@@ -1,0 +1,284 @@
+//! Single cells of a table: numbers, missing values, column names and units.
+
+use super::text::to_text;
+
+/// What a cell holds.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub(super) enum Cell {
+    Number(f64),
+    /// Nothing, or one of the usual marks for nothing.
+    Missing,
+    Word,
+}
+
+/// Marks of a missing value, in lower case. NaN and infinities are missing too.
+const MISSING: &[&str] = &[
+    "-",
+    "--",
+    "---",
+    "*",
+    "?",
+    "na",
+    "n/a",
+    "#n/a",
+    "n.a.",
+    "null",
+    "nil",
+    "none",
+    "ol",
+    "o.l",
+    "+ol",
+    "-ol",
+    "over",
+    "overload",
+    "overflow",
+    "ovl",
+    "ovf",
+    "invalid",
+    "bad",
+    "err",
+    "error",
+    "#value!",
+    "#div/0!",
+    "#num!",
+    "#ref!",
+    "missing",
+    "1.#ind",
+    "-1.#ind",
+    "1.#qnan",
+    "-1.#qnan",
+    "1.#inf",
+    "-1.#inf",
+    "-nan(ind)",
+];
+
+/// Reads a cell: decimal point or comma, exponent, either minus sign.
+pub(super) fn read_cell(bytes: &[u8]) -> Cell {
+    // Quotes are there where the reader was not told to expect any.
+    let bytes = match trim(bytes) {
+        [b'"', inside @ .., b'"'] => trim(inside),
+        bytes => bytes,
+    };
+    if bytes.is_empty() {
+        return Cell::Missing;
+    }
+    match parse(bytes).or_else(|| parse_mended(bytes)) {
+        Some(number) if number.is_finite() => Cell::Number(number),
+        Some(_) => Cell::Missing,
+        None if is_missing_mark(bytes) => Cell::Missing,
+        None => Cell::Word,
+    }
+}
+
+/// Without blanks, also the non-breaking ones of Latin-1 and UTF-8.
+pub(super) fn trim(bytes: &[u8]) -> &[u8] {
+    let mut bytes = bytes.trim_ascii();
+    loop {
+        bytes = match bytes {
+            // Before the lone byte, for it may end another character.
+            [b'\xC2', b'\xA0', rest @ ..] | [rest @ .., b'\xC2', b'\xA0'] => rest,
+            [b'\xA0', rest @ ..] => rest,
+            [rest @ .., b'\xA0'] if rest.is_ascii() => rest,
+            _ => return bytes,
+        }
+        .trim_ascii();
+    }
+}
+
+fn parse(bytes: &[u8]) -> Option<f64> {
+    std::str::from_utf8(bytes).ok()?.parse().ok()
+}
+
+/// Decimal comma, and the minus sign of typography.
+fn parse_mended(bytes: &[u8]) -> Option<f64> {
+    const LONGEST: usize = 64;
+    const MINUS: &[u8] = "\u{2212}".as_bytes();
+    let (sign, digits) = match bytes.strip_prefix(MINUS) {
+        Some(rest) => (-1.0, rest),
+        None => (1.0, bytes),
+    };
+    if sign < 0.0
+        && !digits
+            .first()
+            .is_some_and(|&c| c.is_ascii_digit() || c == b'.' || c == b',')
+    {
+        return None;
+    }
+    let mut buffer = [0; LONGEST];
+    let copy = buffer.get_mut(..digits.len())?;
+    copy.copy_from_slice(digits);
+    let mut marks = copy.iter_mut().filter(|c| matches!(c, b',' | b'.'));
+    // Two marks would be thousands separators, which cannot be told apart.
+    if let (Some(mark), None) = (marks.next(), marks.next()) {
+        *mark = b'.';
+    }
+    parse(copy).map(|number| sign * number)
+}
+
+fn is_missing_mark(bytes: &[u8]) -> bool {
+    MISSING
+        .iter()
+        .any(|mark| bytes.eq_ignore_ascii_case(mark.as_bytes()))
+}
+
+/// Whether a record is a remark: `#`, `%`, `//`, or a `;` that is not the
+/// delimiter.
+pub(super) fn is_remark(first: &[u8], delimiter: u8) -> bool {
+    let first = first.trim_ascii_start();
+    first.starts_with(b"#") && !is_missing_mark(first.trim_ascii_end())
+        || first.starts_with(b"%")
+        || first.starts_with(b"//")
+        || (first.starts_with(b";") && delimiter != b';')
+}
+
+/// A column's heading, taken apart.
+#[derive(Debug, Clone, Default, PartialEq)]
+pub(super) struct Heading {
+    /// Without the unit.
+    pub name: String,
+    pub unit: Option<String>,
+}
+
+/// `accel [m/s^2]`, `U (V)`, `t/s` or plain `x`.
+pub(super) fn read_heading(bytes: &[u8]) -> Heading {
+    /// Characters of a name that are kept.
+    const LONGEST: usize = 120;
+    let mut text = to_text(bytes).replace(|c: char| c.is_control() || c == '\u{FEFF}', " ");
+    if let Some((end, _)) = text.char_indices().nth(LONGEST) {
+        text.truncate(end);
+        text.push('…');
+    }
+    let text = text.trim();
+    for (open, close) in [('[', ']'), ('(', ')'), ('{', '}'), ('<', '>')] {
+        let inside = text
+            .strip_suffix(close)
+            .and_then(|rest| rest.rsplit_once(open));
+        if let Some((name, unit)) = inside {
+            let (name, unit) = (name.trim(), unit.trim());
+            // "x (left)" is a name, but a bracketed unit may be any word.
+            if !unit.is_empty() && (open == '[' || is_unit(unit)) {
+                let name = if name.is_empty() { text } else { name };
+                return Heading {
+                    name: name.into(),
+                    unit: Some(unit.into()),
+                };
+            }
+        }
+    }
+    for separator in ['/', ','] {
+        if let Some((name, unit)) = text.split_once(separator) {
+            if is_unit(unit.trim()) && !name.trim().is_empty() {
+                return Heading {
+                    name: name.trim().into(),
+                    unit: Some(unit.trim().into()),
+                };
+            }
+        }
+    }
+    Heading {
+        name: text.into(),
+        unit: None,
+    }
+}
+
+/// Units of what recorders measure, without prefix.
+const UNITS: &[&str] = &[
+    "s", "sec", "min", "h", "V", "A", "W", "VA", "var", "Hz", "g", "m/s^2", "m/s²", "m/s2",
+    "m/s**2", "m/s", "m", "in", "in/s", "mil", "mils", "ips", "Pa", "bar", "psi", "N", "Nm", "N·m",
+    "N*m", "T", "G", "gauss", "K", "C", "degC", "°C", "F", "degF", "°F", "deg", "°", "rad",
+    "rad/s", "deg/s", "°/s", "rpm", "1/min", "min-1", "r/min", "%", "dB", "dBm", "dBV", "ohm", "Ω",
+    "F", "H", "C", "lx", "e", "eV", "V/m", "A/m", "l/min", "m3/h", "m³/h", "strain", "m/m", "1",
+    "pu", "p.u.", "counts", "LSB", "FS", "Vrms", "Arms", "Vpp", "gn", "g_n",
+];
+
+/// Whether `text` is a known unit, with or without a prefix.
+pub(super) fn is_unit(text: &str) -> bool {
+    const PREFIXES: &[char] = &['n', 'u', 'µ', 'μ', 'm', 'c', 'k', 'M', 'G', 'p'];
+    let known = |unit: &str| UNITS.contains(&unit);
+    known(text) || text.strip_prefix(PREFIXES).is_some_and(known)
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn cells() {
+        for (text, number) in [
+            ("1.5", 1.5),
+            ("-0,25", -0.25),
+            (" +7 ", 7.0),
+            (".5", 0.5),
+            (",5", 0.5),
+            ("5.", 5.0),
+            ("1e-3", 0.001),
+            ("1,5E3", 1500.0),
+            ("\u{2212}3.5", -3.5),
+            ("\u{A0}4\u{A0}", 4.0),
+            ("\"6\"", 6.0),
+        ] {
+            assert_eq!(read_cell(text.as_bytes()), Cell::Number(number), "{text:?}");
+        }
+        assert_eq!(read_cell(b"\xA04\xA0"), Cell::Number(4.0));
+        assert_eq!(trim("à".as_bytes()), "à".as_bytes());
+        assert_eq!(read_cell(b"4\xA0"), Cell::Number(4.0));
+        for text in [
+            "", "  ", "NaN", "nan", "inf", "-inf", "1e999", "#N/A", "ol", "--", "\"\"",
+        ] {
+            assert_eq!(read_cell(text.as_bytes()), Cell::Missing, "{text:?}");
+        }
+        let long = "1".repeat(1000) + "x";
+        for text in [
+            "x",
+            "1.2.3",
+            "1,234.5",
+            "1.234,5",
+            "1 2",
+            "0x10",
+            "5 V",
+            "1,2,3",
+            "\u{2212}",
+            "\u{2212}-1",
+            &long,
+        ] {
+            assert_eq!(read_cell(text.as_bytes()), Cell::Word, "{text:?}");
+        }
+    }
+
+    #[test]
+    fn remarks() {
+        for text in ["# x", "#", " #x", "% x", "// x", "; x"] {
+            assert!(is_remark(text.as_bytes(), b','), "{text:?}");
+        }
+        for text in ["#N/A", "#VALUE!", "x", "/x", ""] {
+            assert!(!is_remark(text.as_bytes(), b','), "{text:?}");
+        }
+        assert!(!is_remark(b";1", b';'));
+    }
+
+    #[test]
+    fn headings() {
+        for (text, name, unit) in [
+            ("accel [m/s^2]", "accel", Some("m/s^2")),
+            ("U (mV)", "U", Some("mV")),
+            ("x (left)", "x (left)", None),
+            ("x [left]", "x", Some("left")),
+            ("[V]", "[V]", Some("V")),
+            ("t/s", "t", Some("s")),
+            ("a/b", "a/b", None),
+            ("a, g", "a", Some("g")),
+            ("a\u{7}b", "a b", None),
+            ("", "", None),
+            ("()", "()", None),
+        ] {
+            let heading = read_heading(text.as_bytes());
+            assert_eq!(
+                (heading.name.as_str(), heading.unit.as_deref()),
+                (name, unit),
+                "{text:?}"
+            );
+        }
+        assert_eq!(read_heading(&[b'x'; 1000]).name.chars().count(), 121);
+        assert_eq!(read_heading(b"Gr\xF6\xDFe [\xB0]").name, "Größe");
+    }
+}

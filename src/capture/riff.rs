@@ -1,0 +1,373 @@
+//! The chunks of a RIFF/WAVE file, read without trusting any of its sizes.
+//!
+//! Layout after the "Multimedia Programming Interface and Data Specifications
+//! 1.0" (RIFF), Microsoft's `WAVEFORMATEXTENSIBLE`, and EBU Tech 3306 (RF64,
+//! with the 64-bit sizes in a `ds64` chunk).
+
+use std::io::{Read, Seek, SeekFrom};
+
+use super::error::CaptureError;
+
+/// Bytes in a chunk's identifier and size.
+const CHUNK_HEADER: u64 = 8;
+/// "Not known yet", in every 32-bit size field.
+const UNKNOWN_SIZE: u32 = u32::MAX;
+/// Chunks looked at before the file is given up as garbage.
+const MOST_CHUNKS: usize = 10_000;
+
+/// How samples are coded.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub(super) enum Coding {
+    /// Integers; unsigned where they fit one byte.
+    Integer,
+    /// IEEE 754.
+    Float,
+}
+
+/// The `fmt ` chunk, mended where it contradicts itself.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub(super) struct Format {
+    pub coding: Coding,
+    pub channels: u16,
+    pub rate_hz: u32,
+    /// Bits that carry the sample.
+    pub valid_bits: u16,
+    /// Bytes that hold one sample of one channel.
+    pub width: u16,
+}
+
+/// Where the samples are.
+#[derive(Debug, Clone, PartialEq)]
+pub(super) struct Layout {
+    pub format: Format,
+    /// Byte in the file at which the samples start.
+    pub data_start: u64,
+    /// Whole frames in the file.
+    pub frames: u64,
+    /// RF64 or BW64 rather than RIFF.
+    pub large: bool,
+    pub notes: Vec<String>,
+}
+
+struct Chunk {
+    id: [u8; 4],
+    size: u32,
+    /// First byte after the header.
+    start: u64,
+}
+
+/// Finds format and samples in `file`, which is `length` bytes long. Reads
+/// only chunk headers, `fmt `, `ds64` and the head of `bext`.
+pub(super) fn walk<F: Read + Seek>(file: &mut F, length: u64) -> Result<Layout, CaptureError> {
+    let mut head = [0; 12];
+    file.seek(SeekFrom::Start(0))?;
+    if read_up_to(file, &mut head)? < head.len() || !is_wave(&head) {
+        return Err(bad("the file ends inside it".into()));
+    }
+    let large = !head.starts_with(b"RIFF");
+    let mut notes = Vec::new();
+    let mut format = None;
+    let mut data: Option<(Chunk, u64)> = None;
+    let mut large_data_size = None;
+    let mut at = head.len() as u64;
+
+    for _ in 0..MOST_CHUNKS {
+        let Some(chunk) = read_chunk(file, at)? else {
+            break;
+        };
+        let start = chunk.start;
+        let rest = length.saturating_sub(start);
+        let mut size = u64::from(chunk.size);
+        match &chunk.id {
+            b"fmt " if format.is_none() => format = Some(read_format(file, size, &mut notes)?),
+            b"ds64" if large => large_data_size = read_ds64(file)?,
+            b"bext" => notes.extend(read_bext(file, size)?),
+            b"data" if data.is_none() => {
+                if chunk.size == UNKNOWN_SIZE && large {
+                    size = large_data_size.filter(|&size| size > 0).unwrap_or(size);
+                }
+                if chunk.size == 0 && rest > 0 && read_chunk(file, chunk.start)?.is_none() {
+                    notes.push("the header was never finished: read to the end of the file".into());
+                    size = rest;
+                } else if size < rest && is_wrapped(file, &chunk, size, rest)? {
+                    notes.push("more than 4 GiB of samples: read to the end of the file".into());
+                    size = rest;
+                }
+                data = Some((chunk, size));
+            }
+            b"data" => notes.push("a second data chunk was left out".into()),
+            _ => {}
+        }
+        if start.checked_add(size).is_none_or(|end| end >= length) {
+            break;
+        }
+        at = next_chunk(file, start, size)?;
+    }
+
+    let format = format.ok_or_else(|| bad("no format chunk".into()))?;
+    let (chunk, claimed) = data.ok_or_else(|| bad("no data chunk".into()))?;
+    let held = length.saturating_sub(chunk.start);
+    let frame = u64::from(format.width) * u64::from(format.channels);
+    if claimed > held {
+        notes.push(
+            if chunk.size == UNKNOWN_SIZE && claimed == u64::from(UNKNOWN_SIZE) {
+                "the header was never finished: read to the end of the file".into()
+            } else {
+                format!(
+                    "data chunk claims {} frames, file holds {}: read to the end",
+                    claimed / frame,
+                    held / frame
+                )
+            },
+        );
+    }
+    let bytes = claimed.min(held);
+    if bytes % frame != 0 {
+        notes.push(format!(
+            "the last {} bytes are no whole frame: left out",
+            bytes % frame
+        ));
+    }
+    Ok(Layout {
+        format,
+        data_start: chunk.start,
+        frames: bytes / frame,
+        large,
+        notes,
+    })
+}
+
+/// Whether the first 12 bytes are those of a wave file.
+pub(super) fn is_wave(head: &[u8]) -> bool {
+    let magic = head.get(..4).unwrap_or_default();
+    matches!(magic, b"RIFF" | b"RF64" | b"BW64") && head.get(8..12) == Some(b"WAVE")
+}
+
+fn bad(what: String) -> CaptureError {
+    CaptureError::BadWavHeader { what }
+}
+
+/// Fills as much of `buffer` as the reader gives.
+pub(super) fn read_up_to<F: Read>(file: &mut F, buffer: &mut [u8]) -> std::io::Result<usize> {
+    let mut filled = 0;
+    while let Some(rest) = buffer.get_mut(filled..).filter(|rest| !rest.is_empty()) {
+        match file.read(rest) {
+            Ok(0) => break,
+            Ok(n) => filled += n,
+            Err(e) if e.kind() == std::io::ErrorKind::Interrupted => {}
+            Err(e) => return Err(e),
+        }
+    }
+    Ok(filled)
+}
+
+/// The chunk header at `at`; `None` at the end of the file or where the four
+/// bytes cannot be an identifier (printable ASCII by the RIFF specification).
+fn read_chunk<F: Read + Seek>(file: &mut F, at: u64) -> Result<Option<Chunk>, CaptureError> {
+    let mut header = [0; CHUNK_HEADER as usize];
+    file.seek(SeekFrom::Start(at))?;
+    if read_up_to(file, &mut header)? < header.len() {
+        return Ok(None);
+    }
+    let [a, b, c, d, size @ ..] = header;
+    let id = [a, b, c, d];
+    if !id.iter().all(|byte| (b' '..=b'~').contains(byte)) {
+        return Ok(None);
+    }
+    Ok(Some(Chunk {
+        id,
+        size: u32::from_le_bytes(size),
+        start: at + CHUNK_HEADER,
+    }))
+}
+
+/// Where the chunk after one of `size` bytes from `start` on begins: after a
+/// pad byte if the size is odd, but some writers forget it.
+fn next_chunk<F: Read + Seek>(file: &mut F, start: u64, size: u64) -> Result<u64, CaptureError> {
+    let end = start + size;
+    if size.is_multiple_of(2) {
+        return Ok(end);
+    }
+    let known = |chunk: &Option<Chunk>| {
+        let id = chunk.as_ref().map(|chunk| chunk.id);
+        id.is_some_and(|id| [b"fmt ", b"data", b"fact", b"LIST", b"bext"].contains(&&id))
+    };
+    let padded = read_chunk(file, end + 1)?;
+    let unpadded = read_chunk(file, end)?;
+    let forgotten = !known(&padded) && (known(&unpadded) || padded.is_none() && unpadded.is_some());
+    Ok(if forgotten { end } else { end + 1 })
+}
+
+/// A data chunk of more than 4 GiB whose 32-bit size has wrapped around: whole
+/// multiples of 2^32 more than it says reach past where it claims to end, and
+/// no chunk starts there.
+fn is_wrapped<F: Read + Seek>(
+    file: &mut F,
+    chunk: &Chunk,
+    size: u64,
+    rest: u64,
+) -> Result<bool, CaptureError> {
+    if rest - size < 1 << 32 {
+        return Ok(false);
+    }
+    let next = next_chunk(file, chunk.start, size)?;
+    Ok(read_chunk(file, next)?.is_none())
+}
+
+fn le_u16(bytes: &[u8], at: usize) -> Option<u16> {
+    bytes
+        .get(at..at + 2)?
+        .try_into()
+        .ok()
+        .map(u16::from_le_bytes)
+}
+
+fn le_u32(bytes: &[u8], at: usize) -> Option<u32> {
+    bytes
+        .get(at..at + 4)?
+        .try_into()
+        .ok()
+        .map(u32::from_le_bytes)
+}
+
+fn le_u64(bytes: &[u8], at: usize) -> Option<u64> {
+    bytes
+        .get(at..at + 8)?
+        .try_into()
+        .ok()
+        .map(u64::from_le_bytes)
+}
+
+/// Reads a `fmt ` chunk of `size` bytes from where the file stands.
+fn read_format<F: Read>(
+    file: &mut F,
+    size: u64,
+    notes: &mut Vec<String>,
+) -> Result<Format, CaptureError> {
+    let mut buffer = [0; 40];
+    let wanted = buffer
+        .len()
+        .min(usize::try_from(size).unwrap_or(usize::MAX));
+    let got = read_up_to(file, buffer.get_mut(..wanted).unwrap_or_default())?;
+    let bytes = buffer.get(..got).unwrap_or_default();
+    let short = || bad(format!("format chunk of {got} bytes (16 are needed)"));
+    let mut tag = le_u16(bytes, 0).ok_or_else(short)?;
+    let channels = le_u16(bytes, 2).ok_or_else(short)?;
+    let rate_hz = le_u32(bytes, 4).ok_or_else(short)?;
+    let byte_rate = le_u32(bytes, 8).ok_or_else(short)?;
+    let frame = le_u16(bytes, 12).ok_or_else(short)?;
+    let bits = le_u16(bytes, 14).ok_or_else(short)?;
+    let mut valid_bits = bits;
+    const EXTENSIBLE: u16 = 0xFFFE;
+    if tag == EXTENSIBLE {
+        let cut = || {
+            bad(format!(
+                "extensible format chunk of {got} bytes (40 are needed)"
+            ))
+        };
+        // A writer that leaves the valid bits 0 means all of them.
+        valid_bits = le_u16(bytes, 18)
+            .filter(|&n| n > 0 && n <= bits)
+            .unwrap_or(bits);
+        tag = le_u16(bytes, 24).ok_or_else(cut)?;
+        // The rest of KSDATAFORMAT_SUBTYPE_*: a coding number made a GUID.
+        const GUID_TAIL: &[u8] = b"\x00\x00\x00\x00\x10\x00\x80\x00\x00\xAA\x00\x38\x9B\x71";
+        if bytes.get(26..40).ok_or_else(cut)? != GUID_TAIL {
+            let coding = "an unknown extensible sample coding".into();
+            return Err(CaptureError::UnsupportedCoding { coding });
+        }
+    }
+    let coding = match tag {
+        1 => Coding::Integer,
+        3 => Coding::Float,
+        _ => {
+            return Err(CaptureError::UnsupportedCoding {
+                coding: coding_name(tag),
+            });
+        }
+    };
+    if channels == 0 {
+        return Err(bad("0 channels".into()));
+    }
+    super::limit_channels(channels.into())?;
+    if bits == 0 {
+        return Err(bad("0 bits per sample".into()));
+    }
+    // The container is what the frame size says, if that is possible.
+    let least = bits.div_ceil(8);
+    let width = match frame / channels {
+        width if frame % channels == 0 && width >= least && width <= 8 => width,
+        _ => {
+            notes.push(format!(
+                "impossible frame size of {frame} bytes: taken as {}",
+                u32::from(least) * u32::from(channels)
+            ));
+            least
+        }
+    };
+    let supported = match coding {
+        Coding::Integer => (1..=32).contains(&bits) && (1..=4).contains(&width),
+        Coding::Float => bits == 8 * width && (width == 4 || width == 8),
+    };
+    if !supported {
+        let kind = if coding == Coding::Float {
+            "float"
+        } else {
+            "integer"
+        };
+        let coding = format!("{bits}-bit {kind} samples in {width} bytes");
+        return Err(CaptureError::UnsupportedCoding { coding });
+    }
+    let true_rate = u64::from(rate_hz) * u64::from(width) * u64::from(channels);
+    if u64::from(byte_rate) != true_rate {
+        notes.push(format!("byte rate {byte_rate} does not fit the sample rate {rate_hz} Hz: the sample rate was taken"));
+    }
+    Ok(Format {
+        coding,
+        channels,
+        rate_hz,
+        valid_bits,
+        width,
+    })
+}
+
+/// Names of the format codes met most, from the registry in RFC 2361.
+fn coding_name(tag: u16) -> String {
+    let name = match tag {
+        0x0002 | 0x0011 => "ADPCM-compressed samples",
+        0x0006 => "A-law samples",
+        0x0007 => "mu-law samples",
+        0x0031 => "GSM-compressed samples",
+        0x0050 | 0x0055 => "MPEG-compressed samples",
+        _ => return format!("the unknown sample coding 0x{tag:04X}"),
+    };
+    name.into()
+}
+
+/// Size of the data chunk from a `ds64` chunk (RIFF size, data size, …).
+fn read_ds64<F: Read>(file: &mut F) -> Result<Option<u64>, CaptureError> {
+    let mut buffer = [0; 16];
+    let got = read_up_to(file, &mut buffer)?;
+    Ok(buffer.get(..got).and_then(|bytes| le_u64(bytes, 8)))
+}
+
+/// Start of the recording from a broadcast extension chunk (EBU Tech 3285).
+fn read_bext<F: Read>(file: &mut F, size: u64) -> Result<Option<String>, CaptureError> {
+    const DATE: usize = 320;
+    let mut buffer = [0; 338];
+    if size < buffer.len() as u64 || read_up_to(file, &mut buffer)? < buffer.len() {
+        return Ok(None);
+    }
+    let text = |from: usize, to: usize| {
+        let bytes = buffer.get(from..to).unwrap_or_default();
+        super::error::excerpt(bytes.split(|&b| b == 0).next().unwrap_or_default())
+    };
+    let (date, time) = (text(DATE, DATE + 10), text(DATE + 10, DATE + 18));
+    Ok((!date.is_empty()).then(|| {
+        format!(
+            "recording started {} {}",
+            date.escape_debug(),
+            time.escape_debug()
+        )
+    }))
+}

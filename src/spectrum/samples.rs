@@ -1,0 +1,176 @@
+//! Where samples come from, as the spectrum sees it: something that can be
+//! passed over again and again in blocks.
+
+use crate::capture::{Block, Blocks, Capture, CaptureError};
+
+/// Frames asked for at a time: small enough to stay in cache, large enough that
+/// a call per block costs nothing.
+pub const BLOCK_FRAMES: usize = 1 << 15;
+
+/// A recording that can be read from start to end any number of times.
+pub trait Passes: Sync {
+    /// What can go wrong while reading.
+    type Error: std::error::Error + Send + 'static;
+    /// One pass.
+    type Pass<'a>: Pass<Error = Self::Error>
+    where
+        Self: 'a;
+
+    /// Samples per second and channel.
+    fn rate_hz(&self) -> f64;
+    /// Number of channels, ≥ 1.
+    fn channels(&self) -> usize;
+    /// Samples per channel.
+    fn frames(&self) -> u64;
+    /// Starts a pass.
+    ///
+    /// # Errors
+    /// If the recording can no longer be read.
+    fn pass(&self) -> Result<Self::Pass<'_>, Self::Error>;
+}
+
+/// One pass over a recording.
+pub trait Pass {
+    /// What can go wrong while reading.
+    type Error;
+    /// Reads the next run of frames into `block`; `false` at the end.
+    ///
+    /// # Errors
+    /// If the recording can no longer be read.
+    fn next_into(&mut self, block: &mut Block) -> Result<bool, Self::Error>;
+}
+
+impl Passes for Capture {
+    type Error = CaptureError;
+    type Pass<'a> = Blocks;
+
+    fn rate_hz(&self) -> f64 {
+        self.spec().rate_hz
+    }
+    fn channels(&self) -> usize {
+        self.spec().channels.len()
+    }
+    fn frames(&self) -> u64 {
+        self.spec().frames
+    }
+    fn pass(&self) -> Result<Blocks, CaptureError> {
+        self.blocks(BLOCK_FRAMES)
+    }
+}
+
+impl Pass for Blocks {
+    type Error = CaptureError;
+
+    fn next_into(&mut self, block: &mut Block) -> Result<bool, CaptureError> {
+        Blocks::next_into(self, block)
+    }
+}
+
+/// Samples already in memory: simulated recordings and tests.
+#[derive(Debug, Clone)]
+pub struct InMemory {
+    /// Sample rate, Hz.
+    pub rate_hz: f64,
+    /// `channels[c][n]`, all equally long.
+    pub channels: Vec<Vec<f32>>,
+}
+
+/// See [`InMemory`].
+pub struct InMemoryPass<'a> {
+    data: &'a InMemory,
+    next: usize,
+}
+
+impl Passes for InMemory {
+    type Error = std::convert::Infallible;
+    type Pass<'a> = InMemoryPass<'a>;
+
+    fn rate_hz(&self) -> f64 {
+        self.rate_hz
+    }
+    fn channels(&self) -> usize {
+        self.channels.len()
+    }
+    fn frames(&self) -> u64 {
+        self.channels.first().map_or(0, Vec::len) as u64
+    }
+    fn pass(&self) -> Result<InMemoryPass<'_>, Self::Error> {
+        Ok(InMemoryPass {
+            data: self,
+            next: 0,
+        })
+    }
+}
+
+impl Pass for InMemoryPass<'_> {
+    type Error = std::convert::Infallible;
+
+    fn next_into(&mut self, block: &mut Block) -> Result<bool, Self::Error> {
+        let frames = self.data.frames() as usize;
+        let end = (self.next + BLOCK_FRAMES).min(frames);
+        block.first_frame = self.next as u64;
+        block
+            .samples
+            .resize_with(self.data.channels.len(), Vec::new);
+        for (out, channel) in block.samples.iter_mut().zip(&self.data.channels) {
+            out.clear();
+            out.extend_from_slice(&channel[self.next..end]);
+        }
+        let any = end > self.next;
+        self.next = end;
+        Ok(any)
+    }
+}
+
+/// Bridges missing samples (NaN) in one channel: a straight line from the last
+/// good value to the next, so that a gap adds no step and no tone. A run that
+/// reaches past the block holds the last good value.
+#[derive(Debug, Clone, Default)]
+pub struct Bridge {
+    last: Option<f32>,
+    /// Samples bridged so far.
+    pub missing: u64,
+}
+
+impl Bridge {
+    /// Fills `samples` in place; call on successive blocks of one channel.
+    pub fn fill(&mut self, samples: &mut [f32]) {
+        let mut i = 0;
+        while i < samples.len() {
+            if samples[i].is_finite() {
+                self.last = Some(samples[i]);
+                i += 1;
+                continue;
+            }
+            let start = i;
+            while i < samples.len() && !samples[i].is_finite() {
+                i += 1;
+            }
+            self.missing += (i - start) as u64;
+            let right = samples.get(i).copied();
+            let from = self.last.or(right).unwrap_or(0.0);
+            let to = right.unwrap_or(from);
+            let steps = (i - start + 1) as f32;
+            for (j, s) in samples[start..i].iter_mut().enumerate() {
+                *s = from + (to - from) * (j + 1) as f32 / steps;
+            }
+        }
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn gaps_become_straight_lines() {
+        let mut bridge = Bridge::default();
+        let mut a = [f32::NAN, 2.0, f32::NAN, f32::NAN, 5.0, f32::NAN];
+        bridge.fill(&mut a);
+        assert_eq!(a, [2.0, 2.0, 3.0, 4.0, 5.0, 5.0]);
+        let mut b = [f32::NAN, 9.0];
+        bridge.fill(&mut b);
+        assert_eq!(b, [7.0, 9.0]);
+        assert_eq!(bridge.missing, 5);
+    }
+}

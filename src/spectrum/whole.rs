@@ -1,0 +1,64 @@
+//! The transform of a whole short recording, one channel at a time.
+
+use super::Band;
+use super::fft::{Complex32, RealFft};
+use super::samples::{Bridge, Pass, Passes};
+use crate::capture::Block;
+
+/// Every channel's samples, bridged and with their mean removed.
+#[derive(Debug, Clone)]
+pub struct Loaded {
+    /// `channels[c][n]`.
+    pub channels: Vec<Vec<f32>>,
+    /// Missing samples bridged, per channel.
+    pub missing: Vec<u64>,
+}
+
+/// Reads all samples; only for recordings that [`super::plan::Plan`] calls whole.
+///
+/// # Errors
+/// The recording's own.
+pub fn load<P: Passes>(recording: &P, progress: &dyn Fn(u64)) -> Result<Loaded, P::Error> {
+    let mut channels = vec![Vec::with_capacity(recording.frames() as usize); recording.channels()];
+    let mut bridges = vec![Bridge::default(); channels.len()];
+    let mut pass = recording.pass()?;
+    let mut block = Block::default();
+    while pass.next_into(&mut block)? {
+        for ((channel, bridge), samples) in channels
+            .iter_mut()
+            .zip(&mut bridges)
+            .zip(&mut block.samples)
+        {
+            bridge.fill(samples);
+            channel.extend_from_slice(samples);
+        }
+        progress(channels.first().map_or(0, Vec::len) as u64);
+    }
+    for channel in &mut channels {
+        let mean = channel.iter().map(|&v| f64::from(v)).sum::<f64>() / channel.len().max(1) as f64;
+        for v in channel.iter_mut() {
+            *v -= mean as f32;
+        }
+    }
+    Ok(Loaded {
+        channels,
+        missing: bridges.into_iter().map(|b| b.missing).collect(),
+    })
+}
+
+/// Transforms one channel, consuming it: zero-padded to `grid`, all bins from 0
+/// to grid/2.
+pub fn transform(mut channel: Vec<f32>, grid: usize, rate_hz: f64) -> Band {
+    let samples = channel.len();
+    channel.resize(grid, 0.0);
+    let mut fft = RealFft::new(grid);
+    let mut bins = vec![Complex32::default(); fft.bins()];
+    fft.forward(&mut channel, &mut bins);
+    Band {
+        first_bin: 0,
+        bins,
+        grid,
+        samples,
+        rate_hz,
+    }
+}

@@ -1,0 +1,198 @@
+//! Cells that stand out at full resolution.
+
+use super::refine::View;
+use super::statistic::Fine;
+use super::threshold;
+use crate::spectrum::Band;
+use crate::spectrum::floor::Floor;
+use std::collections::BTreeMap;
+
+/// Cells from 0 that are left alone: a tone with fewer periods in the whole
+/// recording than this cannot be told from drift.
+pub const LOWEST: usize = 4;
+/// Chance that a cell of a pedestal or hump passes for a line on it.
+const RAGGED_CHANCE: f64 = 1e-5;
+
+/// How high a cell, and later a fitted line, must stand.
+pub struct Level {
+    /// Share of the false alarms per cell.
+    per_cell: f64,
+    /// Cells that the floors are worth.
+    plain_worth: f64,
+    hann_worth: f64,
+}
+
+/// A cell is looked at from here on, as a share of what a fitted line must
+/// reach: between two cells the best view is 0.9 dB low.
+const FIRST_LOOK: f64 = 0.8;
+
+impl Level {
+    /// For `false_alarms` expected in the band when it holds noise only.
+    pub fn new(fine: &Fine, false_alarms: f64) -> Level {
+        let worth =
+            |floor: &Floor, power: &[f32], lag| floor.cells / correlation(power, &floor.level, lag);
+        Level {
+            per_cell: false_alarms / fine.plain.len() as f64,
+            plain_worth: worth(&fine.plain_floor, &fine.plain, 1),
+            hann_worth: worth(&fine.hann_floor, &fine.hann, 3),
+        }
+    }
+
+    /// What a fitted line's power over noise must exceed.
+    ///
+    /// The fit takes the highest point of a continuous spectrum. By Rice's
+    /// formula that of N cells exceeds T about N·√(πT/3)·exp(−T) times.
+    pub fn fitted(&self, view: View) -> f64 {
+        let crossings = (std::f64::consts::PI * 16.0 / 3.0).sqrt();
+        let worth = match view {
+            View::Plain => self.plain_worth,
+            View::Hann => self.hann_worth,
+        };
+        let t = threshold::ratio(1.0, worth, (self.per_cell / crossings).min(0.5));
+        match view {
+            View::Plain => t,
+            // a Hann window passes 1.5 cells of noise
+            View::Hann => 1.5 * t,
+        }
+    }
+}
+
+/// Cells that stand out in some view and are not a stronger peak's leakage,
+/// strongest first.
+pub fn peaks(band: &Band, fine: &Fine, level: &Level) -> Vec<usize> {
+    let n = band.bins.len();
+    let plain_ratio = (FIRST_LOOK * level.fitted(View::Plain)) as f32;
+    let hann_ratio = (FIRST_LOOK * level.fitted(View::Hann) / 1.5) as f32;
+    let lowest = LOWEST.saturating_sub(band.first_bin);
+    let highest = n.saturating_sub(if 2 * (band.first_bin + n) > band.grid {
+        2
+    } else {
+        0
+    });
+    let mut strong: Vec<(f32, usize)> = (lowest..highest)
+        .filter_map(|i| {
+            let plain_floor = fine.plain_floor.level[i];
+            let hit = fine.plain[i] > plain_ratio * plain_floor
+                || fine.between[i] > plain_ratio * plain_floor
+                || fine.hann[i] > hann_ratio * fine.hann_floor.level[i];
+            hit.then(|| {
+                (
+                    fine.plain[i].max(fine.between[i]).max(1.5 * fine.hann[i]),
+                    i,
+                )
+            })
+        })
+        .collect();
+    strong.sort_by(|a, b| b.0.total_cmp(&a.0).then(a.1.cmp(&b.1)));
+    let mut accepted: Vec<(usize, f32)> = Vec::new();
+    let mut by_bin = BTreeMap::<usize, f32>::new();
+    for (power, i) in strong {
+        let stands_in = |view: View| {
+            let (value, floor, ratio) = match view {
+                View::Plain => (
+                    fine.plain[i].max(fine.between[i]),
+                    fine.plain_floor.level[i],
+                    plain_ratio,
+                ),
+                View::Hann => (fine.hann[i], fine.hann_floor.level[i], hann_ratio),
+            };
+            value > ratio * floor
+                && !by_bin
+                    .range(i.saturating_sub(4096)..i + 4096)
+                    .any(|(&j, &p)| value < 4.0 * leakage(view, i.abs_diff(j), p))
+                && above_pedestal(fine, view, i, value, &by_bin)
+        };
+        if stands_in(View::Hann) || stands_in(View::Plain) {
+            accepted.push((i, power));
+            by_bin.insert(i, power);
+        }
+    }
+    accepted.into_iter().map(|(i, _)| i).collect()
+}
+
+/// The most that a steady tone of power `p` puts `distance` cells away.
+fn leakage(view: View, distance: usize, p: f32) -> f32 {
+    // `p` may be 1 dB low between cells, and the tone half a cell nearer.
+    let d = distance as f32 - 0.5;
+    let p = 1.3 * p;
+    match view {
+        View::Plain if distance < 2 => p,
+        View::Plain => p / (std::f32::consts::PI * d).powi(2),
+        View::Hann if distance < 3 => p,
+        View::Hann => 0.67 * p / (std::f32::consts::PI * d * (d * d - 1.0)).powi(2),
+    }
+}
+
+/// A strong tone that jitters stands on a pedestal of its own noise, and a
+/// resonance narrower than the floor's windows is ragged too: where the immediate
+/// surroundings stand above the floor, a line must stand out of *them*.
+fn above_pedestal(
+    fine: &Fine,
+    view: View,
+    i: usize,
+    value: f32,
+    stronger: &BTreeMap<usize, f32>,
+) -> bool {
+    let (power, floor) = match view {
+        View::Plain => (&fine.plain, fine.plain_floor.level[i]),
+        View::Hann => (&fine.hann, fine.hann_floor.level[i]),
+    };
+    let mut around: Vec<f32> = (i.saturating_sub(14)..(i + 15).min(power.len()))
+        .filter(|&k| k.abs_diff(i) >= 3)
+        .filter(|&k| stronger.range(k.saturating_sub(2)..=k + 2).next().is_none())
+        .map(|k| power[k])
+        .collect();
+    if around.len() < 6 {
+        return true;
+    }
+    let mid = around.len() / 2;
+    let median = *around.select_nth_unstable_by(mid, f32::total_cmp).1;
+    let level = median / std::f32::consts::LN_2;
+    // 2.08/n is the relative variance of a median of exponentials; Hann cells
+    // are worth about half.
+    let worth = around.len() as f64 / 2.08 / if view == View::Hann { 1.94 } else { 1.0 };
+    let raised = f64::from(level / floor) > 1.0 + 3.0 / worth.sqrt();
+    !raised || f64::from(value / level) > threshold::ratio(1.0, worth, RAGGED_CHANCE)
+}
+
+/// Over how many cells the power is correlated: 1 on steady noise, more when the
+/// noise came in bursts (a burst of length τ smears its pattern over 1/τ). A
+/// floor over n cells is then worth only n over this.
+///
+/// `from_lag` is the first lag at which steady noise has none: 1, or 3 under a
+/// Hann window, whose neighbours its floor has counted already.
+fn correlation(power: &[f32], floor: &[f32], from_lag: usize) -> f64 {
+    // capped, so that tones do not count
+    let y: Vec<f32> = power
+        .iter()
+        .zip(floor)
+        .map(|(p, f)| (p / f).min(4.0))
+        .collect();
+    let n = y.len() as f64;
+    let mean = (y.iter().map(|&v| f64::from(v)).sum::<f64>() / n) as f32;
+    let y: Vec<f32> = y.into_iter().map(|v| v - mean).collect();
+    let covariance = |lag: usize| -> f64 {
+        // partial sums keep f32 exact enough and fast
+        y.chunks(4096)
+            .enumerate()
+            .map(|(c, a)| {
+                let b = &y[(c * 4096 + lag).min(y.len())..];
+                f64::from(a.iter().zip(b).map(|(a, b)| a * b).sum::<f32>())
+            })
+            .sum::<f64>()
+            / n
+    };
+    let variance = covariance(0);
+    if variance <= 0.0 {
+        return 1.0;
+    }
+    let mut sum = 0.0;
+    for lag in from_lag..128.min(y.len()) {
+        let r = covariance(lag) / variance;
+        if r < 3.0 / n.sqrt() {
+            break;
+        }
+        sum += r;
+    }
+    1.0 + 2.0 * sum
+}

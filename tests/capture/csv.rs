@@ -1,0 +1,379 @@
+//! CSV: dialects, missing values, gaps, and faults.
+
+use std::io::{Seek, SeekFrom, Write};
+
+use super::*;
+
+#[test]
+fn a_plain_csv_reads_with_rate_units_and_offset() {
+    let folder = Folder::new();
+    let text = table("time_s,accel [m/s^2],U (V)\n", 100, |i| {
+        format!(
+            "{:.6},{},{}",
+            i as f64 / 2000.0,
+            1e6 + f64::from(prime(i)) / 8.0,
+            prime(i + 1)
+        )
+    });
+    let capture = open(&folder.write("a.csv", &text)).unwrap();
+    let spec = capture.spec();
+    assert_eq!(spec.rate_hz, 2000.0);
+    assert_eq!((spec.frames, spec.normalised), (100, false));
+    assert_eq!(spec.channels[0].name, "accel");
+    assert_eq!(spec.channels[0].unit.as_deref(), Some("m/s^2"));
+    assert_eq!(spec.channels[1].name, "U");
+    assert_eq!(spec.channels[1].unit.as_deref(), Some("V"));
+    assert_eq!(spec.channels[0].offset, 1e6 + 0.25);
+    assert_eq!(spec.notes, [""; 0]);
+    let samples = read(&capture, 100);
+    // Exact: the offset goes before the value is narrowed.
+    let expected = |i: usize| (prime(i) / 8.0 - 0.25, prime(i + 1) - prime(1));
+    for (i, (&a, &u)) in samples[0].iter().zip(&samples[1]).enumerate() {
+        assert_eq!((a, u), expected(i), "row {i}");
+    }
+    for frames_per_block in [1, 7, 33, 1000] {
+        assert_eq!(bits(&read(&capture, frames_per_block)), bits(&samples));
+    }
+}
+
+#[test]
+fn delimiters_decimal_marks_and_headings() {
+    let folder = Folder::new();
+    let comma = |x: f64| x.to_string().replace('.', ",");
+    let row = |i: usize| (i as f64 / 64.0, f64::from(prime(i)) / 4.0);
+    let cases = [
+        (
+            "comma",
+            table("t,x\n", 50, |i| format!("{},{}", row(i).0, row(i).1)),
+        ),
+        (
+            "comma and blanks",
+            table("t, x\n", 50, |i| format!("{}, {}", row(i).0, row(i).1)),
+        ),
+        (
+            "semicolon",
+            table("t;x\n", 50, |i| format!("{};{}", row(i).0, row(i).1)),
+        ),
+        (
+            "tab",
+            table("Time\tx\n", 50, |i| format!("{}\t{}", row(i).0, row(i).1)),
+        ),
+        (
+            "decimal comma",
+            table("t;x\n", 50, |i| {
+                format!("{};{}", comma(row(i).0), comma(row(i).1))
+            }),
+        ),
+        (
+            "tab and decimal comma",
+            table("t\tx\n", 50, |i| {
+                format!("{}\t{}", comma(row(i).0), comma(row(i).1))
+            }),
+        ),
+        (
+            "mark",
+            table("\u{FEFF}t,x\n", 50, |i| {
+                format!("{},{}", row(i).0, row(i).1)
+            }),
+        ),
+        (
+            "crlf",
+            table("t,x\r\n", 50, |i| format!("{},{}\r", row(i).0, row(i).1)),
+        ),
+        (
+            "no heading",
+            table("", 50, |i| format!("{},{}", row(i).0, row(i).1)),
+        ),
+        (
+            "quotes",
+            table("\"t\",\"x\"\n", 50, |i| {
+                format!("\"{}\",\"{}\"", comma(row(i).0), row(i).1)
+            }),
+        ),
+        (
+            "ms",
+            table("t [ms],x\n", 50, |i| {
+                format!("{},{}", row(i).0 * 1e3, row(i).1)
+            }),
+        ),
+        (
+            "us",
+            table("time_us,x\n", 50, |i| {
+                format!("{},{}", row(i).0 * 1e6, row(i).1)
+            }),
+        ),
+        (
+            "x first",
+            table("x,t\n", 50, |i| format!("{},{}", row(i).1, row(i).0)),
+        ),
+        (
+            "epoch in ms",
+            table("timestamp,x\n", 50, |i| {
+                format!("{:.3},{}", 1.7e12 + row(i).0 * 1e3, row(i).1)
+            }),
+        ),
+    ];
+    for (case, text) in cases {
+        let capture = open(&folder.write("t.csv", &text)).unwrap_or_else(|e| panic!("{case}: {e}"));
+        assert_eq!(capture.spec().rate_hz, 64.0, "{case}");
+        let name = if case == "no heading" {
+            "column 2"
+        } else {
+            "x"
+        };
+        assert_eq!(capture.spec().channels[0].name, name, "{case}");
+        let expected: Vec<f32> = (0..50).map(|i| (prime(i) - 2.0) / 4.0).collect();
+        assert_eq!(read(&capture, 20), [expected], "{case}");
+    }
+}
+
+#[test]
+fn without_time_the_rate_is_asked_for() {
+    let folder = Folder::new();
+    let path = folder.write(
+        "x.csv",
+        table("a,b\n", 30, |i| format!("{},{}", prime(i), i * i)),
+    );
+    assert_eq!(
+        refusal(&path),
+        "no time column found: give the sample rate with --rate HZ"
+    );
+    let capture = open_at(&path, 12.5).unwrap();
+    assert_eq!(capture.spec().rate_hz, 12.5);
+    assert_eq!(capture.spec().channels.len(), 2);
+    let one = folder.write("one.csv", table("", 30, |i| format!("{}", prime(i))));
+    assert_eq!(read(&open_at(&one, 1.0).unwrap(), 8)[0][1], -5.0);
+    let counted = folder.write("n.csv", table("", 30, |i| format!("{i},{}", prime(i))));
+    assert!(refusal(&counted).contains("only counts the rows"));
+    let capture = open_at(&counted, 10.0).unwrap();
+    assert_eq!(capture.spec().channels[0].name, "column 2");
+}
+
+#[test]
+fn missing_values_are_nan_and_words_are_counted() {
+    let folder = Folder::new();
+    let marks = ["", "NA", "NaN", "#N/A", "null", "OL", "inf", "-", "oops"];
+    let text = table("t,x\n", 100, |i| match i % 10 {
+        5 => format!("{},{}", i as f64 / 10.0, marks[i / 10 % marks.len()]),
+        _ => format!("{},{}", i as f64 / 10.0, prime(i)),
+    });
+    let capture = open(&folder.write("m.csv", &text)).unwrap();
+    let samples = read(&capture, 32);
+    for (i, x) in samples[0].iter().enumerate() {
+        assert_eq!(x.is_nan(), i % 10 == 5, "row {i}");
+    }
+    let note =
+        "1 cells of column \"x\" are no numbers (first: line 87, \"oops\"): taken as missing";
+    assert_eq!(capture.spec().notes, [note]);
+}
+
+#[test]
+fn a_gap_is_filled_so_that_index_and_time_agree() {
+    let folder = Folder::new();
+    let text = table("t,x\n", 5000, |i| {
+        let frame = if i < 1000 {
+            i
+        } else if i < 3000 {
+            i + 1
+        } else {
+            i + 12_001
+        };
+        format!("{:.4},{}", frame as f64 / 1000.0, prime(frame) + 3.0)
+    });
+    let capture = open(&folder.write("gap.csv", &text)).unwrap();
+    assert_eq!((capture.spec().frames, capture.gaps()), (17_001, 2));
+    assert_eq!(capture.spec().rate_hz, 1000.0);
+    assert!(notes(&capture).contains("2 gaps"), "{}", notes(&capture));
+    assert!(notes(&capture).contains("12001 missing samples"));
+    let samples = read(&capture, 777);
+    for (i, &x) in samples[0].iter().enumerate() {
+        if i == 1000 || (3001..15_001).contains(&i) {
+            assert!(x.is_nan(), "frame {i}");
+        } else {
+            assert_eq!(x, prime(i) - 2.0, "frame {i}");
+        }
+    }
+    assert_eq!(bits(&read(&capture, 1)), bits(&samples));
+}
+
+#[test]
+fn a_gap_beyond_reason_is_refused() {
+    let folder = Folder::new();
+    let text = table("t,x\n", 100, |i| {
+        format!("{},1.5", if i < 50 { i } else { i + 100_000 })
+    });
+    let message = refusal(&folder.write("jump.csv", &text));
+    assert!(
+        message.starts_with("line 52: the time jumps ahead by 100000 samples"),
+        "{message}"
+    );
+}
+
+#[test]
+fn stamps_that_repeat_or_go_back() {
+    let folder = Folder::new();
+    // Row 40 twice; at row 70 the clock is set back by 3 s.
+    let text = table("t,x\n", 101, |i| {
+        let frame = if i <= 40 { i } else { i - 1 };
+        let time = frame as f64 / 10.0 - if frame < 70 { 0.0 } else { 3.0 };
+        format!("{time:.1},{}", prime(frame))
+    });
+    let capture = open(&folder.write("back.csv", &text)).unwrap();
+    assert_eq!(capture.spec().frames, 100);
+    assert!(
+        notes(&capture).contains("1 rows repeat the stamp"),
+        "{}",
+        notes(&capture)
+    );
+    assert!(
+        notes(&capture).contains("1 rows step back"),
+        "{}",
+        notes(&capture)
+    );
+    let expected: Vec<f32> = (0..100).map(|i| prime(i) - 2.0).collect();
+    assert_eq!(read(&capture, 64), [expected]);
+
+    let falling = table("t,x\n", 50, |i| format!("{},1", 50 - i));
+    assert!(refusal(&folder.write("f.csv", falling)).contains("does not increase"));
+    let still = table("t,x\n", 50, |_| "7,1".into());
+    assert!(refusal(&folder.write("s.csv", still)).contains("does not increase"));
+}
+
+#[test]
+fn csv_faults_are_named() {
+    let folder = Folder::new();
+    let words = table("t,x\n", 40, |i| match i % 3 {
+        0 => format!("{i},abc"),
+        _ => format!("{i},{i}"),
+    });
+    let wide = vec!["1"; 5000].join(",") + "\n";
+    let cases: Vec<(String, &str)> = vec![
+        (
+            words,
+            "line 2, column 2: \"abc\" is not a number (nor are 14 of 40 cells",
+        ),
+        ("t,x\n".into(), "has a header but no samples"),
+        ("\n\n\n".into(), "is empty"),
+        (
+            table("t,x\n", 15, |i| format!("{i},{i}")),
+            "too short: 15 samples",
+        ),
+        (
+            "Dear all,\nhere is the list.\nGreetings\n".into(),
+            "no rows of numbers",
+        ),
+        (
+            table("t,x\n", 40, |i| format!("{i},low")),
+            "line 2, column 2: \"low\" is not a number",
+        ),
+        (wide.repeat(30), "5000 channels"),
+        ("1,".repeat(1 << 20), "line 1 is longer than 1048576 bytes"),
+        (
+            table("t,x\n", 40, |i| {
+                format!("{i},{}red", if i == 0 { "\u{1b}" } else { "" })
+            }),
+            "line 2, column 2: \"\\u{1b}red\" is not a number",
+        ),
+    ];
+    for (text, message) in cases {
+        let refused = refusal(&folder.write("fault.csv", &text));
+        assert!(refused.contains(message), "{refused:?} lacks {message:?}");
+    }
+}
+
+#[test]
+fn a_word_column_is_left_out_if_there_are_others() {
+    let folder = Folder::new();
+    let text = table("t,state,x\n", 40, |i| format!("{i},on,{}", prime(i)));
+    let capture = open(&folder.write("w.csv", text)).unwrap();
+    assert_eq!(capture.spec().channels.len(), 1);
+    assert_eq!(capture.spec().channels[0].name, "x");
+    assert_eq!(
+        capture.spec().notes,
+        ["column \"state\" holds words: left out"]
+    );
+}
+
+#[test]
+fn an_open_quote_or_endless_line_far_down_stops_the_reader() {
+    let folder = Folder::new();
+    let rows = table("t,x\n", 100_000, |i| format!("{i},{}", prime(i)));
+    for start in ["100000,\"", "100000,1"] {
+        let path = folder.0.path().join("long.csv");
+        let mut file = std::fs::File::create(&path).unwrap();
+        file.write_all(rows.as_bytes()).unwrap();
+        file.write_all(start.as_bytes()).unwrap();
+        // A hole of 3 GB that costs no disk: reading it whole would show.
+        file.seek(SeekFrom::Current(3_000_000_000)).unwrap();
+        file.write_all(b"1\n").unwrap();
+        let message = refusal(&path);
+        assert!(message.contains("line 100002 is longer"), "{message}");
+    }
+}
+
+#[test]
+fn a_useless_time_column_is_done_without_if_the_rate_is_given() {
+    let folder = Folder::new();
+    let jump = table("time,x\n", 50, |i| {
+        format!("{},{}", if i < 9 { i } else { i + 90_000 }, prime(i))
+    });
+    let falling = table("time,x\n", 50, |i| format!("{},{}", 50 - i, prime(i)));
+    let shuffled = table("time,x\n", 5000, |i| {
+        format!("{},{}", i * 1709 % 5000, prime(i))
+    });
+    for (text, fault) in [
+        (jump, "jumps ahead"),
+        (falling, "does not increase"),
+        (shuffled, "does not increase"),
+    ] {
+        let path = folder.write("t.csv", &text);
+        assert!(refusal(&path).contains(fault), "{}", refusal(&path));
+        let capture = open_at(&path, 5.0).unwrap();
+        assert_eq!(
+            notes(&capture),
+            "column \"time\" is no usable time: left out"
+        );
+        assert_eq!(capture.spec().frames, text.lines().count() as u64 - 1);
+        assert_eq!(capture.spec().rate_hz, 5.0);
+        assert_eq!(capture.spec().channels.len(), 1);
+    }
+}
+
+#[test]
+fn a_temperature_is_no_time_and_equal_names_are_numbered() {
+    let folder = Folder::new();
+    let text = table("time,T,a,a\n", 50, |i| {
+        format!(
+            "{},{},{},{}",
+            i as f64 / 64.0,
+            20.0 + f64::from(prime(i)),
+            prime(i),
+            i * i
+        )
+    });
+    let capture = open(&folder.write("t.csv", text)).unwrap();
+    let names: Vec<&str> = capture
+        .spec()
+        .channels
+        .iter()
+        .map(|c| c.name.as_str())
+        .collect();
+    assert_eq!(names, ["T", "a (column 3)", "a (column 4)"]);
+    assert_eq!(notes(&capture), "");
+    let only = folder.write(
+        "only.csv",
+        table("time\n", 50, |i| format!("{}", i as f64 / 64.0)),
+    );
+    assert_eq!(refusal(&only), "no column of values beside the time");
+}
+
+#[test]
+fn gaps_that_add_up_beyond_reason_are_refused() {
+    let folder = Folder::new();
+    let text = table("t,x\n", 100, |i| format!("{},1.5", i + i / 25 * 9000));
+    let message = refusal(&folder.write("jumps.csv", text));
+    assert!(
+        message.contains("jumps ahead by 9000 samples, with 100 rows"),
+        "{message}"
+    );
+}
