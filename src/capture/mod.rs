@@ -5,14 +5,15 @@
 //!
 //! WAV: `riff` walks the chunks without trusting a size, `wav` decodes blocks.
 //! CSV: `text` and `line_limit` give bounded lines in UTF-8, `csv_lines`,
-//! `csv_sniff` and `csv_time` find the layout from the first lines, `stamps` and
-//! `dates` read times, `clock_plan` and `clock` turn them into frame numbers and
+//! `csv_delimiter`, `csv_sniff` and `csv_time` find the layout from the first
+//! lines, `stamps` and `dates` read times, `clock_plan` and `clock` turn them into frame numbers and
 //! a rate, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks.
 
 mod cells;
 mod clock;
 mod clock_plan;
 mod csv;
+mod csv_delimiter;
 mod csv_lines;
 mod csv_rate;
 mod csv_rows;
