@@ -21,8 +21,8 @@ pub(super) struct Table {
     pub first_line: u64,
     pub columns: Vec<Heading>,
     pub time: Option<TimeColumn>,
-    /// Sample rate from a line above the table, where there is no time column.
-    pub rate_hz: Option<f64>,
+    /// Line above the table that tells a sample rate in hertz, and that rate.
+    pub told_rate: Option<(u64, f64)>,
     /// Indices of the columns of values.
     pub values: Vec<usize>,
     /// Indices of columns that are neither.
@@ -95,22 +95,17 @@ pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table,
         first_line: data.first().map_or(1, |line| line.number),
         columns: headings(before, width),
         time: None,
-        rate_hz: None,
+        told_rate: None,
         values: Vec::new(),
         left_out: Vec::new(),
         notes: Vec::new(),
     };
-    let told = before.iter().rev().find_map(|line| {
+    table.told_rate = before.iter().rev().find_map(|line| {
         let (_, bytes) = lines.iter().find(|(start, _)| *start == line.start)?;
         Some((line.number, super::csv_rate::read_rate(bytes)?))
     });
-    super::csv_time::find_time(&mut table, &rows(data), rate_given || told.is_some())?;
-    if let (Some((line, rate_hz)), None, false) = (told, table.time, rate_given) {
-        table.rate_hz = Some(rate_hz);
-        table
-            .notes
-            .push(format!("sample rate {rate_hz} Hz taken from line {line}"));
-    }
+    let rate_known = rate_given || table.told_rate.is_some();
+    super::csv_time::find_time(&mut table, &rows(data), rate_known)?;
     choose_values(&mut table, data, &tallies)?;
     Ok(table)
 }

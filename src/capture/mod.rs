@@ -28,6 +28,7 @@ mod riff;
 mod stamps;
 mod text;
 mod wav;
+mod wording;
 
 use std::fs::File;
 use std::path::{Path, PathBuf};
@@ -75,6 +76,13 @@ pub struct Spec {
     pub format: String,
     /// Samples are fractions of full scale (WAV), not physical values (CSV).
     pub normalised: bool,
+    /// Smallest step between sample values, as a fraction of full scale, in
+    /// `(0, 1]`: `2^-(bits - 1)` for an integer WAV, by the bits that carry data,
+    /// not those of the container. Rounding to such steps adds noise of variance
+    /// step²/12 spread over the whole band (Bennett 1948), so a noise floor
+    /// measured below that tells of the rounding, not of the recorder's input.
+    /// `None` for float WAV and CSV, whose steps are not known.
+    pub step: Option<f64>,
     /// What was assumed or mended while reading, one clause each.
     pub notes: Vec<String>,
 }

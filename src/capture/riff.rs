@@ -7,6 +7,7 @@
 use std::io::{Read, Seek, SeekFrom};
 
 use super::error::CaptureError;
+use super::wording::count;
 
 /// Bytes in a chunk's identifier and size.
 const CHUNK_HEADER: u64 = 8;
@@ -114,8 +115,8 @@ pub(super) fn walk<F: Read + Seek>(file: &mut F, length: u64) -> Result<Layout, 
                 "the header was never finished: read to the end of the file".into()
             } else {
                 format!(
-                    "data chunk claims {} frames, file holds {}: read to the end",
-                    claimed / frame,
+                    "data chunk claims {}, file holds {}: read to the end",
+                    count(claimed / frame, "frame", "frames"),
                     held / frame
                 )
             },
@@ -123,10 +124,10 @@ pub(super) fn walk<F: Read + Seek>(file: &mut F, length: u64) -> Result<Layout, 
     }
     let bytes = claimed.min(held);
     if bytes % frame != 0 {
-        notes.push(format!(
-            "the last {} bytes are no whole frame: left out",
-            bytes % frame
-        ));
+        notes.push(match bytes % frame {
+            1 => "the last byte is no whole frame: left out".into(),
+            n => format!("the last {n} bytes are no whole frame: left out"),
+        });
     }
     Ok(Layout {
         format,
@@ -250,7 +251,12 @@ fn read_format<F: Read>(
         .min(usize::try_from(size).unwrap_or(usize::MAX));
     let got = read_up_to(file, buffer.get_mut(..wanted).unwrap_or_default())?;
     let bytes = buffer.get(..got).unwrap_or_default();
-    let short = || bad(format!("format chunk of {got} bytes (16 are needed)"));
+    let short = || {
+        bad(format!(
+            "format chunk of {} (16 are needed)",
+            count(got as u64, "byte", "bytes")
+        ))
+    };
     let mut tag = le_u16(bytes, 0).ok_or_else(short)?;
     let channels = le_u16(bytes, 2).ok_or_else(short)?;
     let rate_hz = le_u32(bytes, 4).ok_or_else(short)?;
@@ -262,7 +268,8 @@ fn read_format<F: Read>(
     if tag == EXTENSIBLE {
         let cut = || {
             bad(format!(
-                "extensible format chunk of {got} bytes (40 are needed)"
+                "extensible format chunk of {} (40 are needed)",
+                count(got as u64, "byte", "bytes")
             ))
         };
         // A writer that leaves the valid bits 0 means all of them.
@@ -299,7 +306,8 @@ fn read_format<F: Read>(
         width if frame % channels == 0 && width >= least && width <= 8 => width,
         _ => {
             notes.push(format!(
-                "impossible frame size of {frame} bytes: taken as {}",
+                "impossible frame size of {}: taken as {}",
+                count(frame.into(), "byte", "bytes"),
                 u32::from(least) * u32::from(channels)
             ));
             least
@@ -315,7 +323,10 @@ fn read_format<F: Read>(
         } else {
             "integer"
         };
-        let coding = format!("{bits}-bit {kind} samples in {width} bytes");
+        let coding = format!(
+            "{bits}-bit {kind} samples in {}",
+            count(width.into(), "byte", "bytes")
+        );
         return Err(CaptureError::UnsupportedCoding { coding });
     }
     let true_rate = u64::from(rate_hz) * u64::from(width) * u64::from(channels);

@@ -135,12 +135,8 @@ fn lines_among_and_after_the_rows() {
         ("percent", "% paused", ""),
         ("blank", "", ""),
         ("empty cells", ",", ""),
-        (
-            "heading again",
-            "t,x",
-            "1 lines without a number were left out",
-        ),
-        ("words", "paused", "1 lines without a number were left out"),
+        ("heading again", "t,x", "1 line without a number: left out"),
+        ("words", "paused", "1 line without a number: left out"),
     ] {
         for at in [20, 48] {
             let mut lines: Vec<String> = (0..48).map(row).collect();

@@ -1,5 +1,7 @@
 //! WAV: samples against a slow twin, sample formats, and faults.
 
+use foldtrace::capture::Spec;
+
 use super::*;
 
 /// Interleaved integers as hound writes them.
@@ -213,7 +215,14 @@ fn a_rate_on_the_command_line_goes_first() {
     let path = folder.write("rate.WAV", riff_file(b"RIFF", &chunks));
     let capture = open_at(&path, 8000.25).unwrap();
     assert_eq!(capture.spec().rate_hz, 8000.25);
-    assert!(notes(&capture).contains("overridden"));
+    assert_eq!(
+        notes(&capture),
+        "sample rate 8000.25 Hz taken from --rate, not 8000 Hz from the header"
+    );
+    assert_eq!(
+        notes(&open_at(&path, 8000.0).unwrap()),
+        "sample rate 8000 Hz taken from --rate; the header tells the same"
+    );
     for rate_hz in [0.0, -1.0, f64::NAN, f64::INFINITY] {
         assert!(one_line(open_at(&path, rate_hz).unwrap_err()).contains("sample rate"));
     }
@@ -221,6 +230,11 @@ fn a_rate_on_the_command_line_goes_first() {
 
 /// Opens one channel of integers, `width` bytes each.
 fn integers(format: Vec<u8>, width: usize, values: &[i64]) -> (Vec<f32>, String, String) {
+    let (samples, spec) = integers_and_spec(format, width, values);
+    (samples, spec.format, spec.notes.join("; "))
+}
+
+fn integers_and_spec(format: Vec<u8>, width: usize, values: &[i64]) -> (Vec<f32>, Spec) {
     let folder = Folder::new();
     let body: Vec<u8> = values
         .iter()
@@ -228,11 +242,45 @@ fn integers(format: Vec<u8>, width: usize, values: &[i64]) -> (Vec<f32>, String,
         .collect();
     let bytes = riff_file(b"RIFF", &[format, chunk(b"data", None, &body)]);
     let capture = open(&folder.write("int.wav", bytes)).unwrap();
-    (
-        read(&capture, 5).remove(0),
-        capture.spec().format.clone(),
-        notes(&capture),
-    )
+    (read(&capture, 5).remove(0), capture.spec().clone())
+}
+
+/// The step must be the smallest difference between samples that hold every
+/// bit, whatever place the file gives them.
+#[test]
+fn the_step_is_that_of_the_bits_that_carry_data() {
+    let check = |format: Vec<u8>, width: u16, values: &[i64], bits: i32| {
+        let (samples, spec) = integers_and_spec(format, width.into(), values);
+        let case = format!("{} {:?}", spec.format, spec.notes);
+        assert_eq!(spec.step, Some(2f64.powi(1 - bits)), "{case}");
+        // The third value is one step above the second.
+        assert_eq!(
+            Some(f64::from(samples[2] - samples[1])),
+            spec.step,
+            "{case}"
+        );
+    };
+    let values: Vec<i64> = [5, -3, -2].into_iter().chain(0..50).collect();
+    let moved = |n: u16| -> Vec<i64> { values.iter().map(|v| v << n).collect() };
+    for (bits, width) in [(16, 2), (24, 3), (32, 4)] {
+        check(fmt(1, 1, 8000, bits, width), width, &values, bits.into());
+    }
+    let unsigned: Vec<i64> = values.iter().map(|v| v + 128).collect();
+    check(fmt(1, 1, 8000, 8, 1), 1, &unsigned, 8);
+    for (bits, width) in [(12, 2), (20, 3), (24, 4)] {
+        let spare = 8 * width - bits;
+        let format = || fmt(1, 1, 8000, bits, width);
+        check(format(), width, &moved(spare), bits.into());
+        check(format(), width, &values, bits.into());
+        // The header understates: all bits are in use.
+        let mut full = values.clone();
+        full.push((1 << (8 * width - 1)) - 1);
+        check(format(), width, &full, 8 * i32::from(width));
+    }
+    check(extensible(1, 32, 24), 4, &moved(8), 24);
+    let floats: Vec<i64> = (0..20u32).map(|i| (i as f32).to_bits().into()).collect();
+    let (_, spec) = integers_and_spec(fmt(3, 1, 8000, 32, 4), 4, &floats);
+    assert_eq!(spec.step, None);
 }
 
 #[test]
