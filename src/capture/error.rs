@@ -68,7 +68,7 @@ pub enum CaptureError {
         /// The fault, with the bad value in it.
         what: String,
     },
-    /// Sample coding that is not linear PCM or float.
+    /// Sample coding that is not PCM (linear, A-law, mu-law) or float.
     #[error("WAV with {coding} (convert it to PCM first)")]
     UnsupportedCoding {
         /// Name of the coding or the bad bit depth.

@@ -3,7 +3,8 @@
 //! A [`Capture`] is opened once and can be passed over as often as needed with
 //! [`Capture::blocks`]; no pass ever holds more than one block of samples.
 //!
-//! WAV: `riff` walks the chunks without trusting a size, `wav` decodes blocks.
+//! WAV: `riff` walks the chunks without trusting a size, `wav` decodes blocks,
+//! with `companded` for A-law and mu-law.
 //! CSV: `text` and `line_limit` give bounded lines in UTF-8, `csv_lines`,
 //! `csv_delimiter`, `csv_sniff` and `csv_time` find the layout from the first
 //! lines, `stamps` and `dates` read times, `clock_plan` and `clock` turn them into frame numbers and
@@ -12,6 +13,7 @@
 mod cells;
 mod clock;
 mod clock_plan;
+mod companded;
 mod csv;
 mod csv_delimiter;
 mod csv_lines;
@@ -81,6 +83,7 @@ pub struct Spec {
     /// not those of the container. Rounding to such steps adds noise of variance
     /// step²/12 spread over the whole band (Bennett 1948), so a noise floor
     /// measured below that tells of the rounding, not of the recorder's input.
+    /// For A-law and mu-law it is the step around zero, where it is smallest.
     /// `None` for float WAV and CSV, whose steps are not known.
     pub step: Option<f64>,
     /// What was assumed or mended while reading, one clause each.

@@ -23,6 +23,10 @@ pub(super) enum Coding {
     Integer,
     /// IEEE 754.
     Float,
+    /// ITU-T G.711, 8 bits.
+    ALaw,
+    /// ITU-T G.711, 8 bits.
+    MuLaw,
 }
 
 /// The `fmt ` chunk, mended where it contradicts itself.
@@ -287,6 +291,8 @@ fn read_format<F: Read>(
     let coding = match tag {
         1 => Coding::Integer,
         3 => Coding::Float,
+        6 => Coding::ALaw,
+        7 => Coding::MuLaw,
         _ => {
             return Err(CaptureError::UnsupportedCoding {
                 coding: coding_name(tag),
@@ -316,12 +322,14 @@ fn read_format<F: Read>(
     let supported = match coding {
         Coding::Integer => (1..=32).contains(&bits) && (1..=4).contains(&width),
         Coding::Float => bits == 8 * width && (width == 4 || width == 8),
+        Coding::ALaw | Coding::MuLaw => bits == 8 && width == 1,
     };
     if !supported {
-        let kind = if coding == Coding::Float {
-            "float"
-        } else {
-            "integer"
+        let kind = match coding {
+            Coding::Float => "float",
+            Coding::Integer => "integer",
+            Coding::ALaw => "A-law",
+            Coding::MuLaw => "mu-law",
         };
         let coding = format!(
             "{bits}-bit {kind} samples in {}",
@@ -346,8 +354,6 @@ fn read_format<F: Read>(
 fn coding_name(tag: u16) -> String {
     let name = match tag {
         0x0002 | 0x0011 => "ADPCM-compressed samples",
-        0x0006 => "A-law samples",
-        0x0007 => "mu-law samples",
         0x0031 => "GSM-compressed samples",
         0x0050 | 0x0055 => "MPEG-compressed samples",
         _ => return format!("the unknown sample coding 0x{tag:04X}"),

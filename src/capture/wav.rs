@@ -4,6 +4,7 @@ use std::fs::File;
 use std::io::{Read, Seek, SeekFrom};
 use std::path::PathBuf;
 
+use super::companded::{a_law, mu_law};
 use super::error::CaptureError;
 use super::riff::{self, Coding, Format, Layout};
 use super::wording::nine_digits;
@@ -54,6 +55,9 @@ pub(super) fn open(
     }
     let (shift, step) = match format.coding {
         Coding::Float => (0, None),
+        // Least steps of 16 and 8 in 16 bits.
+        Coding::ALaw => (0, Some(2f64.powi(-11))),
+        Coding::MuLaw => (0, Some(2f64.powi(-12))),
         Coding::Integer => {
             let place = find_samples(&mut file, &layout, &mut notes)?;
             // Exact: a power of two.
@@ -96,6 +100,8 @@ fn format_name(layout: &Layout) -> String {
     let container = if layout.large { "RF64" } else { "WAV" };
     match coding {
         Coding::Float => format!("{valid_bits}-bit float {container}"),
+        Coding::ALaw => format!("A-law {container}"),
+        Coding::MuLaw => format!("mu-law {container}"),
         Coding::Integer if valid_bits == 8 * width => format!("{valid_bits}-bit {container}"),
         Coding::Integer => format!("{valid_bits}-in-{}-bit {container}", 8 * width),
     }
@@ -224,6 +230,8 @@ impl WavRecipe {
         const FULL_16: f32 = 1.0 / 32_768.0;
         const FULL_32: f32 = 1.0 / 2_147_483_648.0;
         match (coding, width) {
+            (Coding::ALaw, _) => deal(bytes, samples, |[byte]| f32::from(a_law(byte)) * FULL_16),
+            (Coding::MuLaw, _) => deal(bytes, samples, |[byte]| f32::from(mu_law(byte)) * FULL_16),
             (Coding::Integer, 1) => {
                 deal(bytes, samples, |[byte]| (f32::from(byte) - 128.0) / 128.0);
             }

@@ -148,12 +148,12 @@ fn wav_faults_are_named() {
         (wav(&[fmt(1, 5000, 8000, 8, 1), data()]), "5000 channels"),
         (wav(&[fmt(2, 1, 8000, 4, 1), data()]), "ADPCM"),
         (
-            wav(&[fmt(7, 1, 8000, 8, 1), data()]),
-            "mu-law samples (convert it to PCM first)",
+            wav(&[fmt(7, 1, 8000, 16, 2), data()]),
+            "16-bit mu-law samples in 2 bytes (convert it to PCM first)",
         ),
         (wav(&[fmt(0x55, 1, 8000, 0, 1), data()]), "MPEG"),
         (wav(&[fmt(0x1234, 1, 8000, 16, 2), data()]), "0x1234"),
-        (wav(&[extensible(6, 8, 8), data()]), "A-law"),
+        (wav(&[extensible(2, 8, 8), data()]), "ADPCM"),
         (
             wav(&[chunk(b"fmt ", None, &[1, 0, 1, 0]), data()]),
             "4 bytes",
@@ -350,4 +350,55 @@ fn extensible_headers_and_wide_floats() {
             .iter()
             .all(|x| x.is_nan())
     );
+}
+
+#[test]
+fn logarithmic_samples_are_decoded() {
+    // Codes of +-0 or the least value, of the largest, and one between, with
+    // their values in the 13 and 14 bits of ITU-T G.711, tables 1a to 2b.
+    let a_law: [(u8, i32); 6] = [
+        (0xD5, 1),
+        (0x55, -1),
+        (0xAA, 4032),
+        (0x2A, -4032),
+        (0xC5, 33),
+        (0xB5, 1056),
+    ];
+    let mu_law: [(u8, i32); 6] = [
+        (0xFF, 0),
+        (0x7F, 0),
+        (0xFE, 2),
+        (0x80, 8031),
+        (0x00, -8031),
+        (0x6F, -33),
+    ];
+    let folder = Folder::new();
+    for (tag, name, codes, full_scale) in
+        [(6, "A-law", a_law, 4096.0), (7, "mu-law", mu_law, 8192.0)]
+    {
+        for format in [fmt(tag, 1, 8000, 8, 1), extensible(tag, 8, 8)] {
+            let body: Vec<u8> = (0..60).map(|i| codes[i % 6].0).collect();
+            let bytes = riff_file(b"RIFF", &[format, chunk(b"data", None, &body)]);
+            let capture = open(&folder.write("log.wav", bytes)).unwrap();
+            assert_eq!(capture.spec().format, format!("{name} WAV"));
+            assert_eq!(notes(&capture), "");
+            let expected: Vec<f32> = (0..60)
+                .map(|i| codes[i % 6].1 as f32 / full_scale)
+                .collect();
+            assert_eq!(read(&capture, 7), [expected], "{name}");
+        }
+        // The step is the least distance between any two values.
+        let all: Vec<u8> = (0..=255).collect();
+        let chunks = [fmt(tag, 1, 8000, 8, 1), chunk(b"data", None, &all)];
+        let capture = open(&folder.write("all.wav", riff_file(b"RIFF", &chunks))).unwrap();
+        let mut values = read(&capture, 256).remove(0);
+        values.sort_unstable_by(f32::total_cmp);
+        values.dedup_by(|a, b| a == b);
+        let steps = values.windows(2).map(|pair| f64::from(pair[1] - pair[0]));
+        assert_eq!(
+            capture.spec().step,
+            Some(steps.fold(1.0, f64::min)),
+            "{name}"
+        );
+    }
 }
