@@ -139,16 +139,19 @@ pub(super) struct Heading {
     pub unit: Option<String>,
 }
 
-/// `accel [m/s^2]`, `U (V)`, `t/s` or plain `x`.
+/// `accel [m/s^2]`, `U (V)`, `t/s` or plain `x`. Control characters stay: who
+/// prints a name escapes them.
 pub(super) fn read_heading(bytes: &[u8]) -> Heading {
     /// Characters of a name that are kept.
     const LONGEST: usize = 120;
-    let mut text = to_text(bytes).replace(|c: char| c.is_control() || c == '\u{FEFF}', " ");
+    let mut text = to_text(bytes)
+        .trim_matches(|c: char| c.is_whitespace() || c == '\u{FEFF}')
+        .to_owned();
     if let Some((end, _)) = text.char_indices().nth(LONGEST) {
         text.truncate(end);
         text.push('…');
     }
-    let text = text.trim();
+    let text = text.as_str();
     for (open, close) in [('[', ']'), ('(', ')'), ('{', '}'), ('<', '>')] {
         let inside = text
             .strip_suffix(close)
@@ -267,7 +270,12 @@ mod tests {
             ("t/s", "t", Some("s")),
             ("a/b", "a/b", None),
             ("a, g", "a", Some("g")),
-            ("a\u{7}b", "a b", None),
+            ("\u{1b}[31ma\u{7}b", "\u{1b}[31ma\u{7}b", None),
+            (
+                "\u{FEFF} \t\u{1b}a\u{1b} [\u{1b}] \r",
+                "\u{1b}a\u{1b}",
+                Some("\u{1b}"),
+            ),
             ("", "", None),
             ("()", "()", None),
         ] {

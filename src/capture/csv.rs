@@ -13,6 +13,7 @@ use super::csv_sniff::{Table, sniff};
 use super::error::CaptureError;
 use super::line_limit::LONGEST_LINE;
 use super::text::Encoding;
+use super::wording::nine_digits;
 use super::{Block, Channel, OpenOptions, Spec};
 
 /// All that is needed to pass over the samples.
@@ -87,6 +88,7 @@ fn read_through(
         frames: scan.frames,
         format: "CSV".into(),
         normalised: false,
+        step: None,
         notes,
     };
     let source = source.clone();
@@ -145,24 +147,40 @@ fn plan_clock(source: &Source, table: &Arc<Table>) -> Result<Result<ClockPlan, u
     Ok(probe.plan().ok_or(rows.counts.rows))
 }
 
+/// The rate that counts, with a note of what was taken over what: one from the
+/// user before the time column, and that before a line above the table.
 fn rate(
     scan: &Scan,
     table: &Table,
     options: &OpenOptions,
     notes: &mut Vec<String>,
 ) -> Result<f64, CaptureError> {
-    let measured = scan.clock.as_ref().map(Clock::rate_hz).or(table.rate_hz);
-    match (options.rate_hz, measured) {
-        (Some(rate_hz), Some(measured)) => {
-            const SAME: f64 = 1e-3;
-            if (rate_hz / measured - 1.0).abs() > SAME {
+    let stamped = scan.clock.as_ref().map(Clock::rate_hz);
+    let told = match (stamped, table.told_rate) {
+        (Some(stamped), _) => Some((stamped, "the time column".to_owned())),
+        (None, Some((line, rate_hz))) => Some((rate_hz, format!("line {line}"))),
+        (None, None) => None,
+    };
+    match (options.rate_hz, told) {
+        (Some(given), Some((told, place))) => {
+            let (rate, other) = (nine_digits(given), nine_digits(told));
+            notes.push(if rate == other {
+                format!("sample rate {rate} Hz taken from --rate; {place} tells the same")
+            } else {
+                format!("sample rate {rate} Hz taken from --rate, not {other} Hz from {place}")
+            });
+            Ok(given)
+        }
+        (None, Some((told, place))) => {
+            if stamped.is_none() {
                 notes.push(format!(
-                    "sample rate {measured:.6} Hz from the time column overridden by --rate"
+                    "sample rate {} Hz taken from {place}",
+                    nine_digits(told)
                 ));
             }
-            Ok(rate_hz)
+            Ok(told)
         }
-        (Some(rate_hz), None) | (None, Some(rate_hz)) => Ok(rate_hz),
+        (Some(given), None) => Ok(given),
         (None, None) => Err(CaptureError::NoTime),
     }
 }

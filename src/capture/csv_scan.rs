@@ -8,6 +8,7 @@ use super::clock_plan::ClockPlan;
 use super::csv_rows::{RowCounts, Rows, Source};
 use super::csv_sniff::Table;
 use super::error::{CaptureError, excerpt};
+use super::wording::count;
 
 /// Share of words in a column, or of bad stamps, that is no longer a slip.
 const MOST_BAD: f64 = 0.2;
@@ -98,7 +99,7 @@ impl Scan {
                     line: *line,
                     column: column.column + 1,
                     text: text.clone(),
-                    share: format!("nor are {} of {cells} cells in this column", column.words),
+                    share: format!("words in {} of {cells} cells of this column", column.words),
                 });
             }
         }
@@ -139,38 +140,55 @@ impl Scan {
 
     /// Says what was mended.
     pub(super) fn note(&self, table: &Table, notes: &mut Vec<String>) {
-        let mut note = |count: u64, what: &str| {
-            if count > 0 {
-                notes.push(format!("{count} {what}"));
+        let mut note = |n: u64, one: &str, many: &str, fate: &str| {
+            if n > 0 {
+                notes.push(format!("{}: {fate}", count(n, one, many)));
             }
         };
-        note(self.counts.wordy, "lines without a number were left out");
+        note(
+            self.counts.wordy,
+            "line without a number",
+            "lines without a number",
+            "left out",
+        );
         note(
             self.counts.short,
-            "rows have fewer cells than the others: taken as missing",
+            "row has fewer cells than the others",
+            "rows have fewer cells than the others",
+            "taken as missing",
         );
         note(
             self.counts.long,
-            "rows have more cells than the others: the surplus was left out",
+            "row has more cells than the others",
+            "rows have more cells than the others",
+            "the surplus was left out",
         );
         if let Some(clock) = &self.clock {
             let counts = clock.counts;
             note(
                 counts.repeated,
-                "rows repeat the stamp before them: left out",
+                "row repeats the stamp before it",
+                "rows repeat the stamp before them",
+                "left out",
             );
+            let next = "taken in the order of the file";
             note(
                 counts.back,
-                "rows step back in time: taken as the next samples",
+                "row steps back in time",
+                "rows step back in time",
+                next,
             );
             note(
                 counts.unstamped,
-                "rows have no readable time: taken as the next samples",
+                "row has no readable time",
+                "rows have no readable time",
+                next,
             );
             if counts.gaps > 0 {
                 notes.push(format!(
-                    "{} gaps in the time column: {} missing samples were filled in as missing",
-                    counts.gaps, counts.missing
+                    "{} in the time column: {} filled in as missing",
+                    count(counts.gaps, "gap", "gaps"),
+                    count(counts.missing, "sample was", "samples were"),
                 ));
             }
             clock.note(notes);
@@ -181,8 +199,12 @@ impl Scan {
                 notes.push(format!("column {name:?} holds no numbers: left out"));
             } else if let Some((line, text)) = &column.word {
                 notes.push(format!(
-                    "{} cells of column {name:?} are no numbers (first: line {line}, {text:?}): taken as missing",
-                    column.words
+                    "column {name:?} has {} (first: line {line}, {text:?}): taken as missing",
+                    count(
+                        column.words,
+                        "cell that is no number",
+                        "cells that are no numbers"
+                    ),
                 ));
             }
         }

@@ -4,12 +4,10 @@
 use csv::ByteRecord;
 
 use super::cells::{Cell, Heading, is_remark, is_unit, read_cell, read_heading};
-use super::csv_lines::{Line, physical_lines, split};
+use super::csv_delimiter::choose_delimiter;
+use super::csv_lines::{Line, physical_lines};
 use super::error::CaptureError;
 use super::stamps::StampFormat;
-
-/// Delimiters, the less ambiguous first.
-const DELIMITERS: &[u8] = b"\t;, ";
 
 /// The plan for reading a table.
 #[derive(Debug, Clone, PartialEq)]
@@ -23,8 +21,8 @@ pub(super) struct Table {
     pub first_line: u64,
     pub columns: Vec<Heading>,
     pub time: Option<TimeColumn>,
-    /// Sample rate from a line above the table, where there is no time column.
-    pub rate_hz: Option<f64>,
+    /// Line above the table that tells a sample rate in hertz, and that rate.
+    pub told_rate: Option<(u64, f64)>,
     /// Indices of the columns of values.
     pub values: Vec<usize>,
     /// Indices of columns that are neither.
@@ -41,7 +39,7 @@ pub(super) struct TimeColumn {
 
 /// How the cells of a column mostly read.
 #[derive(Debug, Clone, Copy, Default, PartialEq)]
-struct Tally {
+pub(super) struct Tally {
     numbers: usize,
     /// Written times and dates.
     times: usize,
@@ -65,28 +63,7 @@ pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table,
         });
     }
     let lines = physical_lines(head, whole)?;
-    let (mut delimiter, mut records) = DELIMITERS
-        .iter()
-        .map(|&delimiter| (delimiter, split(&lines, delimiter)))
-        .reduce(|best, next| {
-            if score(&next.1) > score(&best.1) {
-                next
-            } else {
-                best
-            }
-        })
-        .ok_or(CaptureError::NoNumbers)?;
-    if delimiter == b',' {
-        match halved_numbers(&records) {
-            // One column: any delimiter but the comma reads it.
-            Some(2) => {
-                delimiter = b';';
-                records = split(&lines, delimiter);
-            }
-            Some(_) => return Err(CaptureError::AmbiguousCommas),
-            None => {}
-        }
-    }
+    let (delimiter, records) = choose_delimiter(&lines)?;
     let width = usual_width(&records);
     let tallies = tally(&records, width);
     let first = records.iter().position(|line| is_data(line, &tallies));
@@ -118,22 +95,17 @@ pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table,
         first_line: data.first().map_or(1, |line| line.number),
         columns: headings(before, width),
         time: None,
-        rate_hz: None,
+        told_rate: None,
         values: Vec::new(),
         left_out: Vec::new(),
         notes: Vec::new(),
     };
-    let told = before.iter().rev().find_map(|line| {
+    table.told_rate = before.iter().rev().find_map(|line| {
         let (_, bytes) = lines.iter().find(|(start, _)| *start == line.start)?;
         Some((line.number, super::csv_rate::read_rate(bytes)?))
     });
-    super::csv_time::find_time(&mut table, &rows(data), rate_given || told.is_some())?;
-    if let (Some((line, rate_hz)), None, false) = (told, table.time, rate_given) {
-        table.rate_hz = Some(rate_hz);
-        table
-            .notes
-            .push(format!("sample rate {rate_hz} Hz taken from line {line}"));
-    }
+    let rate_known = rate_given || table.told_rate.is_some();
+    super::csv_time::find_time(&mut table, &rows(data), rate_known)?;
     choose_values(&mut table, data, &tallies)?;
     Ok(table)
 }
@@ -146,40 +118,8 @@ fn rows(data: &[Line]) -> Vec<&ByteRecord> {
         .collect()
 }
 
-/// Cells per row, if commas split what are numbers with decimal commas.
-///
-/// Each second cell is then bare digits, the others are whole, and there are
-/// zeros that whole numbers have no use for: `-0` or `05`, or the heading has
-/// half as many cells.
-fn halved_numbers(records: &[Line]) -> Option<usize> {
-    let width = usual_width(records);
-    if !width.is_multiple_of(2) {
-        return None;
-    }
-    let tallies = tally(records, width);
-    let first = records.iter().position(|line| is_data(line, &tallies))?;
-    let (before, data) = records.split_at(first);
-    let heading = before.last().map_or(0, |line| line.cells.len());
-    let mut needless_zero = heading == width / 2;
-    for line in data.iter().filter(|line| is_data(line, &tallies)) {
-        for (cell, second) in line.cells.iter().zip([false, true].into_iter().cycle()) {
-            let digits = if second {
-                cell
-            } else {
-                cell.strip_prefix(b"-").unwrap_or(cell)
-            };
-            if digits.is_empty() || !digits.iter().all(u8::is_ascii_digit) {
-                return None;
-            }
-            let leading_zero = digits.len() > 1 && digits.starts_with(b"0");
-            needless_zero |= second && leading_zero || !second && cell == b"-0";
-        }
-    }
-    (needless_zero && heading != width).then_some(width)
-}
-
 /// 1 for a number or time, 1 for a word.
-fn tally_cell(cell: &[u8]) -> (usize, usize) {
+pub(super) fn tally_cell(cell: &[u8]) -> (usize, usize) {
     match read_cell(cell) {
         Cell::Number(_) => (1, 0),
         Cell::Missing => (0, 0),
@@ -188,30 +128,8 @@ fn tally_cell(cell: &[u8]) -> (usize, usize) {
     }
 }
 
-/// Numbers less words, over the lines that hold a number.
-fn score(lines: &[Line]) -> i64 {
-    let width = usual_width(lines);
-    let of_line = |line: &Line| {
-        let (numbers, words) = line
-            .cells
-            .iter()
-            .map(tally_cell)
-            .fold((0, 0), |(n, w), (number, word)| (n + number, w + word));
-        if numbers > 0 {
-            numbers as i64 - words as i64
-        } else {
-            -1
-        }
-    };
-    lines
-        .iter()
-        .filter(|line| !line.remark && line.cells.len() == width)
-        .map(of_line)
-        .sum()
-}
-
 /// The commonest number of cells among the lines with a number in them.
-fn usual_width(lines: &[Line]) -> usize {
+pub(super) fn usual_width(lines: &[Line]) -> usize {
     let mut counts = std::collections::BTreeMap::new();
     for line in lines.iter().filter(|line| !line.remark) {
         if line.cells.iter().any(|cell| tally_cell(cell).0 > 0) {
@@ -224,7 +142,7 @@ fn usual_width(lines: &[Line]) -> usize {
         .map_or(1, |(width, _)| width)
 }
 
-fn tally(lines: &[Line], width: usize) -> Vec<Tally> {
+pub(super) fn tally(lines: &[Line], width: usize) -> Vec<Tally> {
     let mut tallies = vec![Tally::default(); width];
     for line in lines
         .iter()
@@ -243,7 +161,7 @@ fn tally(lines: &[Line], width: usize) -> Vec<Tally> {
 }
 
 /// A row of numbers: as wide as usual, with no word where numbers are usual.
-fn is_data(line: &Line, tallies: &[Tally]) -> bool {
+pub(super) fn is_data(line: &Line, tallies: &[Tally]) -> bool {
     let mut numbers = 0;
     let mut words = 0;
     for (cell, tally) in line.cells.iter().zip(tallies) {

@@ -4,6 +4,8 @@ use std::io;
 
 use thiserror::Error;
 
+use super::wording::count;
+
 /// Why a recording could not be read. Prints as one line without the file's
 /// name; text taken from the file is shortened and its control characters are
 /// escaped.
@@ -53,7 +55,7 @@ pub enum CaptureError {
     #[error("has a header but no samples")]
     NoSamples,
     /// Too few samples for a spectrum.
-    #[error("too short: {frames} samples (at least {least} are needed)")]
+    #[error("too short: {} (at least {least} are needed)", count(*frames, "sample", "samples"))]
     TooShort {
         /// Samples per channel that were found.
         frames: u64,
@@ -66,7 +68,7 @@ pub enum CaptureError {
         /// The fault, with the bad value in it.
         what: String,
     },
-    /// Sample coding that is not linear PCM or float.
+    /// Sample coding that is not PCM (linear, A-law, mu-law) or float.
     #[error("WAV with {coding} (convert it to PCM first)")]
     UnsupportedCoding {
         /// Name of the coding or the bad bit depth.
@@ -125,7 +127,7 @@ pub enum CaptureError {
     },
     /// Time that mostly stands still or runs backwards.
     #[error(
-        "time column {name:?} does not increase: {bad} of {rows} rows repeat or go back, first at line {line} (sort it, or give another time column)"
+        "time column {name:?} does not increase: {bad} of {rows} rows repeating or going back, first at line {line} (sort it, or give another time column)"
     )]
     TimeNotIncreasing {
         /// Column name.
@@ -139,7 +141,7 @@ pub enum CaptureError {
     },
     /// Most stamps cannot be read.
     #[error(
-        "line {line}, column {column}: not a time, nor are {bad} of {rows} cells in this column"
+        "line {line}, column {column}: not a time (none in {bad} of {rows} cells of this column)"
     )]
     BadStamps {
         /// 1-based line of the first bad stamp.
@@ -153,7 +155,8 @@ pub enum CaptureError {
     },
     /// A gap so long that the stamps are wrong or the file holds two recordings.
     #[error(
-        "line {line}: the time jumps ahead by {missing} samples, with {rows} rows in the file (cut the recording there, or mend the stamp)"
+        "line {line}: the time jumps ahead by {}, with {} in the file (cut the recording there, or mend the stamp)",
+        count(*missing, "sample", "samples"), count(*rows, "row", "rows")
     )]
     GapTooLong {
         /// 1-based line after the gap.

@@ -3,16 +3,19 @@
 //! A [`Capture`] is opened once and can be passed over as often as needed with
 //! [`Capture::blocks`]; no pass ever holds more than one block of samples.
 //!
-//! WAV: `riff` walks the chunks without trusting a size, `wav` decodes blocks.
+//! WAV: `riff` walks the chunks without trusting a size, `wav` decodes blocks,
+//! with `companded` for A-law and mu-law.
 //! CSV: `text` and `line_limit` give bounded lines in UTF-8, `csv_lines`,
-//! `csv_sniff` and `csv_time` find the layout from the first lines, `stamps` and
-//! `dates` read times, `clock_plan` and `clock` turn them into frame numbers and
+//! `csv_delimiter`, `csv_sniff` and `csv_time` find the layout from the first
+//! lines, `stamps` and `dates` read times, `clock_plan` and `clock` turn them into frame numbers and
 //! a rate, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks.
 
 mod cells;
 mod clock;
 mod clock_plan;
+mod companded;
 mod csv;
+mod csv_delimiter;
 mod csv_lines;
 mod csv_rate;
 mod csv_rows;
@@ -27,6 +30,7 @@ mod riff;
 mod stamps;
 mod text;
 mod wav;
+mod wording;
 
 use std::fs::File;
 use std::path::{Path, PathBuf};
@@ -74,6 +78,14 @@ pub struct Spec {
     pub format: String,
     /// Samples are fractions of full scale (WAV), not physical values (CSV).
     pub normalised: bool,
+    /// Smallest step between sample values, as a fraction of full scale, in
+    /// `(0, 1]`: `2^-(bits - 1)` for an integer WAV, by the bits that carry data,
+    /// not those of the container. Rounding to such steps adds noise of variance
+    /// step²/12 spread over the whole band (Bennett 1948), so a noise floor
+    /// measured below that tells of the rounding, not of the recorder's input.
+    /// For A-law and mu-law it is the step around zero, where it is smallest.
+    /// `None` for float WAV and CSV, whose steps are not known.
+    pub step: Option<f64>,
     /// What was assumed or mended while reading, one clause each.
     pub notes: Vec<String>,
 }

@@ -7,6 +7,7 @@
 use std::io::{Read, Seek, SeekFrom};
 
 use super::error::CaptureError;
+use super::wording::count;
 
 /// Bytes in a chunk's identifier and size.
 const CHUNK_HEADER: u64 = 8;
@@ -22,6 +23,10 @@ pub(super) enum Coding {
     Integer,
     /// IEEE 754.
     Float,
+    /// ITU-T G.711, 8 bits.
+    ALaw,
+    /// ITU-T G.711, 8 bits.
+    MuLaw,
 }
 
 /// The `fmt ` chunk, mended where it contradicts itself.
@@ -114,8 +119,8 @@ pub(super) fn walk<F: Read + Seek>(file: &mut F, length: u64) -> Result<Layout, 
                 "the header was never finished: read to the end of the file".into()
             } else {
                 format!(
-                    "data chunk claims {} frames, file holds {}: read to the end",
-                    claimed / frame,
+                    "data chunk claims {}, file holds {}: read to the end",
+                    count(claimed / frame, "frame", "frames"),
                     held / frame
                 )
             },
@@ -123,10 +128,10 @@ pub(super) fn walk<F: Read + Seek>(file: &mut F, length: u64) -> Result<Layout, 
     }
     let bytes = claimed.min(held);
     if bytes % frame != 0 {
-        notes.push(format!(
-            "the last {} bytes are no whole frame: left out",
-            bytes % frame
-        ));
+        notes.push(match bytes % frame {
+            1 => "the last byte is no whole frame: left out".into(),
+            n => format!("the last {n} bytes are no whole frame: left out"),
+        });
     }
     Ok(Layout {
         format,
@@ -250,7 +255,12 @@ fn read_format<F: Read>(
         .min(usize::try_from(size).unwrap_or(usize::MAX));
     let got = read_up_to(file, buffer.get_mut(..wanted).unwrap_or_default())?;
     let bytes = buffer.get(..got).unwrap_or_default();
-    let short = || bad(format!("format chunk of {got} bytes (16 are needed)"));
+    let short = || {
+        bad(format!(
+            "format chunk of {} (16 are needed)",
+            count(got as u64, "byte", "bytes")
+        ))
+    };
     let mut tag = le_u16(bytes, 0).ok_or_else(short)?;
     let channels = le_u16(bytes, 2).ok_or_else(short)?;
     let rate_hz = le_u32(bytes, 4).ok_or_else(short)?;
@@ -262,7 +272,8 @@ fn read_format<F: Read>(
     if tag == EXTENSIBLE {
         let cut = || {
             bad(format!(
-                "extensible format chunk of {got} bytes (40 are needed)"
+                "extensible format chunk of {} (40 are needed)",
+                count(got as u64, "byte", "bytes")
             ))
         };
         // A writer that leaves the valid bits 0 means all of them.
@@ -280,6 +291,8 @@ fn read_format<F: Read>(
     let coding = match tag {
         1 => Coding::Integer,
         3 => Coding::Float,
+        6 => Coding::ALaw,
+        7 => Coding::MuLaw,
         _ => {
             return Err(CaptureError::UnsupportedCoding {
                 coding: coding_name(tag),
@@ -299,7 +312,8 @@ fn read_format<F: Read>(
         width if frame % channels == 0 && width >= least && width <= 8 => width,
         _ => {
             notes.push(format!(
-                "impossible frame size of {frame} bytes: taken as {}",
+                "impossible frame size of {}: taken as {}",
+                count(frame.into(), "byte", "bytes"),
                 u32::from(least) * u32::from(channels)
             ));
             least
@@ -308,14 +322,19 @@ fn read_format<F: Read>(
     let supported = match coding {
         Coding::Integer => (1..=32).contains(&bits) && (1..=4).contains(&width),
         Coding::Float => bits == 8 * width && (width == 4 || width == 8),
+        Coding::ALaw | Coding::MuLaw => bits == 8 && width == 1,
     };
     if !supported {
-        let kind = if coding == Coding::Float {
-            "float"
-        } else {
-            "integer"
+        let kind = match coding {
+            Coding::Float => "float",
+            Coding::Integer => "integer",
+            Coding::ALaw => "A-law",
+            Coding::MuLaw => "mu-law",
         };
-        let coding = format!("{bits}-bit {kind} samples in {width} bytes");
+        let coding = format!(
+            "{bits}-bit {kind} samples in {}",
+            count(width.into(), "byte", "bytes")
+        );
         return Err(CaptureError::UnsupportedCoding { coding });
     }
     let true_rate = u64::from(rate_hz) * u64::from(width) * u64::from(channels);
@@ -335,8 +354,6 @@ fn read_format<F: Read>(
 fn coding_name(tag: u16) -> String {
     let name = match tag {
         0x0002 | 0x0011 => "ADPCM-compressed samples",
-        0x0006 => "A-law samples",
-        0x0007 => "mu-law samples",
         0x0031 => "GSM-compressed samples",
         0x0050 | 0x0055 => "MPEG-compressed samples",
         _ => return format!("the unknown sample coding 0x{tag:04X}"),

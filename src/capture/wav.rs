@@ -4,8 +4,10 @@ use std::fs::File;
 use std::io::{Read, Seek, SeekFrom};
 use std::path::PathBuf;
 
+use super::companded::{a_law, mu_law};
 use super::error::CaptureError;
 use super::riff::{self, Coding, Format, Layout};
+use super::wording::nine_digits;
 use super::{Block, Channel, OpenOptions, Spec};
 
 /// Bytes read at once: fits the second-level cache, so that the strided passes
@@ -43,15 +45,24 @@ pub(super) fn open(
         }
         None => f64::from(format.rate_hz),
     };
-    if rate_hz != f64::from(format.rate_hz) {
-        notes.push(format!(
-            "sample rate {} Hz in the header overridden by --rate",
-            format.rate_hz
-        ));
+    if options.rate_hz.is_some() {
+        let (rate, header) = (nine_digits(rate_hz), format.rate_hz);
+        notes.push(if rate == header.to_string() {
+            format!("sample rate {rate} Hz taken from --rate; the header tells the same")
+        } else {
+            format!("sample rate {rate} Hz taken from --rate, not {header} Hz from the header")
+        });
     }
-    let shift = match format.coding {
-        Coding::Float => 0,
-        Coding::Integer => idle_upper_bits(&mut file, &layout, &mut notes)?,
+    let (shift, step) = match format.coding {
+        Coding::Float => (0, None),
+        // Least steps of 16 and 8 in 16 bits.
+        Coding::ALaw => (0, Some(2f64.powi(-11))),
+        Coding::MuLaw => (0, Some(2f64.powi(-12))),
+        Coding::Integer => {
+            let place = find_samples(&mut file, &layout, &mut notes)?;
+            // Exact: a power of two.
+            (place.shift, Some(2f64.powi(1 - i32::from(place.bits))))
+        }
     };
     let spec = Spec {
         path: path.clone(),
@@ -66,6 +77,7 @@ pub(super) fn open(
         frames: layout.frames,
         format: format_name(&layout),
         normalised: true,
+        step,
         notes,
     };
     Ok((
@@ -88,23 +100,33 @@ fn format_name(layout: &Layout) -> String {
     let container = if layout.large { "RF64" } else { "WAV" };
     match coding {
         Coding::Float => format!("{valid_bits}-bit float {container}"),
+        Coding::ALaw => format!("A-law {container}"),
+        Coding::MuLaw => format!("mu-law {container}"),
         Coding::Integer if valid_bits == 8 * width => format!("{valid_bits}-bit {container}"),
         Coding::Integer => format!("{valid_bits}-in-{}-bit {container}", 8 * width),
     }
 }
 
-/// Bits at the upper end of each container that carry nothing.
+/// Which bits of each container carry the sample.
+struct Place {
+    /// Idle ones above it.
+    shift: u32,
+    /// Its own.
+    bits: u16,
+}
+
+/// Finds the bits that carry samples.
 ///
 /// Where a container has more bits than the sample, the specification puts the
 /// sample at its upper end, but some writers put it at the lower end. The data
 /// tell: a sample at the upper end leaves the lowest bits 0; above one at the
 /// lower end its sign is repeated, or the bits are 0. Where neither holds, the
 /// whole container is used.
-fn idle_upper_bits(
+fn find_samples(
     file: &mut File,
     layout: &Layout,
     notes: &mut Vec<String>,
-) -> Result<u32, CaptureError> {
+) -> Result<Place, CaptureError> {
     let Format {
         valid_bits,
         width,
@@ -113,8 +135,12 @@ fn idle_upper_bits(
     } = layout.format;
     let container = 8 * width;
     let spare = container - valid_bits;
+    let whole = Place {
+        shift: 0,
+        bits: container,
+    };
     if spare == 0 || width == 1 {
-        return Ok(0);
+        return Ok(whole);
     }
     // Enough that a run of samples that happen to end in zeros does not decide.
     const ENOUGH: u64 = 10_000;
@@ -147,18 +173,24 @@ fn idle_upper_bits(
         }
     }
     if upper {
-        return Ok(0);
+        return Ok(Place {
+            shift: 0,
+            bits: valid_bits,
+        });
     }
     if repeated || zero {
         notes.push(format!(
             "{valid_bits}-bit samples at the lower end of {container} bits"
         ));
-        return Ok(spare.into());
+        return Ok(Place {
+            shift: spare.into(),
+            bits: valid_bits,
+        });
     }
     notes.push(format!(
         "header says {valid_bits} bits, but all {container} are used"
     ));
-    Ok(0)
+    Ok(whole)
 }
 
 /// One pass over the samples.
@@ -198,6 +230,8 @@ impl WavRecipe {
         const FULL_16: f32 = 1.0 / 32_768.0;
         const FULL_32: f32 = 1.0 / 2_147_483_648.0;
         match (coding, width) {
+            (Coding::ALaw, _) => deal(bytes, samples, |[byte]| f32::from(a_law(byte)) * FULL_16),
+            (Coding::MuLaw, _) => deal(bytes, samples, |[byte]| f32::from(mu_law(byte)) * FULL_16),
             (Coding::Integer, 1) => {
                 deal(bytes, samples, |[byte]| (f32::from(byte) - 128.0) / 128.0);
             }

@@ -163,7 +163,7 @@ fn missing_values_are_nan_and_words_are_counted() {
         assert_eq!(x.is_nan(), i % 10 == 5, "row {i}");
     }
     let note =
-        "1 cells of column \"x\" are no numbers (first: line 87, \"oops\"): taken as missing";
+        "column \"x\" has 1 cell that is no number (first: line 87, \"oops\"): taken as missing";
     assert_eq!(capture.spec().notes, [note]);
 }
 
@@ -184,7 +184,7 @@ fn a_gap_is_filled_so_that_index_and_time_agree() {
     assert_eq!((capture.spec().frames, capture.gaps()), (17_001, 2));
     assert_eq!(capture.spec().rate_hz, 1000.0);
     assert!(notes(&capture).contains("2 gaps"), "{}", notes(&capture));
-    assert!(notes(&capture).contains("12001 missing samples"));
+    assert!(notes(&capture).contains("12001 samples were filled in as missing"));
     let samples = read(&capture, 777);
     for (i, &x) in samples[0].iter().enumerate() {
         if i == 1000 || (3001..15_001).contains(&i) {
@@ -221,12 +221,12 @@ fn stamps_that_repeat_or_go_back() {
     let capture = open(&folder.write("back.csv", &text)).unwrap();
     assert_eq!(capture.spec().frames, 100);
     assert!(
-        notes(&capture).contains("1 rows repeat the stamp"),
+        notes(&capture).contains("1 row repeats the stamp before it"),
         "{}",
         notes(&capture)
     );
     assert!(
-        notes(&capture).contains("1 rows step back"),
+        notes(&capture).contains("1 row steps back in time"),
         "{}",
         notes(&capture)
     );
@@ -250,7 +250,7 @@ fn csv_faults_are_named() {
     let cases: Vec<(String, &str)> = vec![
         (
             words,
-            "line 2, column 2: \"abc\" is not a number (nor are 14 of 40 cells",
+            "line 2, column 2: \"abc\" is not a number (words in 14 of 40 cells",
         ),
         ("t,x\n".into(), "has a header but no samples"),
         ("\n\n\n".into(), "is empty"),
@@ -376,4 +376,106 @@ fn gaps_that_add_up_beyond_reason_are_refused() {
         message.contains("jumps ahead by 9000 samples, with 100 rows"),
         "{message}"
     );
+}
+
+#[test]
+fn one_is_not_many() {
+    let folder = Folder::new();
+    // One frame is missing before row 18.
+    let odd = |i: usize, many: bool| match i {
+        10 => Some("100,1,1\npaused".into()),
+        12 => Some("120,1,oops".into()),
+        14 => Some("140,1".into()),
+        16 => Some("160,1,1,9".into()),
+        22 if many => Some("paused\n230,1,oops".into()),
+        24 if many => Some("250,1".into()),
+        26 if many => Some("270,1,1,9".into()),
+        _ => None,
+    };
+    let text = |many: bool| {
+        table("t_ms,x,y\n", 60, |i| {
+            let time = if i < 18 { i } else { i + 1 } + if many && i > 40 { 2 } else { 0 };
+            odd(i, many).unwrap_or_else(|| format!("{}0,1,{}", time, prime(i)))
+        })
+    };
+    let one = open(&folder.write("one.csv", text(false))).unwrap();
+    let one = one.spec().notes.clone();
+    assert_eq!(
+        one,
+        [
+            "1 line without a number: left out",
+            "1 row has fewer cells than the others: taken as missing",
+            "1 row has more cells than the others: the surplus was left out",
+            "1 gap in the time column: 1 sample was filled in as missing",
+            "column \"y\" has 1 cell that is no number (first: line 15, \"oops\"): taken as missing",
+        ]
+    );
+    let many = notes(&open(&folder.write("many.csv", text(true))).unwrap());
+    for part in [
+        "2 lines without a number",
+        "2 rows have fewer",
+        "2 rows have more",
+        "2 gaps in",
+        "3 samples were",
+        "2 cells that are no numbers",
+    ] {
+        assert!(many.contains(part), "{many:?} lacks {part:?}");
+    }
+    let refused = one_line(open_at(&folder.write("short.csv", "7.5\n"), 9.0).unwrap_err());
+    assert!(refused.starts_with("too short: 1 sample ("), "{refused}");
+}
+
+#[test]
+fn a_name_stays_as_it_is_in_the_file() {
+    let folder = Folder::new();
+    let text = table(
+        "t, \u{1b}[31mred\u{1b}[0m ,\"\u{1b}[2J \" (V),\u{1b}\u{202e}x [\u{7}]\n",
+        60,
+        |i| format!("{i}.5,{},oops,7", prime(i)),
+    );
+    let capture = open(&folder.write("esc.csv", text)).unwrap();
+    let [red, other] = &capture.spec().channels[..] else {
+        panic!("{:?}", capture.spec().channels);
+    };
+    assert_eq!(red.name, "\u{1b}[31mred\u{1b}[0m");
+    assert_eq!(other.name, "\u{1b}\u{202e}x");
+    assert_eq!(other.unit.as_deref(), Some("\u{7}"));
+    assert_eq!(
+        notes(&capture),
+        "column \"\\u{1b}[2J\" holds words: left out"
+    );
+}
+
+#[test]
+fn the_notes_say_which_rate_was_taken() {
+    let folder = Folder::new();
+    let stamped = table("Sample rate: 7 Hz\nt,x\n", 50, |i| {
+        format!("{:.3},{}", i as f64 / 2000.0 * 2.0, prime(i))
+    });
+    let told = table("Sample rate: 1 kHz\nx,y\n", 50, |i| {
+        format!("{},{}", prime(i), prime(i + 1))
+    });
+    for (text, place) in [(stamped, "the time column"), (told, "line 1")] {
+        let path = folder.write("r.csv", text);
+        for (rate_hz, note) in [
+            (
+                1000.0,
+                format!("sample rate 1000 Hz taken from --rate; {place} tells the same"),
+            ),
+            (
+                1000.25,
+                format!("sample rate 1000.25 Hz taken from --rate, not 1000 Hz from {place}"),
+            ),
+            (
+                48_000.0,
+                format!("sample rate 48000 Hz taken from --rate, not 1000 Hz from {place}"),
+            ),
+        ] {
+            let capture = open_at(&path, rate_hz).unwrap();
+            assert_eq!(notes(&capture), note);
+            assert_eq!(capture.spec().rate_hz, rate_hz);
+            assert_eq!(capture.spec().frames, 50);
+            assert_eq!(capture.spec().step, None);
+        }
+    }
 }

@@ -81,6 +81,53 @@ fn lines_before_the_rows() {
 }
 
 #[test]
+fn a_delimiter_goes_before_blanks() {
+    let rows = |header: &str, row: &dyn Fn(f64, i32) -> String| {
+        table(&format!("{header}\n"), 48, |i| {
+            row(i as f64 * 1e3 / 64.0, PRIMES[i % 24])
+        })
+    };
+    for delimiter in ["\t", ";", ",", ", ", "; ", " ,", "\t "] {
+        let header = format!("time (ms){delimiter}vib 1 (mm/s)");
+        let text = rows(&header, &|ms, x| format!("{ms}{delimiter}{x}"));
+        let note = assert_primes(&header, text, "vib 1", Some("mm/s"));
+        assert_eq!(note, "", "{header:?}");
+        // Whole numbers: "5," reads as one, too.
+        let header = format!("time (us){delimiter}vib (mm/s)");
+        let text = rows(&header, &|ms, x| format!("{:.0}{delimiter}{x}", ms * 1e3));
+        let note = assert_primes(&header, text, "vib", Some("mm/s"));
+        assert_eq!(note, "", "{header:?}");
+        // A date and a time in one cell, split at blanks, would be one number more.
+        let header = format!("date and time{delimiter}vib (mm/s)");
+        let text = rows(&header, &|ms, x| {
+            format!("2031-05-17 12:30:{:09.6}{delimiter}{x}", ms / 1e3)
+        });
+        assert_primes(&header, text, "vib", Some("mm/s"));
+        // Remarks of several words after each row.
+        let header = format!("time (ms){delimiter}vib{delimiter}what was on");
+        let text = rows(&header, &|ms, x| {
+            format!("{ms}{delimiter}{x}{delimiter}fan 2 on")
+        });
+        let note = assert_primes(&header, text, "vib", None);
+        assert_eq!(note, "column \"what was on\" holds words: left out");
+    }
+    // Blanks it is where nothing else fits.
+    let comma = |x: f64| x.to_string().replace('.', ",");
+    let text = rows("Hall 7, north\nt_ms x", &|ms, x| {
+        format!("{}   {x},0", comma(ms))
+    });
+    assert_primes("decimal comma", text, "x", None);
+    let text = rows("Serial, 12\nt_ms x", &|ms, x| {
+        format!("{ms}{}{x}", if x < 7 { "\t " } else { "  " })
+    });
+    assert_primes("blanks and tabs", text, "x", None);
+    let text = rows("t_ms\tn x", &|ms, x| format!("{ms}\t7 {x}"));
+    let folder = Folder::new();
+    let capture = open(&folder.write("mixed.csv", text)).unwrap();
+    assert_eq!(capture.spec().channels.len(), 2);
+}
+
+#[test]
 fn lines_among_and_after_the_rows() {
     for (name, line, note) in [
         ("hash", "# paused, \"here", ""),
@@ -88,12 +135,8 @@ fn lines_among_and_after_the_rows() {
         ("percent", "% paused", ""),
         ("blank", "", ""),
         ("empty cells", ",", ""),
-        (
-            "heading again",
-            "t,x",
-            "1 lines without a number were left out",
-        ),
-        ("words", "paused", "1 lines without a number were left out"),
+        ("heading again", "t,x", "1 line without a number: left out"),
+        ("words", "paused", "1 line without a number: left out"),
     ] {
         for at in [20, 48] {
             let mut lines: Vec<String> = (0..48).map(row).collect();

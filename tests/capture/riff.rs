@@ -47,7 +47,7 @@ fn a_cut_frame_is_dropped_and_noted() {
     bytes.push(77);
     let size = bytes.len() - 44;
     bytes[40..44].copy_from_slice(&(size as u32).to_le_bytes());
-    assert_primes(&bytes, "last 1 bytes are no whole frame");
+    assert_primes(&bytes, "the last byte is no whole frame");
 }
 
 /// Chunks around the primes in 16 bits, one channel.
@@ -93,7 +93,7 @@ fn sizes_and_rates_in_the_header_may_be_wrong() {
     assert_primes(&with(28, &1u32.to_le_bytes()), "byte rate 1 does not fit");
     assert_primes(
         &with(32, &1u16.to_le_bytes()),
-        "impossible frame size of 1 bytes: taken as 2",
+        "impossible frame size of 1 byte: taken as 2",
     );
     assert_primes(
         &with(32, &0u16.to_le_bytes()),

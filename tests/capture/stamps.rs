@@ -256,7 +256,7 @@ fn one_bad_stamp_is_no_gap() {
         assert_eq!(capture.spec().frames, 500, "{bad:?}: {}", notes(&capture));
         assert_eq!(capture.spec().rate_hz, 100.0, "{bad:?}");
         assert!(
-            notes(&capture).starts_with("1 rows "),
+            notes(&capture).starts_with("1 row "),
             "{bad:?}: {}",
             notes(&capture)
         );

@@ -1,5 +1,7 @@
 //! WAV: samples against a slow twin, sample formats, and faults.
 
+use foldtrace::capture::Spec;
+
 use super::*;
 
 /// Interleaved integers as hound writes them.
@@ -146,12 +148,12 @@ fn wav_faults_are_named() {
         (wav(&[fmt(1, 5000, 8000, 8, 1), data()]), "5000 channels"),
         (wav(&[fmt(2, 1, 8000, 4, 1), data()]), "ADPCM"),
         (
-            wav(&[fmt(7, 1, 8000, 8, 1), data()]),
-            "mu-law samples (convert it to PCM first)",
+            wav(&[fmt(7, 1, 8000, 16, 2), data()]),
+            "16-bit mu-law samples in 2 bytes (convert it to PCM first)",
         ),
         (wav(&[fmt(0x55, 1, 8000, 0, 1), data()]), "MPEG"),
         (wav(&[fmt(0x1234, 1, 8000, 16, 2), data()]), "0x1234"),
-        (wav(&[extensible(6, 8, 8), data()]), "A-law"),
+        (wav(&[extensible(2, 8, 8), data()]), "ADPCM"),
         (
             wav(&[chunk(b"fmt ", None, &[1, 0, 1, 0]), data()]),
             "4 bytes",
@@ -213,7 +215,14 @@ fn a_rate_on_the_command_line_goes_first() {
     let path = folder.write("rate.WAV", riff_file(b"RIFF", &chunks));
     let capture = open_at(&path, 8000.25).unwrap();
     assert_eq!(capture.spec().rate_hz, 8000.25);
-    assert!(notes(&capture).contains("overridden"));
+    assert_eq!(
+        notes(&capture),
+        "sample rate 8000.25 Hz taken from --rate, not 8000 Hz from the header"
+    );
+    assert_eq!(
+        notes(&open_at(&path, 8000.0).unwrap()),
+        "sample rate 8000 Hz taken from --rate; the header tells the same"
+    );
     for rate_hz in [0.0, -1.0, f64::NAN, f64::INFINITY] {
         assert!(one_line(open_at(&path, rate_hz).unwrap_err()).contains("sample rate"));
     }
@@ -221,6 +230,11 @@ fn a_rate_on_the_command_line_goes_first() {
 
 /// Opens one channel of integers, `width` bytes each.
 fn integers(format: Vec<u8>, width: usize, values: &[i64]) -> (Vec<f32>, String, String) {
+    let (samples, spec) = integers_and_spec(format, width, values);
+    (samples, spec.format, spec.notes.join("; "))
+}
+
+fn integers_and_spec(format: Vec<u8>, width: usize, values: &[i64]) -> (Vec<f32>, Spec) {
     let folder = Folder::new();
     let body: Vec<u8> = values
         .iter()
@@ -228,11 +242,45 @@ fn integers(format: Vec<u8>, width: usize, values: &[i64]) -> (Vec<f32>, String,
         .collect();
     let bytes = riff_file(b"RIFF", &[format, chunk(b"data", None, &body)]);
     let capture = open(&folder.write("int.wav", bytes)).unwrap();
-    (
-        read(&capture, 5).remove(0),
-        capture.spec().format.clone(),
-        notes(&capture),
-    )
+    (read(&capture, 5).remove(0), capture.spec().clone())
+}
+
+/// The step must be the smallest difference between samples that hold every
+/// bit, whatever place the file gives them.
+#[test]
+fn the_step_is_that_of_the_bits_that_carry_data() {
+    let check = |format: Vec<u8>, width: u16, values: &[i64], bits: i32| {
+        let (samples, spec) = integers_and_spec(format, width.into(), values);
+        let case = format!("{} {:?}", spec.format, spec.notes);
+        assert_eq!(spec.step, Some(2f64.powi(1 - bits)), "{case}");
+        // The third value is one step above the second.
+        assert_eq!(
+            Some(f64::from(samples[2] - samples[1])),
+            spec.step,
+            "{case}"
+        );
+    };
+    let values: Vec<i64> = [5, -3, -2].into_iter().chain(0..50).collect();
+    let moved = |n: u16| -> Vec<i64> { values.iter().map(|v| v << n).collect() };
+    for (bits, width) in [(16, 2), (24, 3), (32, 4)] {
+        check(fmt(1, 1, 8000, bits, width), width, &values, bits.into());
+    }
+    let unsigned: Vec<i64> = values.iter().map(|v| v + 128).collect();
+    check(fmt(1, 1, 8000, 8, 1), 1, &unsigned, 8);
+    for (bits, width) in [(12, 2), (20, 3), (24, 4)] {
+        let spare = 8 * width - bits;
+        let format = || fmt(1, 1, 8000, bits, width);
+        check(format(), width, &moved(spare), bits.into());
+        check(format(), width, &values, bits.into());
+        // The header understates: all bits are in use.
+        let mut full = values.clone();
+        full.push((1 << (8 * width - 1)) - 1);
+        check(format(), width, &full, 8 * i32::from(width));
+    }
+    check(extensible(1, 32, 24), 4, &moved(8), 24);
+    let floats: Vec<i64> = (0..20u32).map(|i| (i as f32).to_bits().into()).collect();
+    let (_, spec) = integers_and_spec(fmt(3, 1, 8000, 32, 4), 4, &floats);
+    assert_eq!(spec.step, None);
 }
 
 #[test]
@@ -302,4 +350,55 @@ fn extensible_headers_and_wide_floats() {
             .iter()
             .all(|x| x.is_nan())
     );
+}
+
+#[test]
+fn logarithmic_samples_are_decoded() {
+    // Codes of +-0 or the least value, of the largest, and one between, with
+    // their values in the 13 and 14 bits of ITU-T G.711, tables 1a to 2b.
+    let a_law: [(u8, i32); 6] = [
+        (0xD5, 1),
+        (0x55, -1),
+        (0xAA, 4032),
+        (0x2A, -4032),
+        (0xC5, 33),
+        (0xB5, 1056),
+    ];
+    let mu_law: [(u8, i32); 6] = [
+        (0xFF, 0),
+        (0x7F, 0),
+        (0xFE, 2),
+        (0x80, 8031),
+        (0x00, -8031),
+        (0x6F, -33),
+    ];
+    let folder = Folder::new();
+    for (tag, name, codes, full_scale) in
+        [(6, "A-law", a_law, 4096.0), (7, "mu-law", mu_law, 8192.0)]
+    {
+        for format in [fmt(tag, 1, 8000, 8, 1), extensible(tag, 8, 8)] {
+            let body: Vec<u8> = (0..60).map(|i| codes[i % 6].0).collect();
+            let bytes = riff_file(b"RIFF", &[format, chunk(b"data", None, &body)]);
+            let capture = open(&folder.write("log.wav", bytes)).unwrap();
+            assert_eq!(capture.spec().format, format!("{name} WAV"));
+            assert_eq!(notes(&capture), "");
+            let expected: Vec<f32> = (0..60)
+                .map(|i| codes[i % 6].1 as f32 / full_scale)
+                .collect();
+            assert_eq!(read(&capture, 7), [expected], "{name}");
+        }
+        // The step is the least distance between any two values.
+        let all: Vec<u8> = (0..=255).collect();
+        let chunks = [fmt(tag, 1, 8000, 8, 1), chunk(b"data", None, &all)];
+        let capture = open(&folder.write("all.wav", riff_file(b"RIFF", &chunks))).unwrap();
+        let mut values = read(&capture, 256).remove(0);
+        values.sort_unstable_by(f32::total_cmp);
+        values.dedup_by(|a, b| a == b);
+        let steps = values.windows(2).map(|pair| f64::from(pair[1] - pair[0]));
+        assert_eq!(
+            capture.spec().step,
+            Some(steps.fold(1.0, f64::min)),
+            "{name}"
+        );
+    }
 }
