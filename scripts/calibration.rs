@@ -1,7 +1,7 @@
 //! Calibration of the suspects over simulated scenes: what is said to be 80 %
 //! probable should be right 80 % of the time.
 //!
-//!     cargo run --release --example calibration -- [FIRST_SEED [SCENES]]
+//!     cargo run --release --example calibration -- [FIRST_SEED [SCENES [recorded]]]
 //!
 //! Tuning used seeds below 100000; the default report starts at 100000.
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
@@ -18,8 +18,17 @@ fn main() {
     let started = std::time::Instant::now();
     let mut all = score::Scores::default();
     let verbose = std::env::var_os("CALIBRATION_MISSES").is_some();
+    // `recorded` has samples made and the program's own detector run on them.
+    let recorded = args.next().is_some_and(|a| a == "recorded");
     for seed in first..first + count {
-        all.add(seed, &scenes::simulate(seed), verbose);
+        let scene = if recorded {
+            scenes::record(seed, 480_000.0)
+        } else {
+            Some(scenes::simulate(seed))
+        };
+        if let Some(scene) = scene {
+            all.add(seed, &scene, verbose);
+        }
     }
     print!("{}", all.report());
     eprintln!("{count} scenes in {:.1} s", started.elapsed().as_secs_f64());

@@ -8,5 +8,6 @@ mod frontend;
 mod sample_data;
 mod sources;
 mod spectrum;
+mod suspects;
 mod tones;
 mod windows;

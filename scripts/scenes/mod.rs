@@ -156,15 +156,116 @@ struct Spectrum {
 
 struct Partial {
     truth: Truth,
+    /// `(latent, multiplier)`, indices into [`Raw::latents`].
+    terms: Vec<(usize, f64)>,
     seen_hz: f64,
     level_dbfs: f64,
     wander_hz: f64,
 }
 
-/// Draws a scene.
+/// A scene's lines before anything has looked at them.
+struct Raw {
+    seen: Simulated,
+    partials: Vec<Partial>,
+    /// `(Hz, relative wander)`.
+    latents: Vec<(f64, f64)>,
+    noise_dbfs: f64,
+    epsilon: f64,
+}
+
+/// Draws a scene, seen as a detector at the Cramér–Rao bound would see it.
 pub fn simulate(seed: u64) -> Simulated {
     let mut rng = StdRng::seed_from_u64(seed);
-    let rng = &mut rng;
+    let raw = draw(&mut rng);
+    let mut seen = raw.seen;
+    let cell = 1.0 / seen.duration_s;
+    let half = seen.rate_hz / 2.0;
+    let noise_cell_dbfs = raw.noise_dbfs - 10.0 * (half / cell).log10();
+    (seen.tones, seen.truth) = observe(raw.partials, cell, half, noise_cell_dbfs, &mut rng);
+    seen
+}
+
+/// Draws a scene, evaluates its lines at the true sample instants, adds noise and
+/// has the program's own detector find the tones. `None` where that would be more
+/// than `most` samples a minute.
+pub fn record(seed: u64, most: f64) -> Option<Simulated> {
+    let mut rng = StdRng::seed_from_u64(seed);
+    let raw = draw(&mut rng);
+    let mut seen = raw.seen;
+    if seen.rate_hz * 60.0 > most {
+        return None;
+    }
+    seen.duration_s = seen.duration_s.min(most / seen.rate_hz);
+    let frames = (seen.duration_s * seen.rate_hz).floor() as usize;
+    let true_rate = seen.rate_hz * (1.0 + raw.epsilon);
+    // Turns of each latent at each sample: a smooth random walk about its mean.
+    let turns: Vec<Vec<f64>> = raw
+        .latents
+        .iter()
+        .map(|&(hz, wander)| {
+            let memory = (-1.0 / (log_uniform(&mut rng, 1.0, 20.0) * true_rate)).exp();
+            let (mut state, mut smooth, mut phase) = (normal(&mut rng, 1.0), 0.0, 0.0);
+            (0..frames)
+                .map(|_| {
+                    let now = phase;
+                    if wander > 0.0 {
+                        state = memory * state + normal(&mut rng, (1.0 - memory * memory).sqrt());
+                        smooth += (state - smooth) * (1.0 - memory) * 4.0;
+                    }
+                    phase += hz * (1.0 + wander * smooth) / true_rate;
+                    now
+                })
+                .collect()
+        })
+        .collect();
+    let sigma = 10f64.powf(raw.noise_dbfs / 20.0) / 2f64.sqrt();
+    let mut samples: Vec<f64> = (0..frames).map(|_| normal(&mut rng, sigma)).collect();
+    for p in &raw.partials {
+        let amplitude = 10f64.powf(p.level_dbfs / 20.0);
+        if amplitude < 0.01 * sigma / (frames as f64).sqrt() {
+            continue;
+        }
+        let start: f64 = rng.random();
+        for (n, x) in samples.iter_mut().enumerate() {
+            let turns: f64 = p.terms.iter().map(|&(l, a)| a * turns[l][n]).sum();
+            *x += amplitude * (std::f64::consts::TAU * (turns + start).fract()).cos();
+        }
+    }
+    let recording = foldtrace::spectrum::samples::InMemory {
+        rate_hz: seen.rate_hz,
+        channels: vec![samples.iter().map(|x| *x as f32).collect()],
+    };
+    let search = foldtrace::tones::Search::default();
+    let set = foldtrace::tones::find(&recording, &search, &|_, _| ()).expect("samples in memory");
+    seen.truth = set
+        .tones
+        .iter()
+        .map(|t| {
+            // The strongest line about there.
+            let reach = (2.0 * set.cell_hz)
+                .max(3.0 * t.seen_hz_u95)
+                .max(4.0 * t.wander_hz);
+            raw.partials
+                .iter()
+                .filter(|p| (p.seen_hz - t.seen_hz.0).abs() < reach)
+                .max_by(|a, b| a.level_dbfs.total_cmp(&b.level_dbfs))
+                .map_or(
+                    Truth {
+                        source: None,
+                        kind: "noise",
+                        line: String::new(),
+                        true_hz: t.seen_hz.0,
+                        zone: 1,
+                    },
+                    |p| p.truth.clone(),
+                )
+        })
+        .collect();
+    seen.tones = set.tones;
+    Some(seen)
+}
+
+fn draw(rng: &mut StdRng) -> Raw {
     const RATES: [f64; 16] = [
         25.0, 50.0, 100.0, 128.0, 250.0, 500.0, 800.0, 1000.0, 1600.0, 2000.0, 4000.0, 6400.0,
         8000.0, 16000.0, 22050.0, 44100.0,
@@ -233,9 +334,8 @@ pub fn simulate(seed: u64) -> Simulated {
     }
     let site = Site::from_toml(&toml).expect("a valid site");
 
-    let cell = 1.0 / duration_s;
     let noise_dbfs = rng.random_range(-80.0..-45.0_f64);
-    let noise_cell_dbfs = noise_dbfs - 10.0 * (half / cell).log10();
+    let mut all_latents: Vec<(f64, f64)> = Vec::new();
     let mut partials: Vec<Partial> = Vec::new();
     for p in plans.iter().filter(|p| p.present) {
         let whole = Site::from_toml(&format!("{head}{}", entry(p))).expect("a valid source");
@@ -260,12 +360,14 @@ pub fn simulate(seed: u64) -> Simulated {
             source,
             p,
             &latents,
+            all_latents.len(),
             &spectrum,
             &true_front,
             &chain,
             epsilon,
             rng,
         ));
+        all_latents.extend(latents.iter().copied().zip(p.wander.iter().copied()));
     }
     for _ in 0..rng.random_range(0..4) {
         let folded = rng.random_bool(0.5);
@@ -288,23 +390,30 @@ pub fn simulate(seed: u64) -> Simulated {
                 true_hz: f,
                 zone: seen.zone,
             },
+            terms: vec![(all_latents.len(), 1.0)],
             seen_hz: seen.seen.0,
             level_dbfs: rng.random_range(-70.0..-10.0)
                 + true_front.gain(TrueHz(f), rate_hz).mean_db,
             wander_hz: wander,
         });
+        all_latents.push((f, wander / f));
     }
-    let (tones, truth) = observe(partials, cell, half, noise_cell_dbfs, rng);
-    Simulated {
-        site,
-        site_toml: toml,
-        chain,
-        rate_hz,
-        duration_s,
-        tones,
-        truth,
-        clock_ppm,
-        filter: (has_filter, described),
+    Raw {
+        seen: Simulated {
+            site,
+            site_toml: toml,
+            chain,
+            rate_hz,
+            duration_s,
+            tones: Vec::new(),
+            truth: Vec::new(),
+            clock_ppm,
+            filter: (has_filter, described),
+        },
+        partials,
+        latents: all_latents,
+        noise_dbfs,
+        epsilon,
     }
 }
 
@@ -313,6 +422,7 @@ fn lines_of(
     source: &Source,
     plan: &Plan,
     latents: &[f64],
+    first_latent: usize,
     spectrum: &Spectrum,
     front: &foldtrace::frontend::PreparedFrontEnd,
     chain: &Chain,
@@ -352,6 +462,11 @@ fn lines_of(
                     true_hz: f,
                     zone: seen.zone,
                 },
+                terms: line
+                    .terms
+                    .iter()
+                    .map(|&(LatentId(l), a)| (first_latent + l, a))
+                    .collect(),
                 seen_hz: seen.seen.0,
                 level_dbfs,
                 wander_hz: wander,
@@ -384,6 +499,7 @@ fn observe(
                 true_hz: nu,
                 zone: 1,
             },
+            terms: Vec::new(),
             seen_hz: nu,
             level_dbfs: noise_cell_dbfs + 13.5,
             wander_hz: 0.0,
