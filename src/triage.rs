@@ -46,7 +46,7 @@ pub enum TriageError {
     #[error(transparent)]
     Capture(#[from] CaptureError),
     /// No such channel.
-    #[error("has {has} channels, no channel {asked} (--channel counts from 1)")]
+    #[error("has no channel {asked}, only {has} (--channel counts from 1)")]
     NoChannel {
         /// Channels in the file.
         has: usize,
@@ -96,6 +96,7 @@ pub fn run(
             Some((value, _)) if !spec.normalised => *value,
             _ => 1.0,
         },
+        step: spec.step,
         channels,
         ..Search::default()
     };

@@ -219,6 +219,18 @@ fn fewer_periods_than_tell_a_tone_from_drift_make_none() {
 }
 
 #[test]
+fn rounding_makes_no_tones() {
+    // Whole numbers of period 13: lines at the six multiples of rate/13, and
+    // nothing but single-precision rounding between them.
+    let x: Vec<f32> = (0..2_000).map(|i| ((i * 5) % 13) as f32).collect();
+    let set = run(13.0, vec![x]);
+    assert_eq!(set.tones.len(), 6, "{:?}", set.tones);
+    for (tone, k) in set.tones.iter().zip(1..) {
+        assert!((tone.seen_hz.0 - f64::from(k)).abs() < 1e-3, "{tone:?}");
+    }
+}
+
+#[test]
 fn next_to_either_end_intervals_are_honest() {
     let mut rng = StdRng::seed_from_u64(108);
     let (rate, n) = (1000.0, 20_000);

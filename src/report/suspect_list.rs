@@ -1,6 +1,6 @@
 //! The suspect list as CSV (RFC 4180), one row per tone and suspect.
 
-use super::text::{decimals, with_u95};
+use super::text::{decimals, plain, with_u95};
 use crate::suspects::{Suspect, Verdict};
 use crate::tones::Tone;
 use crate::triage::Triage;
@@ -31,11 +31,13 @@ pub const COLUMNS: [&str; 21] = [
     "coincidence",
 ];
 
-/// A text cell that no spreadsheet runs as a formula.
+/// A text cell that no spreadsheet runs as a formula and no terminal obeys: a
+/// leading apostrophe where it could be one, control characters as escapes.
 pub fn defuse(cell: &str) -> String {
+    let safe = plain(cell);
     match cell.chars().next() {
-        Some('=' | '+' | '-' | '@' | '\t' | '\r') => format!("'{cell}"),
-        _ => cell.to_owned(),
+        Some('=' | '+' | '-' | '@' | '\t' | '\r') => format!("'{safe}"),
+        _ => safe,
     }
 }
 

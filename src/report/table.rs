@@ -106,7 +106,11 @@ fn what_was_read(result: &Triage, site_name: &str, out: &mut dyn Write) -> io::R
     }
     let missing: u64 = result.tones.missing.iter().sum();
     if missing > 0 {
-        writeln!(out, "  {missing} missing samples bridged by straight lines")?;
+        writeln!(
+            out,
+            "  {} bridged by straight lines",
+            count(missing as usize, "missing sample", "missing samples")
+        )?;
     }
     writeln!(out, "  sources: {}", plain(site_name))
 }

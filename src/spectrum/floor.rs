@@ -24,6 +24,15 @@ pub struct Floor {
     pub cells: f64,
 }
 
+impl Floor {
+    /// Lifts the floor to at least `least`.
+    pub fn raise(&mut self, least: f32) {
+        for level in &mut self.level {
+            *level = level.max(least);
+        }
+    }
+}
+
 /// Median of a gamma variate of shape `shape` and mean 1.
 fn median_of_unit_gamma(shape: f64) -> f64 {
     let (mut lo, mut hi) = (0.0, 2.0);

@@ -35,6 +35,19 @@ pub struct Band {
     pub samples: usize,
     /// Sample rate, Hz.
     pub rate_hz: f64,
+    /// Noise power per bin, E|X|², that rounding alone makes: none lower can be
+    /// measured. See [`least_noise`].
+    pub least_noise: f32,
+}
+
+/// Noise power per bin of `samples` samples of mean square `power`, given in whole
+/// `step`s: quantising leaves step²/12 a sample (Bennett 1948), and single precision
+/// about 8 units of 2⁻⁴⁸ of the power, for the samples themselves and the stages of
+/// the transform.
+pub fn least_noise(samples: usize, power: f64, step: Option<f64>) -> f32 {
+    let quantised = step.map_or(0.0, |s| s * s / 12.0);
+    let rounded = 8.0 * 2f64.powi(-48) * power;
+    (samples as f64 * (quantised + rounded)) as f32
 }
 
 impl Band {

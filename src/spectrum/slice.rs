@@ -155,6 +155,7 @@ impl Decimated {
             grid: whole_segments * segment,
             samples: frames,
             rate_hz,
+            least_noise: 0.0,
         }
     }
 }
@@ -190,7 +191,7 @@ mod tests {
             let band = cut(&recording, segment, &[want], &|_| ())
                 .unwrap()
                 .remove(0);
-            let full = whole::transform(x.clone(), band.grid, 1000.0);
+            let full = whole::transform(x.clone(), band.grid, 1000.0, None);
             let tone = 0.2345 / std::f64::consts::TAU * band.grid as f64;
             let peak = full.get(tone.round() as i64).unwrap().norm();
             for k in tone as i64 - 40..tone as i64 + 60 {

@@ -29,6 +29,12 @@ impl Averaged {
         k / (1.0 + 2.0 * (k - 1.0).max(0.0) / k / 36.0)
     }
 
+    /// Mean square of a channel's samples, 0 Hz and its neighbour left out.
+    pub fn mean_square(&self, channel: usize) -> f64 {
+        let bins = self.power[channel].get(2..).unwrap_or_default();
+        bins.iter().map(|&p| f64::from(p)).sum::<f64>() / bins.len().max(1) as f64
+    }
+
     /// One-sided power spectral density in units²/Hz (bins 0 and segment/2 keep
     /// half of it, as those have no mirror).
     pub fn density(&self, channel: usize) -> Vec<f64> {

@@ -47,9 +47,14 @@ pub fn load<P: Passes>(recording: &P, progress: &dyn Fn(u64)) -> Result<Loaded, 
 }
 
 /// Transforms one channel, consuming it: zero-padded to `grid`, all bins from 0
-/// to grid/2.
-pub fn transform(mut channel: Vec<f32>, grid: usize, rate_hz: f64) -> Band {
+/// to grid/2. `step` is the least step between sample values, where there is one.
+pub fn transform(mut channel: Vec<f32>, grid: usize, rate_hz: f64, step: Option<f64>) -> Band {
     let samples = channel.len();
+    let power = channel
+        .iter()
+        .map(|&v| f64::from(v) * f64::from(v))
+        .sum::<f64>()
+        / samples.max(1) as f64;
     channel.resize(grid, 0.0);
     let mut fft = RealFft::new(grid);
     let mut bins = vec![Complex32::default(); fft.bins()];
@@ -60,5 +65,6 @@ pub fn transform(mut channel: Vec<f32>, grid: usize, rate_hz: f64) -> Band {
         grid,
         samples,
         rate_hz,
+        least_noise: super::least_noise(samples, power, step),
     }
 }

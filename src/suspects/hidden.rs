@@ -11,8 +11,10 @@ use crate::sources::{
     Kind, Latent, LatentId, Line, Site, Source, Steadiness, mains, quantity::Tolerance,
 };
 
-/// Anonymous harmonic families looked for.
-const ANONYMOUS: usize = 4;
+/// Anonymous harmonic families looked for beside an analyst's list.
+const ANONYMOUS: usize = 2;
+/// Beside the built-in list, which names no machine: most families are not on it.
+const ANONYMOUS_TO_BUILT_IN: usize = 4;
 /// Multiples of each.
 const MULTIPLES: u32 = 12;
 /// Probability that an anonymous family is there, before looking; of each of two.
@@ -71,7 +73,19 @@ pub(super) fn extend(scene: &Scene, clock_sd: f64) -> Extended {
         .collect();
     let half = scene.chain.file_rate_hz() / 2.0;
     let low = (4.0 / scene.duration_s).max(half / 400.0).min(0.5 * half);
-    for n in 0..ANONYMOUS {
+    // Only built-in sources say where their values come from.
+    let built_in = scene
+        .site
+        .catalogue
+        .sources
+        .iter()
+        .any(|s| !s.citation.is_empty());
+    let families = if built_in {
+        ANONYMOUS_TO_BUILT_IN
+    } else {
+        ANONYMOUS
+    };
+    for n in 0..families {
         let name = format!("family {}, not listed", n + 1);
         catalogue.latents.push(Latent {
             name: name.clone(),

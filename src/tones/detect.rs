@@ -72,6 +72,10 @@ pub fn detect(band: &Band, false_alarms: f64) -> Found {
     }
     let scales = (1..12)
         .map_while(|s| Coarse::new(&fine.hann, 1.0, 4usize.pow(s), band.first_bin == 0))
+        .map(|mut coarse| {
+            coarse.floor.raise(band.least_noise);
+            coarse
+        })
         .collect();
     let mut patches = bunches;
     patches.extend(lines.iter().filter(|l| unsteady(l)).map(|line| {

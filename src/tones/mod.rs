@@ -12,7 +12,7 @@ pub mod wander;
 
 use crate::spectrum::plan::Plan;
 use crate::spectrum::samples::Passes;
-use crate::spectrum::{slice, welch, whole};
+use crate::spectrum::{least_noise, slice, welch, whole};
 use crate::units::{SeenHz, U95, amplitude_db, power_db};
 use detect::Found;
 
@@ -75,6 +75,8 @@ pub struct Search {
     pub false_alarms: f64,
     /// Amplitude of a full-scale sine, in the unit of the samples.
     pub full_scale: f64,
+    /// Least step between sample values, where there is one.
+    pub step: Option<f64>,
     /// Channels to use, indices from 0; empty for all.
     pub channels: Vec<usize>,
 }
@@ -84,6 +86,7 @@ impl Default for Search {
         Search {
             false_alarms: 0.01,
             full_scale: 1.0,
+            step: None,
             channels: Vec::new(),
         }
     }
@@ -135,7 +138,7 @@ pub fn find<P: Passes>(
                 if !chosen.contains(&channel) || samples.is_empty() {
                     continue;
                 }
-                let band = whole::transform(samples, grid, recording.rate_hz());
+                let band = whole::transform(samples, grid, recording.rate_hz(), search.step);
                 let found = detect::detect(&band, false_alarms);
                 per_channel.push((channel, tones_of(&found, &band, channel, search.full_scale)));
             }
@@ -148,9 +151,13 @@ pub fn find<P: Passes>(
                 .collect();
             let wants: Vec<_> = regions.iter().map(|r| r.want).collect();
             if !wants.is_empty() {
-                let bands = slice::cut(recording, segment, &wants, &|n| {
+                let mut bands = slice::cut(recording, segment, &wants, &|n| {
                     progress(frames + n, 2 * frames)
                 })?;
+                for (region, band) in regions.iter().zip(&mut bands) {
+                    let power = averaged.mean_square(region.want.channel);
+                    band.least_noise = least_noise(band.samples, power, search.step);
+                }
                 for &channel in &chosen {
                     let mut tones = Vec::new();
                     for (region, band) in regions.iter().zip(&bands) {

@@ -118,7 +118,8 @@ impl Residual {
         }
         let mid = powers.len() / 2;
         let median = *powers.select_nth_unstable_by(mid, f64::total_cmp).1;
-        Some((median / std::f64::consts::LN_2).max(f64::MIN_POSITIVE))
+        let least = f64::from(self.band.least_noise).max(f64::MIN_POSITIVE);
+        Some((median / std::f64::consts::LN_2).max(least))
     }
 
     fn value(&self, k: i64, view: View) -> Option<Complex64> {

@@ -44,9 +44,11 @@ impl Fine {
             before = here;
         }
         let from_zero = band.first_bin == 0;
-        let plain_floor = floor::estimate(&plain, 1.0, 1.0, from_zero);
+        let mut plain_floor = floor::estimate(&plain, 1.0, 1.0, from_zero);
+        plain_floor.raise(band.least_noise);
         let worth = 1.0 / (1.0 + 2.0 * HANN_CORRELATION.iter().sum::<f64>());
-        let hann_floor = floor::estimate(&hann, 1.0, worth, from_zero);
+        let mut hann_floor = floor::estimate(&hann, 1.0, worth, from_zero);
+        hann_floor.raise(band.least_noise);
         Fine {
             plain,
             between,
