@@ -331,8 +331,9 @@ fn track(patch: &Patch, from: usize, to: usize, tone_power: f64) -> Option<Track
         let last = &found[found.len() - 1];
         let before = (start - from) as f64 + first.middle + 0.5;
         let after = (to - start) as f64 - 0.5 - last.middle;
-        // What the tone may have done out there: its movement spread evenly.
-        let ends = (before * before + after * after) * (sd * sd + moved / 12.0);
+        // What the tone may have done out there: half a window's mean strays from
+        // the whole window's by about half the movement from window to window.
+        let ends = (before * before + after * after) * (sd * sd + moved / 4.0);
         (
             (first.cycles * before + turns + last.cycles * after) / length,
             (2.0 * phase_sd * phase_sd + ends).sqrt() / length,
