@@ -107,11 +107,11 @@ pub(super) struct Effort {
 
 impl Effort {
     pub fn new(clusters: usize, tones: usize) -> Effort {
-        let share = 1 + clusters / 10;
+        let share = 1 + clusters / 16;
         Effort {
             // At least a few for each tone.
-            meetings: (200_000 / share).max(8 * tones),
-            places: (40 / share).max(6),
+            meetings: (200_000 / (share * share)).max(3 * tones),
+            places: (40 / share).max(4),
         }
     }
 }
