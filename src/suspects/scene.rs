@@ -35,11 +35,12 @@ pub(super) struct Measured {
 /// The mean of a wandering tone, as a fraction of its wander, is this uncertain
 /// beyond what was measured: two lines of one source need not be present, or
 /// weighted, over quite the same time.
-const MEAN_OF_WANDER: f64 = 0.02;
+const MEAN_OF_WANDER: f64 = 0.06;
 
-/// Smallest standard deviation believed, in resolution cells: below it, leakage
-/// of neighbours and drift within the recording are what is left.
-const LEAST_SD_CELLS: f64 = 1e-3;
+/// Smallest standard deviation believed, in resolution cells: a tone may stray by
+/// less than can be told from steady, and then its mean is not quite where a steady
+/// one fits best.
+const LEAST_SD_CELLS: f64 = 0.05;
 
 pub(super) fn measure(scene: &Scene) -> Vec<Measured> {
     let cell_hz = 1.0 / scene.duration_s.max(1e-9);

@@ -98,7 +98,29 @@ pub fn detect(band: &Band, false_alarms: f64) -> Found {
         ..
     } = search;
     lines.retain(|l| l.bin.is_finite() && l.bin >= SLOWEST && stands_out(l, band.samples, &level));
-    Found { lines, wanderers }
+    one_row_each(lines, wanderers, band.samples)
+}
+
+/// Drops what lies where a stronger wandering tone strays: its splinters.
+fn one_row_each(mut lines: Vec<Line>, mut wanderers: Vec<Wanderer>, samples: usize) -> Found {
+    wanderers.sort_by(|a, b| b.strength.total_cmp(&a.strength));
+    let mut kept: Vec<Wanderer> = Vec::new();
+    let within = |w: &Wanderer, bin: f64| (w.bin - bin).abs() < (3.0 * w.wander).max(1.5);
+    for tone in wanderers {
+        if !kept.iter().any(|k| within(k, tone.bin)) {
+            kept.push(tone);
+        }
+    }
+    lines.retain(|l| {
+        let strength = l.c.norm() * samples as f64;
+        !kept
+            .iter()
+            .any(|k| k.strength > strength && within(k, l.bin))
+    });
+    Found {
+        lines,
+        wanderers: kept,
+    }
 }
 
 /// Splits peaks into bunches of splinters (as ranges of cells) and the rest.
