@@ -114,6 +114,35 @@ fn check(recording: &str, site: &str) {
     }
 }
 
+/// The README's worked session shows what the program prints.
+#[test]
+fn the_readme_shows_what_is_printed() {
+    let readme = std::fs::read_to_string("README.md").unwrap();
+    let shown: Vec<&str> = readme
+        .lines()
+        .filter(|l| l.contains("FOLDED   circulation drive 1c-2o"))
+        .collect();
+    assert_eq!(shown.len(), 1);
+    let output = foldtrace(&[
+        "triage",
+        "sample-data/recordings/skid-8000.wav",
+        "--site",
+        "sample-data/orrowmere.toml",
+    ]);
+    let printed = String::from_utf8(output.stdout).unwrap();
+    assert!(
+        printed.lines().any(|l| l.trim() == shown[0].trim()),
+        "{}\nis not in\n{printed}",
+        shown[0]
+    );
+    for fitted in ["output 43.8150 ± 0.0044 Hz", "carrier 5021.16 ± 0.50 Hz"] {
+        assert!(
+            readme.contains(fitted) && printed.contains(fitted),
+            "{fitted}"
+        );
+    }
+}
+
 #[test]
 fn the_skid_at_8000_hz() {
     check("skid-8000.wav", "orrowmere.toml");
