@@ -166,6 +166,9 @@ impl Triage {
         if all == 0 {
             return "no tone stands out of the noise".into();
         }
+        if all == 1 && open.len() == 1 {
+            return "the only tone stays open; a recording at another rate would tell".into();
+        }
         let mut text = match folded.len() {
             0 if open.is_empty() && all == 1 => {
                 "the only tone is likely real where it shows".into()

@@ -329,7 +329,8 @@ fn unlisted_words(finding: &Finding) -> String {
 fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
     let fits: Vec<_> = result
         .fits()
-        .filter(|(_, f)| f.present_probability >= 0.05)
+        // A source that explains nothing is only as probable as it was before.
+        .filter(|(_, f)| f.tones_explained >= 0.05)
         .collect();
     if fits.is_empty() {
         return Ok(());
