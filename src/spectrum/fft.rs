@@ -6,6 +6,8 @@ use realfft::{RealFftPlanner, RealToComplex};
 use rustfft::{Fft, FftPlanner};
 use std::sync::Arc;
 
+use super::window::Window;
+
 pub use rustfft::num_complex::{Complex32, Complex64};
 
 /// Forward transform of `n` real samples to `n/2 + 1` bins.
@@ -41,6 +43,56 @@ impl RealFft {
             .plan
             .process_with_scratch(input, output, &mut self.scratch);
         debug_assert!(done.is_ok());
+    }
+}
+
+/// Forward transform of a segment under a periodic Hann window, whose half-overlapped
+/// copies add up to exactly 1.
+#[derive(Clone)]
+pub struct HannFft {
+    fft: RealFft,
+    window: Arc<[f32]>,
+    windowed: Vec<f32>,
+    spectrum: Vec<Complex32>,
+}
+
+impl HannFft {
+    /// Plans for segments of `n` samples, n ≥ 2.
+    pub fn new(n: usize) -> Self {
+        let fft = RealFft::new(n);
+        let window = Window::Hann.coefficients(n);
+        HannFft {
+            window: window.into_iter().map(|w| w as f32).collect(),
+            windowed: vec![0.0; n],
+            spectrum: vec![Complex32::default(); fft.bins()],
+            fft,
+        }
+    }
+
+    /// Σ w²: what white noise of variance 1 leaves in each bin.
+    pub fn energy(&self) -> f64 {
+        self.window
+            .iter()
+            .map(|&w| f64::from(w) * f64::from(w))
+            .sum()
+    }
+
+    /// The n/2 + 1 bins of `segment` (n samples), unscaled.
+    ///
+    /// # Panics
+    /// If `segment` has another length: a mistake in this crate.
+    pub fn transform(&mut self, segment: &[f32]) -> &[Complex32] {
+        assert_eq!(segment.len(), self.window.len());
+        for ((out, &v), &w) in self
+            .windowed
+            .iter_mut()
+            .zip(segment)
+            .zip(self.window.iter())
+        {
+            *out = v * w;
+        }
+        self.fft.forward(&mut self.windowed, &mut self.spectrum);
+        &self.spectrum
     }
 }
 

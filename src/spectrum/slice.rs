@@ -9,10 +9,9 @@
 //! of bands.
 
 use super::Band;
-use super::fft::{Complex32, ComplexFft, RealFft};
+use super::fft::{Complex32, ComplexFft, HannFft};
 use super::samples::Passes;
 use super::segments::{Layout, for_each_group};
-use super::welch::hann;
 
 /// A wanted band in bins of a segment's transform.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -41,9 +40,7 @@ pub fn cut<P: Passes>(
         padded: true,
     };
     let hop = layout.hop();
-    let window = hann(segment);
-    let plan = RealFft::new(segment);
-    let spectrum_bins = plan.bins();
+    let plan = HannFft::new(segment);
     let mut bands: Vec<Decimated> = wants
         .iter()
         .map(|&w| Decimated::new(w, layout.count(recording.frames()) as usize))
@@ -52,14 +49,8 @@ pub fn cut<P: Passes>(
         recording,
         layout,
         progress,
-        || {
-            (
-                plan.clone(),
-                vec![0.0f32; segment],
-                vec![Complex32::default(); spectrum_bins],
-            )
-        },
-        |(fft, windowed, spectrum), group| {
+        || plan.clone(),
+        |fft, group| {
             // per segment, the wanted bins of every band one after another
             let mut out: Vec<Vec<Complex32>> = vec![Vec::new(); group.count];
             for (channel, samples) in group.samples.iter().enumerate() {
@@ -67,11 +58,7 @@ pub fn cut<P: Passes>(
                     continue;
                 }
                 for (i, out) in out.iter_mut().enumerate() {
-                    let x = &samples[i * hop..i * hop + segment];
-                    for ((o, &v), &w) in windowed.iter_mut().zip(x).zip(&window) {
-                        *o = v * w;
-                    }
-                    fft.forward(windowed, spectrum);
+                    let spectrum = fft.transform(&samples[i * hop..i * hop + segment]);
                     for w in wants.iter().filter(|w| w.channel == channel) {
                         out.extend_from_slice(&spectrum[w.first..w.first + w.bins]);
                     }

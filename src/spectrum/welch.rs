@@ -1,6 +1,6 @@
 //! Averaged modified periodograms (Welch 1967).
 
-use super::fft::{Complex32, RealFft};
+use super::fft::HannFft;
 use super::samples::Passes;
 use super::segments::{Layout, for_each_group};
 
@@ -50,16 +50,6 @@ impl Averaged {
     }
 }
 
-/// Periodic Hann window: its half-overlapped copies add up to exactly 1.
-pub fn hann(n: usize) -> Vec<f32> {
-    (0..n)
-        .map(|i| {
-            let s = (std::f64::consts::PI * i as f64 / n as f64).sin();
-            (s * s) as f32
-        })
-        .collect()
-}
-
 /// Averages a whole recording; the mean of each segment is left in (it stays in
 /// the two lowest bins under a Hann window).
 ///
@@ -77,33 +67,22 @@ pub fn average<P: Passes>(
     let hop = layout.hop();
     let channels = recording.channels();
     let bins = segment / 2 + 1;
-    let window = hann(segment);
-    let plan = RealFft::new(segment);
+    let plan = HannFft::new(segment);
     let mut sums = vec![vec![0.0f64; bins]; channels];
     let missing = for_each_group(
         recording,
         layout,
         progress,
-        || {
-            (
-                plan.clone(),
-                vec![0.0f32; segment],
-                vec![Complex32::default(); bins],
-            )
-        },
-        |(fft, windowed, spectrum), group| {
+        || plan.clone(),
+        |fft, group| {
             group
                 .samples
                 .iter()
                 .map(|samples| {
                     let mut sum = vec![0.0f32; bins];
                     for i in 0..group.count {
-                        let x = &samples[i * hop..i * hop + segment];
-                        for ((out, &v), &w) in windowed.iter_mut().zip(x).zip(&window) {
-                            *out = v * w;
-                        }
-                        fft.forward(windowed, spectrum);
-                        for (s, z) in sum.iter_mut().zip(spectrum.iter()) {
+                        let spectrum = fft.transform(&samples[i * hop..i * hop + segment]);
+                        for (s, z) in sum.iter_mut().zip(spectrum) {
                             *s += z.norm_sqr();
                         }
                     }
@@ -120,8 +99,7 @@ pub fn average<P: Passes>(
         },
     )?;
     let count = layout.count(recording.frames());
-    let energy: f64 = window.iter().map(|&w| f64::from(w) * f64::from(w)).sum();
-    let scale = 1.0 / (energy * count.max(1) as f64);
+    let scale = 1.0 / (plan.energy() * count.max(1) as f64);
     Ok(Averaged {
         power: sums
             .into_iter()
