@@ -35,10 +35,6 @@ pub struct Triage {
     pub inference: Inference,
 }
 
-/// ± parts per million (95 %) of a clock that is not described: an ordinary crystal
-/// (common practice).
-const DEFAULT_CLOCK_PPM: f64 = 100.0;
-
 /// Why a recording could not be triaged.
 #[derive(Debug, thiserror::Error)]
 pub enum TriageError {
@@ -118,7 +114,7 @@ pub fn run(
             .iter()
             .map(|s| s.name.clone())
             .collect(),
-        clock_described_ppm: site.recorder.clock_ppm.unwrap_or(DEFAULT_CLOCK_PPM),
+        clock_described_ppm: site.recorder.assumed_clock_ppm(),
         inference,
     })
 }

@@ -310,6 +310,18 @@ pub struct Recorder {
     pub full_scale: Option<(f64, String)>,
 }
 
+/// ± parts per million (95 %) assumed of a clock that is not described: an ordinary
+/// crystal (common practice).
+const UNDESCRIBED_CLOCK_PPM: f64 = 100.0;
+
+impl Recorder {
+    /// Tolerance of the clock, ± parts per million (95 %): as described, or what is
+    /// assumed of one that is not.
+    pub fn assumed_clock_ppm(&self) -> f64 {
+        self.clock_ppm.unwrap_or(UNDESCRIBED_CLOCK_PPM)
+    }
+}
+
 /// A site: sources and recorder.
 #[derive(Debug, Clone, PartialEq, Default, serde::Serialize)]
 pub struct Site {

@@ -12,6 +12,7 @@
 //!
 //! Each is a density at a tone, like an unlisted one's, so all compete on one scale.
 
+use super::modes::gaussian;
 use super::scene::{Measured, Scene};
 use crate::fold::fold;
 use crate::units::TrueHz;
@@ -61,10 +62,6 @@ const COMB_LINE: f64 = 0.4;
 const COMB_LINES: u32 = 40;
 /// Unlisted tones assumed where a comb is weighed.
 const STRAYS: f64 = 3.0;
-
-fn gaussian(x: f64, var: f64) -> f64 {
-    (-0.5 * x * x / var).exp() / (2.0 * std::f64::consts::PI * var).sqrt()
-}
 
 /// Density (per dB) of a by-product's SNR below that of what it comes from.
 fn weaker(parent_db: f64, least_db: f64, snr_db: f64) -> f64 {

@@ -10,15 +10,12 @@ use super::prior::Normal;
 use super::scene::Scene;
 use super::solution::Solved;
 
-/// Clock tolerance where none is described, ± ppm (95 %).
-const UNDESCRIBED_PPM: f64 = 100.0;
-
 /// Sources less certain than this say nothing about the clock.
 const SURE: f64 = 0.99;
 
 /// Standard deviation of ε before looking.
 pub(super) fn prior_sd(scene: &Scene) -> f64 {
-    let ppm = scene.site.recorder.clock_ppm.unwrap_or(UNDESCRIBED_PPM);
+    let ppm = scene.site.recorder.assumed_clock_ppm();
     (ppm * 1e-6 / crate::units::U95).max(1e-12)
 }
 

@@ -70,8 +70,7 @@ pub fn detect(band: &Band, false_alarms: f64) -> Found {
         }
         fine.hann_floor = rest.hann_floor;
     }
-    let scales = (1..12)
-        .map_while(|s| Coarse::new(&fine.hann, 1.0, 4usize.pow(s), band.first_bin == 0))
+    let scales = Coarse::ladder(&fine.hann, 1.0, band.first_bin == 0)
         .map(|mut coarse| {
             coarse.floor.raise(band.least_noise);
             coarse
@@ -190,12 +189,13 @@ fn unsteady(line: &Line) -> bool {
     threshold::exceedance(shape, 2.5, line.leftover) < UNSTEADY_CHANCE
 }
 
-fn merge(mut ranges: Vec<Range<usize>>) -> Vec<Range<usize>> {
-    ranges.sort_by_key(|r| r.start);
+/// Joins ranges that overlap or lie at most `gap` apart.
+pub fn merge(mut ranges: Vec<Range<usize>>, gap: usize) -> Vec<Range<usize>> {
+    ranges.sort_by_key(|r| (r.start, r.end));
     let mut merged: Vec<Range<usize>> = Vec::new();
     for r in ranges {
         match merged.last_mut() {
-            Some(last) if r.start <= last.end => last.end = last.end.max(r.end),
+            Some(last) if r.start <= last.end + gap => last.end = last.end.max(r.end),
             _ => merged.push(r),
         }
     }
@@ -242,7 +242,7 @@ impl Patches {
                 .iter()
                 .sum()
         };
-        let mut ordered = merge(patches);
+        let mut ordered = merge(patches, 0);
         ordered.sort_by(|a, b| power(b).total_cmp(&power(a)).then(a.start.cmp(&b.start)));
         for patch in ordered {
             self.settle(patch);
@@ -311,14 +311,11 @@ impl Patches {
         }
         if taken {
             // a splinter of a tone already settled
-            let cells = patch.clone();
-            let keep: Vec<bool> = self
-                .lines
-                .iter()
-                .map(|l| !(self.inside(l, &cells) && unsteady(l)))
+            let lines = std::mem::take(&mut self.lines);
+            self.lines = lines
+                .into_iter()
+                .filter(|l| !(self.inside(l, &patch) && unsteady(l)))
                 .collect();
-            let mut keep = keep.into_iter();
-            self.lines.retain(|_| keep.next().unwrap_or(true));
             return;
         }
         let core = self.grow(patch.clone());

@@ -9,7 +9,6 @@
 use super::kernel::{columns, dirichlet};
 use crate::spectrum::Band;
 use crate::spectrum::fft::{Complex32, Complex64};
-use crate::units::U95;
 
 /// Bins on either side that enter a fit. Leaving out the rest costs 0.8 % of
 /// the information on frequency (Σ_{|k|>B} 1/k² against π²/3).
@@ -291,9 +290,4 @@ pub fn refine(band: &Band, lines: &mut [Line]) -> Residual {
         line.bin_sd = line.bin_sd.hypot(0.3 * strayed.sqrt());
     }
     residual
-}
-
-/// Half-width of the 95 % interval of a line's frequency, bins.
-pub fn u95_bins(line: &Line) -> f64 {
-    U95 * line.bin_sd
 }

@@ -1,6 +1,6 @@
 //! Where in a long recording's averaged spectrum to look closer.
 
-use super::detect::{Found, stand_out};
+use super::detect::{Found, merge, stand_out};
 use super::statistic::Coarse;
 use crate::spectrum::Band;
 use crate::spectrum::slice::Want;
@@ -40,7 +40,7 @@ pub fn regions(averaged: &Averaged, channel: usize, false_alarms: f64, frames: u
     let power = &averaged.power[channel];
     let shape = averaged.shape();
     let views: Vec<Coarse> = std::iter::once(Coarse::unsmoothed(power, shape, true))
-        .chain((1..12).map_while(|s| Coarse::new(power, shape, 4usize.pow(s), true)))
+        .chain(Coarse::ladder(power, shape, true))
         .collect();
     let tests: usize = views.iter().map(|v| v.power.len()).sum();
     // This only chooses where to look; what is found there is tested again. So
@@ -60,18 +60,10 @@ pub fn regions(averaged: &Averaged, channel: usize, false_alarms: f64, frames: u
             }
         }
     }
-    cores.sort_by_key(|c| (c.start, c.end));
-    let mut merged: Vec<Range<usize>> = Vec::new();
-    for core in cores {
-        match merged.last_mut() {
-            Some(last) if core.start <= last.end + 3 => last.end = last.end.max(core.end),
-            _ => merged.push(core),
-        }
-    }
     // Narrow ones first if there is too much to keep.
     let per_bin = frames.div_ceil(averaged.segment as u64) + 2;
     let bins = averaged.segment / 2 + 1;
-    let mut by_width: Vec<Region> = merged
+    let mut by_width: Vec<Region> = merge(cores, 3)
         .into_iter()
         .map(|core| {
             let first = core.start.saturating_sub(MARGIN);

@@ -106,6 +106,16 @@ impl Coarse {
         })
     }
 
+    /// Coarser and coarser views of `power`, each four times as wide as the last, as
+    /// far as [`Coarse::new`] goes.
+    pub fn ladder(
+        power: &[f32],
+        cell_shape: f64,
+        from_zero: bool,
+    ) -> impl Iterator<Item = Coarse> + '_ {
+        (1..12).map_while(move |s| Coarse::new(power, cell_shape, 4usize.pow(s), from_zero))
+    }
+
     /// The power itself, of shape `shape`, seen through the same interface.
     pub fn unsmoothed(power: &[f32], shape: f64, from_zero: bool) -> Coarse {
         let worth = 1.0 / (1.0 + 2.0 * HANN_CORRELATION.iter().sum::<f64>());
