@@ -1,0 +1,86 @@
+//! One file per command: its arguments, and what it does with the library.
+
+mod fold;
+mod output;
+mod progress;
+mod rates;
+mod site;
+mod sources;
+mod triage;
+mod unfold;
+mod values;
+
+pub use output::{WRONG_USAGE, complain};
+
+use clap::{Parser, Subcommand};
+use foldtrace::report::text::plain;
+use std::process::ExitCode;
+
+/// Traces a tone in a sampled recording back to the physical sources that could
+/// have made it, whether it is real where it shows or has folded down from above
+/// half the sample rate.
+#[derive(Debug, Parser)]
+#[command(version, max_term_width = 100)]
+pub struct Cli {
+    /// What to do
+    #[command(subcommand)]
+    pub command: Command,
+}
+
+/// The commands.
+#[derive(Debug, Subcommand)]
+pub enum Command {
+    /// Find the tones of recordings and rank what could have made each
+    #[command(after_help = triage::HELP)]
+    Triage(triage::Arguments),
+    /// Where analog frequencies land once sampled
+    #[command(after_help = fold::HELP)]
+    Fold(fold::Arguments),
+    /// Every analog frequency that would be seen at a given place
+    #[command(after_help = unfold::HELP)]
+    Unfold(unfold::Arguments),
+    /// Every line of the listed sources with its frequency and tolerance
+    #[command(after_help = sources::HELP)]
+    Sources(sources::Arguments),
+}
+
+/// The gist of a usage error without the pages around it.
+pub fn one_line(error: &clap::Error) -> String {
+    let all = error.to_string();
+    let gist: Vec<&str> = all
+        .lines()
+        .take_while(|l| !l.starts_with("Usage:") && !l.starts_with("For more"))
+        .map(str::trim)
+        .filter(|l| !l.is_empty())
+        .collect();
+    let gist = gist.join(" ");
+    let gist = gist.strip_prefix("error: ").unwrap_or(&gist);
+    format!("{} (see foldtrace --help)", plain(gist))
+}
+
+/// Runs one command.
+pub fn run(command: Command) -> ExitCode {
+    let done = match command {
+        Command::Triage(arguments) => triage::run(&arguments),
+        Command::Fold(arguments) => fold::run(&arguments),
+        Command::Unfold(arguments) => unfold::run(&arguments),
+        Command::Sources(arguments) => sources::run(&arguments),
+    };
+    match done {
+        Ok(code) => code,
+        Err(output::Stop(code, what)) => {
+            complain(&what);
+            ExitCode::from(code)
+        }
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use clap::CommandFactory;
+
+    #[test]
+    fn arguments_are_consistent() {
+        super::Cli::command().debug_assert();
+    }
+}
