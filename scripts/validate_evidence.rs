@@ -8,7 +8,12 @@
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
 use foldtrace::capture::StampedBlock;
+use foldtrace::evidence::phase;
 use foldtrace::evidence::timestamps::{self, Target};
+use foldtrace::fold::fold;
+use foldtrace::spectrum::samples::InMemory;
+use foldtrace::tones::{self, ChannelLevel, Search, Tone};
+use foldtrace::units::{SeenHz, TrueHz};
 use rand::rngs::StdRng;
 use rand::{RngExt, SeedableRng};
 use rand_distr::{Distribution, StandardNormal};
@@ -26,6 +31,9 @@ fn main() {
     let wanted = |name: &str| part.as_deref().is_none_or(|p| p == name);
     if wanted("stamps") {
         stamps(first, trials);
+    }
+    if wanted("phase") {
+        phase(first, trials);
     }
 }
 
@@ -158,3 +166,226 @@ fn log_of(
 fn erfc(x: f64) -> f64 {
     statrs::function::erf::erfc(x)
 }
+
+/// What stands beside the visible fundamental.
+#[derive(Clone, Copy, PartialEq, Debug)]
+enum Beside {
+    /// Its harmonic.
+    Harmonic,
+    /// A steady tone near where one would fold.
+    Steady,
+    /// One that wanders as much, on its own.
+    Independent,
+    /// Noise only.
+    Nothing,
+}
+
+/// Mains wandering 10 mHz rms over ten minutes, 70 dB over the noise in a cell of
+/// the whole, and one other thing.
+struct Mains {
+    recording: InMemory,
+    order: u32,
+    seen_hz: f64,
+    inverted: bool,
+    /// rms wander of a harmonic of that order.
+    spread_hz: f64,
+    fundamental_hz: f64,
+}
+
+fn mains(rng: &mut StdRng, beside: Beside, snr_db: f64) -> Mains {
+    let seconds = 600.0;
+    let rate_hz: f64 = rng.random_range(330.0..600.0);
+    let n = (seconds * rate_hz) as usize;
+    let fundamental_hz = 50.0 + 0.02 * normal(rng);
+    let order = rng.random_range(2..=60u32);
+    let line = f64::from(order) * fundamental_hz;
+    let memory_s = (rng.random_range(5f64.ln()..60f64.ln())).exp();
+    let path = wander(rng, n, rate_hz, memory_s, 0.010);
+    let other = wander(rng, n, rate_hz, memory_s, 0.010);
+    let amplitude = |db: f64| 2.0 * (10f64.powf(db / 10.0) / n as f64).sqrt();
+    let (a1, a2) = (amplitude(70.0), amplitude(snr_db));
+    let (p1, p2) = (rng.random::<f64>(), rng.random::<f64>());
+    // Off by less than its spread, so that frequency alone does not tell.
+    let spread_hz = 0.010 * f64::from(order);
+    let off = 0.5 * spread_hz * normal(rng);
+    let samples = (0..n)
+        .map(|i| {
+            let t = i as f64 / rate_hz;
+            let mut x = a1 * wave(fundamental_hz * t + path[i] + p1) + normal(rng);
+            x += a2
+                * match beside {
+                    Beside::Harmonic => {
+                        wave(f64::from(order) * (fundamental_hz * t + path[i]) + p2)
+                    }
+                    Beside::Steady => wave((line + off) * t + p2),
+                    Beside::Independent => {
+                        wave((line + off) * t + f64::from(order) * other[i] + p2)
+                    }
+                    Beside::Nothing => 0.0,
+                };
+            x as f32
+        })
+        .collect();
+    let cycles = line / rate_hz;
+    Mains {
+        recording: InMemory {
+            rate_hz,
+            channels: vec![samples],
+        },
+        order,
+        seen_hz: fold(TrueHz(line), rate_hz).0,
+        inverted: cycles - cycles.floor() > 0.5,
+        spread_hz,
+        fundamental_hz,
+    }
+}
+
+fn wave(turns: f64) -> f64 {
+    (TAU * (turns - turns.round())).cos()
+}
+
+/// Turns of a smooth random wander of `rms_hz` that forgets itself in `memory_s`.
+fn wander(rng: &mut StdRng, n: usize, rate_hz: f64, memory_s: f64, rms_hz: f64) -> Vec<f64> {
+    // Two low passes in a row; made at a tenth of a memory, then followed linearly.
+    let step = (memory_s * rate_hz / 20.0).max(1.0);
+    let keep = (-1.0f64 / 20.0).exp();
+    let (mut a, mut b) = (0.0, 0.0);
+    let mut coarse = Vec::new();
+    for i in 0..(n as f64 / step) as usize + 400 {
+        a = keep * a + (1.0 - keep * keep).sqrt() * normal(rng);
+        b = keep * b + (1.0 - keep) * a;
+        if i >= 398 {
+            coarse.push(b);
+        }
+    }
+    let hz: Vec<f64> = (0..n)
+        .map(|i| {
+            let x = i as f64 / step;
+            let j = x as usize;
+            coarse[j] + (coarse[j + 1] - coarse[j]) * (x - j as f64)
+        })
+        .collect();
+    let mean = hz.iter().sum::<f64>() / n as f64;
+    let rms = (hz.iter().map(|h| (h - mean).powi(2)).sum::<f64>() / n as f64).sqrt();
+    let mut turns = 0.0;
+    hz.iter()
+        .map(|h| {
+            turns += rms_hz * (h - mean) / rms / rate_hz;
+            turns
+        })
+        .collect()
+}
+
+fn tone(seen_hz: f64, u95: f64, wander_hz: f64, snr_db: f64) -> Tone {
+    Tone {
+        number: 0,
+        seen_hz: SeenHz(seen_hz),
+        seen_hz_u95: u95,
+        level_dbfs: -30.0,
+        snr_db,
+        from_s: 0.0,
+        to_s: 600.0,
+        wander_hz,
+        linewidth_hz: 0.0,
+        track: Vec::new(),
+        channels: vec![ChannelLevel {
+            channel: 0,
+            level_dbfs: -30.0,
+            snr_db,
+        }],
+    }
+}
+
+fn phase(first: u64, trials: u64) {
+    println!("Phase lock: mains wandering 10 mHz rms, 10 min, order 2 to 60");
+    println!(
+        "beside       snr_db  locked  order_right  sense_right  wrong_order  (known place / found)"
+    );
+    for (beside, snr_db) in [
+        (Beside::Harmonic, 15.0),
+        (Beside::Harmonic, 30.0),
+        (Beside::Harmonic, 50.0),
+        (Beside::Steady, 15.0),
+        (Beside::Steady, 40.0),
+        (Beside::Independent, 15.0),
+        (Beside::Independent, 30.0),
+        (Beside::Independent, 50.0),
+        (Beside::Nothing, 0.0),
+    ] {
+        let mut counts = [[0u32; 4]; 2];
+        let mut found_trials = 0;
+        for seed in first..first + trials {
+            let mut rng = StdRng::seed_from_u64(seed);
+            let m = mains(&mut rng, beside, snr_db);
+            // By a tone at its place, as if the detector had found it; and by what
+            // the detector finds.
+            let cell = 1.0 / 600.0;
+            let spread = if beside == Beside::Steady {
+                0.0
+            } else {
+                m.spread_hz
+            };
+            let known = vec![
+                tone(m.fundamental_hz, 0.2 * cell, 0.010, 70.0),
+                tone(m.seen_hz, 0.2 * spread + cell, spread, snr_db),
+            ];
+            // The detector takes longest: a quarter of the trials.
+            let found = (seed % 4 == 0).then(|| {
+                tones::find(&m.recording, &Search::default(), &|_, _| ())
+                    .unwrap()
+                    .tones
+            });
+            found_trials += u64::from(found.is_some());
+            for (count, tones) in counts.iter_mut().zip([Some(&known), found.as_ref()]) {
+                let Some(tones) = tones else { continue };
+                let locks = phase::locks(&m.recording, tones).unwrap();
+                if std::env::var_os("EVIDENCE_VERBOSE").is_some() {
+                    println!(
+                        "seed {seed} order {} seen {:.3} inverted {} tones {}",
+                        m.order,
+                        m.seen_hz,
+                        m.inverted,
+                        tones.len()
+                    );
+                    for l in &locks {
+                        println!("    {l:?}");
+                    }
+                }
+                let near = |l: &&phase::PhaseLock| {
+                    (l.seen_hz.0 - m.seen_hz).abs() < 5.0 * m.spread_hz + 0.02
+                        && l.ln_ratio > LOCKED
+                };
+                let best = locks
+                    .iter()
+                    .filter(near)
+                    .max_by(|a, b| a.ln_ratio.total_cmp(&b.ln_ratio));
+                if let Some(best) = best {
+                    count[0] += 1;
+                    count[1] += u32::from(best.order == m.order);
+                    count[2] += u32::from((best.multiplier < 0.0) == m.inverted);
+                }
+                count[3] += locks
+                    .iter()
+                    .filter(|l| {
+                        l.ln_ratio > LOCKED && !(beside == Beside::Harmonic && l.order == m.order)
+                    })
+                    .count() as u32;
+            }
+        }
+        for (count, how) in counts.iter().zip(["known place", "found"]) {
+            let of = if how == "found" { found_trials } else { trials };
+            let share = |i: usize| f64::from(count[i]) / of as f64;
+            println!(
+                "{:12} {snr_db:5}   {:.4}  {:.4}  {:.4}  {:.4}  {how}",
+                format!("{beside:?}"),
+                share(0),
+                share(1),
+                share(2),
+                share(3)
+            );
+        }
+    }
+}
+
+/// ln ratio from which a lock is called one: odds of a thousand.
+const LOCKED: f64 = 6.9;
