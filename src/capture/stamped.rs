@@ -38,6 +38,12 @@ pub struct StampedBlocks {
 }
 
 impl StampedBlocks {
+    /// The first stamp as seconds on the file's own scale (since 1970 for dates, since
+    /// midnight for times of the day), once a row has been read.
+    pub fn origin_s(&self) -> Option<f64> {
+        self.rows.origin_s()
+    }
+
     /// Fills `block` with the next rows; `false`, and an empty block, at the end.
     /// Rows without a readable stamp, and those after the clock was set back, whose
     /// times do not belong to those before, are passed over.

@@ -34,6 +34,14 @@ pub trait StampedPasses {
         &self,
         take: &mut dyn FnMut(&StampedBlock) -> bool,
     ) -> Result<bool, Self::Error>;
+
+    /// The first stamp on the file's own scale, s; `None` where there is none.
+    ///
+    /// # Errors
+    /// If the recording can no longer be read.
+    fn origin_s(&self) -> Result<Option<f64>, Self::Error> {
+        Ok(None)
+    }
 }
 
 impl StampedPasses for Capture {
@@ -53,6 +61,14 @@ impl StampedPasses for Capture {
         let mut block = StampedBlock::default();
         while pass.next_into(&mut block)? && take(&block) {}
         Ok(true)
+    }
+
+    fn origin_s(&self) -> Result<Option<f64>, CaptureError> {
+        let Some(mut pass) = self.stamped_blocks(1)? else {
+            return Ok(None);
+        };
+        pass.next_into(&mut StampedBlock::default())?;
+        Ok(pass.origin_s())
     }
 }
 
