@@ -8,6 +8,8 @@
 #![allow(clippy::unwrap_used, clippy::expect_used, clippy::panic)]
 
 use foldtrace::capture::StampedBlock;
+use foldtrace::evidence::movement::{Series, compare};
+use foldtrace::evidence::reference::{Reference, beside};
 use foldtrace::evidence::phase;
 use foldtrace::evidence::timestamps::{self, Target};
 use foldtrace::fold::fold;
@@ -34,6 +36,12 @@ fn main() {
     }
     if wanted("phase") {
         phase(first, trials);
+    }
+    if wanted("reference") {
+        reference(first, trials);
+    }
+    if wanted("movement") {
+        movement(first, trials);
     }
 }
 
@@ -389,3 +397,143 @@ fn phase(first: u64, trials: u64) {
 
 /// ln ratio from which a lock is called one: odds of a thousand.
 const LOCKED: f64 = 6.9;
+
+/// A motor with a tachometer log: ramping by 2 %, or hunting with an unknown offset of
+/// the clocks.
+fn reference(first: u64, trials: u64) {
+    println!("Reference: a motor of 24.5 Hz, 120 s at about 500 Hz, a log of one value a second");
+    for (what, ramp, hunting, offset) in [
+        ("ramp of 2 %, common clock", 0.02, 0.0, 0.0),
+        ("hunting by 0.2 % rms, clock off by 40 s at most", 0.0, 0.002, 40.0),
+    ] {
+        let (mut lines, mut tracked, mut named, mut signs, mut wrong) = (0, 0, 0, 0, 0);
+        let (mut offsets, mut off_squares, mut aligned) = (0.0, 0.0, 0);
+        for seed in first..first + trials {
+            let mut rng = StdRng::seed_from_u64(seed);
+            let rate_hz: f64 = rng.random_range(450.0..550.0);
+            let n = (120.0 * rate_hz) as usize;
+            let lead = 60.0;
+            let all = n + (2.0 * lead * rate_hz) as usize;
+            let path = wander(&mut rng, all, rate_hz, 8.0, 24.5 * hunting + 1e-9);
+            let skip = (lead * rate_hz) as usize;
+            // Turns of the shaft at time t of the recording, from 60 s before.
+            let shaft = |i: usize| {
+                let t = (i as f64 - skip as f64) / rate_hz;
+                24.5 * (t + ramp * t * t / 240.0) + path[i]
+            };
+            let orders = [1u32, 2, 3, 7, 14, 21, 28, 33];
+            let phases: Vec<f64> = orders.iter().map(|_| rng.random()).collect();
+            let samples: Vec<f32> = (0..n)
+                .map(|i| {
+                    let turns = shaft(i + skip);
+                    let mut x = normal(&mut rng);
+                    for (o, p) in orders.iter().zip(&phases) {
+                        x += wave(f64::from(*o) * turns + p);
+                    }
+                    x as f32
+                })
+                .collect();
+            let recording = InMemory {
+                rate_hz,
+                channels: vec![samples],
+            };
+            let shift = offset * rng.random_range(-1.0..1.0);
+            let mut log = Series::default();
+            let second = rate_hz as usize;
+            for i in (0..all - second).step_by(second) {
+                let hz = (shaft(i + second) - shaft(i)) / (second as f64 / rate_hz);
+                let t = (i + second / 2) as f64 / rate_hz - lead;
+                let noise = 24.5 * 1e-4;
+                log.push(t + lead, hz + noise * normal(&mut rng), noise);
+            }
+            let log = Reference {
+                source: "motor".into(),
+                series: log,
+                origin_s: -lead + shift,
+            };
+            let found = tones::find(&recording, &Search::default(), &|_, _| ()).unwrap();
+            let tracks: Vec<(usize, Series)> = found
+                .tones
+                .iter()
+                .enumerate()
+                .map(|(i, t)| (i, Series::of(t)))
+                .collect();
+            let Some(beside) = beside(&log, &tracks, None, 120.0) else {
+                continue;
+            };
+            if offset > 0.0 {
+                aligned += u32::from(beside.offset_u95_s > 0.0);
+                let error = beside.offset_s + lead;
+                offsets += error.abs();
+                off_squares += f64::from(error.abs() <= beside.offset_u95_s);
+            }
+            for (i, t) in found.tones.iter().enumerate() {
+                let mean = 24.5 * (1.0 + ramp / 2.0);
+                let Some(&order) = orders.iter().find(|o| {
+                    let seen = fold(TrueHz(f64::from(**o) * mean), rate_hz).0;
+                    (seen - t.seen_hz.0).abs() < f64::from(**o) * 24.5 * (ramp * 0.3 + hunting) + 0.1
+                }) else {
+                    continue;
+                };
+                lines += 1;
+                tracked += u32::from(t.track.len() >= 6);
+                let Some((_, f)) = beside.follows.iter().find(|f| f.0 == i) else {
+                    continue;
+                };
+                let cycles = f64::from(order) * mean / rate_hz;
+                let inverted = cycles - cycles.floor() > 0.5;
+                if f.ln_ratio < 3.0 {
+                    continue;
+                }
+                let is = f.slope.abs().round() as u32 == order;
+                named += u32::from(is);
+                signs += u32::from((f.slope < 0.0) == inverted);
+                wrong += u32::from(!is);
+                if std::env::var_os("EVIDENCE_VERBOSE").is_some() {
+                    println!("    order {order} inverted {inverted}: {f:?}");
+                }
+            }
+        }
+        println!("{what}: {lines} lines seen, {tracked} with a track, {named} orders named right, {wrong} wrong, {signs} senses right");
+        if offset > 0.0 {
+            let n = trials as f64;
+            println!("    aligned {aligned} of {trials}, mean error {:.2} s, within its interval {:.2}", offsets / n, off_squares / n);
+        }
+    }
+}
+
+/// Two tracks that do, and do not, move together.
+fn movement(first: u64, trials: u64) {
+    println!("Movement: 40 windows, tracks of common or of independent wander");
+    for (what, common) in [("common", true), ("independent", false)] {
+        let (mut told, mut covered, mut signs) = (0, 0, 0);
+        for seed in first..first + trials {
+            let mut rng = StdRng::seed_from_u64(seed);
+            let memory_s = rng.random_range(2.0..60.0);
+            let a = wander(&mut rng, 4000, 10.0, memory_s, 0.02);
+            let b = wander(&mut rng, 4000, 10.0, memory_s, 0.02);
+            let sign: f64 = if rng.random() { 1.0 } else { -1.0 };
+            let ratio = sign * rng.random_range(1.5..30.0);
+            let (mut x, mut y) = (Series::default(), Series::default());
+            for w in 0..40 {
+                let mean = |p: &[f64]| (p[(w * 100 + 99).min(3999)] - p[w * 100]) / 9.9;
+                let t = w as f64 * 10.0;
+                let (sx, sy) = (0.004, 0.01 * ratio.abs() / 5.0);
+                x.push(t, 50.0 + mean(&a) + sx * normal(&mut rng), sx);
+                let moved = ratio * mean(if common { &a } else { &b });
+                y.push(t, 120.0 + moved + sy * normal(&mut rng), sy);
+            }
+            let Some(f) = compare(&y, &x) else { continue };
+            told += u32::from(f.ln_ratio > 4.6);
+            covered += u32::from((f.slope - ratio).abs() < 1.96 * f.sd);
+            signs += u32::from(f.slope * ratio > 0.0);
+        }
+        let share = |n: u32| f64::from(n) / trials as f64;
+        println!(
+            "{what:12} odds over 100: {:.3}  slope in its 95 % interval: {:.3}  sign right: {:.3}",
+            share(told),
+            share(covered),
+            share(signs)
+        );
+    }
+}
