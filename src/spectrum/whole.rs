@@ -66,5 +66,6 @@ pub fn transform(mut channel: Vec<f32>, grid: usize, rate_hz: f64, step: Option<
         samples,
         rate_hz,
         least_noise: super::least_noise(samples, power, step),
+        floor: Vec::new(),
     }
 }

@@ -105,6 +105,14 @@ impl Residual {
         }
     }
 
+    /// Bin `k` with `line`, which is at present taken out, back in it; not its mirror
+    /// image.
+    pub fn with(&self, line: &Line, k: i64) -> Option<Complex32> {
+        let (n, m) = (self.band.samples, self.band.grid);
+        let z = line.c * dirichlet(k as f64 - line.bin, n, m).0;
+        Some(self.band.get(k)? + Complex32::new(z.re as f32, z.im as f32))
+    }
+
     /// Median-based noise power around `bin` in the chosen view.
     fn noise(&self, bin: f64, view: View) -> Option<f64> {
         let mut powers: Vec<f64> = self
