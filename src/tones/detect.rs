@@ -4,6 +4,7 @@
 //! not explain, and patches that stand out only when smoothed, are judged as
 //! wandering tones or dropped as humps of noise.
 
+use super::mean;
 use super::peaks::{LOWEST, Level, peaks};
 use super::refine::{Line, Residual, View, refine};
 use super::statistic::{Coarse, Fine, lower};
@@ -27,6 +28,8 @@ const HUMP_CHANCE: f64 = 1e-6;
 /// A patch gathers the highest of many cells: it must hold this many times what
 /// a single steady line must.
 const PATCH_MARGIN: f64 = 3.0;
+/// A track that leaves a steady tone less probable than this shows wander.
+const UNSTEADY: f64 = 0.01;
 /// Share of the false alarms granted to peaks at full resolution.
 const FINE_SHARE: f64 = 0.75;
 
@@ -141,6 +144,8 @@ pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
 fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<Fit> {
     let band = residual.band();
     let mut work = track::Work::default();
+    // resolution cells in a bin
+    let cells = band.samples as f64 / band.grid as f64;
     let alone = |own: usize, bin: f64| {
         wanderers
             .iter()
@@ -159,10 +164,11 @@ fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<
             alone: alone(usize::MAX, l.bin),
         };
         let track = track::follow(band, &target, |k| residual.with(l, k), &mut work);
+        let (bin, bin_sd, wander) = settled(l, &track, cells);
         Fit {
-            bin: l.bin,
-            bin_sd: l.bin_sd,
-            wander: 0.0,
+            bin,
+            bin_sd,
+            wander,
             strength: l.c.norm() * band.samples as f64,
             noise: l.noise,
             present: target.present,
@@ -180,10 +186,18 @@ fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<
             alone: alone(i, w.bin),
         };
         let track = track::follow(band, &target, |k| band.get(k), &mut work);
+        let (bin, bin_sd, wander) = match mean::mean(&track, w.bin * cells, w.present) {
+            Some(m) => (
+                w.bin + m.offset / cells,
+                m.variance.sqrt() / cells,
+                mean::excursion(&track) / cells,
+            ),
+            None => (w.bin, w.bin_sd, w.wander),
+        };
         Fit {
-            bin: w.bin,
-            bin_sd: w.bin_sd,
-            wander: w.wander,
+            bin,
+            bin_sd,
+            wander,
             strength: w.strength,
             noise: w.noise,
             present: w.present,
@@ -191,6 +205,24 @@ fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<
         }
     }));
     fits
+}
+
+/// Frequency, its standard deviation and the wander, in bins, of a line fitted as
+/// steady, in the light of its track.
+fn settled(line: &Line, track: &Track, cells: f64) -> (f64, f64, f64) {
+    let Some(m) = mean::mean(track, line.bin * cells, (0.0, 1.0)) else {
+        return (line.bin, line.bin_sd.hypot(line.strayed), 0.0);
+    };
+    let wander = if m.steady < UNSTEADY {
+        mean::excursion(track) / cells
+    } else {
+        0.0
+    };
+    (
+        line.bin + m.shift / cells,
+        line.bin_sd.hypot(m.more.sqrt() / cells),
+        wander,
+    )
 }
 
 /// Does a wandering tone stray over `bin`?
@@ -262,6 +294,7 @@ fn start(band: &Band, fine: &Fine, i: usize) -> Line {
             View::Hann => hann_floor,
         }),
         view,
+        strayed: 0.0,
         leftover: 1.0,
     }
 }

@@ -2,6 +2,7 @@
 
 pub mod detect;
 pub mod kernel;
+pub mod mean;
 pub mod merge;
 pub mod peaks;
 pub mod refine;
@@ -13,6 +14,7 @@ pub mod wander;
 
 pub use track::TrackPoint;
 
+use crate::spectrum::condition::Condition;
 use crate::spectrum::plan::Plan;
 use crate::spectrum::samples::Passes;
 use crate::spectrum::{least_noise, slice, welch, whole};
@@ -99,6 +101,8 @@ pub struct ToneSet {
     pub cell_hz: f64,
     /// Missing samples bridged, per channel.
     pub missing: Vec<u64>,
+    /// What else is wrong with the samples, per channel.
+    pub condition: Vec<Condition>,
     /// Weaker tones left out beyond [`MOST_TONES`].
     pub left_out: usize,
 }
@@ -125,11 +129,11 @@ pub fn find<P: Passes>(
         .collect();
     let false_alarms = search.false_alarms / chosen.len().max(1) as f64;
     let mut per_channel = Vec::new();
-    let missing;
+    let condition;
     match plan {
         Plan::Whole { grid, .. } => {
             let loaded = whole::load(recording, &|n| progress(n, frames))?;
-            missing = loaded.missing;
+            condition = loaded.condition;
             for (channel, samples) in loaded.channels.into_iter().enumerate() {
                 if !chosen.contains(&channel) || samples.is_empty() {
                     continue;
@@ -169,7 +173,7 @@ pub fn find<P: Passes>(
                     per_channel.push((channel, tones));
                 }
             }
-            missing = averaged.missing;
+            condition = averaged.condition;
         }
     }
     let cell_hz = recording.rate_hz() / frames.max(1) as f64;
@@ -178,7 +182,8 @@ pub fn find<P: Passes>(
         tones,
         plan,
         cell_hz,
-        missing,
+        missing: condition.iter().map(|c| c.missing).collect(),
+        condition,
         left_out,
     })
 }

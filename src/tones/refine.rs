@@ -45,6 +45,9 @@ pub struct Line {
     pub noise: f64,
     /// How it is fitted.
     pub view: View,
+    /// How far its mean may be from where a steady one fits best, standard deviation,
+    /// bins, by what is left of it.
+    pub strayed: f64,
     /// Mean of |residual|² over noise in the cells around it once it is taken
     /// out: about 1 for a steady tone.
     pub leftover: f64,
@@ -295,7 +298,7 @@ pub fn refine(band: &Band, lines: &mut [Line]) -> Residual {
         // phase it strayed by; about a third of that may pass for frequency.
         let strayed = (line.leftover - 1.5).max(0.0) * around.len() as f64
             / line.snr(band.samples).max(1e-300);
-        line.bin_sd = line.bin_sd.hypot(0.3 * strayed.sqrt());
+        line.strayed = 0.3 * strayed.sqrt();
     }
     residual
 }

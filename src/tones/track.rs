@@ -41,6 +41,11 @@ pub struct Point {
     pub bin: f64,
     /// Its standard deviation, bins.
     pub bin_sd: f64,
+    /// Frequency and standard deviation in resolution cells of the recording: turns
+    /// in the whole of it.
+    pub cells: f64,
+    /// See `cells`.
+    pub cells_sd: f64,
     /// Phase at the window's middle, turns.
     pub turns: f64,
     /// Its standard deviation, turns.
@@ -356,10 +361,14 @@ fn windows_of(
             let grid = base.step * per_sample;
             let still = (base.centre as f64 * (want / grid)).rem_euclid(1.0);
             let turns = still + fitted.phase / TAU + fitted.cycles * (want - have) / base.step;
+            let bin = base.centre as f64 + fitted.cycles * per_sample;
+            let cells = base.samples / grid;
             Some(Point {
                 index,
-                bin: base.centre as f64 + fitted.cycles * per_sample,
+                bin,
                 bin_sd,
+                cells: bin * cells,
+                cells_sd: bin_sd * cells,
                 turns: turns.rem_euclid(1.0),
                 turns_sd,
                 snr,
