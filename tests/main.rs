@@ -3,6 +3,7 @@
 
 mod capture;
 mod cli;
+mod evidence;
 mod fold;
 mod frontend;
 mod sample_data;
