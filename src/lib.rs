@@ -2,8 +2,8 @@
 //! sources that could have made it, whether the tone is real where it shows or
 //! has folded down from above half the sample rate.
 //!
-//! Data flows one way: [`capture`] → [`spectrum`] → [`tones`] → [`suspects`] →
-//! [`report`]. [`fold`] and [`frontend`] hold the sampling arithmetic and the
+//! Data flows one way: [`capture`] → [`spectrum`] → [`tones`] → [`evidence`] →
+//! [`suspects`] → [`report`]. [`fold`] and [`frontend`] hold the sampling arithmetic and the
 //! analog path before the converter; [`sources`] what is known of the site.
 #![forbid(unsafe_code)]
 #![cfg_attr(test, allow(clippy::unwrap_used, clippy::expect_used, clippy::panic))]

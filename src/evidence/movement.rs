@@ -261,6 +261,9 @@ pub(super) fn common_points(first: &Series, second: &Series) -> Option<(Vec<f64>
     Common::new(first, second).map(|c| (c.y, c.x))
 }
 
+/// Frequency and sd of both tracks in one window.
+type Pair = ((f64, f64), (f64, f64));
+
 /// Two tracks on the same windows, means taken out.
 struct Common {
     y: Vec<f64>,
@@ -317,12 +320,12 @@ impl Common {
         };
         let y = centre(pairs.iter().map(|p| p.0.0).collect());
         let x = centre(pairs.iter().map(|p| p.1.0).collect());
-        let mean =
-            |f: &dyn Fn(&((f64, f64), (f64, f64))) -> f64| pairs.iter().map(f).sum::<f64>() / n;
         let square = |v: &[f64]| v.iter().map(|a| a * a).sum::<f64>() / n;
+        let noise =
+            |sd: &dyn Fn(&Pair) -> f64| pairs.iter().map(|p| sd(p).powi(2)).sum::<f64>() / n;
         // Even a track said to be exact is so to a millionth of its movement only.
-        let vy = mean(&|p| p.0.1 * p.0.1).max(1e-12 * square(&y));
-        let vx = mean(&|p| p.1.1 * p.1.1).max(1e-12 * square(&x));
+        let vy = noise(&|p| p.0.1).max(1e-12 * square(&y));
+        let vx = noise(&|p| p.1.1).max(1e-12 * square(&x));
         Some(Common {
             jumps: before - pairs.len(),
             y,
