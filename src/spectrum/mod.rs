@@ -7,6 +7,7 @@
 //! narrow bands only, so that memory does not grow with length while resolution
 //! does.
 
+pub mod display;
 pub mod fft;
 pub mod floor;
 pub mod plan;
