@@ -1,6 +1,7 @@
 //! The table on the terminal: what was read, a row per tone with its suspects,
 //! the sources that were fitted, and one sentence at the end.
 
+use super::strip;
 use super::text::{count, hertz, percent, plain, with_u95};
 use crate::suspects::{Finding, Suspect, Verdict};
 use crate::tones::Tone;
@@ -9,14 +10,17 @@ use anstyle::{AnsiColor, Style};
 use std::io::{self, Write};
 
 /// A latent's own name without that of the source it is printed beside.
-fn latent_word(latent: &str, source: &str) -> String {
+pub(super) fn latent_word(latent: &str, source: &str) -> String {
     let rest = latent.strip_prefix(source).unwrap_or(latent).trim();
     plain(if rest.is_empty() { "at" } else { rest })
 }
 
 /// Suspects less probable than this are not worth a line on the screen; they
 /// stay in the exports.
-const WORTH_A_LINE: f64 = 0.02;
+pub(super) const WORTH_A_LINE: f64 = 0.02;
+
+/// A source that explains fewer tones is only as probable as it was before.
+pub(super) const EXPLAINS_SOMETHING: f64 = 0.05;
 
 const QUIET: Style = Style::new().dimmed();
 const HEAD: Style = Style::new().bold();
@@ -43,6 +47,9 @@ pub fn write(
     out: &mut dyn Write,
 ) -> io::Result<()> {
     what_was_read(result, site_name, out)?;
+    if let Some(strip) = strip::line(result, width) {
+        writeln!(out, "  {strip}")?;
+    }
     let rows: Vec<(&Tone, &Finding)> = result.rows().collect();
     if !rows.is_empty() {
         tones(&rows, top, width, out)?;
@@ -115,7 +122,7 @@ fn what_was_read(result: &Triage, site_name: &str, out: &mut dyn Write) -> io::R
     writeln!(out, "  sources: {}", plain(site_name))
 }
 
-fn duration(seconds: f64) -> String {
+pub(super) fn duration(seconds: f64) -> String {
     if seconds < 120.0 {
         format!("{} s", hertz(seconds))
     } else if seconds < 7200.0 {
@@ -298,7 +305,7 @@ fn label(s: &Suspect) -> String {
     format!("{} {}", plain(&s.cause.name()), s.line)
 }
 
-fn luck(coincidence: f64) -> String {
+pub(super) fn luck(coincidence: f64) -> String {
     if coincidence >= 10.0 {
         format!("{coincidence:.0}")
     } else if coincidence >= 0.995 {
@@ -310,7 +317,7 @@ fn luck(coincidence: f64) -> String {
     }
 }
 
-fn unlisted_words(finding: &Finding) -> String {
+pub(super) fn unlisted_words(finding: &Finding) -> String {
     let all = finding.unlisted_direct + finding.unlisted_folded;
     let share = if all > 0.0 {
         finding.unlisted_folded / all
@@ -329,8 +336,7 @@ fn unlisted_words(finding: &Finding) -> String {
 fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
     let fits: Vec<_> = result
         .fits()
-        // A source that explains nothing is only as probable as it was before.
-        .filter(|(_, f)| f.tones_explained >= 0.05)
+        .filter(|(_, f)| f.tones_explained >= EXPLAINS_SOMETHING)
         .collect();
     if fits.is_empty() {
         return Ok(());
@@ -364,11 +370,17 @@ fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
             latents.join(", ")
         )?;
     }
-    let clock = &result.inference.clock;
-    // Worth a line where the recording itself narrows it.
-    if clock.latents > 0 && clock.ppm_u95 < 0.8 * result.clock_described_ppm {
-        let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
-        writeln!(out, "recorder's clock: {ppm} ± {u95} ppm")?;
+    if let Some(clock) = clock(result) {
+        writeln!(out, "recorder's clock: {clock}")?;
     }
     Ok(())
+}
+
+/// The fitted error of the recorder's clock, where the recording itself narrows it.
+pub(super) fn clock(result: &Triage) -> Option<String> {
+    let clock = &result.inference.clock;
+    (clock.latents > 0 && clock.ppm_u95 < 0.8 * result.clock_described_ppm).then(|| {
+        let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
+        format!("{ppm} ± {u95} ppm")
+    })
 }
