@@ -28,7 +28,8 @@ Exit: 0 done, 1 some input could not be read, 2 wrong usage or site file.
 
 Examples:
   foldtrace triage sample-data/recordings/skid-8000.wav --site sample-data/orrowmere.toml
-  foldtrace triage sample-data/recordings/skid-8000.wav --site sample-data/orrowmere.toml --report skid.html";
+  foldtrace triage sample-data/recordings/skid-8000.wav \\
+      --site sample-data/orrowmere.toml --report skid.html";
 
 /// Options of `triage`.
 #[derive(Debug, Args)]

@@ -105,22 +105,29 @@
       if (mark) say(mark.getAttribute("aria-label"));
     });
     figure.addEventListener("pointerleave", () => say(""));
+    // On the figure: an SVG that listens for the focus would take it.
+    figure.addEventListener("focusin", (event) => {
+      const mark = event.target.closest(".mark");
+      if (mark) say(mark.getAttribute("aria-label"));
+    });
+    figure.addEventListener("focusout", () => say(""));
     for (const picture of all("svg.picture", figure)) {
+      // By tone, not in the order in which they are painted.
       const marks = all("a.mark", picture);
-      marks.forEach((mark, i) => mark.setAttribute("tabindex", i ? "-1" : "0"));
-      picture.addEventListener("focusin", (event) => say(event.target.getAttribute("aria-label")));
-      picture.addEventListener("focusout", () => say(""));
-      picture.addEventListener("keydown", (event) => {
+      marks.sort((a, b) => a.dataset.tone.localeCompare(b.dataset.tone, "en", { numeric: true }));
+      const stop = (mark) => marks.forEach((m) => m.setAttribute("tabindex", m === mark ? "0" : "-1"));
+      stop(marks[0]);
+      figure.addEventListener("keydown", (event) => {
+        const here = marks.indexOf(event.target.closest(".mark"));
+        if (here < 0) return;
         const step = { ArrowRight: 1, ArrowDown: 1, ArrowLeft: -1, ArrowUp: -1 }[event.key];
-        const here = marks.indexOf(document.activeElement);
-        let next = here + step;
+        let next = here + (step || 0);
         if (event.key === "Home") next = 0;
         else if (event.key === "End") next = marks.length - 1;
-        else if (!step || here < 0) return;
+        else if (!step) return;
         const mark = marks[Math.min(Math.max(next, 0), marks.length - 1)];
         event.preventDefault();
-        marks.forEach((m) => m.setAttribute("tabindex", "-1"));
-        mark.setAttribute("tabindex", "0");
+        stop(mark);
         mark.focus();
       });
       // The spectrum itself: frequency and loudest level under the pointer.

@@ -15,7 +15,7 @@ const COLOURS: [(&str, &str, &str); 12] = [
     ("direct", "#0a6a66", "#63c9bd"),
     ("folded", "#a8321a", "#ff9272"),
     ("open", "#7a5600", "#e6b955"),
-    ("glow", "#ffe9a8", "#57481a"),
+    ("glow", "#ffe9a8", "#453a18"),
     ("wash", "#f1eee5", "#232a33"),
 ];
 
