@@ -350,7 +350,11 @@ fn the_examples_of_the_help_work() {
             .split_once("Example:\n")
             .or_else(|| text.split_once("Examples:\n"))
             .unwrap_or_else(|| panic!("{command} has no example"));
-        for line in examples.replace("\\\n", " ").lines().filter(|l| !l.trim().is_empty()) {
+        for line in examples
+            .replace("\\\n", " ")
+            .lines()
+            .filter(|l| !l.trim().is_empty())
+        {
             let called = line.split(" (").next().unwrap().trim();
             let mut words = called.split_whitespace();
             assert_eq!(words.next(), Some("foldtrace"), "{command}: {line}");

@@ -6,6 +6,9 @@ use super::triage::ToneView;
 use crate::report::text::{count, hertz};
 use crate::suspects::Verdict;
 
+/// Sentences about open tones at most.
+const MOST_OPEN: usize = 5;
+
 /// Sentences about one cause, or about what has none.
 pub(super) struct Sentence {
     pub(super) letter: String,
@@ -41,9 +44,26 @@ pub(super) fn sentences(tones: &[ToneView]) -> Vec<Sentence> {
     let of_causes = groups
         .into_iter()
         .map(|((letter, name), members)| of_cause(letter, name, &members));
-    let open = tones
+    of_causes.chain(open_ones(tones)).collect()
+}
+
+/// One sentence for each open tone if they are few; otherwise for the loudest, and one
+/// for the rest.
+fn open_ones(tones: &[ToneView]) -> Vec<Sentence> {
+    let mut open: Vec<&ToneView> = tones
         .iter()
         .filter(|t| t.verdict == Verdict::Open)
+        .collect();
+    let link = |t: &ToneView| (t.anchor.clone(), t.number);
+    let mut rest = Vec::new();
+    if open.len() > MOST_OPEN {
+        open.sort_by(|a, b| b.level_dbfs.total_cmp(&a.level_dbfs));
+        rest = open.split_off(MOST_OPEN - 1);
+        open.sort_by_key(|t| t.number);
+        rest.sort_by_key(|t| t.number);
+    }
+    let mut sentences: Vec<Sentence> = open
+        .into_iter()
         .map(|tone| Sentence {
             letter: String::new(),
             name: format!("Tone {} stays open", tone.number),
@@ -53,10 +73,20 @@ pub(super) fn sentences(tones: &[ToneView]) -> Vec<Sentence> {
                 tone.folded,
                 tone.candidates()
             ),
-            tones: vec![(tone.anchor.clone(), tone.number)],
+            tones: vec![link(tone)],
+            class: "open",
+        })
+        .collect();
+    if !rest.is_empty() {
+        sentences.push(Sentence {
+            letter: String::new(),
+            name: format!("{} more tones stay open", rest.len()),
+            words: "none of them as loud as those above.".into(),
+            tones: rest.into_iter().map(link).collect(),
             class: "open",
         });
-    of_causes.chain(open).collect()
+    }
+    sentences
 }
 
 fn of_cause(letter: String, name: String, members: &[&ToneView]) -> Sentence {
