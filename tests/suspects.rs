@@ -28,9 +28,7 @@ fn tones(list: &[(f64, f64, f64, f64)]) -> Vec<Tone> {
             from_s: 0.0,
             to_s: 60.0,
             wander_hz,
-            linewidth_hz: 0.0,
-            track: Vec::new(),
-            channels: Vec::new(),
+            ..Tone::default()
         })
         .collect()
 }

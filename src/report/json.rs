@@ -67,6 +67,7 @@ fn recording(result: &Triage, top: usize) -> Value {
                 "wander_hz": tone.wander_hz,
                 "linewidth_hz": tone.linewidth_hz,
                 "track": tone.track,
+                "track_step_s": tone.track_step_s,
                 "channels": channels,
                 "verdict": finding.verdict,
                 "folded_probability": finding.folded_probability,

@@ -160,7 +160,7 @@ mod tests {
             segment,
             count: 10,
             rate_hz: 8000.0,
-            missing: vec![0],
+            condition: Vec::new(),
         };
         let spectrum = Spectrum::of_averaged(&averaged, 0, 1.0);
         assert!((spectrum.top_dbfs() + 20.0).abs() < 0.01);

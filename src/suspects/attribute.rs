@@ -53,7 +53,7 @@ pub(super) fn attribute(scene: &Scene, solutions: &[(f64, Solution)]) -> Inferen
         })
         .collect();
     let explained = propose(scene, &shares, &origins, epsilon, &mut findings);
-    name_byproducts(scene, solutions, &mut findings);
+    name_byproducts(scene, solutions, &origins, &mut findings);
     for finding in &mut findings {
         finding
             .suspects
@@ -145,7 +145,12 @@ const MOST_BYPRODUCTS: usize = 4;
 /// Enters products of tones and artefacts of the recorder. A product whose parents
 /// are lines of one listed source, and which is a line of that source itself, goes
 /// under the source's name.
-fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut [Finding]) {
+fn name_byproducts(
+    scene: &Scene,
+    solutions: &[(f64, Solution)],
+    origins: &Origins,
+    findings: &mut [Finding],
+) {
     let Some((_, first)) = solutions.first() else {
         return;
     };
@@ -164,6 +169,15 @@ fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut 
         let nu = scene.tones.get(b.tone).map_or(0.0, |t| t.seen_hz.0);
         let u95 = scene.tones.get(b.tone).map_or(0.0, |t| t.seen_hz_u95);
         let suspect = match &b.maker {
+            Maker::Unlisted => {
+                if let Some(finding) = findings.get_mut(b.tone) {
+                    let folded = probability * origins.folded(nu);
+                    finding.folded_probability += folded;
+                    finding.unlisted_folded += folded;
+                    finding.unlisted_direct += probability - folded;
+                }
+                continue;
+            }
             Maker::Recorder => Suspect {
                 cause: Cause::Recorder,
                 line: b.label.clone(),

@@ -24,6 +24,8 @@ use crate::units::TrueHz;
 pub(super) enum Maker {
     /// Tones (indices) and how often each enters.
     Parents(Vec<(usize, i32)>),
+    /// A cause that nobody listed: sidebands that some modulation makes.
+    Unlisted,
     /// The recorder.
     Recorder,
 }
@@ -57,6 +59,10 @@ const HARMONICS: i32 = 9;
 const DISTORTED: f64 = 0.01;
 const MIXED: f64 = 0.003;
 const CLIPPED: f64 = 0.3;
+/// Chance that a pair of strong tones are two of a row of sidebands that no listed
+/// source makes (a drive, a meshing gear). Equal spacing is what modulation and
+/// third-order intermodulation have in common; modulation is far more common.
+const MODULATED: f64 = 0.03;
 /// Chance that distortion shows a given product, by its order from 2 on.
 const PRODUCT: [f64; 8] = [0.5, 0.5, 0.3, 0.3, 0.2, 0.2, 0.15, 0.15];
 /// Chance of a spur at a given fraction of the rate.
@@ -142,6 +148,7 @@ fn products(scene: &Scene, tones: &[Measured], threshold_db: f64, found: &mut Fo
             .collect();
         let prior = if clipping(a) { CLIPPED } else { DISTORTED };
         distortion(scene, tones, threshold_db, &harmonics, prior, found);
+        let spaced = |l: &str| matches!(l, "2a-b" | "a-2b");
         for &b in parents.iter().skip(n + 1) {
             let mixed: Vec<Recipe> = [
                 (1, 1, "a+b"),
@@ -159,6 +166,12 @@ fn products(scene: &Scene, tones: &[Measured], threshold_db: f64, found: &mut Fo
                 MIXED
             };
             distortion(scene, tones, threshold_db, &mixed, prior, found);
+            let row: Vec<Recipe> = mixed.into_iter().filter(|m| spaced(&m.1)).collect();
+            let first = found.products.len();
+            distortion(scene, tones, threshold_db, &row, MODULATED, found);
+            for b in found.products.iter_mut().skip(first) {
+                b.maker = Maker::Unlisted;
+            }
         }
     }
 }
