@@ -9,8 +9,8 @@
 
 use foldtrace::capture::StampedBlock;
 use foldtrace::evidence::movement::{Series, compare};
-use foldtrace::evidence::reference::{Reference, beside};
 use foldtrace::evidence::phase;
+use foldtrace::evidence::reference::{Reference, beside};
 use foldtrace::evidence::timestamps::{self, Target};
 use foldtrace::fold::fold;
 use foldtrace::spectrum::samples::InMemory;
@@ -404,7 +404,12 @@ fn reference(first: u64, trials: u64) {
     println!("Reference: a motor of 24.5 Hz, 120 s at about 500 Hz, a log of one value a second");
     for (what, ramp, hunting, offset) in [
         ("ramp of 2 %, common clock", 0.02, 0.0, 0.0),
-        ("hunting by 0.2 % rms, clock off by 40 s at most", 0.0, 0.002, 40.0),
+        (
+            "hunting by 0.2 % rms, clock off by 40 s at most",
+            0.0,
+            0.002,
+            40.0,
+        ),
     ] {
         let (mut lines, mut tracked, mut named, mut signs, mut wrong) = (0, 0, 0, 0, 0);
         let (mut offsets, mut off_squares, mut aligned) = (0.0, 0.0, 0);
@@ -471,7 +476,8 @@ fn reference(first: u64, trials: u64) {
                 let mean = 24.5 * (1.0 + ramp / 2.0);
                 let Some(&order) = orders.iter().find(|o| {
                     let seen = fold(TrueHz(f64::from(**o) * mean), rate_hz).0;
-                    (seen - t.seen_hz.0).abs() < f64::from(**o) * 24.5 * (ramp * 0.3 + hunting) + 0.1
+                    (seen - t.seen_hz.0).abs()
+                        < f64::from(**o) * 24.5 * (ramp * 0.3 + hunting) + 0.1
                 }) else {
                     continue;
                 };
@@ -494,10 +500,16 @@ fn reference(first: u64, trials: u64) {
                 }
             }
         }
-        println!("{what}: {lines} lines seen, {tracked} with a track, {named} orders named right, {wrong} wrong, {signs} senses right");
+        println!(
+            "{what}: {lines} lines seen, {tracked} with a track, {named} orders named right, {wrong} wrong, {signs} senses right"
+        );
         if offset > 0.0 {
             let n = trials as f64;
-            println!("    aligned {aligned} of {trials}, mean error {:.2} s, within its interval {:.2}", offsets / n, off_squares / n);
+            println!(
+                "    aligned {aligned} of {trials}, mean error {:.2} s, within its interval {:.2}",
+                offsets / n,
+                off_squares / n
+            );
         }
     }
 }
