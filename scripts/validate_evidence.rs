@@ -296,6 +296,7 @@ fn tone(seen_hz: f64, u95: f64, wander_hz: f64, snr_db: f64) -> Tone {
         wander_hz,
         linewidth_hz: 0.0,
         track: Vec::new(),
+        track_step_s: 0.0,
         channels: vec![ChannelLevel {
             channel: 0,
             level_dbfs: -30.0,
@@ -320,6 +321,10 @@ fn phase(first: u64, trials: u64) {
         (Beside::Independent, 50.0),
         (Beside::Nothing, 0.0),
     ] {
+        let case = format!("{beside:?}{snr_db}");
+        if std::env::var("EVIDENCE_CASE").is_ok_and(|c| c != case) {
+            continue;
+        }
         let mut counts = [[0u32; 4]; 2];
         let mut found_trials = 0;
         for seed in first..first + trials {
@@ -457,13 +462,8 @@ fn reference(first: u64, trials: u64) {
                 origin_s: -lead + shift,
             };
             let found = tones::find(&recording, &Search::default(), &|_, _| ()).unwrap();
-            let tracks: Vec<(usize, Series)> = found
-                .tones
-                .iter()
-                .enumerate()
-                .map(|(i, t)| (i, Series::of(t)))
-                .collect();
-            let Some(beside) = beside(&log, &tracks, None, 120.0) else {
+            let followed: Vec<(usize, &Tone)> = found.tones.iter().enumerate().collect();
+            let Some(beside) = beside(&log, &followed, None, 120.0) else {
                 continue;
             };
             if offset > 0.0 {

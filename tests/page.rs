@@ -294,6 +294,7 @@ fn a_planned_test_is_shown_with_its_cautions() {
             site_name: "built-in",
             top: 5,
             planned,
+            references: &[],
         };
         let mut out = Vec::new();
         write_triage(&subject, &record, &mut out).unwrap();

@@ -7,8 +7,10 @@ use super::progress::Progress;
 use super::site::load_site;
 use super::values::{Channel, Drawing, DrawingKind, channel, drawing, how_many, positive};
 use clap::Args;
+use foldtrace::evidence::reference::{Reference, ReferenceFile};
 use foldtrace::report::page::{self, Failed, Input, PictureError, Record, Subject, command_line};
 use foldtrace::report::{json, suspect_list, table, text::plain};
+use foldtrace::sources::Site;
 use foldtrace::triage;
 use std::ffi::OsStr;
 use std::io::{self, IsTerminal, Write};
@@ -59,6 +61,10 @@ pub struct Arguments {
     /// Draw the spectrum with its tones, as PNG or SVG by the name's ending; for one recording
     #[arg(long, value_name = "FILE.png|svg", value_parser = drawing)]
     pub picture: Option<Drawing>,
+    /// A track of a source's frequency logged elsewhere: a CSV of time and hz or rpm, or of a
+    /// tachometer's pulse times; may be repeated
+    #[arg(long, value_name = "SOURCE=FILE")]
+    pub reference: Vec<String>,
     /// Suspects listed per tone
     #[arg(long, value_name = "N", default_value = "5", value_parser = how_many)]
     pub top: NonZeroUsize,
@@ -102,6 +108,7 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
             Channel::All => None,
             Channel::One(n) => Some(n.get()),
         },
+        references: references(&arguments.reference, &site)?,
     };
     let top = arguments.top.get();
     let width = io::stdout()
@@ -161,6 +168,7 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
             site_name: &site_name,
             top,
             planned: &[],
+            references: &options.references,
         };
         let write_page = |out: &mut dyn Write| page::write_triage(&subject, &record, out);
         if is_stdout(report) {
@@ -192,6 +200,12 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
 fn record(arguments: &Arguments) -> Record {
     let recordings = arguments.recordings.iter().map(|p| ("recording", p));
     let site = arguments.site.iter().map(|p| ("site file", p));
+    let references: Vec<ReferenceFile> = arguments
+        .reference
+        .iter()
+        .filter_map(|text| ReferenceFile::parse(text).ok())
+        .collect();
+    let references = references.iter().map(|r| ("reference", &r.path));
     let called: Vec<_> = std::env::args_os().skip(1).collect();
     let called = called.iter().map(|a| a.as_os_str());
     Record {
@@ -199,7 +213,33 @@ fn record(arguments: &Arguments) -> Record {
         made: SystemTime::now(),
         inputs: recordings
             .chain(site)
+            .chain(references)
             .map(|(role, path)| Input::read(role, path))
             .collect(),
     }
+}
+
+/// Reads the reference tracks; each must tell of a source that is listed.
+fn references(named: &[String], site: &Site) -> Result<Vec<Reference>, Stop> {
+    named
+        .iter()
+        .map(|text| {
+            let file = ReferenceFile::parse(text).map_err(usage)?;
+            let listed = &site.catalogue.sources;
+            if !listed.iter().any(|s| s.name == file.source) {
+                let names: Vec<String> = listed.iter().map(|s| plain(&s.name)).collect();
+                return Err(usage(format!(
+                    "--reference {}: no listed source has that name (there are: {})",
+                    plain(&file.source),
+                    names.join(", ")
+                )));
+            }
+            Reference::read(&file).map_err(|e| {
+                Stop(
+                    SOME_FAILED,
+                    format!("{}: {}", shown(&file.path), plain(&e.to_string())),
+                )
+            })
+        })
+        .collect()
 }

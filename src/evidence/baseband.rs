@@ -88,6 +88,7 @@ fn part(band: &Band, request: &Request) -> Option<Band> {
     (!bins.is_empty()).then(|| Band {
         first_bin: first,
         bins,
+        floor: Vec::new(),
         ..*band
     })
 }

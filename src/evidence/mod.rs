@@ -32,7 +32,7 @@ use crate::fold::Chain;
 use crate::spectrum::samples::{InMemory, Passes};
 use crate::tones::Tone;
 use crate::units::U95;
-use movement::{Following, Series};
+use movement::Following;
 use phase::PhaseLock;
 use reference::{Beside, Reference};
 use sampling::Sampling;
@@ -182,21 +182,21 @@ where
     let stamps = timestamps::test(recording, &targets, up_to_hz)?;
     let sampling = sampling::survey(recording)?;
     let locks = phase::locks(recording, tones)?;
-    let tracks = tracks(tones);
+    let followed = followed(tones);
     let mut ties: Vec<Tie> = locks.iter().filter_map(phase_tie).collect();
     let by_phase: Vec<(usize, usize)> = locks
         .iter()
         .filter(|l| l.ln_ratio > BY_PHASE)
         .filter_map(|l| Some((l.tone?, l.base)))
         .collect();
-    for (i, (a, first)) in tracks.iter().enumerate() {
-        for (b, second) in tracks.iter().skip(i + 1) {
-            if by_phase.contains(&(*a, *b)) || by_phase.contains(&(*b, *a)) {
+    for (i, &(a, strong)) in followed.iter().enumerate() {
+        for &(b, weak) in followed.iter().skip(i + 1) {
+            if by_phase.contains(&(a, b)) || by_phase.contains(&(b, a)) {
                 continue;
             }
             // The weaker follows the stronger, whose track is the better abscissa.
-            if let Some(f) = movement::compare(second, first) {
-                ties.push(movement_tie(*b, Anchor::Tone(*a), &f));
+            if let Some(f) = movement::compare_tones(weak, strong) {
+                ties.push(movement_tie(b, Anchor::Tone(a), &f));
             }
         }
     }
@@ -207,7 +207,7 @@ where
     };
     let references: Vec<Beside> = references
         .iter()
-        .filter_map(|r| reference::beside(r, &tracks, origin_s, duration_s))
+        .filter_map(|r| reference::beside(r, &followed, origin_s, duration_s))
         .collect();
     for beside in &references {
         for (tone, f) in &beside.follows {
@@ -234,17 +234,16 @@ fn target(index: usize, tone: &Tone, rate_hz: f64) -> Target {
     }
 }
 
-/// Tracks worth comparing, the strongest tone first.
-fn tracks(tones: &[Tone]) -> Vec<(usize, Series)> {
-    let mut order: Vec<usize> = (0..tones.len()).collect();
-    let key = |i: usize| tones.get(i).map_or(0.0, |t| t.snr_db);
-    order.sort_by(|a, b| key(*b).total_cmp(&key(*a)));
+/// Tones with a track worth comparing, the strongest first.
+fn followed(tones: &[Tone]) -> Vec<(usize, &Tone)> {
+    let mut order: Vec<(usize, &Tone)> = tones
+        .iter()
+        .enumerate()
+        .filter(|(_, t)| t.track.len() >= movement::LEAST_POINTS)
+        .collect();
+    order.sort_by(|a, b| b.1.snr_db.total_cmp(&a.1.snr_db));
+    order.truncate(MOST_TRACKS);
     order
-        .into_iter()
-        .filter_map(|i| Some((i, Series::of(tones.get(i)?))))
-        .filter(|(_, s)| s.hz.len() >= movement::LEAST_POINTS)
-        .take(MOST_TRACKS)
-        .collect()
 }
 
 fn phase_tie(lock: &PhaseLock) -> Option<Tie> {

@@ -8,6 +8,7 @@
 //! ratio; or each has its own.
 
 use crate::tones::Tone;
+use crate::tones::track::{coarser, pairs};
 use serde::Serialize;
 use std::f64::consts::PI;
 
@@ -30,10 +31,16 @@ pub struct Series {
 }
 
 impl Series {
-    /// A tone's track.
-    pub fn of(tone: &Tone) -> Series {
+    /// A tone's track with windows at least `step_s` long, joined without loss as long
+    /// as enough of them are left.
+    pub fn at_least(tone: &Tone, step_s: f64) -> Series {
+        let (mut points, mut own) = (tone.track.clone(), tone.track_step_s);
+        while own > 0.0 && own < 0.9 * step_s && points.len() >= 4 * LEAST_POINTS {
+            points = coarser(&points, own);
+            own *= 2.0;
+        }
         let mut series = Series::default();
-        for p in &tone.track {
+        for p in &points {
             series.push(p.at_s, p.seen_hz.0, p.sd_hz);
         }
         series
@@ -68,26 +75,69 @@ impl Series {
         }
     }
 
-    /// Mean over a window of half-width `half_s`, weighted by certainty, with its sd;
-    /// between points where none is inside. `None` outside or in a wide gap.
-    fn mean_about(&self, at_s: f64, half_s: f64) -> Option<(f64, f64)> {
-        let from = self.at_s.partition_point(|&t| t < at_s - half_s);
-        let to = self.at_s.partition_point(|&t| t < at_s + half_s);
-        let n = (to - from) as f64;
-        if to > from + 1 {
-            let hz: f64 = self.hz.get(from..to)?.iter().sum();
-            let var: f64 = self.sd_hz.get(from..to)?.iter().map(|s| s * s).sum();
-            return Some((hz / n, var.sqrt() / n));
+    /// Each `many` successive points averaged into one.
+    fn joined(&self, many: usize) -> Series {
+        let mut series = Series::default();
+        let chunks = self.at_s.chunks_exact(many).zip(self.hz.chunks_exact(many));
+        for ((at, hz), sd) in chunks.zip(self.sd_hz.chunks_exact(many)) {
+            let n = many as f64;
+            let mean = |v: &[f64]| v.iter().sum::<f64>() / n;
+            let var: f64 = sd.iter().map(|s| s * s).sum();
+            series.push(mean(at), mean(hz), var.sqrt() / n);
         }
+        series
+    }
+
+    /// The point nearest to a time, within `reach_s`.
+    fn nearest(&self, at_s: f64, reach_s: f64) -> Option<(f64, f64)> {
         let right = self.at_s.partition_point(|&t| t < at_s);
-        let left = right.checked_sub(1)?;
+        let off = |i: usize| self.at_s.get(i).map_or(f64::INFINITY, |t| (t - at_s).abs());
+        let i = match right.checked_sub(1) {
+            Some(left) if off(left) < off(right) => left,
+            _ => right,
+        };
+        (off(i) <= reach_s).then_some((*self.hz.get(i)?, *self.sd_hz.get(i)?))
+    }
+
+    /// Straight between points; `None` outside, or in a gap of more than `widest_s`.
+    fn between(&self, at_s: f64, widest_s: f64) -> Option<f64> {
+        let right = self.at_s.partition_point(|&t| t < at_s).max(1);
+        let left = right - 1;
         let (t0, t1) = (*self.at_s.get(left)?, *self.at_s.get(right)?);
-        if t1 - t0 > 4.0 * half_s + 3.0 * self.step_s() {
-            return None;
-        }
         let u = (at_s - t0) / (t1 - t0).max(1e-300);
-        let mix = |v: &[f64]| Some(v.get(left)? * (1.0 - u) + v.get(right)? * u);
-        Some((mix(&self.hz)?, mix(&self.sd_hz)?))
+        let inside = (-1e-6..=1.0 + 1e-6).contains(&u) && t1 - t0 <= widest_s;
+        inside.then_some(())?;
+        Some(self.hz.get(left)? * (1.0 - u) + self.hz.get(right)? * u)
+    }
+
+    /// Mean over a window under the weight t·(L − t), with its sd: what a fit of a
+    /// steady tone to that window finds of a moving one ([`crate::tones::track`]).
+    fn window_mean(&self, middle_s: f64, length_s: f64, step_s: f64) -> Option<(f64, f64)> {
+        let start = middle_s - 0.5 * length_s;
+        let from = self.at_s.partition_point(|&t| t < start);
+        let to = self.at_s.partition_point(|&t| t < start + length_s);
+        let points = to.saturating_sub(from).max(1) as f64;
+        let parts = (2.0 * points).clamp(16.0, 1024.0) as usize;
+        let (mut sum, mut weights) = (0.0, 0.0);
+        for i in 0..parts {
+            let u = (i as f64 + 0.5) / parts as f64;
+            let w = u * (1.0 - u);
+            // The very ends may lie outside; they weigh next to nothing.
+            if let Some(hz) = self.between(start + u * length_s, 3.0 * step_s) {
+                sum += w * hz;
+                weights += w;
+            }
+        }
+        // Σw is parts/6; under this weight 5 of 6 points count.
+        let known = weights * 6.0 / parts as f64;
+        let var: f64 = self
+            .sd_hz
+            .get(from..to)
+            .filter(|s| !s.is_empty())
+            .map_or(self.sd_hz.first().map_or(0.0, |s| s * s), |s| {
+                s.iter().map(|s| s * s).sum::<f64>() / s.len() as f64
+            });
+        (known > 0.9).then(|| (sum / weights, (var / (points * 5.0 / 6.0).max(1.0)).sqrt()))
     }
 }
 
@@ -106,6 +156,21 @@ pub struct Following {
     pub points: usize,
     /// Points left out as jumps.
     pub jumps: usize,
+}
+
+/// Compares the tracks of two tones of one recording, the finer one brought to the
+/// coarser one's windows without loss.
+pub fn compare_tones(first: &Tone, second: &Tone) -> Option<Following> {
+    let both = pairs(
+        (&first.track, first.track_step_s),
+        (&second.track, second.track_step_s),
+    );
+    let (mut a, mut b) = (Series::default(), Series::default());
+    for (p, q) in &both {
+        a.push(p.at_s, p.seen_hz.0, p.sd_hz);
+        b.push(q.at_s, q.seen_hz.0, q.sd_hz);
+    }
+    compare(&a, &b)
 }
 
 /// Compares two tracks; `None` where they hardly overlap or neither moves.
@@ -183,24 +248,34 @@ struct Common {
 
 impl Common {
     fn new(first: &Series, second: &Series) -> Option<Common> {
-        let step = first.step_s().max(second.step_s());
-        let from = first.at_s.first()?.max(*second.at_s.first()?);
-        let to = first.at_s.last()?.min(*second.at_s.last()?);
-        if !(step.is_finite() && step > 0.0 && to > from) {
+        let thin = |s: &Series| match s.hz.len().div_ceil(MOST_POINTS) {
+            0 | 1 => s.clone(),
+            many => s.joined(many),
+        };
+        let (first, second) = (thin(first), thin(second));
+        let (a, b) = (first.step_s(), second.step_s());
+        if !(a.is_finite() && b.is_finite() && a > 0.0 && b > 0.0) {
             return None;
         }
-        let count = (((to - from) / step).floor() as usize + 1).min(MOST_POINTS);
-        let step = (to - from) / (count.max(2) - 1) as f64;
-        let mut pairs = Vec::with_capacity(count);
-        for i in 0..count {
-            let t = from + i as f64 * step;
-            let (Some(a), Some(b)) = (
-                first.mean_about(t, 0.5 * step),
-                second.mean_about(t, 0.5 * step),
-            ) else {
-                continue;
+        // At the points of the coarser, over its windows.
+        let (coarse, fine) = if a >= b {
+            (&first, &second)
+        } else {
+            (&second, &first)
+        };
+        let (long, short) = (a.max(b), a.min(b));
+        let mut pairs = Vec::with_capacity(coarse.hz.len());
+        for ((&t, &hz), &sd) in coarse.at_s.iter().zip(&coarse.hz).zip(&coarse.sd_hz) {
+            let other = if long < 1.1 * short {
+                fine.nearest(t, 0.02 * long)
+                    .or_else(|| fine.window_mean(t, long, short))
+            } else {
+                fine.window_mean(t, long, short)
             };
-            pairs.push((a, b));
+            if let Some(other) = other {
+                let here = (hz, sd);
+                pairs.push(if a >= b { (here, other) } else { (other, here) });
+            }
         }
         let before = pairs.len();
         let jumps_y = jumps(&pairs.iter().map(|p| p.0).collect::<Vec<_>>());

@@ -40,6 +40,9 @@ const TELLING_RAD: f64 = 0.3;
 /// ln of the prior's width over the strength of a line: any power ratio from 1 to 10⁶
 /// (14 nats) is as likely as another, of which a given one takes about a seventh.
 const OCCAM: f64 = 2.0;
+/// Chance, over all orders tested in a recording, at which a line without a tone is
+/// still listed.
+const HIDDEN_CHANCE: f64 = 1e-5;
 /// What a free path costs per term of its cosine series: some three bits of prior
 /// over posterior width each.
 const PER_TERM: f64 = 3.0;
@@ -91,8 +94,8 @@ struct Pair {
 }
 
 /// Tests every tone, and every order of every base, for phase lock. Only what could
-/// matter is listed: pairs whose frequencies fit, and lines without a tone with
-/// `p_value` below 10⁻⁴ over all orders tested.
+/// matter is listed: pairs whose frequencies fit, and lines without a tone that
+/// come by chance once in 10⁵ recordings.
 ///
 /// # Errors
 /// The recording's own.
@@ -119,7 +122,7 @@ pub fn locks<P: Passes>(recording: &P, tones: &[Tone]) -> Result<Vec<PhaseLock>,
         }
     }
     let tested = pairs.iter().filter(|p| p.tone.is_none()).count().max(1) as f64;
-    locks.retain(|l| l.tone.is_some() || (l.p_value * tested < 1e-4 && l.ln_ratio > 0.0));
+    locks.retain(|l| l.tone.is_some() || (l.p_value * tested < HIDDEN_CHANCE && l.ln_ratio > 0.0));
     Ok(locks)
 }
 
@@ -203,7 +206,10 @@ fn follow(tone: &Tone, request: &Request, signal: &Baseband, cell_hz: f64) -> Op
 
 fn pairs_of(b: usize, base: &Base, tones: &[Tone], rate_hz: f64, cell_hz: f64) -> Vec<Pair> {
     let half = rate_hz / 2.0;
-    let rms_rad = TAU * rms(&base.track.turns);
+    // Of the base's phase, what is more than noise.
+    let noise = base.track.sd_turns;
+    let moved = rms(&base.track.turns).powi(2) - noise * noise;
+    let rms_rad = TAU * moved.max(0.0).sqrt();
     // Error of the base's mean, from the smoothed phase at both ends.
     let base_sd = base.track.sd_turns / base.track.duration_s().max(1e-9);
     let mut pairs = Vec::new();
@@ -225,9 +231,22 @@ fn pairs_of(b: usize, base: &Base, tones: &[Tone], rate_hz: f64, cell_hz: f64) -
         let spread = n * base.track.wander_hz;
         let mut partner = false;
         let mut pair = |tone: Option<usize>, reach_hz: f64, own_spread: f64| {
+            // No stronger tone in the band: its energy is not this line's.
+            let clear_hz = tones
+                .iter()
+                .enumerate()
+                .filter(|(j, t)| {
+                    Some(*j) != tone
+                        && tone
+                            .and_then(|i| tones.get(i))
+                            .is_none_or(|own| t.snr_db > own.snr_db)
+                })
+                .map(|(_, t)| (t.seen_hz.0 - seen_hz).abs() - 3.0 * t.wander_hz)
+                .fold(f64::INFINITY, f64::min);
             let half_width = (3.0 * spread + 3.0 * own_spread + reach_hz)
                 .max(32.0 * cell_hz)
-                .min(0.5 * MOST_CELLS * cell_hz);
+                .min(0.5 * MOST_CELLS * cell_hz)
+                .min(0.7 * clear_hz);
             let low_hz = (seen_hz - half_width).max(2.0 * cell_hz);
             let high_hz = (seen_hz + half_width).min(half - cell_hz);
             if high_hz - low_hz < 32.0 * cell_hz {
@@ -265,8 +284,7 @@ fn pairs_of(b: usize, base: &Base, tones: &[Tone], rate_hz: f64, cell_hz: f64) -
                 pair(Some(i), reach, tone.wander_hz);
             }
         }
-        let on_base = (seen_hz - base.track.mean_hz).abs() < 3.0 * spread + 32.0 * cell_hz;
-        if !partner && !on_base {
+        if !partner {
             pair(None, 1.5 * spread + 2.0 * cell_hz, 0.0);
         }
     }
@@ -370,11 +388,20 @@ fn test(pair: &Pair, base: &Base, signal: &Baseband, tone: Option<&Tone>) -> Opt
                 .enumerate()
                 .map(|(i, z)| z * Complex64::from_polar(1.0, -TAU * path(left.at_s(i))))
                 .collect();
-            // Base noise, n times over, in each term of the path; the tone's own.
-            let of_base = order * order * cells / (2.0 * base.snr) / (TAU * TAU);
+            // Each term of the path: base noise, n times over, and the tone's own. The
+            // base may be noisier than its floor says, at the ends above all, where it
+            // was cut out of its surroundings: up to 32 times is tried, at a price.
+            let per_sample = |snr: f64| cells / (2.0 * snr) / (TAU * TAU);
+            let (own, of_base) = (per_sample(snr), order * order * per_sample(base.snr));
             let squares: f64 = (0..n).map(|i| path(left.at_s(i)).powi(2)).sum();
-            let freedom = 0.5 * rest.terms as f64 * (1.0 + order * order * snr / base.snr).ln();
-            let refined = coherent(&freed) - 0.5 * squares / of_base - freedom;
+            let terms = rest.terms as f64;
+            let prior = (0..=5)
+                .map(|double| {
+                    let all = own + of_base * 2f64.powi(double);
+                    -0.5 * (squares / all + terms * (all / own).ln()) - f64::from(double)
+                })
+                .fold(f64::NEG_INFINITY, f64::max);
+            let refined = coherent(&freed) + prior;
             with = with.max(refined);
         }
     }

@@ -7,6 +7,7 @@
 
 use super::movement::{Following, Series, compare};
 use crate::capture::{Capture, CaptureError, OpenOptions, StampedBlock};
+use crate::tones::Tone;
 use crate::units::U95;
 use serde::Serialize;
 use std::path::{Path, PathBuf};
@@ -254,15 +255,21 @@ pub struct Beside {
     pub follows: Vec<(usize, Following)>,
 }
 
-/// Compares tones' tracks with a reference. `tracks` are `(tone, track)`;
+/// Compares tones' tracks with a reference. `followed` are the tones worth it, by index;
 /// `recording_origin_s` is the time of the recording's first sample on its own scale,
 /// where it has one. `None` where the two hardly overlap.
 pub fn beside(
     reference: &Reference,
-    tracks: &[(usize, Series)],
+    followed: &[(usize, &Tone)],
     recording_origin_s: Option<f64>,
     duration_s: f64,
 ) -> Option<Beside> {
+    let finest_s = reference.series.step_s();
+    let tracks: Vec<(usize, Series)> = followed
+        .iter()
+        .map(|&(i, tone)| (i, Series::at_least(tone, finest_s)))
+        .collect();
+    let tracks = tracks.as_slice();
     let dated = |s: f64| s.abs() > DATED_S;
     let given = match recording_origin_s {
         Some(origin) if dated(origin) == dated(reference.origin_s) => reference.origin_s - origin,

@@ -6,8 +6,9 @@ use super::prior::Normal;
 use super::scene::Scene;
 use super::shares::{Shares, collect};
 use super::solution::Solution;
+use super::timely::Timely;
 use super::unlisted::Origins;
-use super::{Cause, ClockFit, Finding, Inference, SourceFit, Suspect, Verdict, clock};
+use super::{Cause, ClockFit, Finding, Ground, Inference, SourceFit, Suspect, Verdict, clock};
 use crate::sources::{LatentId, Line};
 use crate::units::{Sense, TrueHz, U95};
 
@@ -16,7 +17,7 @@ const LEAST: f64 = 1e-6;
 
 /// Puts the solutions, with their weights, into words.
 pub(super) fn attribute(scene: &Scene, solutions: &[(f64, Solution)]) -> Inference {
-    let shares = collect(scene, solutions);
+    let mut shares = collect(scene, solutions);
     let best = solutions
         .iter()
         .max_by(|a, b| a.0.total_cmp(&b.0))
@@ -49,17 +50,30 @@ pub(super) fn attribute(scene: &Scene, solutions: &[(f64, Solution)]) -> Inferen
                 suspects: Vec::new(),
                 unlisted_direct: share - folded,
                 unlisted_folded: folded,
+                unlisted_at: None,
+                grounds: Vec::new(),
             }
         })
         .collect();
-    let explained = propose(scene, &shares, &origins, epsilon, &mut findings);
+    let timely = Timely::new(scene, &shares);
+    if let Some(timely) = &timely {
+        timely.reweigh(&mut shares);
+    }
+    propose(scene, &shares, &origins, epsilon, &mut findings);
     name_byproducts(scene, solutions, &origins, &mut findings);
+    if let Some(timely) = &timely {
+        for finding in &mut findings {
+            timely.finish(finding);
+        }
+    }
+    let explained = explained(scene, &findings);
     for finding in &mut findings {
         finding
             .suspects
             .sort_by(|a, b| b.probability.total_cmp(&a.probability));
         finding.folded_probability = finding.folded_probability.clamp(0.0, 1.0);
         finding.verdict = Verdict::from_folded_probability(finding.folded_probability);
+        rest(finding, &explained, timely.as_ref());
     }
     Inference {
         findings,
@@ -74,16 +88,35 @@ pub(super) fn attribute(scene: &Scene, solutions: &[(f64, Solution)]) -> Inferen
     }
 }
 
-/// Enters every proposal; returns the number of tones each source explains.
+/// What the most probable explanation rests on.
+fn rest(finding: &mut Finding, explained: &[f64], timely: Option<&Timely>) {
+    let top = finding
+        .suspects
+        .first()
+        .filter(|s| s.probability > finding.unlisted_direct + finding.unlisted_folded);
+    let mut grounds = timely.map_or(Vec::new(), |t| t.grounds(finding, top));
+    let family = match top.map(|s| &s.cause) {
+        Some(Cause::Source { source, .. }) => explained
+            .get(*source)
+            .is_some_and(|e| e - top.map_or(0.0, |s| s.probability) > 0.9),
+        _ => false,
+    };
+    if family {
+        grounds.push(Ground::Family);
+    }
+    grounds.push(Ground::Frequency);
+    finding.grounds = grounds;
+}
+
+/// Enters every proposal.
 fn propose(
     scene: &Scene,
     shares: &Shares,
     origins: &Origins,
     epsilon: Normal,
     findings: &mut [Finding],
-) -> Vec<f64> {
+) {
     let catalogue = &scene.site.catalogue;
-    let mut explained = vec![0.0; catalogue.sources.len()];
     for (proposal, worth) in shares {
         let Some(finding) = findings.get_mut(proposal.tone) else {
             continue;
@@ -103,9 +136,6 @@ fn propose(
             continue;
         };
         finding.folded_probability += folded;
-        if let Some(e) = explained.get_mut(proposal.source) {
-            *e += total;
-        }
         let best = worth
             .zones
             .iter()
@@ -135,6 +165,18 @@ fn propose(
             probability: total,
             coincidence: worth.coincidence / total,
         });
+    }
+}
+
+/// Expected number of tones that each source explains.
+fn explained(scene: &Scene, findings: &[Finding]) -> Vec<f64> {
+    let mut explained = vec![0.0; scene.site.catalogue.sources.len()];
+    for s in findings.iter().flat_map(|f| &f.suspects) {
+        if let Cause::Source { source, .. } = s.cause
+            && let Some(e) = explained.get_mut(source)
+        {
+            *e += s.probability;
+        }
     }
     explained
 }

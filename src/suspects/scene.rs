@@ -1,6 +1,7 @@
 //! What inference works on: tones prepared for it, and where a listed line can
 //! meet them.
 
+use crate::evidence::Evidence;
 use crate::fold::Chain;
 use crate::sources::Site;
 use crate::tones::Tone;
@@ -20,6 +21,8 @@ pub struct Scene<'a> {
     /// Levels are against the converter's full scale; in a log whose full scale
     /// nobody described they are only against one unit.
     pub full_scale_known: bool,
+    /// Evidence from time, where it was gathered.
+    pub evidence: Option<&'a Evidence>,
 }
 
 /// A tone as a measurement: a position with its variance, a strength, a wander.

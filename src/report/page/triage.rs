@@ -7,6 +7,7 @@ use super::pictures::{FoldedPicture, SpectrumPicture, TrackPicture, by_source, g
 use super::record::moment;
 use super::verdicts::{Sentence, Tally, sentences, tally};
 use super::{Frame, Record, signed};
+use crate::evidence::reference::Reference;
 use crate::fold::Chain;
 use crate::report::table::{
     self, EXPLAINS_SOMETHING, WORTH_A_LINE, duration, latent_word, luck, unlisted_words,
@@ -44,6 +45,8 @@ pub struct Subject<'a> {
     pub top: usize,
     /// For each of `results`, the test that would settle most; fewer where there is none.
     pub planned: &'a [Option<Planned>],
+    /// Tracks of sources that were logged elsewhere.
+    pub references: &'a [Reference],
 }
 
 /// Writes the page.
@@ -111,6 +114,7 @@ struct Recording<'a> {
     sources: Vec<SourceView>,
     legend: Vec<(String, String)>,
     clock: Option<String>,
+    from_time: Vec<String>,
     assumptions: Vec<Assumption>,
     planned: Option<&'a Planned>,
     next: Vec<String>,
@@ -145,6 +149,7 @@ pub(super) struct ToneView {
     snr_db: f64,
     channels: String,
     present: Option<String>,
+    rests_on: String,
 }
 
 /// One suspect, or `unlisted`.
@@ -174,6 +179,10 @@ impl ToneView {
             .map(|s| format!("{} ({})", s.label(), s.chance))
             .collect();
         each.join(", ")
+    }
+
+    pub(super) fn wanders(&self) -> bool {
+        self.wander_hz > 0.0
     }
 
     fn glyph(&self) -> &'static str {
@@ -256,7 +265,8 @@ fn recording<'a>(
         sentences: sentences(&tones),
         spectrum: SpectrumPicture::new(result, &tones, &prefix),
         folded,
-        tracks: by_source(&tones, spec.duration_s(), &prefix),
+        tracks: by_source(&tones, result, subject.references, &prefix),
+        from_time: table::from_time(result),
         several_channels: spec.channels.len() > 1,
         left_out: (result.tones.left_out > 0).then(|| {
             let more = count(result.tones.left_out, "weaker tone", "weaker tones");
@@ -391,6 +401,12 @@ fn tone_view(
         snr_db: tone.snr_db,
         channels: plain(&result.channel_names(tone)),
         present,
+        rests_on: finding
+            .grounds
+            .iter()
+            .map(|&g| table::ground_word(g))
+            .collect::<Vec<_>>()
+            .join(", "),
     }
 }
 

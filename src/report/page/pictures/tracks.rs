@@ -2,9 +2,11 @@
 //! same share of their true frequency, whichever zone they are seen in.
 
 use super::{Px, Tick, ticks};
+use crate::evidence::reference::Reference;
 use crate::report::page::triage::ToneView;
-use crate::report::text::hertz;
+use crate::report::text::{hertz, plain};
 use crate::tones::TrackPoint;
+use crate::triage::Triage;
 use crate::units::U95;
 use askama::Template;
 use std::collections::BTreeMap;
@@ -33,7 +35,9 @@ pub(in crate::report::page) struct TrackPicture {
     title: String,
     description: String,
     unit: &'static str,
-    reference: String,
+    together: String,
+    /// The reference logged elsewhere.
+    logged: String,
     tones: Vec<Line>,
     times: Vec<Tick>,
     shares: Vec<Tick>,
@@ -48,6 +52,10 @@ struct Line {
     dots: Vec<(Px, Px)>,
     faint: bool,
 }
+
+/// Points of a track that get whiskers at most, and of a reference at most.
+const CLEAR: usize = 48;
+const MOST_LOGGED: usize = 600;
 
 /// A moment of a track: seconds, share of the true frequency, its standard deviation.
 type Share = (f64, f64, f64);
@@ -109,7 +117,8 @@ fn together(tracks: &[Followed]) -> Vec<(f64, f64)> {
 /// tones of no source last.
 pub(in crate::report::page) fn by_source(
     tones: &[ToneView],
-    duration_s: f64,
+    result: &Triage,
+    references: &[Reference],
     prefix: &str,
 ) -> Vec<TrackPicture> {
     // Without a source last; by letter, then name.
@@ -117,7 +126,7 @@ pub(in crate::report::page) fn by_source(
     let mut groups: BTreeMap<Key, Vec<Followed>> = BTreeMap::new();
     for tone in tones {
         let track = shares(tone);
-        if track.len() >= 2 {
+        if tone.wanders() && track.len() >= 2 {
             let (letter, name) = match &tone.source {
                 Some((letter, name)) => (letter.clone(), name.clone()),
                 None => (String::new(), "no source in particular".into()),
@@ -131,9 +140,32 @@ pub(in crate::report::page) fn by_source(
         .enumerate()
         .map(|(i, ((alone, _, name), tracks))| {
             let id = format!("{prefix}track-{}", i + 1);
-            TrackPicture::new(id, name, !alone, &tracks, duration_s)
+            let logged = logged(&name, result, references);
+            TrackPicture::new(id, name, !alone, &tracks, &logged, result.spec.duration_s())
         })
         .collect()
+}
+
+/// The reference of a source on the recording's time, as shares of its mean.
+fn logged(name: &str, result: &Triage, references: &[Reference]) -> Vec<(f64, f64)> {
+    let named = |source: &str| plain(source) == name;
+    let beside = result.evidence.references.iter();
+    let Some(beside) = beside.clone().find(|b| named(&b.source)) else {
+        return Vec::new();
+    };
+    let Some(reference) = references.iter().find(|r| named(&r.source)) else {
+        return Vec::new();
+    };
+    let series = &reference.series;
+    let all = series.at_s.iter().zip(&series.hz).map(|(at_s, hz)| {
+        let share = (hz - beside.mean_hz) / beside.mean_hz;
+        (at_s + beside.offset_s, share)
+    });
+    let during: Vec<(f64, f64)> = all
+        .filter(|p| (0.0..=result.spec.duration_s()).contains(&p.0) && p.1.is_finite())
+        .collect();
+    let step = during.len().div_ceil(MOST_LOGGED).max(1);
+    during.into_iter().step_by(step).collect()
 }
 
 impl TrackPicture {
@@ -147,6 +179,7 @@ impl TrackPicture {
         name: String,
         has_source: bool,
         tracks: &[Followed],
+        logged: &[(f64, f64)],
         duration_s: f64,
     ) -> Self {
         let points = || tracks.iter().flat_map(|(_, t)| t);
@@ -154,6 +187,7 @@ impl TrackPicture {
         let reach = points()
             .filter(|p| p.2 <= UNCERTAIN * best)
             .map(|p| p.1.abs() + U95 * p.2)
+            .chain(logged.iter().map(|p| p.1.abs()))
             .fold(0.0, f64::max)
             .max(1e-12);
         let (unit, scale) = if reach > 2e-3 {
@@ -170,7 +204,8 @@ impl TrackPicture {
             .iter()
             .map(|(tone, track)| {
                 let sure: f64 = track.iter().map(|p| p.2).fold(f64::INFINITY, f64::min);
-                let faint = tracks.len() > 4 && sure > 2.0 * best;
+                // Hundreds of points speak for themselves.
+                let faint = (tracks.len() > 4 && sure > 2.0 * best) || track.len() > CLEAR;
                 let whisker = |&(t, share, sd): &Share| {
                     let (x, reach) = (Px(x(t)), U95 * sd);
                     format!("M{x} {}V{}", Px(y(share - reach)), Px(y(share + reach)))
@@ -213,11 +248,12 @@ impl TrackPicture {
             id,
             title: name,
             unit,
-            reference: if count > 1 && has_source {
+            together: if count > 1 && has_source {
                 super::path(together(tracks).into_iter().map(|(t, s)| (x(t), y(s))))
             } else {
                 String::new()
             },
+            logged: super::path(logged.iter().map(|&(t, s)| (x(t), y(s)))),
             tones: lines,
             times: ticks(0.0, duration_s, 6)
                 .into_iter()
