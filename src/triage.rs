@@ -10,8 +10,8 @@ use std::path::Path;
 /// What the analyst asks for.
 #[derive(Debug, Clone, Default)]
 pub struct Options {
-    /// Overrides the file's sample rate, Hz.
-    pub rate_hz: Option<f64>,
+    /// How to read the recording.
+    pub open: OpenOptions,
     /// 1-based channel; `None` for all.
     pub channel: Option<usize>,
 }
@@ -64,12 +64,7 @@ pub fn run(
     options: &Options,
     progress: &(dyn Fn(u64, u64) + Sync),
 ) -> Result<Triage, TriageError> {
-    let capture = Capture::open(
-        path,
-        &OpenOptions {
-            rate_hz: options.rate_hz,
-        },
-    )?;
+    let capture = Capture::open(path, &options.open)?;
     let spec = capture.spec().clone();
     let channels = match options.channel {
         None => Vec::new(),

@@ -41,6 +41,7 @@ pub(super) struct Clock {
     frame: u64,
     started: bool,
     fit: Fit,
+    course: Course,
     pub counts: Counts,
 }
 
@@ -52,6 +53,8 @@ pub(super) struct Counts {
     pub repeated: u64,
     pub back: u64,
     pub unstamped: u64,
+    /// Jumps ahead too long for a gap.
+    pub set_ahead: u64,
     /// Sum of squared deviations from the followed line, in periods, and rows.
     jitter: f64,
     rows: u64,
@@ -68,6 +71,7 @@ impl Clock {
             frame: 0,
             started: false,
             fit: Fit::default(),
+            course: Course::default(),
             counts: Counts::default(),
         }
     }
@@ -90,7 +94,9 @@ impl Clock {
             self.started = true;
             self.line = stamp + self.plan.start;
             self.last = stamp;
-            self.fit.add(0.0, stamp);
+            if !self.plan.shared {
+                self.fit.add(0.0, stamp);
+            }
             return Advance::Frame { missing: 0 };
         }
         let period = self.period();
@@ -100,7 +106,8 @@ impl Clock {
         let (latest, earliest) = (sway.max(LATE), -sway.max(EARLY));
         let late = |time: f64| (time - self.line) / period - 1.0;
         let step = (stamp - self.last) / period;
-        let repeats = stamp == self.last && !self.plan.shared;
+        let stands = stamp == self.last;
+        let repeats = stands && !self.plan.shared;
         self.last = stamp;
 
         if let Some(offset) = self.previous_offset.take() {
@@ -123,8 +130,15 @@ impl Clock {
         }
         let mut missing = 0;
         if deviation > latest && step > GAP_STEP * scatter.max(1.0) {
-            // Rounded down by `as` only beyond 2^64, which is refused anyway.
+            // Beyond 2^64 `as` stops there.
             missing = deviation.round().max(1.0) as u64;
+            if missing > self.plan.longest_gap {
+                self.counts.set_ahead += 1;
+                self.step(1, 0.0);
+                self.previous_offset = Some(self.offset);
+                self.offset = self.line - stamp;
+                return Advance::Frame { missing: 0 };
+            }
             self.counts.gaps += 1;
             self.counts.missing = self.counts.missing.saturating_add(missing);
         }
@@ -132,7 +146,12 @@ impl Clock {
         self.counts.jitter += rest * rest;
         self.counts.rows += 1;
         self.step(missing.saturating_add(1), rest);
+        // Of rows that share a stamp, the first is the one it is nearest to.
+        if stands {
+            return Advance::Frame { missing };
+        }
         self.fit.add(self.frame as f64, stamp + self.offset);
+        self.course.add(self.frame as f64, stamp + self.offset);
         Advance::Frame { missing }
     }
 
@@ -156,9 +175,10 @@ impl Clock {
         }
     }
 
-    /// Samples per second by least squares over all stamps; rounded to a whole
-    /// number where the stamps do not tell the two apart (95 %).
-    pub(super) fn rate_hz(&self) -> f64 {
+    /// Samples per second by least squares over all stamps, and the half-width
+    /// of its 95 % interval; rounded to a whole number where the stamps do not
+    /// tell the two apart.
+    pub(super) fn rate_hz(&self) -> (f64, f64) {
         let slope = self
             .fit
             .slope()
@@ -170,9 +190,9 @@ impl Clock {
         // Stamps are often rounded alike, so that the fit is better than its
         // scatter; a part in 10^9 is below any clock.
         if whole > 0.0 && (rate - whole).abs() <= u95.max(1e-9 * rate) {
-            whole
+            (whole, u95)
         } else {
-            rate
+            (rate, u95)
         }
     }
 
@@ -194,6 +214,78 @@ impl Clock {
                 100.0 * rms
             ));
         }
+        if let Some((drift_ppm, u95_ppm)) = self.course.drift() {
+            notes.push(format!(
+                "the rate drifts: the second half of the time stamps is {:.0} ± {u95_ppm:.0} ppm {} than the first",
+                drift_ppm.abs(),
+                if drift_ppm > 0.0 { "slower" } else { "faster" },
+            ));
+        }
+    }
+}
+
+/// The way of the stamps in few points, each the mean of equally many, however
+/// many come: where there are too many, pairs are joined.
+#[derive(Debug, Clone, Default)]
+struct Course {
+    points: Vec<(f64, f64)>,
+    /// Stamps per point.
+    stride: u32,
+    /// Sum of those that are no point yet.
+    sum: (f64, f64),
+    summed: u32,
+}
+
+impl Course {
+    const MOST: usize = 512;
+
+    fn add(&mut self, frame: f64, time: f64) {
+        self.stride = self.stride.max(1);
+        self.sum = (self.sum.0 + frame, self.sum.1 + time);
+        self.summed += 1;
+        if self.summed < self.stride {
+            return;
+        }
+        let n = f64::from(self.summed);
+        self.points.push((self.sum.0 / n, self.sum.1 / n));
+        (self.sum, self.summed) = ((0.0, 0.0), 0);
+        if self.points.len() >= Course::MOST {
+            self.points = self
+                .points
+                .chunks_exact(2)
+                .filter_map(|pair| match pair {
+                    [a, b] => Some(((a.0 + b.0) / 2.0, (a.1 + b.1) / 2.0)),
+                    _ => None,
+                })
+                .collect();
+            self.stride = self.stride.saturating_mul(2);
+        }
+    }
+
+    /// By how many ppm the period of the second half exceeds that of the first,
+    /// with the half-width of its 95 % interval, where it clearly does.
+    fn drift(&self) -> Option<(f64, f64)> {
+        /// Points in each half that make an error bar worth something.
+        const FEWEST: usize = 32;
+        let half = self.points.len() / 2;
+        if half < FEWEST {
+            return None;
+        }
+        let (first, second) = self.points.split_at(half);
+        let line = |points: &[(f64, f64)]| {
+            let mut fit = Fit::default();
+            points
+                .iter()
+                .for_each(|&(frame, time)| fit.add(frame, time));
+            fit
+        };
+        let (first, second) = (line(first), line(second));
+        let (a, b) = (first.slope()?, second.slope()?);
+        let ppm = 1e6 * (b - a) / a;
+        let u95 = 1e6 * crate::units::U95 * first.slope_error().hypot(second.slope_error()) / a;
+        // Rounded stamps wander to and fro in step with the rounding, which is
+        // no white error: half as much again, and at least a part per million.
+        (ppm.abs() > (3.0 * u95).max(1.0)).then_some((ppm, u95))
     }
 }
 

@@ -16,6 +16,8 @@ pub(super) struct ClockPlan {
     pub shared: bool,
     /// Time of the first frame on the line less its stamp.
     pub start: f64,
+    /// Most frames that a gap may hold; a longer one is a clock that was set.
+    pub longest_gap: u64,
 }
 
 /// Collects stamps until they suffice for a [`ClockPlan`].
@@ -24,14 +26,18 @@ pub(super) struct ClockProbe {
     /// Each stamp, and how many rows in succession have it.
     runs: Vec<(f64, u64)>,
     rows: u64,
+    /// Rows that are wholly like the one before.
+    copies: u64,
 }
 
 impl ClockProbe {
-    /// Takes a stamp; `true` when no more are needed.
-    pub(super) fn take(&mut self, stamp: f64) -> bool {
+    /// Takes a stamp; `true` when no more are needed. `copy`: the row is wholly
+    /// like the one before it.
+    pub(super) fn take(&mut self, stamp: f64, copy: bool) -> bool {
         const ROWS: u64 = 4096;
         const RUNS: usize = 8;
         self.rows += 1;
+        self.copies += u64::from(copy);
         match self.runs.last_mut() {
             Some((last, count)) if *last == stamp => *count += 1,
             _ => self.runs.push((stamp, 1)),
@@ -47,7 +53,9 @@ impl ClockProbe {
         let steps = sorted(differences(&stamps, 1).filter(|&step| step > 0.0));
         let step = quantile(&steps, 0.5)?;
         let repeats = self.rows - self.runs.len() as u64;
-        let plan = if repeats as f64 >= SHARED * self.rows as f64 {
+        let rounded = repeats as f64 >= SHARED * self.rows as f64
+            || self.copies == 0 && repeats_evenly(&self.runs);
+        let plan = if rounded {
             self.rounded(step)
         } else {
             bursts(&steps, step).or_else(|| single(&stamps, step))
@@ -77,6 +85,7 @@ impl ClockProbe {
             scatter: step,
             shared: true,
             start: 0.0,
+            longest_gap: u64::MAX,
         })
     }
 
@@ -103,6 +112,23 @@ impl ClockProbe {
     }
 }
 
+/// Whether now and then two rows share a stamp, at even distances: stamps
+/// rounded to a step that is a little longer than the period.
+fn repeats_evenly(runs: &[(f64, u64)]) -> bool {
+    const FEWEST: usize = 4;
+    let places: Vec<usize> = (0..runs.len())
+        .filter(|&place| runs.get(place).is_some_and(|run| run.1 == 2))
+        .collect();
+    let apart = places.windows(2).map(|pair| match pair {
+        [a, b] => b - a,
+        _ => 0,
+    });
+    let (least, most) = (apart.clone().min(), apart.max());
+    places.len() >= FEWEST
+        && runs.iter().all(|run| run.1 <= 2)
+        && matches!((least, most), (Some(least), Some(most)) if most - least <= 1)
+}
+
 /// Rows stamped on arrival: many short steps, and most of the time in long
 /// ones, which are too many and too long for lost samples.
 fn bursts(steps: &[f64], step: f64) -> Option<ClockPlan> {
@@ -123,6 +149,7 @@ fn bursts(steps: &[f64], step: f64) -> Option<ClockPlan> {
         scatter: quantile(&long, 0.95)?,
         shared: true,
         start: 0.0,
+        longest_gap: u64::MAX,
     })
 }
 
@@ -138,6 +165,7 @@ fn single(stamps: &[f64], step: f64) -> Option<ClockPlan> {
         scatter,
         shared: false,
         start: 0.0,
+        longest_gap: u64::MAX,
     };
     // The ends of a window scatter against each other by 1.4 times as much
     // (5 % to 95 %) if evenly distributed.
@@ -244,7 +272,7 @@ mod tests {
     fn plan(stamps: impl Iterator<Item = f64>) -> Option<ClockPlan> {
         let mut probe = ClockProbe::default();
         for stamp in stamps {
-            if probe.take(stamp) {
+            if probe.take(stamp, false) {
                 break;
             }
         }

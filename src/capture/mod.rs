@@ -16,15 +16,23 @@ mod clock_plan;
 mod companded;
 mod csv;
 mod csv_delimiter;
+mod csv_headings;
 mod csv_lines;
 mod csv_rate;
 mod csv_rows;
 mod csv_scan;
 mod csv_sniff;
+mod csv_split;
 mod csv_time;
 mod dates;
 mod error;
+mod flac;
+mod flac_head;
+#[cfg(fuzzing)]
+pub mod fuzzing;
 mod line_limit;
+mod numbers;
+mod options;
 mod probe;
 mod riff;
 mod stamps;
@@ -36,6 +44,9 @@ use std::fs::File;
 use std::path::{Path, PathBuf};
 
 pub use error::CaptureError;
+pub use options::{
+    DecimalSign, LayoutOptions, OpenOptions, TextEncoding, TimeChoice, TimeNotation,
+};
 
 use probe::Kind;
 
@@ -43,13 +54,6 @@ use probe::Kind;
 const LEAST_FRAMES: u64 = 16;
 /// Most channels, so that no header makes us allocate without bound.
 const MOST_CHANNELS: u64 = 4096;
-
-/// What the user says about a recording.
-#[derive(Debug, Clone, Copy, Default, PartialEq)]
-pub struct OpenOptions {
-    /// Sample rate in hertz; goes before what the file says. Need not be whole.
-    pub rate_hz: Option<f64>,
-}
 
 /// One channel of a recording.
 #[derive(Debug, Clone, PartialEq)]
@@ -70,6 +74,8 @@ pub struct Spec {
     pub path: PathBuf,
     /// Samples per second and channel, > 0.
     pub rate_hz: f64,
+    /// Half-width of its 95 % interval where time stamps tell the rate.
+    pub rate_hz_u95: Option<f64>,
     /// In file order, never empty.
     pub channels: Vec<Channel>,
     /// Samples per channel.
@@ -86,6 +92,12 @@ pub struct Spec {
     /// For A-law and mu-law it is the step around zero, where it is smallest.
     /// `None` for float WAV and CSV, whose steps are not known.
     pub step: Option<f64>,
+    /// What the file was taken for: layout, time column, where the rate is from;
+    /// one clause each.
+    pub read_as: Vec<String>,
+    /// Runs of samples missing between time stamps; their frames are NaN.
+    /// 0 for formats whose frames have no stamps.
+    pub gaps: u64,
     /// What was assumed or mended while reading, one clause each.
     pub notes: Vec<String>,
 }
@@ -132,6 +144,7 @@ pub struct Capture {
 #[derive(Debug, Clone)]
 enum Recipe {
     Wav(wav::WavRecipe),
+    Flac(flac::FlacRecipe),
     Csv(csv::CsvRecipe),
 }
 
@@ -154,6 +167,10 @@ impl Capture {
                 let (spec, recipe) = wav::open(path.to_owned(), file, length, options)?;
                 (spec, Recipe::Wav(recipe))
             }
+            Kind::Flac => {
+                let (spec, recipe) = flac::open(path.to_owned(), file, length, options)?;
+                (spec, Recipe::Flac(recipe))
+            }
             Kind::Text => {
                 let (spec, recipe) = csv::open(path.to_owned(), options)?;
                 (spec, Recipe::Csv(recipe))
@@ -173,13 +190,9 @@ impl Capture {
         &self.spec
     }
 
-    /// Runs of samples missing between time stamps; their frames are NaN.
-    /// 0 for WAV, whose frames have no stamps.
+    /// Runs of samples missing between time stamps, as in [`Spec::gaps`].
     pub fn gaps(&self) -> u64 {
-        match &self.recipe {
-            Recipe::Wav(_) => 0,
-            Recipe::Csv(csv) => csv.gaps(),
-        }
+        self.spec.gaps
     }
 
     /// Starts a pass over all samples, `frames_per_block` frames at a time (at
@@ -191,6 +204,7 @@ impl Capture {
         let frames_per_block = frames_per_block.max(1);
         Ok(Blocks(match &self.recipe {
             Recipe::Wav(wav) => Pass::Wav(wav.blocks(frames_per_block)?),
+            Recipe::Flac(flac) => Pass::Flac(Box::new(flac.blocks(frames_per_block)?)),
             Recipe::Csv(csv) => Pass::Csv(Box::new(csv.blocks(frames_per_block)?)),
         }))
     }
@@ -203,6 +217,7 @@ pub struct Blocks(Pass);
 #[derive(Debug)]
 enum Pass {
     Wav(wav::WavBlocks),
+    Flac(Box<flac::FlacBlocks>),
     Csv(Box<csv::CsvBlocks>),
 }
 
@@ -215,6 +230,7 @@ impl Blocks {
     pub fn next_into(&mut self, block: &mut Block) -> Result<bool, CaptureError> {
         match &mut self.0 {
             Pass::Wav(wav) => wav.next_into(block),
+            Pass::Flac(flac) => flac.next_into(block),
             Pass::Csv(csv) => csv.next_into(block),
         }
     }

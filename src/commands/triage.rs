@@ -4,8 +4,9 @@ use super::output::{
     SOME_FAILED, Stop, complain, is_stdout, shown, spare, to_file, to_stdout, usage,
 };
 use super::progress::Progress;
+use super::reading::Reading;
 use super::site::load_site;
-use super::values::{Channel, channel, how_many, positive};
+use super::values::{Channel, channel, how_many};
 use clap::Args;
 use foldtrace::report::{json, suspect_list, table, text::plain};
 use foldtrace::triage;
@@ -29,16 +30,13 @@ Exit: 0 done, 1 some input could not be read, 2 wrong usage or site file.";
 /// Options of `triage`.
 #[derive(Debug, Args)]
 pub struct Arguments {
-    /// Recordings: WAV, or CSV logs
+    /// Recordings: WAV, FLAC, or CSV logs
     #[arg(value_name = "REC", required = true)]
     pub recordings: Vec<PathBuf>,
     /// What is known of the place: a site file (TOML) or a list (CSV: name,hz,tolerance,orders);
     /// without it, a built-in list of common sources
     #[arg(long, value_name = "FILE")]
     pub site: Option<PathBuf>,
-    /// Sample rate, where the file does not tell it or tells it wrong
-    #[arg(long, value_name = "HZ", allow_negative_numbers = true, value_parser = positive)]
-    pub rate: Option<f64>,
     /// One channel, counted from 1, or all of them merged
     #[arg(long, value_name = "N|all", default_value = "all", value_parser = channel)]
     pub channel: Channel,
@@ -51,6 +49,8 @@ pub struct Arguments {
     /// Suspects listed per tone
     #[arg(long, value_name = "N", default_value = "5", value_parser = how_many)]
     pub top: NonZeroUsize,
+    #[command(flatten)]
+    pub reading: Reading,
 }
 
 /// Runs the command.
@@ -65,7 +65,7 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
     spare(inputs.map(PathBuf::as_path), &exports)?;
     let (site, site_name) = load_site(arguments.site.as_deref())?;
     let options = triage::Options {
-        rate_hz: arguments.rate,
+        open: arguments.reading.open_options(),
         channel: match arguments.channel {
             Channel::All => None,
             Channel::One(n) => Some(n.get()),

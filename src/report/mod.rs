@@ -3,6 +3,7 @@
 
 pub mod json;
 pub mod ladder;
+pub mod reading;
 pub mod sources_table;
 pub mod suspect_list;
 pub mod table;

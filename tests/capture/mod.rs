@@ -44,6 +44,7 @@ fn open_at(path: &Path, rate_hz: f64) -> Result<Capture, CaptureError> {
         path,
         &OpenOptions {
             rate_hz: Some(rate_hz),
+            ..OpenOptions::default()
         },
     )
 }
