@@ -65,7 +65,7 @@ pub fn run(
     progress: &(dyn Fn(u64, u64) + Sync),
 ) -> Result<Triage, TriageError> {
     let capture = Capture::open(path, &options.open)?;
-    let spec = capture.spec().clone();
+    let mut spec = capture.spec().clone();
     let channels = match options.channel {
         None => Vec::new(),
         Some(asked) if (1..=spec.channels.len()).contains(&asked) => vec![asked - 1],
@@ -91,7 +91,8 @@ pub fn run(
         channels,
         ..Search::default()
     };
-    let tones = tones::find(&capture, &search, progress)?;
+    let (tones, notes) = tones::mended::find_mended(&capture, &search, progress)?;
+    spec.notes.extend(notes);
     let inference = suspects::infer(&Scene {
         tones: &tones.tones,
         site,

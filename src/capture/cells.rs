@@ -132,7 +132,16 @@ pub(super) fn unit_suffix(bytes: &[u8], style: DecimalStyle) -> Option<&str> {
 }
 
 /// Without blanks, also the non-breaking ones of Latin-1 and UTF-8.
+#[inline]
 pub(super) fn trim(bytes: &[u8]) -> &[u8] {
+    // Nearly always there are none.
+    match bytes {
+        [first, .., last] if first.is_ascii_graphic() && last.is_ascii_graphic() => bytes,
+        _ => trim_blanks(bytes),
+    }
+}
+
+fn trim_blanks(bytes: &[u8]) -> &[u8] {
     let mut bytes = bytes.trim_ascii();
     loop {
         bytes = match bytes {

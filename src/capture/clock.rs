@@ -15,6 +15,8 @@ const GAP_STEP: f64 = 1.5;
 const EARLY: f64 = 0.75;
 /// Share of a row's deviation that the followed time line takes over.
 const GAIN: f64 = 0.1;
+/// Rows from one use of the fit to the next.
+const REFITTED: u64 = 64;
 /// Rows after which the fitted period is better than the planned one.
 const FITTED: f64 = 256.0;
 
@@ -40,6 +42,9 @@ pub(super) struct Clock {
     previous_offset: Option<f64>,
     frame: u64,
     started: bool,
+    /// The best so far, and the line's gain at it.
+    period: f64,
+    gain: f64,
     fit: Fit,
     course: Course,
     pub counts: Counts,
@@ -62,7 +67,7 @@ pub(super) struct Counts {
 
 impl Clock {
     pub(super) fn new(plan: ClockPlan) -> Clock {
-        Clock {
+        let mut clock = Clock {
             plan,
             line: 0.0,
             last: 0.0,
@@ -70,10 +75,14 @@ impl Clock {
             previous_offset: None,
             frame: 0,
             started: false,
+            period: plan.period,
+            gain: GAIN,
             fit: Fit::default(),
             course: Course::default(),
             counts: Counts::default(),
-        }
+        };
+        clock.set_period();
+        clock
     }
 
     /// Takes the stamp of the next row, in seconds; `None` if it has none.
@@ -99,13 +108,13 @@ impl Clock {
             }
             return Advance::Frame { missing: 0 };
         }
-        let period = self.period();
+        let rate = 1.0 / self.period;
         // In periods: half of the scatter each way, and what the line sways.
-        let scatter = self.plan.scatter / period;
+        let scatter = self.plan.scatter * rate;
         let sway = 0.55 * scatter + 0.25;
         let (latest, earliest) = (sway.max(LATE), -sway.max(EARLY));
-        let late = |time: f64| (time - self.line) / period - 1.0;
-        let step = (stamp - self.last) / period;
+        let late = |time: f64| (time - self.line) * rate - 1.0;
+        let step = (stamp - self.last) * rate;
         let stands = stamp == self.last;
         let repeats = stands && !self.plan.shared;
         self.last = stamp;
@@ -152,27 +161,29 @@ impl Clock {
         }
         self.fit.add(self.frame as f64, stamp + self.offset);
         self.course.add(self.frame as f64, stamp + self.offset);
+        if self.counts.rows.is_multiple_of(REFITTED) {
+            self.set_period();
+        }
         Advance::Frame { missing }
     }
 
     /// Moves the line on by `frames` and towards a row that is `late` periods
     /// behind it.
     fn step(&mut self, frames: u64, late: f64) {
-        let period = self.period();
-        let gain = GAIN / (1.0 + self.plan.scatter / period);
-        self.line += period * (frames as f64 + gain * late);
+        self.line += self.period * (frames as f64 + self.gain * late);
         self.frame = self.frame.saturating_add(frames);
     }
 
-    /// Best period so far. The fit is held near the plan, lest a bad stamp
-    /// among the first bends it.
-    fn period(&self) -> f64 {
+    /// Takes over the best period so far. The fit is held near the plan, lest a
+    /// bad stamp among the first bends it.
+    fn set_period(&mut self) {
         const NEAR: f64 = 0.05;
         let plan = self.plan.period;
-        match self.fit.slope() {
+        self.period = match self.fit.slope() {
             Some(slope) if self.fit.n >= FITTED && (slope / plan - 1.0).abs() < NEAR => slope,
             _ => plan,
-        }
+        };
+        self.gain = GAIN / (1.0 + self.plan.scatter / self.period);
     }
 
     /// Samples per second by least squares over all stamps, and the half-width
@@ -206,7 +217,7 @@ impl Clock {
         if shared {
             notes.push(format!(
                 "time stamps come in steps of {scatter:.3} s, about {:.1} samples each: taken as evenly spaced",
-                scatter / self.period()
+                scatter / self.period
             ));
         } else if rms > NOTABLE {
             notes.push(format!(
@@ -305,8 +316,9 @@ impl Fit {
     fn add(&mut self, x: f64, y: f64) {
         self.n += 1.0;
         let (dx, dy) = (x - self.mean_x, y - self.mean_y);
-        self.mean_x += dx / self.n;
-        self.mean_y += dy / self.n;
+        let share = 1.0 / self.n;
+        self.mean_x += dx * share;
+        self.mean_y += dy * share;
         let rest_x = x - self.mean_x;
         let rest_y = y - self.mean_y;
         self.xx += dx * rest_x;

@@ -20,6 +20,19 @@ pub(super) struct ClockPlan {
     pub longest_gap: u64,
 }
 
+impl ClockPlan {
+    /// Exact stamps of a known period.
+    pub(super) fn even(period: f64) -> ClockPlan {
+        ClockPlan {
+            period,
+            scatter: 0.0,
+            shared: false,
+            start: 0.0,
+            longest_gap: u64::MAX,
+        }
+    }
+}
+
 /// Collects stamps until they suffice for a [`ClockPlan`].
 #[derive(Debug, Default)]
 pub(super) struct ClockProbe {
@@ -28,9 +41,19 @@ pub(super) struct ClockProbe {
     rows: u64,
     /// Rows that are wholly like the one before.
     copies: u64,
+    /// Least step that the stamps' decimals can tell, in seconds; 0 if unknown.
+    resolution: f64,
 }
 
 impl ClockProbe {
+    /// For stamps written to so many seconds.
+    pub(super) fn new(resolution: f64) -> ClockProbe {
+        ClockProbe {
+            resolution,
+            ..ClockProbe::default()
+        }
+    }
+
     /// Takes a stamp; `true` when no more are needed. `copy`: the row is wholly
     /// like the one before it.
     pub(super) fn take(&mut self, stamp: f64, copy: bool) -> bool {
@@ -57,6 +80,8 @@ impl ClockProbe {
             || self.copies == 0 && repeats_evenly(&self.runs);
         let plan = if rounded {
             self.rounded(step)
+        } else if lacks_teeth(&steps, step, self.resolution) {
+            Some(ClockPlan::even(comb_period(&stamps, step)))
         } else {
             bursts(&steps, step).or_else(|| single(&stamps, step))
         };
@@ -110,6 +135,30 @@ impl ClockProbe {
         }
         if row > 0.0 { sum / row } else { 0.0 }
     }
+}
+
+/// Whether nearly all steps are one period and the others whole multiples of it,
+/// finer than the stamps' rounding could make them: samples are lost, however
+/// regularly.
+fn lacks_teeth(steps: &[f64], step: f64, resolution: f64) -> bool {
+    const OFF: f64 = 0.02;
+    const SINGLE: f64 = 0.6;
+    if resolution <= 0.0 || step < 1.9 * resolution || steps.is_empty() {
+        return false;
+    }
+    let whole = |&&one: &&f64| {
+        let times = one / step;
+        times > 0.5 && (times - times.round()).abs() < OFF * times
+    };
+    let on_comb = steps.iter().filter(whole).count() as f64;
+    let single = steps
+        .iter()
+        .filter(|&&one| (one / step - 1.0).abs() < OFF)
+        .count() as f64;
+    let n = steps.len() as f64;
+    // More missing than there are would be rows that come in bursts.
+    let total: f64 = steps.iter().sum();
+    on_comb >= 0.99 * n && single >= SINGLE * n && single < n && total < 2.0 * n * step
 }
 
 /// Whether now and then two rows share a stamp, at even distances: stamps

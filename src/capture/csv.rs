@@ -86,7 +86,7 @@ fn read_through(
     let mut notes = table.notes.clone();
     scan.note(&table, &mut notes);
     let (rate_hz, rate_hz_u95) = rate(&scan, &table, options, &mut notes)?;
-    let columns = scan.columns.iter();
+    let columns = scan.columns.iter().filter(|column| !column.is_worded());
     let mut channels: Vec<Place> = columns
         .filter_map(|column| {
             Some(Place {
@@ -182,8 +182,11 @@ fn read_head(path: PathBuf, options: &OpenOptions) -> Result<(Source, Table), Ca
 /// The sample period from as many first rows as it takes; the number of rows
 /// where time never moves.
 fn plan_clock(source: &Source, table: &Arc<Table>) -> Result<Result<ClockPlan, u64>, CaptureError> {
+    if let Some(StampFormat::Samples { rate_hz }) = table.time.map(|time| time.format) {
+        return Ok(Ok(ClockPlan::even(1.0 / rate_hz)));
+    }
     let mut rows = Rows::open(source, table, None)?;
-    let mut probe = ClockProbe::default();
+    let mut probe = ClockProbe::new(resolution(source, table)?);
     let (mut before, mut row) = (Vec::new(), Vec::new());
     while rows.next_row()?.is_some() {
         row.clear();
@@ -201,6 +204,25 @@ fn plan_clock(source: &Source, table: &Arc<Table>) -> Result<Result<ClockPlan, u
         }
     }
     Ok(probe.plan().ok_or(rows.counts.rows))
+}
+
+/// Least step between time stamps that their decimals can tell, in seconds.
+fn resolution(source: &Source, table: &Arc<Table>) -> Result<f64, CaptureError> {
+    const ROWS: usize = 100;
+    let Some(time) = table.time else {
+        return Ok(0.0);
+    };
+    let mut rows = Rows::open(source, table, None)?;
+    let mut least = f64::INFINITY;
+    for _ in 0..ROWS {
+        if rows.next_row()?.is_none() {
+            break;
+        }
+        if let Some(step) = time.format.resolution(rows.bytes(time.column)) {
+            least = least.min(step);
+        }
+    }
+    Ok(if least.is_finite() { least } else { 0.0 })
 }
 
 /// The rate that counts and the half-width of its 95 % interval where it was

@@ -76,6 +76,19 @@ impl ColumnScan {
         (2 * count < self.numbers).then_some((one, count))
     }
 
+    /// Too many words for slips.
+    pub(super) fn is_worded(&self) -> bool {
+        self.words as f64 > MOST_BAD * (self.numbers + self.words) as f64
+    }
+
+    fn share_of_words(&self) -> String {
+        format!(
+            "words in {} of {} cells of this column",
+            self.words,
+            self.numbers + self.words
+        )
+    }
+
     /// Any number, to measure the others from.
     pub(super) fn origin(&self) -> Option<f64> {
         let stand_in = || {
@@ -136,23 +149,17 @@ impl Scan {
         if rows == 0 {
             return Err(CaptureError::NoSamples);
         }
-        for column in &self.columns {
-            let cells = column.numbers + column.words;
-            let Some((line, text)) = &column.word else {
-                continue;
-            };
-            if column.words as f64 > MOST_BAD * cells as f64 {
+        // A column of remarks costs nothing as long as there is one of numbers.
+        let all_worded = self.columns.iter().all(ColumnScan::is_worded);
+        if let Some(column) = self.columns.iter().find(|_| all_worded) {
+            if let Some((line, text)) = &column.word {
                 return Err(CaptureError::NotANumber {
                     line: *line,
                     column: column.column + 1,
                     text: text.clone(),
-                    share: format!("words in {} of {cells} cells of this column", column.words),
+                    share: column.share_of_words(),
                 });
             }
-        }
-        let worded = |column: &ColumnScan| column.origin().is_none() && column.words > 0;
-        if self.columns.iter().all(worded) {
-            return Err(CaptureError::NoNumbers);
         }
         let (Some(clock), Some(time)) = (&self.clock, table.time) else {
             return Ok(());

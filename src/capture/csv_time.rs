@@ -83,7 +83,7 @@ pub(super) fn find_time(
         }
         None => {}
     }
-    search(table, rows);
+    search(table, rows, told.is_none());
     if table.time.is_none() {
         // A count of samples tells lost ones, once the rate is known.
         let count = (0..table.columns.len()).find(|&column| counts_rows(table, rows, column));
@@ -214,7 +214,7 @@ fn leave_out_counts(table: &mut Table, rows: &[&ByteRecord]) {
 }
 
 /// The column whose heading says time and whose cells run like one.
-fn search(table: &mut Table, rows: &[&ByteRecord]) {
+fn search(table: &mut Table, rows: &[&ByteRecord], guessing: bool) {
     let mut best: Option<(usize, usize, StampFormat)> = None;
     let mut times = Vec::new();
     for (column, heading) in table.columns.iter().enumerate() {
@@ -236,9 +236,8 @@ fn search(table: &mut Table, rows: &[&ByteRecord]) {
     }
     if let Some((_, column, format)) = best {
         set_time(table, rows, column, Some(format));
-        table
-            .notes
-            .extend(format.assumption(&cells_of(table, rows, column)));
+        let assumed = format.assumption(&cells_of(table, rows, column));
+        table.notes.extend(assumed.filter(|_| guessing));
     }
     if let Some((seconds, fraction)) = find_fraction(table, rows) {
         set_time(table, rows, seconds.0, Some(seconds.1));

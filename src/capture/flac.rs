@@ -2,14 +2,13 @@
 //! costs its own samples and no others. Decoding is claxon's.
 
 use std::fs::File;
-use std::io::{Cursor, Seek, SeekFrom};
+use std::io::{Cursor, Read, Seek, SeekFrom};
 use std::path::PathBuf;
 
 use claxon::frame::FrameReader;
 
 use super::error::CaptureError;
 use super::flac_head::{self, Head};
-use super::riff::read_up_to;
 use super::wording::{count, nine_digits};
 use super::{Block, Channel, OpenOptions, Spec};
 
@@ -145,16 +144,12 @@ impl Decoder {
         if self.ended || held >= LARGEST_FRAME {
             return Ok(());
         }
-        self.buffer.copy_within(self.at.., 0);
-        let wanted = LARGEST_FRAME + PIECE;
-        self.buffer.resize(wanted, 0);
+        self.buffer.drain(..self.at);
         self.at = 0;
-        let got = read_up_to(
-            &mut self.file,
-            self.buffer.get_mut(held..).unwrap_or_default(),
-        )?;
-        self.buffer.truncate(held + got);
-        self.ended = held + got < wanted;
+        let room = (LARGEST_FRAME + PIECE - held) as u64;
+        let file = &mut self.file;
+        let got = file.take(room).read_to_end(&mut self.buffer)?;
+        self.ended = (got as u64) < room;
         Ok(())
     }
 

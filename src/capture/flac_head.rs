@@ -65,11 +65,14 @@ pub(super) fn read<F: Read + Seek>(file: &mut F, length: u64) -> Result<Head, Ca
             head = Some(read_stream_info(file)?);
         }
         let next = at + 4 + size;
+        if kind & 0x7F == 0 && next > length {
+            return Err(bad("the file ends in its header"));
+        }
         if kind & 0x80 != 0 || next >= length {
             let mut head = head.ok_or_else(|| bad("no stream information"))?;
             // Where a block claims more than the file holds, the search for a
             // frame starts behind its header.
-            head.frames_start = if next < length { next } else { at + 4 };
+            head.frames_start = if next <= length { next } else { at + 4 };
             return Ok(head);
         }
         at = next;

@@ -176,7 +176,7 @@ impl Capture {
                 (spec, Recipe::Csv(recipe))
             }
         };
-        if spec.frames < LEAST_FRAMES {
+        if spec.frames < LEAST_FRAMES && !options.any_length {
             return Err(CaptureError::TooShort {
                 frames: spec.frames,
                 least: LEAST_FRAMES,

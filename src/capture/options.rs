@@ -8,6 +8,8 @@ use super::stamps::StampFormat;
 pub struct OpenOptions {
     /// Sample rate in hertz; goes before what the file says. Need not be whole.
     pub rate_hz: Option<f64>,
+    /// Takes recordings that are too short for a spectrum, too.
+    pub any_length: bool,
     /// How a text is laid out; what is `None` is found out.
     pub layout: LayoutOptions,
 }

@@ -16,7 +16,7 @@ const UNKNOWN_SIZE: u32 = u32::MAX;
 /// Chunks looked at before the file is given up as garbage.
 const MOST_CHUNKS: usize = 10_000;
 /// Bytes searched for a chunk behind damage.
-const SEARCHED: usize = 1 << 20;
+const SEARCHED: u64 = 1 << 20;
 
 /// Which end of a number comes first.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -222,12 +222,10 @@ fn search<F: Read + Seek>(
     if wanted.is_empty() {
         return Ok(None);
     }
-    let mut stretch = vec![0; SEARCHED];
+    let mut stretch = Vec::new();
     file.seek(SeekFrom::Start(from))?;
-    let got = read_up_to(file, &mut stretch)?;
+    file.take(SEARCHED).read_to_end(&mut stretch)?;
     let found = stretch
-        .get(..got)
-        .unwrap_or_default()
         .windows(4)
         .position(|id| wanted.iter().any(|wanted| id == *wanted));
     Ok(found.map(|step| from + step as u64))
@@ -374,10 +372,16 @@ impl Order {
                 .u16(bytes, 18)
                 .filter(|&n| n > 0 && n <= bits)
                 .unwrap_or(bits);
-            tag = self.u16(bytes, 24).ok_or_else(cut)?;
-            // The rest of KSDATAFORMAT_SUBTYPE_*: a coding number made a GUID.
-            const GUID_TAIL: &[u8] = b"\x00\x00\x00\x00\x10\x00\x80\x00\x00\xAA\x00\x38\x9B\x71";
-            if bytes.get(26..40).ok_or_else(cut)? != GUID_TAIL {
+            // KSDATAFORMAT_SUBTYPE_*: a coding number of 32 bits made a GUID,
+            // whose first three numbers are in the order of the file.
+            let (at, tail): (usize, &[u8]) = if self.big {
+                (26, b"\x00\x00\x00\x10\x80\x00\x00\xAA\x00\x38\x9B\x71")
+            } else {
+                (24, b"\x00\x00\x10\x00\x80\x00\x00\xAA\x00\x38\x9B\x71")
+            };
+            tag = self.u16(bytes, at).ok_or_else(cut)?;
+            let padding = self.u16(bytes, 50 - at).ok_or_else(cut)?;
+            if padding != 0 || bytes.get(28..40).ok_or_else(cut)? != tail {
                 let coding = "an unknown extensible sample coding".into();
                 return Err(CaptureError::UnsupportedCoding { coding });
             }
@@ -420,7 +424,7 @@ impl Order {
         };
         let supported = match coding {
             Coding::Integer => (1..=64).contains(&bits) && (1..=8).contains(&width),
-            Coding::Float => bits == 8 * width && (width == 4 || width == 8),
+            Coding::Float => matches!((bits, width), (32, 4) | (64, 8)),
             Coding::ALaw | Coding::MuLaw => bits == 8 && width == 1,
         };
         if !supported {

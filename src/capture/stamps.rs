@@ -100,6 +100,32 @@ impl StampFormat {
         }
     }
 
+    /// Worth of the last digit of a cell that is not 0, in seconds; `None` where that is not
+    /// plain.
+    pub(super) fn resolution(self, cell: &[u8]) -> Option<f64> {
+        let cell = trim(cell);
+        let mark = cell.iter().rposition(|&c| c == b'.' || c == b',');
+        let digits = mark.map_or(0, |mark| {
+            let rest = cell.get(mark + 1..).unwrap_or_default();
+            let digits = rest.iter().take_while(|c| c.is_ascii_digit()).count();
+            // Zeros that end every cell tell nothing.
+            let rest = rest.get(..digits).unwrap_or_default();
+            rest.iter()
+                .rposition(|&c| c != b'0')
+                .map_or(0, |last| last + 1)
+        });
+        let last = 10f64.powi(-i32::try_from(digits).ok()?);
+        match self {
+            StampFormat::Decimal { exponent } => {
+                read_digits(cell, DecimalStyle::Either)?;
+                Some(last / 10f64.powi(i32::try_from(exponent).ok()?))
+            }
+            StampFormat::Multiple { seconds } => Some(last * f64::from(seconds)),
+            StampFormat::ClockTime | StampFormat::DateTime { .. } if digits > 0 => Some(last),
+            _ => None,
+        }
+    }
+
     /// Reads one cell; `None` where it holds no such time.
     pub(super) fn read(self, bytes: &[u8]) -> Option<Stamp> {
         let bytes = trim(bytes);
@@ -137,16 +163,20 @@ fn read_multiple(bytes: &[u8], seconds: u32) -> Option<Stamp> {
 
 /// The digits times `factor * 10^-exponent` seconds, whole seconds split off
 /// exactly.
+#[inline]
 fn exact(digits: Digits, factor: u32, exponent: u32) -> Option<Stamp> {
-    let unit = 10u128.checked_pow(digits.decimals + exponent)?;
-    let all = u128::from(digits.mantissa) * u128::from(factor);
-    let (whole, rest) = match (u64::try_from(all), u64::try_from(unit)) {
-        // Far quicker than 128 bits.
-        (Ok(all), Ok(unit)) => (all / unit, (all % unit) as f64 / unit as f64),
-        _ => (
-            u64::try_from(all / unit).ok()?,
-            (all % unit) as f64 / unit as f64,
-        ),
+    let places = digits.decimals + exponent;
+    let quick = POWERS
+        .get(places as usize)
+        .zip(digits.mantissa.checked_mul(factor.into()));
+    let (whole, rest) = match quick {
+        Some((&unit, all)) => (all / unit, (all % unit) as f64 / unit as f64),
+        None => {
+            let unit = 10u128.checked_pow(places)?;
+            let all = u128::from(digits.mantissa) * u128::from(factor);
+            let whole = u64::try_from(all / unit).ok()?;
+            (whole, (all % unit) as f64 / unit as f64)
+        }
     };
     let whole = i64::try_from(whole).ok().filter(|&whole| whole < 1 << 62)?;
     Some(if digits.negative {
@@ -161,6 +191,17 @@ fn exact(digits: Digits, factor: u32, exponent: u32) -> Option<Stamp> {
         }
     })
 }
+
+/// Powers of ten in 64 bits.
+const POWERS: [u64; 20] = {
+    let mut powers = [1; 20];
+    let mut place = 1;
+    while place < 20 {
+        powers[place] = 10 * powers[place - 1];
+        place += 1;
+    }
+    powers
+};
 
 /// Digits only, up to what an `i64` holds.
 pub(super) fn whole_number(digits: &[u8]) -> Option<i64> {

@@ -3,7 +3,7 @@
 use super::output::{SOME_FAILED, Stop, complain, shown, to_stdout};
 use super::reading::Reading;
 use clap::Args;
-use foldtrace::capture::Capture;
+use foldtrace::capture::{Capture, OpenOptions};
 use foldtrace::report::{reading, text::plain};
 use std::path::PathBuf;
 use std::process::ExitCode;
@@ -31,7 +31,10 @@ pub struct Arguments {
 
 /// Runs the command.
 pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
-    let options = arguments.reading.open_options();
+    let options = OpenOptions {
+        any_length: true,
+        ..arguments.reading.open_options()
+    };
     let mut failed = false;
     for path in &arguments.recordings {
         match Capture::open(path, &options) {

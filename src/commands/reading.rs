@@ -114,6 +114,7 @@ impl Reading {
     pub fn open_options(&self) -> OpenOptions {
         OpenOptions {
             rate_hz: self.rate,
+            any_length: false,
             layout: LayoutOptions {
                 encoding: self.encoding.map(|encoding| match encoding {
                     Encoding::Utf8 => TextEncoding::Utf8,

@@ -2,6 +2,7 @@
 
 pub mod detect;
 pub mod kernel;
+pub mod mended;
 pub mod merge;
 pub mod peaks;
 pub mod refine;

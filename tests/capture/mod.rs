@@ -3,6 +3,10 @@
 
 mod csv;
 mod dialects;
+mod finds;
+mod flac;
+mod layout;
+mod odd;
 mod riff;
 mod stamps;
 mod wav;
