@@ -5,10 +5,14 @@
 //!
 //! WAV: `riff` walks the chunks without trusting a size, `wav` decodes blocks,
 //! with `companded` for A-law and mu-law.
-//! CSV: `text` and `line_limit` give bounded lines in UTF-8, `csv_lines`,
-//! `csv_delimiter`, `csv_sniff` and `csv_time` find the layout from the first
-//! lines, `stamps` and `dates` read times, `clock_plan` and `clock` turn them into frame numbers and
-//! a rate, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks.
+//! FLAC: `flac_head` reads what stands before frames, `flac` goes from one to
+//! the next.
+//! CSV: `text` and `line_limit` give bounded lines in UTF-8; `csv_lines`,
+//! `csv_delimiter`, `csv_sniff`, `csv_headings`, `csv_rate` and `csv_time` find
+//! the layout from the first lines, as far as `options` leave it open. `cells`
+//! and `numbers` read cells, `stamps` and `dates` times; `clock_plan` and `clock`
+//! turn these into frame numbers and a rate. `csv_split` splits plain rows in
+//! place, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks.
 
 mod cells;
 mod clock;

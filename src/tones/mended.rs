@@ -49,8 +49,8 @@ fn drop_rounding<P: Passes>(
 ) -> Result<(), P::Error> {
     /// No recording is so quiet that a tone this strong is in doubt.
     const SURE_DBFS: f64 = -90.0;
-    /// Half of the last bit, as a share of the largest sample.
-    const HALF_BIT: f64 = 1.0 / 16_777_216.0;
+    /// The last bit, as a share of the largest sample.
+    const LAST_BIT: f64 = 1.0 / 8_388_608.0;
     if found.tones.iter().all(|tone| tone.level_dbfs > SURE_DBFS) {
         return Ok(());
     }
@@ -69,7 +69,7 @@ fn drop_rounding<P: Passes>(
         tone.channels.iter().any(|channel| {
             let amplitude = search.full_scale * 10f64.powf(channel.level_dbfs / 20.0);
             let peak = peaks.get(channel.channel).copied().unwrap_or(0.0);
-            amplitude > HALF_BIT * f64::from(peak)
+            amplitude > LAST_BIT * f64::from(peak)
         })
     };
     found.tones.retain(holds);
