@@ -45,6 +45,8 @@ pub(super) struct Clock {
     /// The best so far, and the line's gain at it.
     period: f64,
     gain: f64,
+    /// Stamp of the last row, where it fits those before it.
+    accepted: Option<f64>,
     fit: Fit,
     course: Course,
     pub counts: Counts,
@@ -77,6 +79,7 @@ impl Clock {
             started: false,
             period: plan.period,
             gain: GAIN,
+            accepted: None,
             fit: Fit::default(),
             course: Course::default(),
             counts: Counts::default(),
@@ -87,6 +90,7 @@ impl Clock {
 
     /// Takes the stamp of the next row, in seconds; `None` if it has none.
     pub(super) fn take(&mut self, stamp: Option<f64>) -> Advance {
+        self.accepted = None;
         let Some(stamp) = stamp else {
             self.counts.unstamped += 1;
             if self.started {
@@ -106,6 +110,7 @@ impl Clock {
             if !self.plan.shared {
                 self.fit.add(0.0, stamp);
             }
+            self.accepted = Some(stamp);
             return Advance::Frame { missing: 0 };
         }
         let rate = 1.0 / self.period;
@@ -155,6 +160,8 @@ impl Clock {
         self.counts.jitter += rest * rest;
         self.counts.rows += 1;
         self.step(missing.saturating_add(1), rest);
+        // After the clock was set back, times no longer tell how far apart rows are.
+        self.accepted = (self.offset == 0.0).then_some(stamp);
         // Of rows that share a stamp, the first is the one it is nearest to.
         if stands {
             return Advance::Frame { missing };
@@ -165,6 +172,11 @@ impl Clock {
             self.set_period();
         }
         Advance::Frame { missing }
+    }
+
+    /// Stamp of the row taken last; `None` if it had none, or one out of line.
+    pub(super) fn accepted(&self) -> Option<f64> {
+        self.accepted
     }
 
     /// Moves the line on by `frames` and towards a row that is `late` periods

@@ -15,6 +15,7 @@ use super::error::CaptureError;
 use super::line_limit::LONGEST_LINE;
 use super::numbers::DecimalStyle;
 use super::options::TextEncoding;
+use super::stamped::StampedBlocks;
 use super::stamps::StampFormat;
 use super::text::Encoding;
 use super::wording::nine_digits;
@@ -32,12 +33,23 @@ pub(super) struct CsvRecipe {
 
 /// Where a channel's samples are.
 #[derive(Debug, Clone, Copy)]
-struct Place {
+pub(super) struct Place {
     column: usize,
     /// Subtracted from each.
     offset: f64,
     /// The number that stands for none.
     stand_in: Option<f64>,
+}
+
+impl Place {
+    /// The channel's sample in the current row.
+    #[inline]
+    pub(super) fn sample(&self, rows: &Rows) -> f32 {
+        match rows.value(self.column) {
+            Cell::Number(number) if Some(number) != self.stand_in => narrow(number - self.offset),
+            _ => f32::NAN,
+        }
+    }
 }
 
 /// Finds out the table's layout from its first lines, then reads it through
@@ -325,6 +337,22 @@ impl CsvRecipe {
             row_waits: false,
         })
     }
+
+    /// Rows with their own times; `None` without a time column.
+    pub(super) fn stamped(
+        &self,
+        rows_per_block: usize,
+    ) -> Result<Option<StampedBlocks>, CaptureError> {
+        if self.plan.is_none() {
+            return Ok(None);
+        }
+        Ok(Some(StampedBlocks {
+            rows: Rows::open(&self.source, &self.table, self.plan)?,
+            channels: self.channels.clone(),
+            rows_per_block,
+            next_frame: 0,
+        }))
+    }
 }
 
 /// One pass over the samples.
@@ -363,12 +391,7 @@ impl CsvBlocks {
                 continue;
             }
             for (samples, place) in block.samples.iter_mut().zip(&self.channels) {
-                samples.push(match self.rows.value(place.column) {
-                    Cell::Number(number) if Some(number) != place.stand_in => {
-                        narrow(number - place.offset)
-                    }
-                    _ => f32::NAN,
-                });
+                samples.push(place.sample(&self.rows));
             }
             self.row_waits = false;
             filled += 1;

@@ -290,6 +290,11 @@ impl Rows {
         usual > 0.0 && usual < LONGEST && off.abs() <= slack && past_hour <= usual + slack
     }
 
+    /// The first stamp, in seconds.
+    pub(super) fn origin_s(&self) -> Option<f64> {
+        self.origin.map(|stamp| stamp.seconds as f64 + stamp.rest)
+    }
+
     /// Whether a row without a stamp is no row of samples: nothing in it, or a
     /// heading again. Without a time column, an empty row is a missing sample
     /// if it has as many cells as the others.

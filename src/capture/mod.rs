@@ -12,7 +12,8 @@
 //! the layout from the first lines, as far as `options` leave it open. `cells`
 //! and `numbers` read cells, `stamps` and `dates` times; `clock_plan` and `clock`
 //! turn these into frame numbers and a rate. `csv_split` splits plain rows in
-//! place, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks.
+//! place, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks,
+//! `stamped` rows with their own times.
 
 mod cells;
 mod clock;
@@ -39,6 +40,7 @@ mod numbers;
 mod options;
 mod probe;
 mod riff;
+mod stamped;
 mod stamps;
 mod text;
 mod wav;
@@ -51,6 +53,7 @@ pub use error::CaptureError;
 pub use options::{
     DecimalSign, LayoutOptions, OpenOptions, TextEncoding, TimeChoice, TimeNotation,
 };
+pub use stamped::{StampedBlock, StampedBlocks};
 
 use probe::Kind;
 
@@ -211,6 +214,21 @@ impl Capture {
             Recipe::Flac(flac) => Pass::Flac(Box::new(flac.blocks(frames_per_block)?)),
             Recipe::Csv(csv) => Pass::Csv(Box::new(csv.blocks(frames_per_block)?)),
         }))
+    }
+
+    /// Starts a pass over the rows that have a time of their own, with that time;
+    /// `None` where the file has none (WAV, FLAC, or a CSV without a time column).
+    ///
+    /// # Errors
+    /// Where the file can no longer be opened.
+    pub fn stamped_blocks(
+        &self,
+        rows_per_block: usize,
+    ) -> Result<Option<StampedBlocks>, CaptureError> {
+        match &self.recipe {
+            Recipe::Wav(_) | Recipe::Flac(_) => Ok(None),
+            Recipe::Csv(csv) => csv.stamped(rows_per_block.max(1)),
+        }
     }
 }
 

@@ -8,7 +8,9 @@ use super::reading::Reading;
 use super::site::load_site;
 use super::values::{Channel, channel, how_many};
 use clap::Args;
+use foldtrace::evidence::reference::{Reference, ReferenceFile};
 use foldtrace::report::{json, suspect_list, table, text::plain};
+use foldtrace::sources::Site;
 use foldtrace::triage;
 use std::io::{self, IsTerminal, Write};
 use std::num::NonZeroUsize;
@@ -46,6 +48,10 @@ pub struct Arguments {
     /// Write everything as JSON; `-` writes it to stdout in place of the table
     #[arg(long, value_name = "FILE")]
     pub json: Option<PathBuf>,
+    /// A track of a source's frequency logged elsewhere: a CSV of time and hz or rpm, or of a
+    /// tachometer's pulse times; may be repeated
+    #[arg(long, value_name = "SOURCE=FILE")]
+    pub reference: Vec<String>,
     /// Suspects listed per tone
     #[arg(long, value_name = "N", default_value = "5", value_parser = how_many)]
     pub top: NonZeroUsize,
@@ -70,6 +76,7 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
             Channel::All => None,
             Channel::One(n) => Some(n.get()),
         },
+        references: references(&arguments.reference, &site)?,
     };
     let top = arguments.top.get();
     let width = io::stdout()
@@ -117,4 +124,29 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
         None => {}
     }
     Ok(ExitCode::from(if failed { SOME_FAILED } else { 0 }))
+}
+
+/// Reads the reference tracks; each must tell of a source that is listed.
+fn references(named: &[String], site: &Site) -> Result<Vec<Reference>, Stop> {
+    named
+        .iter()
+        .map(|text| {
+            let file = ReferenceFile::parse(text).map_err(usage)?;
+            let listed = &site.catalogue.sources;
+            if !listed.iter().any(|s| s.name == file.source) {
+                let names: Vec<String> = listed.iter().map(|s| plain(&s.name)).collect();
+                return Err(usage(format!(
+                    "--reference {}: no listed source has that name (there are: {})",
+                    plain(&file.source),
+                    names.join(", ")
+                )));
+            }
+            Reference::read(&file).map_err(|e| {
+                Stop(
+                    SOME_FAILED,
+                    format!("{}: {}", shown(&file.path), plain(&e.to_string())),
+                )
+            })
+        })
+        .collect()
 }

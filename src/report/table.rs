@@ -3,9 +3,10 @@
 
 use super::reading;
 use super::text::{count, percent, plain, with_u95};
-use crate::suspects::{Finding, Suspect, Verdict};
+use crate::suspects::{Finding, Ground, Suspect, Verdict};
 use crate::tones::Tone;
 use crate::triage::Triage;
+use crate::units::U95;
 use anstyle::{AnsiColor, Style};
 use std::io::{self, Write};
 
@@ -55,6 +56,7 @@ pub fn write(
             )?;
         }
         sources(result, out)?;
+        from_time(result, out)?;
     }
     writeln!(out)?;
     let summary = format!("In short: {}.", result.summary());
@@ -101,6 +103,8 @@ struct Row {
     chance: String,
     /// True frequency, zone, luck; or words where nothing listed is meant.
     rest: Result<[String; 3], String>,
+    /// What decided; once per tone.
+    rests_on: &'static str,
 }
 
 fn rows(tones: &[(&Tone, &Finding)], top: usize) -> Vec<Row> {
@@ -140,6 +144,10 @@ fn rows(tones: &[(&Tone, &Finding)], top: usize) -> Vec<Row> {
                     ]),
                     None => Err(unlisted_words(finding)),
                 },
+                rests_on: match finding.grounds.first() {
+                    Some(ground) if first => ground_word(*ground),
+                    _ => "",
+                },
             });
         }
     }
@@ -150,7 +158,17 @@ fn interval((value, u95): &(String, String)) -> String {
     format!("{value} ± {u95}")
 }
 
-const HEADINGS: [&str; 9] = [
+fn ground_word(ground: Ground) -> &'static str {
+    match ground {
+        Ground::Frequency => "frequency",
+        Ground::Family => "family",
+        Ground::Movement => "movement",
+        Ground::Phase => "phase",
+        Ground::Timestamps => "timestamps",
+    }
+}
+
+const HEADINGS: [&str; 10] = [
     "tone",
     "seen Hz ± 95 %",
     "dBFS",
@@ -160,6 +178,7 @@ const HEADINGS: [&str; 9] = [
     "true Hz ± 95 %",
     "zone",
     "by luck",
+    "rests on",
 ];
 
 fn tones(
@@ -188,7 +207,8 @@ fn tones(
     let zone = widest(7, &of_rest(1));
     let by_luck = HEADINGS[8].len();
     let left = n + seen + dbfs + word + 6;
-    let right = name + chance + truth + zone + by_luck + 8;
+    let rests_on = widest(9, &|r| Some(r.rests_on.len()));
+    let right = name + chance + truth + zone + by_luck + rests_on + 10;
     // Beside each other if they fit, else suspects below their tone.
     let below = width.is_some_and(|w| left + 2 + right > w);
     let indent = if below { n + 2 } else { left + 2 };
@@ -204,8 +224,8 @@ fn tones(
     };
     writeln!(
         out,
-        "{gap}{:<name$}  {:>chance$}  {:>truth$}  {:<zone$}  {:>by_luck$}{QUIET:#}",
-        HEADINGS[4], HEADINGS[5], HEADINGS[6], HEADINGS[7], HEADINGS[8],
+        "{gap}{:<name$}  {:>chance$}  {:>truth$}  {:<zone$}  {:>by_luck$}  {}{QUIET:#}",
+        HEADINGS[4], HEADINGS[5], HEADINGS[6], HEADINGS[7], HEADINGS[8], HEADINGS[9],
     )?;
     for row in &rows {
         match (&row.tone, row.verdict) {
@@ -223,10 +243,19 @@ fn tones(
             Ok([true_hz, in_zone, lucky]) => {
                 writeln!(
                     out,
-                    "{true_hz:>truth$}  {in_zone:<zone$}  {lucky:>by_luck$}"
+                    "{}",
+                    format!(
+                        "{true_hz:>truth$}  {in_zone:<zone$}  {lucky:>by_luck$}  {}",
+                        row.rests_on
+                    )
+                    .trim_end()
                 )?;
             }
-            Err(words) => writeln!(out, "{QUIET}{words}{QUIET:#}")?,
+            Err(words) => {
+                let room = truth + zone + by_luck + 4;
+                let line = format!("{words:<room$}  {}", row.rests_on);
+                writeln!(out, "{QUIET}{}{QUIET:#}", line.trim_end())?;
+            }
         }
     }
     for line in wrapped(
@@ -279,6 +308,13 @@ fn luck(coincidence: f64) -> String {
 }
 
 fn unlisted_words(finding: &Finding) -> String {
+    if let Some(at) = &finding.unlisted_at {
+        let (hz, u95) = with_u95(at.true_hz.0, at.true_hz_u95);
+        return format!(
+            "at {hz} ± {u95} Hz by its time stamps ({})",
+            percent(at.probability)
+        );
+    }
     let all = finding.unlisted_direct + finding.unlisted_folded;
     let share = if all > 0.0 {
         finding.unlisted_folded / all
@@ -292,6 +328,30 @@ fn unlisted_words(finding: &Finding) -> String {
     } else {
         format!("and then {} folded", percent(share))
     }
+}
+
+/// What time stamps and references say, where there are any.
+fn from_time(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
+    let evidence = &result.evidence;
+    let stamps = evidence.stamps.as_ref().filter(|s| s.jitter_s > 0.0);
+    let rate = evidence.sampling.as_ref();
+    for said in stamps
+        .map(|s| &s.statement)
+        .into_iter()
+        .chain(rate.and_then(|s| s.statement.as_ref()))
+    {
+        writeln!(out, "time stamps: {}", plain(said))?;
+    }
+    for r in &evidence.references {
+        let (hz, sd) = with_u95(r.mean_hz, (U95 * r.mean_sd_hz).max(1e-9 * r.mean_hz));
+        write!(out, "reference {}: {hz} ± {sd} Hz", plain(&r.source))?;
+        if r.offset_u95_s > 0.0 {
+            let (offset, u95) = with_u95(r.offset_s, r.offset_u95_s);
+            write!(out, ", its clock is {offset} ± {u95} s off the recording's")?;
+        }
+        writeln!(out)?;
+    }
+    Ok(())
 }
 
 fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
