@@ -12,8 +12,8 @@ use std::path::Path;
 /// What the analyst asks for.
 #[derive(Debug, Clone, Default)]
 pub struct Options {
-    /// Overrides the file's sample rate, Hz.
-    pub rate_hz: Option<f64>,
+    /// How to read the recording.
+    pub open: OpenOptions,
     /// 1-based channel; `None` for all.
     pub channel: Option<usize>,
     /// Tracks of sources, logged elsewhere.
@@ -70,13 +70,8 @@ pub fn run(
     options: &Options,
     progress: &(dyn Fn(u64, u64) + Sync),
 ) -> Result<Triage, TriageError> {
-    let capture = Capture::open(
-        path,
-        &OpenOptions {
-            rate_hz: options.rate_hz,
-        },
-    )?;
-    let spec = capture.spec().clone();
+    let capture = Capture::open(path, &options.open)?;
+    let mut spec = capture.spec().clone();
     let channels = match options.channel {
         None => Vec::new(),
         Some(asked) if (1..=spec.channels.len()).contains(&asked) => vec![asked - 1],
@@ -102,7 +97,8 @@ pub fn run(
         channels,
         ..Search::default()
     };
-    let tones = tones::find(&capture, &search, progress)?;
+    let (tones, notes) = tones::mended::find_mended(&capture, &search, progress)?;
+    spec.notes.extend(notes);
     let up_to_hz = site.recorder.front_end.bandwidth_hz;
     let evidence = evidence::gather(
         &capture,

@@ -2,9 +2,11 @@
 
 mod fold;
 mod help_files;
+mod inspect;
 mod output;
 mod progress;
 mod rates;
+mod reading;
 mod site;
 mod sources;
 mod triage;
@@ -34,6 +36,9 @@ pub enum Command {
     /// Find the tones of recordings and rank what could have made each
     #[command(after_help = triage::HELP)]
     Triage(triage::Arguments),
+    /// What recordings were taken for: layout, rate, gaps, what was assumed
+    #[command(after_help = inspect::HELP)]
+    Inspect(inspect::Arguments),
     /// Where analog frequencies land once sampled
     #[command(after_help = fold::HELP)]
     Fold(fold::Arguments),
@@ -66,6 +71,7 @@ pub fn one_line(error: &clap::Error) -> String {
 pub fn run(command: Command) -> ExitCode {
     let done = match command {
         Command::Triage(arguments) => triage::run(&arguments),
+        Command::Inspect(arguments) => inspect::run(&arguments),
         Command::Fold(arguments) => fold::run(&arguments),
         Command::Unfold(arguments) => unfold::run(&arguments),
         Command::Sources(arguments) => sources::run(&arguments),

@@ -3,6 +3,7 @@
 pub mod detect;
 pub mod kernel;
 pub mod mean;
+pub mod mended;
 pub mod merge;
 pub mod peaks;
 pub mod refine;
