@@ -3,8 +3,10 @@
 use crate::capture::{Capture, CaptureError, OpenOptions, Spec};
 use crate::fold::{Chain, ChainError};
 use crate::sources::Site;
+use crate::spectrum::samples::{OnThreads, Passes};
 use crate::suspects::{self, Cause, Finding, Inference, Scene, SourceFit, Verdict};
 use crate::tones::{self, Search, Tone, ToneSet};
+use std::num::NonZeroUsize;
 use std::path::Path;
 
 /// What the analyst asks for.
@@ -14,6 +16,9 @@ pub struct Options {
     pub rate_hz: Option<f64>,
     /// 1-based channel; `None` for all.
     pub channel: Option<usize>,
+    /// Threads that may work on a long recording; `None` for as many as there are
+    /// cores. No result depends on it.
+    pub threads: Option<NonZeroUsize>,
 }
 
 /// One recording's result.
@@ -23,6 +28,8 @@ pub struct Triage {
     pub recording: String,
     /// What was read.
     pub spec: Spec,
+    /// Runs of samples missing between time stamps.
+    pub gaps: u64,
     /// Value and unit of full scale where the site file tells it.
     pub full_scale: Option<(f64, String)>,
     /// The tones.
@@ -96,7 +103,10 @@ pub fn run(
         channels,
         ..Search::default()
     };
-    let tones = tones::find(&capture, &search, progress)?;
+    let threads = options
+        .threads
+        .map_or_else(|| capture.threads(), NonZeroUsize::get);
+    let tones = tones::find(&OnThreads(&capture, threads), &search, progress)?;
     let inference = suspects::infer(&Scene {
         tones: &tones.tones,
         site,
@@ -106,6 +116,7 @@ pub fn run(
     Ok(Triage {
         recording: path.to_string_lossy().into_owned(),
         spec,
+        gaps: capture.gaps(),
         full_scale,
         tones,
         sources: site

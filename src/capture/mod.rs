@@ -220,6 +220,16 @@ impl Blocks {
     }
 }
 
+/// Whether a file begins as a wave file does, whatever its name.
+///
+/// # Errors
+/// If it cannot be read.
+pub fn begins_as_wave(path: &Path) -> std::io::Result<bool> {
+    let mut head = [0; 12];
+    let got = riff::read_up_to(&mut File::open(path)?, &mut head)?;
+    Ok(riff::is_wave(head.get(..got).unwrap_or_default()))
+}
+
 /// Opens a regular file and tells its length in bytes.
 fn open_file(path: &Path) -> Result<(File, u64), CaptureError> {
     // Before opening: opening a pipe would wait for its writer.

@@ -70,6 +70,7 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
             Channel::All => None,
             Channel::One(n) => Some(n.get()),
         },
+        threads: None,
     };
     let top = arguments.top.get();
     let width = io::stdout()
