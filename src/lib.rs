@@ -12,6 +12,7 @@ pub mod capture;
 pub mod fold;
 pub mod frontend;
 pub mod report;
+pub mod scan;
 pub mod sources;
 pub mod spectrum;
 pub mod suspects;

@@ -169,13 +169,14 @@ pub(super) fn read_heading(bytes: &[u8]) -> Heading {
         }
     }
     for separator in ['/', ','] {
-        if let Some((name, unit)) = text.split_once(separator) {
-            if is_unit(unit.trim()) && !name.trim().is_empty() {
-                return Heading {
-                    name: name.trim().into(),
-                    unit: Some(unit.trim().into()),
-                };
-            }
+        if let Some((name, unit)) = text.split_once(separator)
+            && is_unit(unit.trim())
+            && !name.trim().is_empty()
+        {
+            return Heading {
+                name: name.trim().into(),
+                unit: Some(unit.trim().into()),
+            };
         }
     }
     Heading {

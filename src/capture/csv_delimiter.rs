@@ -21,10 +21,10 @@ pub(super) fn choose_delimiter(lines: &[(usize, &[u8])]) -> Result<(u8, Vec<Line
                 best
             }
         });
-    if let Some(real) = real {
-        if fit(&real.1).goes_before_blanks(&fit(&records)) {
-            (delimiter, records) = real;
-        }
+    if let Some(real) = real
+        && fit(&real.1).goes_before_blanks(&fit(&records))
+    {
+        (delimiter, records) = real;
     }
     if delimiter == b',' {
         match halved_numbers(&records) {

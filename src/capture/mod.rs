@@ -143,10 +143,10 @@ impl Capture {
     /// # Errors
     /// Where the file cannot be read or is no recording; see [`CaptureError`].
     pub fn open(path: &Path, options: &OpenOptions) -> Result<Capture, CaptureError> {
-        if let Some(rate_hz) = options.rate_hz {
-            if !(rate_hz.is_finite() && rate_hz > 0.0) {
-                return Err(CaptureError::BadRate { rate_hz });
-            }
+        if let Some(rate_hz) = options.rate_hz
+            && !(rate_hz.is_finite() && rate_hz > 0.0)
+        {
+            return Err(CaptureError::BadRate { rate_hz });
         }
         let (mut file, length) = open_file(path)?;
         let (spec, recipe) = match probe::probe(&mut file, path)? {

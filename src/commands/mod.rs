@@ -4,6 +4,7 @@ mod fold;
 mod output;
 mod progress;
 mod rates;
+mod scan;
 mod site;
 mod sources;
 mod triage;
@@ -33,6 +34,9 @@ pub enum Command {
     /// Find the tones of recordings and rank what could have made each
     #[command(after_help = triage::HELP)]
     Triage(triage::Arguments),
+    /// Find and judge the tones of many recordings, in parallel, and what comes back
+    #[command(after_help = scan::HELP)]
+    Scan(scan::Arguments),
     /// Where analog frequencies land once sampled
     #[command(after_help = fold::HELP)]
     Fold(fold::Arguments),
@@ -62,6 +66,7 @@ pub fn one_line(error: &clap::Error) -> String {
 pub fn run(command: Command) -> ExitCode {
     let done = match command {
         Command::Triage(arguments) => triage::run(&arguments),
+        Command::Scan(arguments) => scan::run(&arguments),
         Command::Fold(arguments) => fold::run(&arguments),
         Command::Unfold(arguments) => unfold::run(&arguments),
         Command::Sources(arguments) => sources::run(&arguments),
