@@ -6,6 +6,7 @@ mod cli;
 mod fold;
 mod frontend;
 mod sample_data;
+mod scan;
 mod sources;
 mod spectrum;
 mod suspects;

@@ -8,10 +8,12 @@
 
 mod error;
 pub mod groups;
+pub mod identity;
 pub mod inputs;
 pub mod pool;
 pub mod recurring;
 pub mod results;
+mod rows;
 pub mod settle;
 pub mod sorted;
 pub mod tally;
@@ -24,8 +26,9 @@ use crate::report::suspect_list::{self, defuse};
 use crate::sources::Site;
 use crate::suspects::Verdict;
 use crate::triage::{self, Triage};
+use identity::{Checksum, Identity};
 use inputs::Input;
-use results::{Checksum, Identity, Results};
+use results::Results;
 use std::num::NonZeroUsize;
 use std::panic::{AssertUnwindSafe, catch_unwind};
 use std::path::PathBuf;
@@ -136,7 +139,7 @@ pub fn run(
             path: PathBuf::new(),
             problem: None,
         });
-        rows(&input, site, options, threads)
+        judge(&input, site, options, threads)
     };
     let size = |rows: &csv::Result<Rows>| {
         rows.as_ref()
@@ -208,7 +211,7 @@ fn line(cells: [String; 10]) -> csv::Result<Vec<u8>> {
 }
 
 /// Reads one recording and puts what was found into rows.
-fn rows(input: &Input, site: &Site, options: &ScanOptions, threads: usize) -> csv::Result<Rows> {
+fn judge(input: &Input, site: &Site, options: &ScanOptions, threads: usize) -> csv::Result<Rows> {
     let read = match &input.problem {
         Some(problem) => Err(problem.clone()),
         None => {
