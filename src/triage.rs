@@ -112,6 +112,7 @@ pub fn run(
         site,
         chain: &chain,
         duration_s: spec.duration_s(),
+        full_scale_known: spec.normalised || full_scale.is_some(),
     });
     Ok(Triage {
         recording: path.to_string_lossy().into_owned(),

@@ -106,6 +106,7 @@ impl Scores {
             site: &s.site,
             chain: &s.chain,
             duration_s: s.duration_s,
+            full_scale_known: true,
         });
         for (finding, truth) in inference.findings.iter().zip(&s.truth) {
             let outcome = judge(finding, truth);

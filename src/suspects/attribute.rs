@@ -150,10 +150,13 @@ fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut 
         return;
     };
     let mut entered: Vec<(usize, Suspect)> = Vec::new();
-    for b in first.byproducts.iter() {
+    for (k, b) in first.byproducts.products.iter().enumerate() {
         let probability: f64 = solutions
             .iter()
-            .map(|(w, s)| w * s.left_over(b.tone).1 * b.density)
+            .map(|(w, s)| {
+                let open = s.gates.open.get(k).copied().unwrap_or(0.0);
+                w * s.left_over(b.tone).1 * open * b.density
+            })
             .sum();
         if probability < LEAST {
             continue;
@@ -234,7 +237,7 @@ fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut 
 fn chance_of_byproduct(scene: &Scene, solution: &Solution, tone: usize) -> f64 {
     let half = scene.chain.file_rate_hz() / 2.0;
     let var = solution.tones.get(tone).map_or(0.0, |t| t.var);
-    solution.byproducts.len() as f64 * (2.0 * U95 * var.sqrt() / half).min(1.0)
+    solution.byproducts.products.len() as f64 * (2.0 * U95 * var.sqrt() / half).min(1.0)
 }
 
 fn parent_hz(scene: &Scene, findings: &[Finding], i: usize) -> f64 {

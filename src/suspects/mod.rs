@@ -14,6 +14,7 @@ mod byproducts;
 mod clock;
 mod clusters;
 mod evaluate;
+mod gates;
 mod hidden;
 mod mixture;
 mod modes;
