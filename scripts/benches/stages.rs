@@ -141,6 +141,7 @@ fn inference(c: &mut Criterion) {
                     site: &site,
                     chain: &chain,
                     duration_s: 30.0,
+                    full_scale_known: true,
                 })
             });
         });
