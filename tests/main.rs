@@ -8,6 +8,7 @@ mod frontend;
 mod mended;
 mod page;
 mod sample_data;
+mod scan;
 mod sources;
 mod spectrum;
 mod suspects;
