@@ -3,6 +3,7 @@
 pub mod detect;
 pub mod kernel;
 pub mod mean;
+pub mod mended;
 pub mod merge;
 pub mod peaks;
 pub mod refine;
@@ -15,6 +16,7 @@ pub mod wander;
 pub use track::TrackPoint;
 
 use crate::spectrum::condition::Condition;
+use crate::spectrum::display::Spectrum;
 use crate::spectrum::plan::Plan;
 use crate::spectrum::samples::Passes;
 use crate::spectrum::{least_noise, slice, welch, whole};
@@ -105,6 +107,8 @@ pub struct ToneSet {
     pub condition: Vec<Condition>,
     /// Weaker tones left out beyond [`MOST_TONES`].
     pub left_out: usize,
+    /// The spectrum of each channel looked at, for looking at.
+    pub spectra: Vec<Spectrum>,
 }
 
 /// Most tones reported of a recording, the strongest: a noiseless test signal can
@@ -129,6 +133,7 @@ pub fn find<P: Passes>(
         .collect();
     let false_alarms = search.false_alarms / chosen.len().max(1) as f64;
     let mut per_channel = Vec::new();
+    let mut spectra = Vec::new();
     let condition;
     match plan {
         Plan::Whole { grid, .. } => {
@@ -139,12 +144,18 @@ pub fn find<P: Passes>(
                     continue;
                 }
                 let band = whole::transform(samples, grid, recording.rate_hz(), search.step);
+                spectra.push(Spectrum::of_band(&band, channel, search.full_scale));
                 let found = detect::detect(&band, false_alarms, &[]);
                 per_channel.push((channel, tones_of(&found, &band, channel, search.full_scale)));
             }
         }
         Plan::Segments { segment, .. } => {
             let averaged = welch::average(recording, segment, &|n| progress(n, 2 * frames))?;
+            spectra.extend(
+                chosen
+                    .iter()
+                    .map(|&c| Spectrum::of_averaged(&averaged, c, search.full_scale)),
+            );
             let regions: Vec<_> = chosen
                 .iter()
                 .flat_map(|&c| regions::regions(&averaged, c, false_alarms, frames))
@@ -185,6 +196,7 @@ pub fn find<P: Passes>(
         missing: condition.iter().map(|c| c.missing).collect(),
         condition,
         left_out,
+        spectra,
     })
 }
 
