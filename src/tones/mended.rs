@@ -464,9 +464,9 @@ impl<P: Passes> Pass for FilledPass<'_, P> {
                 };
                 let to = right.unwrap_or(from);
                 let steps = (i - start + 1) as f64;
-                for n in start..i {
+                for (n, sample) in (start..i).zip(samples.iter_mut().skip(start)) {
                     let line = from + (to - from) * (n - start + 1) as f64 / steps;
-                    samples[n] = (model(n) + line) as f32;
+                    *sample = (model(n) + line) as f32;
                 }
             }
             if let Some((last, &value)) = samples.iter().enumerate().next_back() {
