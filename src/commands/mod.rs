@@ -1,11 +1,13 @@
 //! One file per command: its arguments, and what it does with the library.
 
 mod fold;
+mod help_files;
 mod inspect;
 mod output;
 mod progress;
 mod rates;
 mod reading;
+mod scan;
 mod site;
 mod sources;
 mod triage;
@@ -38,6 +40,9 @@ pub enum Command {
     /// What recordings were taken for: layout, rate, gaps, what was assumed
     #[command(after_help = inspect::HELP)]
     Inspect(inspect::Arguments),
+    /// Find and judge the tones of many recordings, in parallel, and what comes back
+    #[command(after_help = scan::HELP)]
+    Scan(scan::Arguments),
     /// Where analog frequencies land once sampled
     #[command(after_help = fold::HELP)]
     Fold(fold::Arguments),
@@ -47,6 +52,9 @@ pub enum Command {
     /// Every line of the listed sources with its frequency and tolerance
     #[command(after_help = sources::HELP)]
     Sources(sources::Arguments),
+    /// Write shell completions and manual pages into a folder
+    #[command(after_help = help_files::HELP)]
+    HelpFiles(help_files::Arguments),
 }
 
 /// The gist of a usage error without the pages around it.
@@ -68,9 +76,11 @@ pub fn run(command: Command) -> ExitCode {
     let done = match command {
         Command::Triage(arguments) => triage::run(&arguments),
         Command::Inspect(arguments) => inspect::run(&arguments),
+        Command::Scan(arguments) => scan::run(&arguments),
         Command::Fold(arguments) => fold::run(&arguments),
         Command::Unfold(arguments) => unfold::run(&arguments),
         Command::Sources(arguments) => sources::run(&arguments),
+        Command::HelpFiles(arguments) => help_files::run(&arguments),
     };
     match done {
         Ok(code) => code,

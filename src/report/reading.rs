@@ -65,7 +65,7 @@ pub fn read_as(spec: &Spec) -> String {
     clauses.join(", ")
 }
 
-fn duration(seconds: f64) -> String {
+pub(super) fn duration(seconds: f64) -> String {
     if seconds < 120.0 {
         format!("{} s", hertz(seconds))
     } else if seconds < 7200.0 {

@@ -2,6 +2,7 @@
 //! the sources that were fitted, and one sentence at the end.
 
 use super::reading;
+use super::strip;
 use super::text::{count, percent, plain, with_u95};
 use crate::suspects::{Finding, Ground, Suspect, Verdict};
 use crate::tones::Tone;
@@ -11,14 +12,17 @@ use anstyle::{AnsiColor, Style};
 use std::io::{self, Write};
 
 /// A latent's own name without that of the source it is printed beside.
-fn latent_word(latent: &str, source: &str) -> String {
+pub(super) fn latent_word(latent: &str, source: &str) -> String {
     let rest = latent.strip_prefix(source).unwrap_or(latent).trim();
     plain(if rest.is_empty() { "at" } else { rest })
 }
 
 /// Suspects less probable than this are not worth a line on the screen; they
 /// stay in the exports.
-const WORTH_A_LINE: f64 = 0.02;
+pub(super) const WORTH_A_LINE: f64 = 0.02;
+
+/// A source that explains fewer tones is only as probable as it was before.
+pub(super) const EXPLAINS_SOMETHING: f64 = 0.05;
 
 const QUIET: Style = Style::new().dimmed();
 const HEAD: Style = Style::new().bold();
@@ -45,6 +49,9 @@ pub fn write(
     out: &mut dyn Write,
 ) -> io::Result<()> {
     what_was_read(result, site_name, out)?;
+    if let Some(strip) = strip::line(result, width) {
+        writeln!(out, "  {strip}")?;
+    }
     let rows: Vec<(&Tone, &Finding)> = result.rows().collect();
     if !rows.is_empty() {
         tones(&rows, top, width, out)?;
@@ -56,7 +63,9 @@ pub fn write(
             )?;
         }
         sources(result, out)?;
-        from_time(result, out)?;
+        for line in from_time(result) {
+            writeln!(out, "{line}")?;
+        }
     }
     writeln!(out)?;
     let summary = format!("In short: {}.", result.summary());
@@ -158,7 +167,7 @@ fn interval((value, u95): &(String, String)) -> String {
     format!("{value} ± {u95}")
 }
 
-fn ground_word(ground: Ground) -> &'static str {
+pub(super) fn ground_word(ground: Ground) -> &'static str {
     match ground {
         Ground::Frequency => "frequency",
         Ground::Family => "family",
@@ -295,7 +304,7 @@ fn label(s: &Suspect) -> String {
     format!("{} {}", plain(&s.cause.name()), s.line)
 }
 
-fn luck(coincidence: f64) -> String {
+pub(super) fn luck(coincidence: f64) -> String {
     if coincidence >= 10.0 {
         format!("{coincidence:.0}")
     } else if coincidence >= 0.995 {
@@ -307,7 +316,7 @@ fn luck(coincidence: f64) -> String {
     }
 }
 
-fn unlisted_words(finding: &Finding) -> String {
+pub(super) fn unlisted_words(finding: &Finding) -> String {
     if let Some(at) = &finding.unlisted_at {
         let (hz, u95) = with_u95(at.true_hz.0, at.true_hz_u95);
         return format!(
@@ -330,35 +339,34 @@ fn unlisted_words(finding: &Finding) -> String {
     }
 }
 
-/// What time stamps and references say, where there are any.
-fn from_time(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
+/// What time stamps and references say, where there are any, a line each.
+pub(super) fn from_time(result: &Triage) -> Vec<String> {
     let evidence = &result.evidence;
     let stamps = evidence.stamps.as_ref().filter(|s| s.jitter_s > 0.0);
     let rate = evidence.sampling.as_ref();
-    for said in stamps
+    let stamps = stamps
         .map(|s| &s.statement)
         .into_iter()
         .chain(rate.and_then(|s| s.statement.as_ref()))
-    {
-        writeln!(out, "time stamps: {}", plain(said))?;
-    }
-    for r in &evidence.references {
+        .map(|said| format!("time stamps: {}", plain(said)));
+    let references = evidence.references.iter().map(|r| {
         let (hz, sd) = with_u95(r.mean_hz, (U95 * r.mean_sd_hz).max(1e-9 * r.mean_hz));
-        write!(out, "reference {}: {hz} ± {sd} Hz", plain(&r.source))?;
+        let mut line = format!("reference {}: {hz} ± {sd} Hz", plain(&r.source));
         if r.offset_u95_s > 0.0 {
             let (offset, u95) = with_u95(r.offset_s, r.offset_u95_s);
-            write!(out, ", its clock is {offset} ± {u95} s off the recording's")?;
+            line.push_str(&format!(
+                ", its clock is {offset} ± {u95} s off the recording's"
+            ));
         }
-        writeln!(out)?;
-    }
-    Ok(())
+        line
+    });
+    stamps.chain(references).collect()
 }
 
 fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
     let fits: Vec<_> = result
         .fits()
-        // A source that explains nothing is only as probable as it was before.
-        .filter(|(_, f)| f.tones_explained >= 0.05)
+        .filter(|(_, f)| f.tones_explained >= EXPLAINS_SOMETHING)
         .collect();
     if fits.is_empty() {
         return Ok(());
@@ -392,11 +400,17 @@ fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
             latents.join(", ")
         )?;
     }
-    let clock = &result.inference.clock;
-    // Worth a line where the recording itself narrows it.
-    if clock.latents > 0 && clock.ppm_u95 < 0.8 * result.clock_described_ppm {
-        let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
-        writeln!(out, "recorder's clock: {ppm} ± {u95} ppm")?;
+    if let Some(clock) = clock(result) {
+        writeln!(out, "recorder's clock: {clock}")?;
     }
     Ok(())
+}
+
+/// The fitted error of the recorder's clock, where the recording itself narrows it.
+pub(super) fn clock(result: &Triage) -> Option<String> {
+    let clock = &result.inference.clock;
+    (clock.latents > 0 && clock.ppm_u95 < 0.8 * result.clock_described_ppm).then(|| {
+        let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
+        format!("{ppm} ± {u95} ppm")
+    })
 }

@@ -5,7 +5,9 @@ pub mod kernel;
 pub mod mean;
 pub mod mended;
 pub mod merge;
+mod normal;
 pub mod peaks;
+mod pursuit;
 pub mod refine;
 pub mod regions;
 pub mod statistic;
@@ -16,6 +18,7 @@ pub mod wander;
 pub use track::TrackPoint;
 
 use crate::spectrum::condition::Condition;
+use crate::spectrum::display::Spectrum;
 use crate::spectrum::plan::Plan;
 use crate::spectrum::samples::Passes;
 use crate::spectrum::{least_noise, slice, welch, whole};
@@ -106,6 +109,8 @@ pub struct ToneSet {
     pub condition: Vec<Condition>,
     /// Weaker tones left out beyond [`MOST_TONES`].
     pub left_out: usize,
+    /// The spectrum of each channel looked at, for looking at.
+    pub spectra: Vec<Spectrum>,
 }
 
 /// Most tones reported of a recording, the strongest: a noiseless test signal can
@@ -130,6 +135,7 @@ pub fn find<P: Passes>(
         .collect();
     let false_alarms = search.false_alarms / chosen.len().max(1) as f64;
     let mut per_channel = Vec::new();
+    let mut spectra = Vec::new();
     let condition;
     match plan {
         Plan::Whole { grid, .. } => {
@@ -140,12 +146,18 @@ pub fn find<P: Passes>(
                     continue;
                 }
                 let band = whole::transform(samples, grid, recording.rate_hz(), search.step);
+                spectra.push(Spectrum::of_band(&band, channel, search.full_scale));
                 let found = detect::detect(&band, false_alarms, &[]);
                 per_channel.push((channel, tones_of(&found, &band, channel, search.full_scale)));
             }
         }
         Plan::Segments { segment, .. } => {
             let averaged = welch::average(recording, segment, &|n| progress(n, 2 * frames))?;
+            spectra.extend(
+                chosen
+                    .iter()
+                    .map(|&c| Spectrum::of_averaged(&averaged, c, search.full_scale)),
+            );
             let regions: Vec<_> = chosen
                 .iter()
                 .flat_map(|&c| regions::regions(&averaged, c, false_alarms, frames))
@@ -186,6 +198,7 @@ pub fn find<P: Passes>(
         missing: condition.iter().map(|c| c.missing).collect(),
         condition,
         left_out,
+        spectra,
     })
 }
 
