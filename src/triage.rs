@@ -2,6 +2,7 @@
 
 use crate::capture::{Capture, CaptureError, OpenOptions, Spec};
 use crate::fold::{Chain, ChainError};
+use crate::plan::{self, rates};
 use crate::sources::Site;
 use crate::suspects::{self, Cause, Finding, Inference, Scene, SourceFit, Verdict};
 use crate::tones::{self, Search, Tone, ToneSet};
@@ -25,6 +26,8 @@ pub struct Triage {
     pub spec: Spec,
     /// Value and unit of full scale where the site file tells it.
     pub full_scale: Option<(f64, String)>,
+    /// Every rate the signal went through.
+    pub chain: Chain,
     /// The tones.
     pub tones: ToneSet,
     /// Names of the listed sources, in the catalogue's order.
@@ -33,6 +36,8 @@ pub struct Triage {
     pub clock_described_ppm: f64,
     /// Suspects and fitted sources.
     pub inference: Inference,
+    /// The best next test for the most doubtful tone, if one is open.
+    pub next: Option<plan::Test>,
 }
 
 /// Why a recording could not be triaged.
@@ -97,12 +102,14 @@ pub fn run(
         ..Search::default()
     };
     let tones = tones::find(&capture, &search, progress)?;
-    let inference = suspects::infer(&Scene {
+    let scene = Scene {
         tones: &tones.tones,
         site,
         chain: &chain,
         duration_s: spec.duration_s(),
-    });
+    };
+    let inference = suspects::infer(&scene);
+    let next = plan::next(&scene, &inference, &rates::usual(spec.rate_hz));
     Ok(Triage {
         recording: path.to_string_lossy().into_owned(),
         spec,
@@ -116,10 +123,22 @@ pub fn run(
             .collect(),
         clock_described_ppm: site.recorder.assumed_clock_ppm(),
         inference,
+        next,
+        chain,
     })
 }
 
 impl Triage {
+    /// What inference worked on; `site` is the one it was run with.
+    pub fn scene<'a>(&'a self, site: &'a Site) -> Scene<'a> {
+        Scene {
+            tones: &self.tones.tones,
+            site,
+            chain: &self.chain,
+            duration_s: self.spec.duration_s(),
+        }
+    }
+
     /// Every tone with what is concluded of it.
     pub fn rows(&self) -> impl Iterator<Item = (&Tone, &Finding)> {
         self.inference

@@ -2,8 +2,11 @@
 
 mod fold;
 mod output;
+mod plan;
+mod predict;
 mod progress;
 mod rates;
+mod reconcile;
 mod site;
 mod sources;
 mod triage;
@@ -33,6 +36,15 @@ pub enum Command {
     /// Find the tones of recordings and rank what could have made each
     #[command(after_help = triage::HELP)]
     Triage(triage::Arguments),
+    /// Find where tones truly are from recordings of one place at several sample rates
+    #[command(after_help = reconcile::HELP)]
+    Reconcile(reconcile::Arguments),
+    /// List the tests that would settle a recording's open tones, best first
+    #[command(after_help = plan::HELP)]
+    Plan(plan::Arguments),
+    /// Foresee where the listed sources will be seen, and rank sample rates
+    #[command(after_help = predict::HELP)]
+    Predict(predict::Arguments),
     /// Where analog frequencies land once sampled
     #[command(after_help = fold::HELP)]
     Fold(fold::Arguments),
@@ -62,6 +74,9 @@ pub fn one_line(error: &clap::Error) -> String {
 pub fn run(command: Command) -> ExitCode {
     let done = match command {
         Command::Triage(arguments) => triage::run(&arguments),
+        Command::Reconcile(arguments) => reconcile::run(&arguments),
+        Command::Plan(arguments) => plan::run(&arguments),
+        Command::Predict(arguments) => predict::run(&arguments),
         Command::Fold(arguments) => fold::run(&arguments),
         Command::Unfold(arguments) => unfold::run(&arguments),
         Command::Sources(arguments) => sources::run(&arguments),

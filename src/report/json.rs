@@ -95,6 +95,7 @@ fn recording(result: &Triage, top: usize) -> Value {
         "tones": tones,
         "sources": sources(result),
         "clock": {"ppm": result.inference.clock.ppm, "ppm_u95": result.inference.clock.ppm_u95},
+        "next_test": result.next,
         "summary": result.summary(),
     })
 }

@@ -3,6 +3,9 @@
 
 pub mod json;
 pub mod ladder;
+pub mod plan_table;
+pub mod prediction;
+pub mod reconciled;
 pub mod sources_table;
 pub mod suspect_list;
 pub mod table;

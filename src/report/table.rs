@@ -1,6 +1,7 @@
 //! The table on the terminal: what was read, a row per tone with its suspects,
 //! the sources that were fitted, and one sentence at the end.
 
+use super::plan_table;
 use super::text::{count, hertz, percent, plain, with_u95};
 use crate::suspects::{Finding, Suspect, Verdict};
 use crate::tones::Tone;
@@ -18,10 +19,10 @@ fn latent_word(latent: &str, source: &str) -> String {
 /// stay in the exports.
 const WORTH_A_LINE: f64 = 0.02;
 
-const QUIET: Style = Style::new().dimmed();
-const HEAD: Style = Style::new().bold();
+pub(super) const QUIET: Style = Style::new().dimmed();
+pub(super) const HEAD: Style = Style::new().bold();
 
-fn verdict(v: Verdict) -> (&'static str, Style) {
+pub(super) fn verdict(v: Verdict) -> (&'static str, Style) {
     match v {
         Verdict::Direct => ("direct", Style::new()),
         Verdict::Folded => ("FOLDED", AnsiColor::Magenta.on_default().bold()),
@@ -54,6 +55,13 @@ pub fn write(
             )?;
         }
         sources(result, out)?;
+    }
+    if let Some(next) = &result.next {
+        writeln!(out)?;
+        let advice = format!("Best next test: {}", plan_table::advice(result, next));
+        for line in wrapped(&advice, width.unwrap_or(110)) {
+            writeln!(out, "{line}")?;
+        }
     }
     writeln!(out)?;
     let summary = format!("In short: {}.", result.summary());
@@ -115,7 +123,7 @@ fn what_was_read(result: &Triage, site_name: &str, out: &mut dyn Write) -> io::R
     writeln!(out, "  sources: {}", plain(site_name))
 }
 
-fn duration(seconds: f64) -> String {
+pub(super) fn duration(seconds: f64) -> String {
     if seconds < 120.0 {
         format!("{} s", hertz(seconds))
     } else if seconds < 7200.0 {
@@ -178,7 +186,7 @@ fn rows(tones: &[(&Tone, &Finding)], top: usize) -> Vec<Row> {
     all
 }
 
-fn interval((value, u95): &(String, String)) -> String {
+pub(super) fn interval((value, u95): &(String, String)) -> String {
     format!("{value} ± {u95}")
 }
 
@@ -272,7 +280,7 @@ fn tones(
 
 /// Breaks `text` at blanks into lines of at most `width` characters, where words
 /// allow it.
-fn wrapped(text: &str, width: usize) -> Vec<String> {
+pub(super) fn wrapped(text: &str, width: usize) -> Vec<String> {
     let mut lines: Vec<String> = Vec::new();
     for word in text.split(' ') {
         match lines.last_mut() {
@@ -298,7 +306,7 @@ fn label(s: &Suspect) -> String {
     format!("{} {}", plain(&s.cause.name()), s.line)
 }
 
-fn luck(coincidence: f64) -> String {
+pub(super) fn luck(coincidence: f64) -> String {
     if coincidence >= 10.0 {
         format!("{coincidence:.0}")
     } else if coincidence >= 0.995 {

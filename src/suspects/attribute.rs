@@ -7,7 +7,7 @@ use super::scene::Scene;
 use super::shares::{Shares, collect};
 use super::solution::Solution;
 use super::unlisted::Origins;
-use super::{Cause, ClockFit, Finding, Inference, SourceFit, Suspect, Verdict, clock};
+use super::{Cause, ClockFit, Finding, Inference, Place, SourceFit, Suspect, Verdict, clock};
 use crate::sources::{LatentId, Line};
 use crate::units::{Sense, TrueHz, U95};
 
@@ -134,6 +134,15 @@ fn propose(
             sense: share.sense,
             probability: total,
             coincidence: worth.coincidence / total,
+            places: worth
+                .zones
+                .iter()
+                .map(|(&zone, share)| Place {
+                    recorder_hz: share.frequency().0,
+                    zone,
+                    probability: share.mass,
+                })
+                .collect(),
         });
     }
     explained
@@ -170,6 +179,11 @@ fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut 
                 sense: Sense::Upright,
                 probability,
                 coincidence: chance_of_byproduct(scene, first, b.tone),
+                places: vec![Place {
+                    recorder_hz: nu,
+                    zone: 1,
+                    probability,
+                }],
             },
             Maker::Parents(recipe) => {
                 // As far as known, the parents are where their best suspects say.
@@ -196,6 +210,11 @@ fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut 
                     sense: seen.sense,
                     probability,
                     coincidence: chance_of_byproduct(scene, first, b.tone),
+                    places: vec![Place {
+                        recorder_hz: f,
+                        zone: seen.zone,
+                        probability,
+                    }],
                 }
             }
         };
@@ -216,6 +235,7 @@ fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut 
         let byproduct = |s: &&Suspect| !matches!(s.cause, Cause::Source { .. });
         if let Some(same) = same {
             same.probability += suspect.probability;
+            same.places.extend(suspect.places);
         } else if finding.suspects.iter().filter(byproduct).count() < MOST_BYPRODUCTS {
             finding.suspects.push(suspect);
         } else if let Some(least) = finding
@@ -226,6 +246,9 @@ fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut 
         {
             // Too faint for a row of its own, but not lost.
             least.probability += suspect.probability;
+            if let Some(place) = least.places.first_mut() {
+                place.probability += suspect.probability;
+            }
         }
     }
 }
