@@ -127,6 +127,20 @@ fn one_tone(seed: u64, draws: usize) {
         let hit = |hz: f64, u95: f64| (hz - f).abs() <= 2.0 * u95;
         let places = tone.places();
         let top = places[0];
+        if std::env::var_os("MISSES").is_some() && (tone.sightings.len() != 2 || !hit(top.0, top.1))
+        {
+            eprintln!(
+                "rates {first:.0} {second:.0} f {f:.0} = {:.2} x, unique {alone}, same place {:.2}, shared {:.2}, {:?} {:?}",
+                f / first,
+                result.belonging[0].same_place,
+                result.belonging[0].shared,
+                tones
+                    .iter()
+                    .map(|t| (t[0].seen_hz.0 as i64))
+                    .collect::<Vec<_>>(),
+                places.iter().take(3).collect::<Vec<_>>()
+            );
+        }
         if alone {
             unique += 1;
             right += usize::from(hit(top.0, top.1));

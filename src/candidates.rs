@@ -192,12 +192,17 @@ const FORESEEN_DB: f64 = 4.0;
 /// Part of an undescribed filter's spread that two recordings do not share: most
 /// recorders at one place are of one make.
 const OWN_FILTER: f64 = 0.2;
+/// An undescribed filter may follow the rate or stay: this part of the difference
+/// between two rates is expected.
+const FOLLOWS_RATE: f64 = 0.25;
 
 /// Chance that a tone is found again, where its SNR would be `snr_db` behind the same
 /// front end, once the gain before the converter is `to` instead of `from`.
 pub fn chance_seen(snr_db: f64, from: Gain, to: Gain) -> f64 {
-    let sd = FORESEEN_DB.hypot(OWN_FILTER * from.sd_db.max(to.sd_db));
-    let z = (snr_db + to.mean_db - from.mean_db - FOUND_DB) / sd;
+    let unsure = from.sd_db.max(to.sd_db);
+    let part = if unsure > 1.0 { FOLLOWS_RATE } else { 1.0 };
+    let sd = FORESEEN_DB.hypot(OWN_FILTER * unsure);
+    let z = (snr_db + part * (to.mean_db - from.mean_db) - FOUND_DB) / sd;
     (0.5 * statrs::function::erf::erfc(-z / std::f64::consts::SQRT_2)).clamp(0.01, 0.999)
 }
 

@@ -415,27 +415,23 @@ impl<'a> Bench<'a> {
             (then / now).sqrt().min(1.0)
         };
         let ratios: Vec<f64> = p.outlook.candidates.iter().map(narrowing).collect();
-        let strays = ratios.len();
-        let outcomes = (0..ratios.len())
-            .map(|i| {
-                // Each source's own prediction; what is not it fits by chance alone.
-                if ratios.get(i).is_some_and(|r| *r < 1.0) {
-                    return vec![(i, 1.0)];
+        // What one listed line predicts another may predict as well: only chance
+        // neighbours are told from them.
+        let chance = ratios.iter().copied().fold(1.0, f64::min);
+        let outcomes = ratios
+            .iter()
+            .map(|r| {
+                if *r < 1.0 {
+                    vec![(0, 1.0)]
+                } else {
+                    vec![(0, chance), (1, 1.0 - chance)]
                 }
-                let mut left = 1.0;
-                let mut all = Vec::new();
-                for (k, r) in ratios.iter().enumerate().filter(|(_, r)| **r < 1.0) {
-                    let q = r.min(left);
-                    left -= q;
-                    all.push((k, q));
-                }
-                all.push((strays, left));
-                all
             })
             .collect();
-        let mut shows = vec![Shows::Fits; strays];
-        shows.push(Shows::Strays);
-        Shown { outcomes, shows }
+        Shown {
+            outcomes,
+            shows: vec![Shows::Fits, Shows::Strays],
+        }
     }
 
     /// The slope of the tone's wander against a log of the source's own frequency.

@@ -11,7 +11,7 @@ use std::collections::BTreeMap;
 
 /// Part of the tones that two recordings of one place share, with its prior: mostly
 /// nearly all that are strong enough for both.
-const COMMON: [(f64, f64); 4] = [(0.3, 0.1), (0.6, 0.2), (0.85, 0.3), (0.97, 0.4)];
+const COMMON: [(f64, f64); 4] = [(0.4, 0.03), (0.8, 0.12), (0.97, 0.25), (0.995, 0.6)];
 /// The one used to find modes.
 const SEARCH_COMMON: f64 = 0.8;
 /// Expected artefacts of each sort before looking.
@@ -20,7 +20,7 @@ const ARTEFACTS: f64 = 0.05;
 /// tones are than it drifts.
 const FAMILY_DRIFT: f64 = 6.5;
 /// Modes followed, and how far below the best one may be, nats.
-const MOST_MODES: usize = 48;
+const MOST_MODES: usize = 96;
 const LEAST_MODE: f64 = 14.0;
 /// Errors tried, the most promising votes first.
 const MOST_TRIED: usize = 4000;
@@ -31,12 +31,28 @@ pub(super) struct Mode {
     pub delta: f64,
     pub sd: f64,
     pub common: f64,
+    /// Nothing tells the clock error: no vote counts.
+    pub blind: bool,
     /// Expected artefacts that keep their samples, or their time.
     pub artefacts: (f64, f64),
     /// Log evidence over that of two places with nothing in common.
     pub ln_odds: f64,
     /// The same without the mains.
     pub ln_same_place: f64,
+}
+
+impl Mode {
+    fn at(delta: f64, sd: f64) -> Self {
+        Mode {
+            delta,
+            sd,
+            common: SEARCH_COMMON,
+            blind: false,
+            artefacts: (ARTEFACTS, ARTEFACTS),
+            ln_odds: 0.0,
+            ln_same_place: 0.0,
+        }
+    }
 }
 
 /// Odds of each pair at one mode.
@@ -46,11 +62,13 @@ pub(super) fn odds(pairs: &Pairs, mode: &Mode) -> Vec<f64> {
         .iter()
         .map(|p| p.flat + mode.artefacts.0 * p.samples + mode.artefacts.1 * p.time)
         .collect();
-    pairs.at(mode.delta, |vote, w| {
-        if let Some(o) = odds.get_mut(vote.pair) {
-            *o += w;
-        }
-    });
+    if !mode.blind {
+        pairs.at(mode.delta, |vote, w| {
+            if let Some(o) = odds.get_mut(vote.pair) {
+                *o += w;
+            }
+        });
+    }
     for (o, p) in odds.iter_mut().zip(&pairs.pairs) {
         *o *= factor(pairs, p, mode.common);
     }
@@ -122,14 +140,7 @@ impl Evidence<'_> {
         let mut delta = start;
         let mut width = sd;
         for _ in 0..6 {
-            let mode = Mode {
-                delta,
-                sd: width,
-                common: SEARCH_COMMON,
-                artefacts: (ARTEFACTS, ARTEFACTS),
-                ln_odds: 0.0,
-                ln_same_place: 0.0,
-            };
+            let mode = Mode::at(delta, width);
             let terms = self.tracks(&odds(self.pairs, &mode));
             let (mut precision, mut sum) = (sd.powi(-2), mean * sd.powi(-2));
             self.pairs.at(delta, |vote, w| {
@@ -181,30 +192,22 @@ pub(super) fn modes(
         alone,
         prior,
     };
-    let mut tried: Vec<(f64, f64)> = pairs.votes().map(|v| (v.delta, v.odds)).collect();
-    tried.sort_by(|a, b| b.1.total_cmp(&a.1));
+    let mut tried: Vec<(f64, f64, f64)> = pairs.votes().map(|v| (v.delta, v.sd, v.odds)).collect();
+    tried.sort_by(|a, b| (b.1 * b.2).total_cmp(&(a.1 * a.2)));
     tried.truncate(MOST_TRIED);
-    tried.push((prior.0, 0.0));
     // First look: the evidence at every vote.
     let mut peaks: BTreeMap<&str, f64> = BTreeMap::new();
-    let looked: Vec<(f64, BTreeMap<&str, f64>, f64)> = tried
+    let looked: Vec<((f64, f64), BTreeMap<&str, f64>, f64)> = tried
         .iter()
-        .map(|&(delta, _)| {
-            let mode = Mode {
-                delta,
-                sd: prior.1,
-                common: SEARCH_COMMON,
-                artefacts: (ARTEFACTS, ARTEFACTS),
-                ln_odds: 0.0,
-                ln_same_place: 0.0,
-            };
+        .map(|&(delta, sd, _)| {
+            let mode = Mode::at(delta, prior.1);
             let terms = evidence.tracks(&odds(pairs, &mode));
             let (families, rest) = evidence.split(&terms, true);
             for (f, l) in &families {
                 let peak = peaks.entry(f).or_insert(f64::NEG_INFINITY);
                 *peak = peak.max(*l);
             }
-            (delta, families, rest)
+            ((delta, sd.min(prior.1)), families, rest)
         })
         .collect();
     let drifted = |families: &BTreeMap<&str, f64>| -> f64 {
@@ -222,33 +225,33 @@ pub(super) fn modes(
     };
     let mut ranked: Vec<(f64, f64)> = looked
         .iter()
-        .map(|(d, families, rest)| (*d, rest + drifted(families) + ln_prior(*d)))
+        .map(|((d, sd), families, rest)| (*d, rest + drifted(families) + ln_prior(*d) + sd.ln()))
         .collect();
     ranked.sort_by(|a, b| b.1.total_cmp(&a.1));
     let mut modes: Vec<Mode> = Vec::new();
     let mut best = f64::NEG_INFINITY;
     let mut met: Vec<(f64, f64)> = Vec::new();
     for (start, _) in ranked.into_iter().take(6 * MOST_MODES) {
-        // Votes within a mode already found lead to it again.
-        if met.iter().any(|(d, w): &(f64, f64)| (start - d).abs() < *w) || met.len() >= MOST_MODES {
+        // Votes within a narrow mode already found lead to it again.
+        let near =
+            |x: f64, reach: &dyn Fn(f64) -> f64| met.iter().any(|(d, w)| (x - d).abs() < reach(*w));
+        if near(start, &|w| if w < 0.3 * prior.1 { w } else { 0.0 }) || met.len() >= MOST_MODES {
             continue;
         }
         let (delta, sd) = evidence.refine(start);
-        if met
-            .iter()
-            .any(|(d, w): &(f64, f64)| (delta - d).abs() < 2.0 * w.max(sd))
-        {
+        if near(delta, &|w| 2.0 * w.min(sd)) {
             continue;
         }
         met.push((delta, sd));
+    }
+    let blind = !met.iter().any(|m| m.1 > 0.5 * prior.1);
+    let all = met.into_iter().map(|m| (m, false));
+    for ((delta, sd), blind) in all.chain(blind.then_some((prior, true))) {
         for (common, share) in COMMON {
             let mut mode = Mode {
-                delta,
-                sd,
                 common,
-                artefacts: (ARTEFACTS, ARTEFACTS),
-                ln_odds: 0.0,
-                ln_same_place: 0.0,
+                blind,
+                ..Mode::at(delta, sd)
             };
             let found = settle_artefacts(pairs, &evidence.alone, &mut mode);
             let terms = evidence.tracks(&found);

@@ -18,7 +18,7 @@ pub(super) struct State {
 }
 
 /// Probability that recordings given together are of one place.
-const SAME_PLACE: f64 = 0.9;
+const SAME_PLACE: f64 = 0.98;
 /// Rungs less probable than this are dropped from a joined track.
 const LEAST_RUNG: f64 = 1e-7;
 /// Rounds of the sum-product algorithm.
@@ -79,7 +79,10 @@ pub(super) fn add(place: &Place, state: &State, to: usize) -> (Vec<State>, Belon
     // Ways of how much is common lead to one reading at each clock error.
     let mut by_delta: Vec<(Mode, f64)> = Vec::new();
     for (mode, w) in modes.iter().zip(&weights) {
-        match by_delta.iter_mut().find(|(m, _)| m.delta == mode.delta) {
+        match by_delta
+            .iter_mut()
+            .find(|(m, _)| m.delta == mode.delta && m.blind == mode.blind)
+        {
             Some((_, sum)) => *sum += w / total,
             None => by_delta.push((*mode, w / total)),
         }

@@ -152,7 +152,8 @@ impl<'a> Place<'a> {
             .map(|outlook| {
                 let mut rungs: Vec<Rung> = Vec::new();
                 let mut products = Vec::new();
-                let mut prior = 0.0;
+                // What nothing listed makes at each rung, before looking.
+                let mut strays: Vec<(usize, f64)> = Vec::new();
                 let finding = capture
                     .inference
                     .findings
@@ -179,8 +180,9 @@ impl<'a> Place<'a> {
                     match &candidate.who {
                         Who::Unlisted => {
                             rung.unlisted += p;
-                            prior += self.density(hz)
-                                * front.share_seen(TrueHz(hz), scene.chain.converter_rate_hz());
+                            let rate = scene.chain.converter_rate_hz();
+                            let density = self.density(hz) * front.share_seen(TrueHz(hz), rate);
+                            strays.push((at, expected * density));
                         }
                         Who::Parents { tones, label } => {
                             // Whatever made it, it is there: for the comparison
@@ -200,6 +202,15 @@ impl<'a> Place<'a> {
                         }
                     }
                 }
+                // No tone is expected more surely than it is measured, however well a
+                // family fits: that bounds the density, and `unlisted` from below.
+                let most = 0.4 / outlook.var.sqrt();
+                for &(at, stray) in &strays {
+                    if let Some(r) = rungs.get_mut(at) {
+                        r.unlisted = r.unlisted.max(stray / most);
+                    }
+                }
+                let prior: f64 = strays.iter().map(|s| s.1).sum();
                 let own: f64 = rungs.iter().map(|r| r.unlisted).sum();
                 let mut members = vec![None; of];
                 if let Some(m) = members.get_mut(c) {
@@ -209,7 +220,7 @@ impl<'a> Place<'a> {
                     members,
                     rungs,
                     products,
-                    density: (expected * prior / own.max(1e-12)).max(1e-300),
+                    density: (prior / own.max(1e-300)).clamp(1e-300, most),
                     association: 1.0,
                     artefact: (0.0, String::new()),
                 }

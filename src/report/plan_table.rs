@@ -67,19 +67,14 @@ fn shows(shows: &Shows) -> String {
 }
 
 fn outcome(o: &Outcome) -> String {
-    let under = match o.under.as_slice() {
-        [] => return format!("it {} ({})", shows(&o.shows), percent(o.probability)),
-        [one] => format!("if it is {}", one.0),
-        [first, others @ ..] => {
-            format!(
-                "if it is {} or one of {}",
-                first.0,
-                count(others.len(), "other", "others")
-            )
-        }
+    let Some((first, chance)) = o.under.first() else {
+        return format!("it {} ({})", shows(&o.shows), percent(o.probability));
     };
+    // Others are worth a word where they make a part of the outcome.
+    let more = o.probability - chance > 0.1 * o.probability;
+    let others = if more { " or another" } else { "" };
     format!(
-        "it {} {under} ({})",
+        "it {} if it is {first}{others} ({})",
         shows(&o.shows),
         percent(o.probability)
     )

@@ -58,9 +58,10 @@ pub fn write(
     for (b, clock) in result.belonging.iter().zip(&result.clocks) {
         let mut text = belonging(triages, b);
         if b.same_place >= 0.5 {
-            let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
+            let (ppm, u95) = with_u95(clock.ppm.abs(), clock.ppm_u95);
+            let word = if clock.ppm < 0.0 { "slower" } else { "faster" };
             text.push_str(&format!(
-                " Its clock runs {ppm} ± {u95} ppm fast of recording 1's."
+                " Its clock runs {ppm} ± {u95} ppm {word} than that of recording 1."
             ));
         }
         for line in wrapped(&text, width) {
