@@ -68,6 +68,9 @@ pub struct Outlook {
 const HIGHEST: f64 = 50.0;
 /// Rungs looked at.
 const MOST_RUNGS: f64 = 400.0;
+/// Part of the unlisted folded tones that is spread evenly over the analog axis; the
+/// others are spread evenly over its logarithm.
+const EVEN: f64 = 0.5;
 /// Candidates less probable than this are not worth a thought.
 const LEAST: f64 = 1e-9;
 
@@ -83,17 +86,24 @@ pub fn top_hz(scene: &Scene) -> f64 {
         .clamp(half, MOST_RUNGS * half)
 }
 
+/// Density of folded tones that nothing listed made, before any front end, at `f`
+/// between `half` and `top` (Hz), in units of one tone per e-fold of frequency.
+pub fn folded_density(f: f64, half: f64, top: f64) -> f64 {
+    let folds = (top / half).max(1.0).ln();
+    (1.0 - EVEN) / f.max(1e-9) + EVEN * folds / (top - half).max(1e-9 * half)
+}
+
 /// Candidates of every tone, up to `up_to_hz` of the analog axis.
 pub fn of(scene: &Scene, inference: &Inference, up_to_hz: f64) -> Vec<Outlook> {
     let half = scene.chain.file_rate_hz() / 2.0;
     let up_to = TrueHz(up_to_hz.clamp(half, MOST_RUNGS * half));
     let front = scene.site.recorder.front_end.prepared();
     let rate = scene.chain.converter_rate_hz();
-    let passing = |f: f64| front.share_seen(TrueHz(f), rate);
+    let folded = |f: f64| front.share_seen(TrueHz(f), rate) * folded_density(f, half, up_to.0);
     inference
         .findings
         .iter()
-        .filter_map(|finding| outlook(scene, finding, up_to, &passing))
+        .filter_map(|finding| outlook(scene, finding, up_to, &folded))
         .collect()
 }
 
@@ -101,15 +111,16 @@ pub fn of(scene: &Scene, inference: &Inference, up_to_hz: f64) -> Vec<Outlook> {
 pub fn one(scene: &Scene, finding: &Finding) -> Option<Outlook> {
     let front = scene.site.recorder.front_end.prepared();
     let rate = scene.chain.converter_rate_hz();
-    let passing = |f: f64| front.share_seen(TrueHz(f), rate);
-    outlook(scene, finding, TrueHz(top_hz(scene)), &passing)
+    let (half, top) = (scene.chain.file_rate_hz() / 2.0, top_hz(scene));
+    let folded = |f: f64| front.share_seen(TrueHz(f), rate) * folded_density(f, half, top);
+    outlook(scene, finding, TrueHz(top), &folded)
 }
 
 fn outlook(
     scene: &Scene,
     finding: &Finding,
     up_to: TrueHz,
-    passing: &dyn Fn(f64) -> f64,
+    folded: &dyn Fn(f64) -> f64,
 ) -> Option<Outlook> {
     let half = scene.chain.file_rate_hz() / 2.0;
     let tone = scene.tones.get(finding.tone)?;
@@ -118,11 +129,11 @@ fn outlook(
     Some(Outlook {
         tone: finding.tone,
         var: position_variance(tone, scene.duration_s),
-        candidates: candidates(finding, &ladder, passing),
+        candidates: candidates(finding, &ladder, folded),
     })
 }
 
-fn candidates(finding: &Finding, ladder: &[Rung], passing: &dyn Fn(f64) -> f64) -> Vec<Candidate> {
+fn candidates(finding: &Finding, ladder: &[Rung], folded: &dyn Fn(f64) -> f64) -> Vec<Candidate> {
     let mut all = Vec::new();
     for suspect in &finding.suspects {
         let who = match &suspect.cause {
@@ -162,13 +173,13 @@ fn candidates(finding: &Finding, ladder: &[Rung], passing: &dyn Fn(f64) -> f64) 
             });
         }
     }
-    let weight = |r: &Rung| passing(r.true_hz.0) / r.true_hz.0.max(1e-9);
-    let folded: f64 = ladder.iter().filter(|r| r.zone > 1).map(weight).sum();
+    let weight = |r: &Rung| folded(r.true_hz.0);
+    let total: f64 = ladder.iter().filter(|r| r.zone > 1).map(weight).sum();
     for rung in ladder {
         let probability = if rung.zone == 1 {
             finding.unlisted_direct
-        } else if folded > 0.0 {
-            finding.unlisted_folded * weight(rung) / folded
+        } else if total > 0.0 {
+            finding.unlisted_folded * weight(rung) / total
         } else {
             0.0
         };
@@ -191,10 +202,10 @@ const FOUND_DB: f64 = 13.0;
 const FORESEEN_DB: f64 = 4.0;
 /// Part of an undescribed filter's spread that two recordings do not share: most
 /// recorders at one place are of one make.
-const OWN_FILTER: f64 = 0.2;
+const OWN_FILTER: f64 = 0.12;
 /// An undescribed filter may follow the rate or stay: this part of the difference
 /// between two rates is expected.
-const FOLLOWS_RATE: f64 = 0.25;
+const FOLLOWS_RATE: f64 = 0.2;
 
 /// Chance that a tone is found again, where its SNR would be `snr_db` behind the same
 /// front end, once the gain before the converter is `to` instead of `from`.

@@ -5,6 +5,7 @@ mod capture;
 mod cli;
 mod fold;
 mod frontend;
+mod planning;
 mod sample_data;
 mod sources;
 mod spectrum;

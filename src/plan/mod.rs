@@ -155,17 +155,29 @@ pub fn plan(scene: &Scene, inference: &Inference, rates_hz: &[f64]) -> Plan {
 /// The single best test for the most doubtful tone; `None` where none is open or
 /// nothing would tell.
 pub fn next(scene: &Scene, inference: &Inference, rates_hz: &[f64]) -> Option<Test> {
-    let (finding, _) = inference
+    for_most_doubtful(scene, inference, rates_hz).next()
+}
+
+/// The same among other sample rates only.
+pub fn best_rate(scene: &Scene, inference: &Inference, rates_hz: &[f64]) -> Option<Test> {
+    for_most_doubtful(scene, inference, rates_hz).find(|t| matches!(t.what, What::Rate(_)))
+}
+
+/// Tests for the most doubtful tone, best first.
+fn for_most_doubtful(
+    scene: &Scene,
+    inference: &Inference,
+    rates_hz: &[f64],
+) -> impl Iterator<Item = Test> {
+    let finding = inference
         .findings
         .iter()
         .filter_map(|f| Some((f, doubt(f)?)))
-        .max_by(|a, b| a.1.total_cmp(&b.1))?;
-    let mut plan = of(scene, inference, rates_hz, &[finding]);
-    if plan.tests.is_empty() {
-        None
-    } else {
-        Some(plan.tests.swap_remove(0))
-    }
+        .max_by(|a, b| a.1.total_cmp(&b.1));
+    finding
+        .map(|(f, _)| of(scene, inference, rates_hz, &[f]).tests)
+        .unwrap_or_default()
+        .into_iter()
 }
 
 fn of(scene: &Scene, inference: &Inference, rates_hz: &[f64], open: &[&Finding]) -> Plan {

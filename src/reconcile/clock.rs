@@ -11,7 +11,7 @@ use std::collections::BTreeMap;
 
 /// Part of the tones that two recordings of one place share, with its prior: mostly
 /// nearly all that are strong enough for both.
-const COMMON: [(f64, f64); 4] = [(0.4, 0.03), (0.8, 0.12), (0.97, 0.25), (0.995, 0.6)];
+const COMMON: [(f64, f64); 4] = [(0.4, 0.01), (0.8, 0.05), (0.97, 0.24), (0.995, 0.7)];
 /// The one used to find modes.
 const SEARCH_COMMON: f64 = 0.8;
 /// Expected artefacts of each sort before looking.

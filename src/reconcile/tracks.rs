@@ -89,6 +89,8 @@ pub(super) struct Place<'a> {
     pub keys: Vec<Key>,
     /// Half the lowest rate, Hz.
     half: f64,
+    /// Highest analog frequency looked at, Hz.
+    top: f64,
     /// Integral of the shape of the analog density.
     mass: f64,
 }
@@ -112,6 +114,7 @@ impl<'a> Place<'a> {
             known: Vec::new(),
             keys: Vec::new(),
             half,
+            top,
             mass: LOWEST.recip().ln() + (top / half).max(1.0).ln(),
         };
         let mut index: BTreeMap<(String, String), usize> = BTreeMap::new();
@@ -302,7 +305,7 @@ impl<'a> Place<'a> {
     pub fn density(&self, f: f64) -> f64 {
         let h = self.half;
         if f > h {
-            return 1.0 / (f * self.mass);
+            return candidates::folded_density(f, h, self.top) / self.mass;
         }
         let low = LOWEST * h;
         let spread = 1.0 / ((f + low) * ((h + low) / low).ln());

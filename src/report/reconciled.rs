@@ -57,7 +57,7 @@ pub fn write(
     }
     for (b, clock) in result.belonging.iter().zip(&result.clocks) {
         let mut text = belonging(triages, b);
-        if b.same_place >= 0.5 {
+        if b.same_place >= 0.5 && b.shared + b.mains as f64 >= 0.5 {
             let (ppm, u95) = with_u95(clock.ppm.abs(), clock.ppm_u95);
             let word = if clock.ppm < 0.0 { "slower" } else { "faster" };
             text.push_str(&format!(
@@ -81,6 +81,12 @@ pub fn write(
 /// Whether a recording belongs with the others, in words.
 fn belonging(triages: &[Triage], b: &Belonging) -> String {
     let own = triages.get(b.capture).map_or(0, |t| t.tones.tones.len());
+    if own == 0 {
+        return format!(
+            "Recording {} has no tones: nothing to compare.",
+            b.capture + 1
+        );
+    }
     let mains = match b.mains {
         0 => String::new(),
         n => format!(" (not counting {n} of the mains, which every place has)"),
