@@ -187,12 +187,15 @@ pub fn simulate(seed: u64) -> Simulated {
     seen
 }
 
+/// A scene seen once more: at which rate, what was seen, and what is true.
+pub type Again = (Chain, Vec<Tone>, Vec<Truth>);
+
 /// The same scene seen at its own rate and, by the same recorder a little later, at
 /// each of the rates that `again` names once it has seen the first.
 pub fn simulate_again(
     seed: u64,
     again: impl FnOnce(&Simulated) -> Vec<f64>,
-) -> (Simulated, Vec<(Chain, Vec<Tone>, Vec<Truth>)>) {
+) -> (Simulated, Vec<Again>) {
     let mut rng = StdRng::seed_from_u64(seed);
     let raw = draw(&mut rng);
     let (noise_dbfs, epsilon, front) = (raw.noise_dbfs, raw.epsilon, raw.front);

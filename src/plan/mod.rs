@@ -8,14 +8,15 @@
 //! chance that one candidate is then at least [`prospect::SETTLED`] probable
 //! ([`prospect`]).
 
+mod bench;
 pub mod prospect;
 pub mod rates;
-mod tests;
+mod shown;
 
 use crate::candidates::{self, Outlook, Who};
 use crate::suspects::{Finding, Inference, Scene};
+use bench::{Bench, Prepared};
 use prospect::{Expectation, Prospect, SETTLED, prospect};
-use tests::{Bench, Prepared};
 
 /// A test that a person could do.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]

@@ -81,6 +81,9 @@ fn factor(pairs: &Pairs, pair: &Pair, common: f64) -> f64 {
     common / (missed(&pairs.track_visible, pair.track) * missed(&pairs.tone_visible, pair.tone))
 }
 
+/// A clock error and how wide its vote is, the sums of the families, and the rest.
+type Look<'f> = ((f64, f64), BTreeMap<&'f str, f64>, f64);
+
 /// Sums over the tracks, at one clock error.
 struct Evidence<'a> {
     pairs: &'a Pairs,
@@ -197,7 +200,7 @@ pub(super) fn modes(
     tried.truncate(MOST_TRIED);
     // First look: the evidence at every vote.
     let mut peaks: BTreeMap<&str, f64> = BTreeMap::new();
-    let looked: Vec<((f64, f64), BTreeMap<&str, f64>, f64)> = tried
+    let looked: Vec<Look> = tried
         .iter()
         .map(|&(delta, sd, _)| {
             let mode = Mode::at(delta, prior.1);

@@ -1,6 +1,7 @@
 //! What each test would show under each candidate.
 
 use super::prospect::told_apart;
+use super::shown::{low_pass, placed, seen_or_gone, unchanged};
 use super::{Shown, Shows, What, is_recorder, of_tone};
 use crate::candidates::{Candidate, Outlook, Who, chance_seen, is_free};
 use crate::fold::Chain;
@@ -16,9 +17,9 @@ pub(super) struct Prepared {
     pub outlook: Outlook,
     /// Names of the candidates.
     pub names: Vec<String>,
-    nu: f64,
-    snr_db: f64,
-    wander_hz: f64,
+    pub nu: f64,
+    pub snr_db: f64,
+    pub wander_hz: f64,
 }
 
 /// What all tests need to know.
@@ -43,11 +44,6 @@ const LONGER: f64 = 4.0;
 const FORESEEN: f64 = 0.98;
 /// The same for another recording, where the tone must be told from all others.
 const KNOWN_AGAIN: f64 = 0.93;
-/// Order of the low-pass proposed, and how well a level repeats, dB.
-const LOW_PASS_ORDER: i32 = 4;
-const LEVEL_SD_DB: f64 = 1.5;
-/// SNR below which a tone is not found, dB.
-const FOUND_DB: f64 = 13.0;
 /// Relative: two recordings minutes apart have clocks and steady sources alike to this.
 const STEADY: f64 = 2e-6;
 /// A source this improbable for every open tone is not worth touching.
@@ -128,10 +124,6 @@ fn owned(catalogue: &Catalogue, index: usize) -> BTreeSet<usize> {
         .difference(&before)
         .copied()
         .collect()
-}
-
-fn gaussian_miss(miss: f64, at: usize, gone: usize) -> Vec<(usize, f64)> {
-    vec![(at, 1.0 - miss), (gone, miss)]
 }
 
 impl<'a> Bench<'a> {
@@ -304,7 +296,7 @@ impl<'a> Bench<'a> {
                     self.front.gain(f, chain.converter_rate_hz()),
                 );
                 let found = KNOWN_AGAIN * chance_seen(p.snr_db, from, to);
-                gaussian_miss(if covered { 1.0 } else { 1.0 - found }, n, gone)
+                seen_or_gone(if covered { 1.0 } else { 1.0 - found }, n, gone)
             })
             .collect();
         Shown { outcomes, shows }
@@ -365,7 +357,7 @@ impl<'a> Bench<'a> {
                     matches!(c.who, Who::Listed { source: s, .. } if s == index)
                         || line.terms.iter().any(|t| stopped.contains(&t.0.0))
                 });
-                gaussian_miss(1.0 - FORESEEN, usize::from(its), usize::from(!its))
+                seen_or_gone(1.0 - FORESEEN, usize::from(its), usize::from(!its))
             })
             .collect();
         Shown {
@@ -477,74 +469,6 @@ impl<'a> Bench<'a> {
             outcomes: numbers.into_iter().map(|n| vec![(n, 1.0)]).collect(),
             shows,
         }
-    }
-}
-
-/// A test that shows nothing new.
-fn unchanged(p: &Prepared) -> Shown {
-    Shown {
-        outcomes: vec![vec![(0, 1.0)]; p.outlook.candidates.len()],
-        shows: vec![Shows::Same],
-    }
-}
-
-/// Candidates at the places given, each seen there with chance `found`.
-fn placed(p: &Prepared, seen: &[(f64, f64)], found: f64) -> Shown {
-    let numbers = told_apart(seen);
-    let gone = numbers.iter().max().map_or(0, |n| n + 1);
-    let mut shows = vec![Shows::Gone; gone + 1];
-    for (n, s) in numbers.iter().zip(seen) {
-        if let Some(show) = shows.get_mut(*n)
-            && *show == Shows::Gone
-        {
-            let same = (s.0 - p.nu).abs() < 2.5 * s.1;
-            *show = if same { Shows::Same } else { Shows::At(s.0) };
-        }
-    }
-    Shown {
-        outcomes: numbers
-            .into_iter()
-            .map(|n| gaussian_miss(1.0 - found, n, gone))
-            .collect(),
-        shows,
-    }
-}
-
-/// A low-pass of fourth order: the higher a candidate truly is, the more it is
-/// weakened.
-fn low_pass(corner_hz: f64, p: &Prepared) -> Shown {
-    let loss = |f: f64| 10.0 * (f / corner_hz).powi(2 * LOW_PASS_ORDER).ln_1p() / 10f64.ln();
-    let seen: Vec<(f64, f64)> = p
-        .outlook
-        .candidates
-        .iter()
-        .map(|c| {
-            let loss = if is_recorder(&c.who) {
-                0.0
-            } else {
-                loss(c.recorder_hz)
-            };
-            // Too weak to be found: how weak is not seen.
-            (loss.min(p.snr_db - FOUND_DB + 3.0).max(0.0), LEVEL_SD_DB)
-        })
-        .collect();
-    let numbers = told_apart(&seen);
-    let count = numbers.iter().max().map_or(0, |n| n + 1);
-    let mut shows = vec![Shows::Same; count];
-    for (n, s) in numbers.iter().zip(&seen) {
-        if let Some(show) = shows.get_mut(*n) {
-            *show = if s.0 >= p.snr_db - FOUND_DB {
-                Shows::Gone
-            } else if s.0 > 2.5 * LEVEL_SD_DB {
-                Shows::Weaker(s.0)
-            } else {
-                Shows::Same
-            };
-        }
-    }
-    Shown {
-        outcomes: numbers.into_iter().map(|n| vec![(n, 1.0)]).collect(),
-        shows,
     }
 }
 
