@@ -8,10 +8,14 @@
 #![forbid(unsafe_code)]
 #![cfg_attr(test, allow(clippy::unwrap_used, clippy::expect_used, clippy::panic))]
 
+pub mod candidates;
 pub mod capture;
 pub mod evidence;
 pub mod fold;
 pub mod frontend;
+pub mod plan;
+pub mod predict;
+pub mod reconcile;
 pub mod report;
 pub mod scan;
 pub mod sources;

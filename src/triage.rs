@@ -4,6 +4,7 @@ use crate::capture::{Capture, CaptureError, OpenOptions, Spec};
 use crate::evidence::reference::Reference;
 use crate::evidence::{self, Evidence};
 use crate::fold::{Chain, ChainError};
+use crate::plan::{self, rates};
 use crate::sources::Site;
 use crate::spectrum::samples::{OnThreads, Passes};
 use crate::suspects::{self, Cause, Finding, Inference, Scene, SourceFit, Verdict};
@@ -36,6 +37,8 @@ pub struct Triage {
     pub gaps: u64,
     /// Value and unit of full scale where the site file tells it.
     pub full_scale: Option<(f64, String)>,
+    /// Every rate the signal went through.
+    pub chain: Chain,
     /// The tones.
     pub tones: ToneSet,
     /// Names of the listed sources, in the catalogue's order.
@@ -46,6 +49,8 @@ pub struct Triage {
     pub evidence: Evidence,
     /// Suspects and fitted sources.
     pub inference: Inference,
+    /// The best next test for the most doubtful tone, if one is open.
+    pub next: Option<plan::Test>,
 }
 
 /// Why a recording could not be triaged.
@@ -118,14 +123,16 @@ pub fn run(
         &options.references,
         up_to_hz,
     )?;
-    let inference = suspects::infer(&Scene {
+    let scene = Scene {
         tones: &tones.tones,
         site,
         chain: &chain,
         duration_s: spec.duration_s(),
         full_scale_known: spec.normalised || full_scale.is_some(),
         evidence: Some(&evidence),
-    });
+    };
+    let inference = suspects::infer(&scene);
+    let next = plan::next(&scene, &inference, &rates::usual(spec.rate_hz));
     Ok(Triage {
         recording: path.to_string_lossy().into_owned(),
         spec,
@@ -141,10 +148,24 @@ pub fn run(
         clock_described_ppm: site.recorder.assumed_clock_ppm(),
         evidence,
         inference,
+        next,
+        chain,
     })
 }
 
 impl Triage {
+    /// What inference worked on; `site` is the one it was run with.
+    pub fn scene<'a>(&'a self, site: &'a Site) -> Scene<'a> {
+        Scene {
+            tones: &self.tones.tones,
+            site,
+            chain: &self.chain,
+            duration_s: self.spec.duration_s(),
+            full_scale_known: self.spec.normalised || self.full_scale.is_some(),
+            evidence: Some(&self.evidence),
+        }
+    }
+
     /// Every tone with what is concluded of it.
     pub fn rows(&self) -> impl Iterator<Item = (&Tone, &Finding)> {
         self.inference

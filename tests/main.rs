@@ -8,6 +8,7 @@ mod fold;
 mod frontend;
 mod mended;
 mod page;
+mod planning;
 mod sample_data;
 mod scan;
 mod sources;

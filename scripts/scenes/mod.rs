@@ -171,6 +171,8 @@ struct Raw {
     latents: Vec<(f64, f64)>,
     noise_dbfs: f64,
     epsilon: f64,
+    /// The analog path as it is, described or not.
+    front: foldtrace::frontend::PreparedFrontEnd,
 }
 
 /// Draws a scene, seen as a detector at the Cramér–Rao bound would see it.
@@ -183,6 +185,62 @@ pub fn simulate(seed: u64) -> Simulated {
     let noise_cell_dbfs = raw.noise_dbfs - 10.0 * (half / cell).log10();
     (seen.tones, seen.truth) = observe(raw.partials, cell, half, noise_cell_dbfs, &mut rng);
     seen
+}
+
+/// A scene seen once more: at which rate, what was seen, and what is true.
+pub type Again = (Chain, Vec<Tone>, Vec<Truth>);
+
+/// The same scene seen at its own rate and, by the same recorder a little later, at
+/// each of the rates that `again` names once it has seen the first.
+pub fn simulate_again(
+    seed: u64,
+    again: impl FnOnce(&Simulated) -> Vec<f64>,
+) -> (Simulated, Vec<Again>) {
+    let mut rng = StdRng::seed_from_u64(seed);
+    let raw = draw(&mut rng);
+    let (noise_dbfs, epsilon, front) = (raw.noise_dbfs, raw.epsilon, raw.front);
+    let mut seen = raw.seen;
+    let cell = 1.0 / seen.duration_s;
+    let levels: Vec<f64> = raw
+        .partials
+        .iter()
+        .map(|p| p.level_dbfs - front.gain(TrueHz(p.truth.true_hz), seen.rate_hz).mean_db)
+        .collect();
+    let lines: Vec<Partial> = raw.partials.iter().map(Partial::copy).collect();
+    let noise = |rate_hz: f64| noise_dbfs - 10.0 * (rate_hz / 2.0 / cell).log10();
+    let half = seen.rate_hz / 2.0;
+    let own = noise(seen.rate_hz);
+    (seen.tones, seen.truth) = observe(raw.partials, cell, half, own, &mut rng);
+    let others = again(&seen)
+        .into_iter()
+        .map(|rate_hz| {
+            let chain = Chain::single(rate_hz).expect("a rate above 0");
+            let partials = lines
+                .iter()
+                .zip(&levels)
+                .map(|(p, level)| {
+                    let mut p = p.copy();
+                    let shown = chain.see_with_clock(TrueHz(p.truth.true_hz), epsilon);
+                    (p.seen_hz, p.truth.zone) = (shown.seen.0, shown.zone);
+                    p.level_dbfs = level + front.gain(TrueHz(p.truth.true_hz), rate_hz).mean_db;
+                    p
+                })
+                .collect();
+            let (tones, truth) = observe(partials, cell, rate_hz / 2.0, noise(rate_hz), &mut rng);
+            (chain, tones, truth)
+        })
+        .collect();
+    (seen, others)
+}
+
+impl Partial {
+    fn copy(&self) -> Partial {
+        Partial {
+            truth: self.truth.clone(),
+            terms: self.terms.clone(),
+            ..*self
+        }
+    }
 }
 
 /// Draws a scene, evaluates its lines at the true sample instants, adds noise and
@@ -414,6 +472,7 @@ fn draw(rng: &mut StdRng) -> Raw {
         latents: all_latents,
         noise_dbfs,
         epsilon,
+        front: true_front,
     }
 }
 

@@ -4,9 +4,12 @@ mod fold;
 mod help_files;
 mod inspect;
 mod output;
+mod plan;
+mod predict;
 mod progress;
 mod rates;
 mod reading;
+mod reconcile;
 mod scan;
 mod site;
 mod sources;
@@ -37,6 +40,15 @@ pub enum Command {
     /// Find the tones of recordings and rank what could have made each
     #[command(after_help = triage::HELP)]
     Triage(triage::Arguments),
+    /// Find where tones truly are from recordings of one place at several sample rates
+    #[command(after_help = reconcile::HELP)]
+    Reconcile(reconcile::Arguments),
+    /// List the tests that would settle a recording's open tones, best first
+    #[command(after_help = plan::HELP)]
+    Plan(plan::Arguments),
+    /// Foresee where the listed sources will be seen, and rank sample rates
+    #[command(after_help = predict::HELP)]
+    Predict(predict::Arguments),
     /// What recordings were taken for: layout, rate, gaps, what was assumed
     #[command(after_help = inspect::HELP)]
     Inspect(inspect::Arguments),
@@ -75,6 +87,9 @@ pub fn one_line(error: &clap::Error) -> String {
 pub fn run(command: Command) -> ExitCode {
     let done = match command {
         Command::Triage(arguments) => triage::run(&arguments),
+        Command::Reconcile(arguments) => reconcile::run(&arguments),
+        Command::Plan(arguments) => plan::run(&arguments),
+        Command::Predict(arguments) => predict::run(&arguments),
         Command::Inspect(arguments) => inspect::run(&arguments),
         Command::Scan(arguments) => scan::run(&arguments),
         Command::Fold(arguments) => fold::run(&arguments),

@@ -2,7 +2,7 @@
 
 use foldtrace::report::text::plain;
 use std::fmt::Display;
-use std::io::{self, Write};
+use std::io::{self, IsTerminal, Write};
 use std::path::Path;
 
 /// Exit code: some input could not be read, some output not written.
@@ -90,6 +90,15 @@ impl PermissionsFromUmask for tempfile::Builder<'_, '_> {
 /// A path as a message shows it: control characters escaped.
 pub fn shown(path: &Path) -> String {
     plain(&path.to_string_lossy())
+}
+
+/// Columns of the terminal that stdout is, if it is one.
+pub fn terminal_width() -> Option<usize> {
+    io::stdout()
+        .is_terminal()
+        .then(terminal_size::terminal_size)
+        .flatten()
+        .map(|(w, _)| usize::from(w.0))
 }
 
 /// `-` stands for stdout.

@@ -1,7 +1,7 @@
 //! `triage`: one recording in depth, or several one after the other.
 
 use super::output::{
-    SOME_FAILED, Stop, complain, is_stdout, shown, spare, to_file, to_stdout, usage,
+    SOME_FAILED, Stop, complain, is_stdout, shown, spare, terminal_width, to_file, to_stdout, usage,
 };
 use super::progress::Progress;
 use super::reading::Reading;
@@ -14,7 +14,7 @@ use foldtrace::report::{json, suspect_list, table, text::plain};
 use foldtrace::sources::Site;
 use foldtrace::triage;
 use std::ffi::OsStr;
-use std::io::{self, IsTerminal, Write};
+use std::io::{self, Write};
 use std::num::NonZeroUsize;
 use std::path::{Path, PathBuf};
 use std::process::ExitCode;
@@ -112,11 +112,7 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
         threads: None,
     };
     let top = arguments.top.get();
-    let width = io::stdout()
-        .is_terminal()
-        .then(terminal_size::terminal_size)
-        .flatten()
-        .map(|(w, _)| usize::from(w.0));
+    let width = terminal_width();
     let mut results = Vec::new();
     let mut failed = Vec::new();
     for (i, path) in arguments.recordings.iter().enumerate() {

@@ -124,7 +124,21 @@ pub struct PreparedFrontEnd {
     aperture_s: Option<f64>,
 }
 
+/// Scale on which weaker tones are more common, dB: one more e-fold of tones for
+/// each step down. A judgement, not a measurement.
+const RARITY_DB: f64 = 18.0;
+
 impl PreparedFrontEnd {
+    /// Share of tones at `f` that would still be seen behind the front end, in
+    /// `(0, 1]`: `E exp(G/R)` for a normal gain `G`, never above 1.
+    pub fn share_seen(&self, f: TrueHz, rate_hz: f64) -> f64 {
+        let gain = self.gain(f, rate_hz);
+        let scale = gain.sd_db / RARITY_DB;
+        (gain.mean_db / RARITY_DB + 0.5 * scale * scale)
+            .min(0.0)
+            .exp()
+    }
+
     /// See [`FrontEnd::gain`].
     pub fn gain(&self, f: TrueHz, rate_hz: f64) -> Gain {
         let f = TrueHz(f.0.abs());

@@ -99,6 +99,7 @@ fn recording(result: &Triage, top: usize) -> Value {
         "sources": sources(result),
         "evidence": result.evidence,
         "clock": {"ppm": result.inference.clock.ppm, "ppm_u95": result.inference.clock.ppm_u95},
+        "next_test": result.next,
         "summary": result.summary(),
     })
 }

@@ -4,7 +4,10 @@
 pub mod json;
 pub mod ladder;
 pub mod page;
+pub mod plan_table;
+pub mod prediction;
 pub mod reading;
+pub mod reconciled;
 pub mod sources_table;
 pub mod strip;
 pub mod suspect_list;

@@ -47,7 +47,7 @@ fn probability(p: f64) -> String {
     format!("{:.6}", (p * 1e6).floor() / 1e6)
 }
 
-fn verdict(v: Verdict) -> &'static str {
+pub(super) fn verdict(v: Verdict) -> &'static str {
     match v {
         Verdict::Direct => "direct",
         Verdict::Folded => "folded",
@@ -59,6 +59,13 @@ fn csv_writer<W: Write>(out: W) -> csv::Writer<W> {
     csv::WriterBuilder::new()
         .terminator(csv::Terminator::CRLF)
         .from_writer(out)
+}
+
+/// A writer of the list, its header written.
+pub(super) fn begin<W: Write>(out: W) -> csv::Result<csv::Writer<W>> {
+    let mut csv = csv_writer(out);
+    csv.write_record(COLUMNS)?;
+    Ok(csv)
 }
 
 /// Writes the header and every result's rows; `top` suspects a tone at most, and
@@ -80,9 +87,7 @@ pub fn write(results: &[Triage], top: usize, mut out: impl Write) -> csv::Result
 /// # Errors
 /// If `out` cannot be written.
 pub fn write_header(out: impl Write) -> csv::Result<()> {
-    let mut csv = csv_writer(out);
-    csv.write_record(COLUMNS)?;
-    csv.flush()?;
+    begin(out)?.flush()?;
     Ok(())
 }
 
@@ -103,30 +108,26 @@ pub fn write_rows(result: &Triage, top: usize, out: impl Write) -> csv::Result<(
         rows.push((None, unlisted));
         rows.sort_by(|a, b| b.1.total_cmp(&a.1));
         for (rank, (suspect, p)) in rows.into_iter().enumerate() {
-            let mut record = tone_cells(result, tone);
-            record.push(verdict(finding.verdict).into());
-            record.push(format!("{:.6}", finding.folded_probability));
-            record.push((rank + 1).to_string());
-            match suspect {
-                Some(s) => {
-                    let (true_hz, u95) = with_u95(s.true_hz.0, s.true_hz_u95);
-                    record.extend([
-                        defuse(&s.cause.name()),
-                        defuse(&s.line),
-                        true_hz,
-                        u95,
-                        s.zone.to_string(),
-                        s.sense.is_inverted().to_string(),
-                        probability(p),
-                        format!("{:.4}", s.coincidence),
-                    ]);
-                }
-                None => {
-                    record.push("unlisted".into());
-                    record.extend(std::iter::repeat_n(String::new(), 5));
-                    record.extend([probability(p), String::new()]);
-                }
-            }
+            let cells = Cells {
+                suspect: suspect.map_or("unlisted".into(), |s| s.cause.name()),
+                line: suspect.map_or("", |s| &s.line),
+                true_hz: suspect.map(|s| (s.true_hz.0, s.true_hz_u95)),
+                zone: suspect.map(|s| (s.zone, s.sense.is_inverted())),
+                probability: p,
+                coincidence: suspect.map(|s| s.coincidence),
+            };
+            let mut record = tone_cells(
+                &result.recording,
+                &result.channel_names(tone),
+                tone.number,
+                tone,
+            );
+            record.extend([
+                verdict(finding.verdict).to_owned(),
+                format!("{:.6}", finding.folded_probability),
+                (rank + 1).to_string(),
+            ]);
+            record.extend(cells.record());
             csv.write_record(&record)?;
         }
     }
@@ -134,13 +135,51 @@ pub fn write_rows(result: &Triage, top: usize, out: impl Write) -> csv::Result<(
     Ok(())
 }
 
-fn tone_cells(result: &Triage, tone: &Tone) -> Vec<String> {
+/// What is said of a suspect; `None` leaves a cell empty.
+pub(super) struct Cells<'a> {
+    pub suspect: String,
+    pub line: &'a str,
+    /// Value and ±.
+    pub true_hz: Option<(f64, f64)>,
+    /// Number, and whether it is inverted.
+    pub zone: Option<(u64, bool)>,
+    pub probability: f64,
+    pub coincidence: Option<f64>,
+}
+
+impl Cells<'_> {
+    /// The cells from `suspect` on.
+    pub fn record(&self) -> [String; 8] {
+        let (true_hz, u95) = self
+            .true_hz
+            .map_or(Default::default(), |(hz, u)| with_u95(hz, u));
+        [
+            defuse(&self.suspect),
+            defuse(self.line),
+            true_hz,
+            u95,
+            self.zone.map_or(String::new(), |z| z.0.to_string()),
+            self.zone.map_or(String::new(), |z| z.1.to_string()),
+            probability(self.probability),
+            self.coincidence
+                .map_or(String::new(), |c| format!("{c:.4}")),
+        ]
+    }
+}
+
+/// The cells up to `wander_hz`.
+pub(super) fn tone_cells(
+    recording: &str,
+    channels: &str,
+    number: usize,
+    tone: &Tone,
+) -> Vec<String> {
     let (seen, u95) = with_u95(tone.seen_hz.0, tone.seen_hz_u95);
     let wander_digits = decimals(tone.seen_hz_u95);
     vec![
-        defuse(&result.recording),
-        defuse(&result.channel_names(tone)),
-        tone.number.to_string(),
+        defuse(recording),
+        defuse(channels),
+        number.to_string(),
         seen,
         u95,
         format!("{:.2}", tone.level_dbfs),

@@ -1,6 +1,7 @@
 //! The table on the terminal: what was read, a row per tone with its suspects,
 //! the sources that were fitted, and one sentence at the end.
 
+use super::plan_table;
 use super::reading;
 use super::strip;
 use super::text::{count, percent, plain, with_u95};
@@ -24,10 +25,10 @@ pub(super) const WORTH_A_LINE: f64 = 0.02;
 /// A source that explains fewer tones is only as probable as it was before.
 pub(super) const EXPLAINS_SOMETHING: f64 = 0.05;
 
-const QUIET: Style = Style::new().dimmed();
-const HEAD: Style = Style::new().bold();
+pub(super) const QUIET: Style = Style::new().dimmed();
+pub(super) const HEAD: Style = Style::new().bold();
 
-fn verdict(v: Verdict) -> (&'static str, Style) {
+pub(super) fn verdict(v: Verdict) -> (&'static str, Style) {
     match v {
         Verdict::Direct => ("direct", Style::new()),
         Verdict::Folded => ("FOLDED", AnsiColor::Magenta.on_default().bold()),
@@ -64,6 +65,13 @@ pub fn write(
         }
         sources(result, out)?;
         for line in from_time(result) {
+            writeln!(out, "{line}")?;
+        }
+    }
+    if let Some(next) = &result.next {
+        writeln!(out)?;
+        let advice = format!("Best next test: {}", plan_table::advice(result, next));
+        for line in wrapped(&advice, width.unwrap_or(110)) {
             writeln!(out, "{line}")?;
         }
     }
@@ -163,7 +171,7 @@ fn rows(tones: &[(&Tone, &Finding)], top: usize) -> Vec<Row> {
     all
 }
 
-fn interval((value, u95): &(String, String)) -> String {
+pub(super) fn interval((value, u95): &(String, String)) -> String {
     format!("{value} ± {u95}")
 }
 
@@ -278,7 +286,7 @@ fn tones(
 
 /// Breaks `text` at blanks into lines of at most `width` characters, where words
 /// allow it.
-fn wrapped(text: &str, width: usize) -> Vec<String> {
+pub(super) fn wrapped(text: &str, width: usize) -> Vec<String> {
     let mut lines: Vec<String> = Vec::new();
     for word in text.split(' ') {
         match lines.last_mut() {

@@ -8,7 +8,9 @@ use super::shares::{Shares, collect};
 use super::solution::Solution;
 use super::timely::Timely;
 use super::unlisted::Origins;
-use super::{Cause, ClockFit, Finding, Ground, Inference, SourceFit, Suspect, Verdict, clock};
+use super::{
+    Cause, ClockFit, Finding, Ground, Inference, Place, SourceFit, Suspect, Verdict, clock,
+};
 use crate::sources::{LatentId, Line};
 use crate::units::{Sense, TrueHz, U95};
 
@@ -164,6 +166,15 @@ fn propose(
             sense: share.sense,
             probability: total,
             coincidence: worth.coincidence / total,
+            places: worth
+                .zones
+                .iter()
+                .map(|(&zone, share)| Place {
+                    recorder_hz: share.frequency().0,
+                    zone,
+                    probability: share.mass,
+                })
+                .collect(),
         });
     }
 }
@@ -229,6 +240,11 @@ fn name_byproducts(
                 sense: Sense::Upright,
                 probability,
                 coincidence: chance_of_byproduct(scene, first, b.tone),
+                places: vec![Place {
+                    recorder_hz: nu,
+                    zone: 1,
+                    probability,
+                }],
             },
             Maker::Parents(recipe) => {
                 // As far as known, the parents are where their best suspects say.
@@ -255,6 +271,11 @@ fn name_byproducts(
                     sense: seen.sense,
                     probability,
                     coincidence: chance_of_byproduct(scene, first, b.tone),
+                    places: vec![Place {
+                        recorder_hz: f,
+                        zone: seen.zone,
+                        probability,
+                    }],
                 }
             }
         };
@@ -275,6 +296,7 @@ fn name_byproducts(
         let byproduct = |s: &&Suspect| !matches!(s.cause, Cause::Source { .. });
         if let Some(same) = same {
             same.probability += suspect.probability;
+            same.places.extend(suspect.places);
         } else if finding.suspects.iter().filter(byproduct).count() < MOST_BYPRODUCTS {
             finding.suspects.push(suspect);
         } else if let Some(least) = finding
@@ -285,6 +307,9 @@ fn name_byproducts(
         {
             // Too faint for a row of its own, but not lost.
             least.probability += suspect.probability;
+            if let Some(place) = least.places.first_mut() {
+                place.probability += suspect.probability;
+            }
         }
     }
 }

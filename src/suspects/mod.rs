@@ -31,7 +31,7 @@ mod timely;
 mod unlisted;
 mod wander;
 
-pub use scene::Scene;
+pub use scene::{Scene, position_variance};
 
 use crate::sources::Kind;
 use crate::units::{Sense, TrueHz};
@@ -76,6 +76,20 @@ pub struct Suspect {
     pub probability: f64,
     /// Listed lines expected this close by pure chance.
     pub coincidence: f64,
+    /// Every place on the ladder where it could be; their probabilities sum to
+    /// `probability`. `true_hz`, `zone` and `sense` are those of the best.
+    pub places: Vec<Place>,
+}
+
+/// One place on a tone's ladder at which a suspect could have made it.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
+pub struct Place {
+    /// Analog frequency on the recorder's own scale, `f/(1+ε)`, Hz.
+    pub recorder_hz: f64,
+    /// Nyquist zone, from 1.
+    pub zone: u64,
+    /// Posterior probability of this suspect in this zone.
+    pub probability: f64,
 }
 
 /// `direct`, `folded` or `open`.

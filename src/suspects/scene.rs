@@ -49,6 +49,28 @@ const MEAN_OF_WANDER: f64 = 0.06;
 /// one fits best.
 const LEAST_SD_CELLS: f64 = 0.05;
 
+/// Variance of a tone's seen frequency as inference takes it, Hz²: its measured
+/// uncertainty, never below a small part of a resolution cell of a recording of
+/// `duration_s`, with some of its wander.
+pub fn position_variance(tone: &Tone, duration_s: f64) -> f64 {
+    let cell_hz = 1.0 / duration_s.max(1e-9);
+    let sd = position_sd(tone, cell_hz);
+    sd * sd + (MEAN_OF_WANDER * wander(tone)).powi(2)
+}
+
+fn position_sd(tone: &Tone, cell_hz: f64) -> f64 {
+    let sd = (tone.seen_hz_u95 / U95).max(LEAST_SD_CELLS * cell_hz);
+    if sd.is_finite() { sd } else { cell_hz }
+}
+
+fn wander(tone: &Tone) -> f64 {
+    if tone.wander_hz.is_finite() {
+        tone.wander_hz.max(0.0)
+    } else {
+        0.0
+    }
+}
+
 pub(super) fn measure(scene: &Scene) -> Vec<Measured> {
     let cell_hz = 1.0 / scene.duration_s.max(1e-9);
     let half = scene.chain.file_rate_hz() / 2.0;
@@ -56,19 +78,13 @@ pub(super) fn measure(scene: &Scene) -> Vec<Measured> {
         .tones
         .iter()
         .map(|t| {
-            let sd = (t.seen_hz_u95 / U95).max(LEAST_SD_CELLS * cell_hz);
-            let wander = if t.wander_hz.is_finite() {
-                t.wander_hz.max(0.0)
-            } else {
-                0.0
-            };
-            let sd = if sd.is_finite() { sd } else { cell_hz };
+            let sd = position_sd(t, cell_hz);
             Measured {
                 nu: t.seen_hz.0.clamp(0.0, half),
-                var: sd * sd + (MEAN_OF_WANDER * wander).powi(2),
+                var: position_variance(t, scene.duration_s),
                 snr_db: if t.snr_db.is_finite() { t.snr_db } else { 20.0 },
                 level_dbfs: Some(t.level_dbfs).filter(|l| scene.full_scale_known && l.is_finite()),
-                wander_hz: wander,
+                wander_hz: wander(t),
                 wander_floor_hz: (3.0 * sd).max(0.3 * cell_hz),
             }
         })

@@ -29,19 +29,12 @@ const LOWEST: f64 = 1.0 / 200.0;
 const HIGHEST: f64 = 50.0;
 /// Part of the direct tones that is spread evenly over the band.
 const EVEN: f64 = 0.5;
-/// Scale on which weaker tones are more common, dB (as the strengths' background).
-const RARITY_DB: f64 = 18.0;
 /// Rungs looked at.
 const MOST_RUNGS: f64 = 400.0;
 
 /// Share of tones that would still be seen behind the front end at `f`.
 fn passing(scene: &Scene, front: &PreparedFrontEnd, f: f64) -> f64 {
-    let gain = front.gain(TrueHz(f), scene.chain.converter_rate_hz());
-    // E exp(G/R) for G normal, but never above 1.
-    let scale = gain.sd_db / RARITY_DB;
-    (gain.mean_db / RARITY_DB + 0.5 * scale * scale)
-        .min(0.0)
-        .exp()
+    front.share_seen(TrueHz(f), scene.chain.converter_rate_hz())
 }
 
 /// Densities at each tone.

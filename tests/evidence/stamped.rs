@@ -76,6 +76,7 @@ fn a_file_without_times_has_no_stamped_rows() {
     std::fs::write(&path, "value\n".to_owned() + &"1\n2\n".repeat(20)).unwrap();
     let options = OpenOptions {
         rate_hz: Some(10.0),
+        ..OpenOptions::default()
     };
     let capture = Capture::open(&path, &options).unwrap();
     assert!(capture.stamped_blocks(7).unwrap().is_none());
