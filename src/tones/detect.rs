@@ -37,6 +37,18 @@ const FINE_SHARE: f64 = 0.75;
 pub struct Found {
     /// Steady tones, and tones that move or come and go.
     pub tones: Vec<Fit>,
+    /// The band without the steady ones.
+    pub rest: Band,
+}
+
+impl Found {
+    /// Nothing looked for yet.
+    pub fn nothing(band: Band) -> Found {
+        Found {
+            tones: Vec::new(),
+            rest: band,
+        }
+    }
 }
 
 /// A tone measured, in bins of the band's grid.
@@ -137,6 +149,7 @@ pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
     }
     Found {
         tones: followed(&residual, &lines, &wanderers),
+        rest: residual.into_band(),
     }
 }
 
@@ -176,7 +189,7 @@ fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<
         }
     });
     let mut fits: Vec<Fit> = steady.collect();
-    fits.extend(wanderers.iter().enumerate().map(|(i, w)| {
+    fits.extend(wanderers.iter().enumerate().filter_map(|(i, w)| {
         let target = Target {
             bin: w.bin,
             strays: w.strays,
@@ -186,6 +199,9 @@ fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<
             alone: alone(i, w.bin),
         };
         let track = track::follow(band, &target, |k| band.get(k), &mut work);
+        if track.jumps() {
+            return None;
+        }
         let (bin, bin_sd, wander) = match mean::mean(&track, w.bin * cells, w.present) {
             Some(m) => (
                 w.bin + m.offset / cells,
@@ -194,7 +210,7 @@ fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<
             ),
             None => (w.bin, w.bin_sd, w.wander),
         };
-        Fit {
+        Some(Fit {
             bin,
             bin_sd,
             wander,
@@ -202,7 +218,7 @@ fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<
             noise: w.noise,
             present: w.present,
             track,
-        }
+        })
     }));
     fits
 }

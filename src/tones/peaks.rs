@@ -1,6 +1,6 @@
 //! Cells that stand out at full resolution.
 
-use super::refine::View;
+use super::refine::{NOISE_REACH, View};
 use super::statistic::Fine;
 use super::threshold;
 use crate::spectrum::Band;
@@ -12,6 +12,11 @@ use std::collections::BTreeMap;
 pub const LOWEST: usize = 4;
 /// Chance that a cell of a pedestal or hump passes for a line on it.
 const RAGGED_CHANCE: f64 = 1e-5;
+
+/// A median of exponentials has 1/ln²2 times the relative variance of their mean.
+const MEDIAN_COST: f64 = 2.08;
+/// Hann-windowed cells are worth one in this many.
+const HANN_CELLS: f64 = 1.94;
 
 /// How high a cell, and later a fitted line, must stand.
 pub struct Level {
@@ -29,12 +34,15 @@ const FIRST_LOOK: f64 = 0.8;
 impl Level {
     /// For `false_alarms` expected in the band when it holds noise only.
     pub fn new(fine: &Fine, false_alarms: f64) -> Level {
-        let worth =
-            |floor: &Floor, power: &[f32], lag| floor.cells / correlation(power, &floor.level, lag);
+        // A fitted line's noise is the median of the cells around it.
+        let worth = |floor: &Floor, power: &[f32], lag, around: f64| {
+            floor.cells.min(around) / correlation(power, &floor.level, lag)
+        };
+        let around = (2 * NOISE_REACH + 1) as f64 / MEDIAN_COST;
         Level {
             per_cell: false_alarms / fine.plain.len() as f64,
-            plain_worth: worth(&fine.plain_floor, &fine.plain, 1),
-            hann_worth: worth(&fine.hann_floor, &fine.hann, 3),
+            plain_worth: worth(&fine.plain_floor, &fine.plain, 1, around),
+            hann_worth: worth(&fine.hann_floor, &fine.hann, 3, around / HANN_CELLS),
         }
     }
 
@@ -150,7 +158,8 @@ fn above_pedestal(
     let level = median / std::f32::consts::LN_2;
     // 2.08/n is the relative variance of a median of exponentials; Hann cells
     // are worth about half.
-    let worth = around.len() as f64 / 2.08 / if view == View::Hann { 1.94 } else { 1.0 };
+    let shared = if view == View::Hann { HANN_CELLS } else { 1.0 };
+    let worth = around.len() as f64 / MEDIAN_COST / shared;
     let raised = f64::from(level / floor) > 1.0 + 3.0 / worth.sqrt();
     !raised || f64::from(value / level) > threshold::ratio(1.0, worth, RAGGED_CHANCE)
 }
