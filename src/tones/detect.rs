@@ -4,13 +4,14 @@
 //! not explain, and patches that stand out only when smoothed, are judged as
 //! wandering tones or dropped as humps of noise.
 
+use super::cycle::{OF_LINES, OF_PATCH};
 use super::mean;
 use super::peaks::{LOWEST, Level, peaks};
 use super::refine::{Line, Residual, View, refine};
 use super::statistic::{Coarse, Fine, lower};
 use super::threshold;
 use super::track::{self, Target, Track};
-use super::wander::{Wanderer, judge};
+use super::wander::{Wanderer, judge, judge_cycle};
 use crate::spectrum::Band;
 use crate::spectrum::fft::Complex64;
 use std::ops::Range;
@@ -30,6 +31,12 @@ const HUMP_CHANCE: f64 = 1e-6;
 const PATCH_MARGIN: f64 = 3.0;
 /// A track that leaves a steady tone less probable than this shows wander.
 const UNSTEADY: f64 = 0.01;
+/// Lines that are looked at as tones that go on and off, the strongest.
+const MOST_CYCLES: usize = 60;
+/// Cells to either side that are cut out for one at most.
+const WIDEST_CYCLE: usize = 4000;
+/// The first side line of a switched tone has at least this share of its power.
+const LEAST_SIDE: f32 = 0.003;
 /// Share of the false alarms granted to peaks at full resolution.
 const FINE_SHARE: f64 = 0.75;
 
@@ -66,6 +73,8 @@ pub struct Fit {
     pub noise: f64,
     /// First and last moment present, as fractions of the recording.
     pub present: (f64, f64),
+    /// Share of the time between those.
+    pub duty: f64,
     /// Frequency and phase over time.
     pub track: Track,
 }
@@ -77,7 +86,17 @@ pub struct Fit {
 pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
     let mut fine = Fine::new(band);
     let level = Level::new(&fine, FINE_SHARE * false_alarms);
-    let (bunches, singles) = bunches(&peaks(band, &fine, &level));
+    let mut standing = peaks(band, &fine, &level);
+    let mut work = track::Work::default();
+    let cycles = cycles(band, &fine, &standing, level.fitted(View::Plain), &mut work);
+    let of_cycle = |i: usize| {
+        let k = i + band.first_bin;
+        cycles
+            .iter()
+            .any(|c| c.cells.start <= k + 2 && k < c.cells.end + 2)
+    };
+    standing.retain(|&i| !of_cycle(i));
+    let (bunches, singles) = bunches(&standing);
     let mut lines: Vec<Line> = singles.iter().map(|&i| start(band, &fine, i)).collect();
     let mut residual = refine(band, &mut lines);
     if !lines.is_empty() {
@@ -94,7 +113,7 @@ pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
         };
         let more: Vec<Line> = peaks(residual.band(), &rest, &level)
             .into_iter()
-            .filter(|&i| !near(i))
+            .filter(|&i| !near(i) && !of_cycle(i))
             .map(|i| start(band, &rest, i))
             .collect();
         if !more.is_empty() {
@@ -120,8 +139,9 @@ pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
         scales,
         residual,
         lines,
-        wanderers: Vec::new(),
+        wanderers: cycles,
         threshold: level.fitted(View::Plain),
+        work,
     };
     search.settle_all(patches);
     search.coarse((1.0 - FINE_SHARE) * false_alarms);
@@ -137,12 +157,12 @@ pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
         mut residual,
         ..
     } = search;
-    let wanderers = apart(wanderers);
+    let wanderers = apart(wanderers, band.samples as f64 / band.grid as f64);
     let (lines, splinters): (Vec<Line>, Vec<Line>) = lines.into_iter().partition(|l| {
         l.bin.is_finite()
             && l.bin >= SLOWEST
             && stands_out(l, band.samples, &level)
-            && !is_splinter(l, &wanderers, band.samples)
+            && !is_splinter(l, &wanderers, band)
     });
     for line in splinters.iter().filter(|l| l.bin.is_finite()) {
         residual.add(line, 1.0);
@@ -185,6 +205,7 @@ fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<
             strength: l.c.norm() * band.samples as f64,
             noise: l.noise,
             present: target.present,
+            duty: 1.0,
             track,
         }
     });
@@ -202,7 +223,9 @@ fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<
         if track.jumps() {
             return None;
         }
-        let (bin, bin_sd, wander) = match mean::mean(&track, w.bin * cells, w.present) {
+        // What was on and off has its mean from the stretches it was on.
+        let whole = (w.duty == 1.0).then(|| mean::mean(&track, w.bin * cells, w.present));
+        let (bin, bin_sd, wander) = match whole.flatten() {
             Some(m) => (
                 w.bin + m.offset / cells,
                 m.variance.sqrt() / cells,
@@ -217,6 +240,7 @@ fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<
             strength: w.strength,
             noise: w.noise,
             present: w.present,
+            duty: w.duty,
             track,
         })
     }));
@@ -247,22 +271,79 @@ fn strays_over(w: &Wanderer, bin: f64) -> bool {
 }
 
 /// Drops what lies where a stronger wandering tone strays: its splinters.
-fn apart(mut wanderers: Vec<Wanderer>) -> Vec<Wanderer> {
+fn apart(mut wanderers: Vec<Wanderer>, cells: f64) -> Vec<Wanderer> {
     wanderers.sort_by(|a, b| b.strength.total_cmp(&a.strength));
     let mut kept: Vec<Wanderer> = Vec::new();
     for tone in wanderers {
-        if !kept.iter().any(|k| strays_over(k, tone.bin)) {
+        let strength = tone.strength * tone.duty;
+        if !kept
+            .iter()
+            .any(|k| strays_over(k, tone.bin) || k.switching_at(tone.bin, cells) > strength)
+        {
             kept.push(tone);
         }
     }
     kept
 }
 
-fn is_splinter(line: &Line, wanderers: &[Wanderer], samples: usize) -> bool {
+fn is_splinter(line: &Line, wanderers: &[Wanderer], band: &Band) -> bool {
+    let samples = band.samples;
+    let cells = samples as f64 / band.grid as f64;
     let strength = line.c.norm() * samples as f64;
-    wanderers
-        .iter()
-        .any(|w| w.strength > strength && strays_over(w, line.bin))
+    wanderers.iter().any(|w| {
+        w.strength > strength
+            && (strays_over(w, line.bin) || w.switching_at(line.bin, cells) > strength)
+    })
+}
+
+/// Tones that go on and off: a strong peak among weaker ones may be one of them with
+/// the lines of its switching. The nearest of those is one switching rate away; four
+/// to a side hold most of the rest.
+fn cycles(
+    band: &Band,
+    fine: &Fine,
+    peaks: &[usize],
+    threshold: f64,
+    work: &mut track::Work,
+) -> Vec<Wanderer> {
+    let mut found: Vec<Wanderer> = Vec::new();
+    // strongest first, as they come
+    for &i in peaks.iter().take(MOST_CYCLES) {
+        let own = fine.hann[i];
+        let nearest = peaks
+            .iter()
+            .filter(|&&k| k.abs_diff(i) > 2 && fine.hann[k] > LEAST_SIDE * own)
+            .map(|&k| k.abs_diff(i))
+            .min();
+        let Some(nearest) = nearest else { continue };
+        // The wider the cut the sharper the switching shows, if nothing else is there.
+        for reach in [16 * nearest, 8 * nearest, 5 * nearest] {
+            if i < reach || i + reach >= band.bins.len() || reach > WIDEST_CYCLE {
+                continue;
+            }
+            let cells = i - reach..i + reach + 1;
+            let inside: Vec<usize> = peaks
+                .iter()
+                .copied()
+                .filter(|k| cells.contains(k))
+                .collect();
+            let taken = found.iter().any(|w| {
+                w.cells.start < cells.end + band.first_bin
+                    && cells.start + band.first_bin < w.cells.end
+            });
+            if taken || inside.len() < 3 || inside.iter().any(|&k| fine.hann[k] > own) {
+                continue;
+            }
+            let noise = f64::from(fine.hann_floor.level[i]);
+            let judged = judge_cycle(band, cells, noise, OF_LINES, work)
+                .filter(|t| t.strength.powi(2) * t.duty > threshold * noise);
+            if let Some(tone) = judged {
+                found.push(tone);
+                break;
+            }
+        }
+    }
+    found
 }
 
 /// Splits peaks into bunches of splinters (as ranges of cells) and the rest.
@@ -356,6 +437,7 @@ struct Patches {
     wanderers: Vec<Wanderer>,
     /// What a steady line's power over noise must exceed.
     threshold: f64,
+    work: track::Work,
 }
 
 impl Patches {
@@ -476,7 +558,17 @@ impl Patches {
         self.lines = outer;
         // A patch that reaches down to 0 Hz is drift.
         let drift = core.start + first < LOWEST;
-        let judged = judge(self.residual.band(), core, noise)
+        // Wider cuts show switching more sharply.
+        let band = self.residual.band();
+        let judged = [4, 1]
+            .into_iter()
+            .map(|wider| {
+                let more = wider * core.len();
+                core.start.saturating_sub(more)..(core.end + more).min(band.bins.len())
+            })
+            .filter(|cells| cells.len() < 2 * WIDEST_CYCLE)
+            .find_map(|cells| judge_cycle(band, cells, noise, OF_PATCH, &mut self.work))
+            .or_else(|| judge(band, core, noise))
             .filter(|t| !drift && t.strength.powi(2) > PATCH_MARGIN * self.threshold * noise);
         if let Some(tone) = judged {
             self.wanderers.push(tone);
@@ -527,7 +619,7 @@ impl Patches {
             .wanderers
             .iter()
             .filter(|w| w.cells.end > patch.start + first && w.cells.start < patch.end + first)
-            .map(|w| w.strength * w.strength * (w.present.1 - w.present.0))
+            .map(|w| w.strength * w.strength * (w.present.1 - w.present.0) * w.duty)
             .sum();
         of_lines + of_wanderers > 0.7 * excess
     }

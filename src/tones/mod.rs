@@ -1,5 +1,6 @@
 //! Tones: spectral lines found in a recording and measured.
 
+pub mod cycle;
 pub mod detect;
 pub mod kernel;
 pub mod mean;
@@ -51,6 +52,8 @@ pub struct Tone {
     pub from_s: f64,
     /// See `from_s`.
     pub to_s: f64,
+    /// Share of the time from `from_s` to `to_s` in which it is there, `(0, 1]`.
+    pub duty: f64,
     /// rms deviation of the tone's frequency from its mean, Hz; 0 when steady
     /// within what can be resolved.
     pub wander_hz: f64,
@@ -230,6 +233,7 @@ impl Rows {
                 snr_db: level.snr_db,
                 from_s: fit.present.0 * duration,
                 to_s: fit.present.1 * duration,
+                duty: fit.duty,
                 wander_hz: fit.wander * bin_hz,
                 linewidth_hz: 2.355 * fit.wander * bin_hz,
                 track: points(&fit.track, bin_hz, duration, band.rate_hz / 2.0),
@@ -270,6 +274,7 @@ impl Rows {
                 level_dbfs: strongest.level_dbfs,
                 snr_db: strongest.snr_db,
                 to_s: band.samples as f64 / band.rate_hz,
+                duty: 1.0,
                 channels,
                 ..Tone::default()
             });

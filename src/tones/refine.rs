@@ -294,6 +294,10 @@ pub fn refine(band: &Band, lines: &mut [Line]) -> Residual {
         }
     }
     for line in lines.iter_mut() {
+        // A fitted SNR is one too high on average, and near the threshold the peak's
+        // own curvature is uncertain: to first order in 1/SNR, both together.
+        let snr = line.snr(band.samples);
+        line.bin_sd *= snr / (snr - 1.0).max(0.5 * snr);
         let around: Vec<f64> = residual
             .range(line.bin, 8)
             .filter_map(|k| residual.value(k, line.view))

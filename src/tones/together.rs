@@ -103,9 +103,9 @@ pub fn together(bands: &[&Band], known: &[&Fit], false_alarms: f64) -> Vec<Joint
             .sum()
     };
     let plain: Vec<f64> = (0..n).map(|i| sum(&|f| &f.plain, i)).collect();
-    // As for one channel (see `Level::fitted`), for the highest point of a
-    // continuous spectrum.
-    let crossings = (std::f64::consts::PI * 16.0 / 3.0).sqrt();
+    // As for one channel (see `Level::fitted`), for the highest point of a continuous
+    // spectrum: √(πT/3) times as often, T about 16 and more for more channels.
+    let crossings = (std::f64::consts::PI * (16.0 + 2.0 * c as f64) / 3.0).sqrt();
     let per_cell = (false_alarms / n as f64 / crossings).min(0.1);
     let lowest = LOWEST.saturating_sub(one.first_bin);
     let to_end = one.grid / 2 - one.first_bin.min(one.grid / 2);
@@ -230,13 +230,14 @@ fn fit(bands: &[&Band], floors: &[f64], start: f64, lambda: f64) -> Joint {
         .collect();
     let total: f64 = channels.iter().map(|(s, noise)| s * s / noise).sum();
     // Cramér–Rao bound for the channels together, in cells: 6/((2π)²·SNR); what
-    // channels share counts once.
+    // channels share counts once, and each one's fitted SNR is one too high.
+    let weak = total / (total - bands.len() as f64).max(0.5 * total);
     let cells = bands
         .first()
         .map_or(1.0, |b| b.samples as f64 / b.grid as f64);
     Joint {
         bin,
-        bin_sd: (6.0 * lambda / total).sqrt() / std::f64::consts::TAU / cells,
+        bin_sd: weak * (6.0 * lambda / total).sqrt() / std::f64::consts::TAU / cells,
         channels,
     }
 }

@@ -6,6 +6,8 @@
 //! looks the same in a spectrum, but its |z|² is exponentially distributed. The
 //! second moment of |z|² tells them apart.
 
+use super::cycle::{Demand, cycle};
+use super::track::Work;
 use crate::spectrum::Band;
 use crate::spectrum::fft::{Complex32, Complex64, ComplexFft};
 use statrs::function::erf::erfc;
@@ -30,10 +32,44 @@ pub struct Wanderer {
     pub noise: f64,
     /// First and last moment present, as fractions of the recording.
     pub present: (f64, f64),
+    /// Share of the time between those that it is on.
+    pub duty: f64,
+    /// Stretches in which a tone that goes on and off is on, as fractions of the
+    /// recording; empty for others.
+    pub on: Vec<(f64, f64)>,
     /// Furthest excursion from the mean, bins.
     pub strays: f64,
     /// Cells it occupies.
     pub cells: std::ops::Range<usize>,
+}
+
+/// Margin on the strength of a switched tone's side lines.
+const SIDE_MARGIN: f64 = 1.5;
+
+impl Wanderer {
+    /// The strength that a tone's going on and off may leave at `bin`; `cells` is
+    /// resolution cells in a bin. 0 for one that does not.
+    ///
+    /// A stretch on from a to b leaves ∫exp(−2πi·d·t)dt at d cells; stretches add up as
+    /// they are where the tone keeps its phase, and as their squares where it starts
+    /// anew.
+    pub fn switching_at(&self, bin: f64, cells: f64) -> f64 {
+        let d = (bin - self.bin) * cells;
+        if self.on.is_empty() || d.abs() < 1.0 {
+            return 0.0;
+        }
+        let sum: Complex64 = self
+            .on
+            .iter()
+            .map(|&(a, b)| {
+                let turn =
+                    |t: f64| Complex64::from_polar(1.0, -std::f64::consts::TAU * (d * t).fract());
+                turn(b) - turn(a)
+            })
+            .sum();
+        let each = 2.0 * (self.on.len() as f64).sqrt();
+        SIDE_MARGIN * self.strength * sum.norm().max(each) / (std::f64::consts::TAU * d.abs())
+    }
 }
 
 /// Chance that the mean square over the square mean of `n` exponential variates
@@ -229,7 +265,59 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
             from as f64 / patch.z.len() as f64,
             to as f64 / patch.z.len() as f64,
         ),
+        duty: 1.0,
+        on: Vec::new(),
         strays: track.strays,
+        cells: band.first_bin + core.start..band.first_bin + core.end,
+    })
+}
+
+/// Judges the cells `core` of `band` as one tone that goes on and off.
+pub fn judge_cycle(
+    band: &Band,
+    core: std::ops::Range<usize>,
+    noise: f64,
+    demand: Demand,
+    work: &mut Work,
+) -> Option<Wanderer> {
+    let pad = (core.len() / 8).max(6);
+    let cells = core.start.saturating_sub(pad)..(core.end + pad).min(band.bins.len());
+    let patch = Patch::cut(band, cells, noise);
+    // The very ends ring, but a last stretch may be short.
+    let inner = 1;
+    let z = patch.z.get(inner..patch.z.len() - inner)?;
+    let found = cycle(z, patch.noise, demand, work)?;
+    let (first, last) = (found.on.first()?.start, found.on.last()?.end);
+    let n = patch.z.len() as f64;
+    // On at the spoilt ends is on from the start, or to the end.
+    let from = if first == 0 {
+        0.0
+    } else {
+        (first + inner) as f64 / n
+    };
+    let to = if last == z.len() {
+        1.0
+    } else {
+        (last + inner) as f64 / n
+    };
+    let samples_share = band.samples as f64 / band.grid as f64;
+    let width = patch.width as f64;
+    Some(Wanderer {
+        bin: patch.first as f64 + found.cycles.rem_euclid(1.0) * width,
+        bin_sd: found.cycles_sd * width,
+        wander: 0.0,
+        // a steady tone of |c| has a power of |X|² = (|c|·samples)² over the grid's
+        // share that holds samples
+        strength: (found.power * samples_share).sqrt(),
+        noise,
+        present: (from, to),
+        duty: found.duty(),
+        on: found
+            .on
+            .iter()
+            .map(|r| ((r.start + inner) as f64 / n, (r.end + inner) as f64 / n))
+            .collect(),
+        strays: 0.0,
         cells: band.first_bin + core.start..band.first_bin + core.end,
     })
 }
