@@ -9,6 +9,7 @@
 #![cfg_attr(test, allow(clippy::unwrap_used, clippy::expect_used, clippy::panic))]
 
 pub mod capture;
+pub mod evidence;
 pub mod fold;
 pub mod frontend;
 pub mod report;

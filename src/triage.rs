@@ -1,6 +1,8 @@
 //! The main job, end to end: one recording in depth.
 
 use crate::capture::{Capture, CaptureError, OpenOptions, Spec};
+use crate::evidence::reference::Reference;
+use crate::evidence::{self, Evidence};
 use crate::fold::{Chain, ChainError};
 use crate::sources::Site;
 use crate::suspects::{self, Cause, Finding, Inference, Scene, SourceFit, Verdict};
@@ -14,6 +16,8 @@ pub struct Options {
     pub rate_hz: Option<f64>,
     /// 1-based channel; `None` for all.
     pub channel: Option<usize>,
+    /// Tracks of sources, logged elsewhere.
+    pub references: Vec<Reference>,
 }
 
 /// One recording's result.
@@ -31,6 +35,8 @@ pub struct Triage {
     pub sources: Vec<String>,
     /// What was assumed of the clock before, ± parts per million.
     pub clock_described_ppm: f64,
+    /// What movement, phase and time stamps say.
+    pub evidence: Evidence,
     /// Suspects and fitted sources.
     pub inference: Inference,
 }
@@ -97,11 +103,21 @@ pub fn run(
         ..Search::default()
     };
     let tones = tones::find(&capture, &search, progress)?;
+    let up_to_hz = site.recorder.front_end.bandwidth_hz;
+    let evidence = evidence::gather(
+        &capture,
+        &tones.tones,
+        &chain,
+        &options.references,
+        up_to_hz,
+    )?;
     let inference = suspects::infer(&Scene {
         tones: &tones.tones,
         site,
         chain: &chain,
         duration_s: spec.duration_s(),
+        full_scale_known: spec.normalised || full_scale.is_some(),
+        evidence: Some(&evidence),
     });
     Ok(Triage {
         recording: path.to_string_lossy().into_owned(),
@@ -115,6 +131,7 @@ pub fn run(
             .map(|s| s.name.clone())
             .collect(),
         clock_described_ppm: site.recorder.assumed_clock_ppm(),
+        evidence,
         inference,
     })
 }

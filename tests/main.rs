@@ -5,6 +5,7 @@ mod capture;
 mod cli;
 mod fold;
 mod frontend;
+mod page;
 mod sample_data;
 mod sources;
 mod spectrum;

@@ -42,6 +42,8 @@ fn run(site: &str, rate_hz: f64, tones: &[Tone]) -> Inference {
         site: &site,
         chain: &chain,
         duration_s: 60.0,
+        full_scale_known: true,
+        evidence: None,
     })
 }
 
@@ -284,6 +286,8 @@ fn shares_sum_to_one_and_stay_in_range() {
             site: &s.site,
             chain: &s.chain,
             duration_s: s.duration_s,
+            full_scale_known: true,
+            evidence: None,
         });
         assert_eq!(inference.findings.len(), s.tones.len());
         for f in &inference.findings {

@@ -40,6 +40,8 @@ pub(super) struct Clock {
     previous_offset: Option<f64>,
     frame: u64,
     started: bool,
+    /// Stamp of the last row, where it fits those before it.
+    accepted: Option<f64>,
     fit: Fit,
     pub counts: Counts,
 }
@@ -67,6 +69,7 @@ impl Clock {
             previous_offset: None,
             frame: 0,
             started: false,
+            accepted: None,
             fit: Fit::default(),
             counts: Counts::default(),
         }
@@ -74,6 +77,7 @@ impl Clock {
 
     /// Takes the stamp of the next row, in seconds; `None` if it has none.
     pub(super) fn take(&mut self, stamp: Option<f64>) -> Advance {
+        self.accepted = None;
         let Some(stamp) = stamp else {
             self.counts.unstamped += 1;
             if self.started {
@@ -91,6 +95,7 @@ impl Clock {
             self.line = stamp + self.plan.start;
             self.last = stamp;
             self.fit.add(0.0, stamp);
+            self.accepted = Some(stamp);
             return Advance::Frame { missing: 0 };
         }
         let period = self.period();
@@ -133,7 +138,14 @@ impl Clock {
         self.counts.rows += 1;
         self.step(missing.saturating_add(1), rest);
         self.fit.add(self.frame as f64, stamp + self.offset);
+        // After the clock was set back, times no longer tell how far apart rows are.
+        self.accepted = (self.offset == 0.0).then_some(stamp);
         Advance::Frame { missing }
+    }
+
+    /// Stamp of the row taken last; `None` if it had none, or one out of line.
+    pub(super) fn accepted(&self) -> Option<f64> {
+        self.accepted
     }
 
     /// Moves the line on by `frames` and towards a row that is `late` periods

@@ -12,6 +12,7 @@ use super::csv_scan::Scan;
 use super::csv_sniff::{Table, sniff};
 use super::error::CaptureError;
 use super::line_limit::LONGEST_LINE;
+use super::stamped::StampedBlocks;
 use super::text::Encoding;
 use super::wording::nine_digits;
 use super::{Block, Channel, OpenOptions, Spec};
@@ -201,6 +202,22 @@ impl CsvRecipe {
             row_waits: false,
         })
     }
+
+    /// Rows with their own times; `None` without a time column.
+    pub(super) fn stamped(
+        &self,
+        rows_per_block: usize,
+    ) -> Result<Option<StampedBlocks>, CaptureError> {
+        if self.plan.is_none() {
+            return Ok(None);
+        }
+        Ok(Some(StampedBlocks {
+            rows: Rows::open(&self.source, &self.table, self.plan)?,
+            channels: self.channels.clone(),
+            rows_per_block,
+            next_frame: 0,
+        }))
+    }
 }
 
 /// One pass over the samples.
@@ -259,7 +276,7 @@ impl CsvBlocks {
 }
 
 /// NaN is the one mark of a missing sample, also for one beyond `f32`.
-fn narrow(value: f64) -> f32 {
+pub(super) fn narrow(value: f64) -> f32 {
     let value = value as f32;
     if value.is_finite() { value } else { f32::NAN }
 }

@@ -191,6 +191,11 @@ impl Rows {
         Some(since)
     }
 
+    /// The first stamp, in seconds.
+    pub(super) fn origin_s(&self) -> Option<f64> {
+        self.origin.map(|stamp| stamp.seconds as f64 + stamp.rest)
+    }
+
     fn has_number(&self) -> bool {
         let mut values = self.table.values.iter();
         values.any(|&column| matches!(self.value(column), Cell::Number(_)))

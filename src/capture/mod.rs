@@ -8,7 +8,8 @@
 //! CSV: `text` and `line_limit` give bounded lines in UTF-8, `csv_lines`,
 //! `csv_delimiter`, `csv_sniff` and `csv_time` find the layout from the first
 //! lines, `stamps` and `dates` read times, `clock_plan` and `clock` turn them into frame numbers and
-//! a rate, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks.
+//! a rate, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks, `stamped` rows
+//! with their own times.
 
 mod cells;
 mod clock;
@@ -27,6 +28,7 @@ mod error;
 mod line_limit;
 mod probe;
 mod riff;
+mod stamped;
 mod stamps;
 mod text;
 mod wav;
@@ -36,6 +38,7 @@ use std::fs::File;
 use std::path::{Path, PathBuf};
 
 pub use error::CaptureError;
+pub use stamped::{StampedBlock, StampedBlocks};
 
 use probe::Kind;
 
@@ -193,6 +196,21 @@ impl Capture {
             Recipe::Wav(wav) => Pass::Wav(wav.blocks(frames_per_block)?),
             Recipe::Csv(csv) => Pass::Csv(Box::new(csv.blocks(frames_per_block)?)),
         }))
+    }
+
+    /// Starts a pass over the rows that have a time of their own, with that time;
+    /// `None` where the file has none (WAV, or a CSV without a time column).
+    ///
+    /// # Errors
+    /// Where the file can no longer be opened.
+    pub fn stamped_blocks(
+        &self,
+        rows_per_block: usize,
+    ) -> Result<Option<StampedBlocks>, CaptureError> {
+        match &self.recipe {
+            Recipe::Wav(_) => Ok(None),
+            Recipe::Csv(csv) => csv.stamped(rows_per_block.max(1)),
+        }
     }
 }
 

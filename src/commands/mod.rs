@@ -1,6 +1,7 @@
 //! One file per command: its arguments, and what it does with the library.
 
 mod fold;
+mod help_files;
 mod output;
 mod progress;
 mod rates;
@@ -42,6 +43,9 @@ pub enum Command {
     /// Every line of the listed sources with its frequency and tolerance
     #[command(after_help = sources::HELP)]
     Sources(sources::Arguments),
+    /// Write shell completions and manual pages into a folder
+    #[command(after_help = help_files::HELP)]
+    HelpFiles(help_files::Arguments),
 }
 
 /// The gist of a usage error without the pages around it.
@@ -65,6 +69,7 @@ pub fn run(command: Command) -> ExitCode {
         Command::Fold(arguments) => fold::run(&arguments),
         Command::Unfold(arguments) => unfold::run(&arguments),
         Command::Sources(arguments) => sources::run(&arguments),
+        Command::HelpFiles(arguments) => help_files::run(&arguments),
     };
     match done {
         Ok(code) => code,

@@ -76,7 +76,9 @@ fn recording(result: &Triage, top: usize) -> Value {
                     "probability": finding.unlisted_direct + finding.unlisted_folded,
                     "in_band": finding.unlisted_direct,
                     "folded": finding.unlisted_folded,
+                    "at": finding.unlisted_at,
                 },
+                "rests_on": finding.grounds,
                 "suspects": suspects,
             })
         })
@@ -97,6 +99,7 @@ fn recording(result: &Triage, top: usize) -> Value {
         "analysis": result.tones.plan,
         "tones": tones,
         "sources": sources(result),
+        "evidence": result.evidence,
         "clock": {"ppm": result.inference.clock.ppm, "ppm_u95": result.inference.clock.ppm_u95},
         "summary": result.summary(),
     })

@@ -8,6 +8,7 @@
 //! does.
 
 pub mod condition;
+pub mod display;
 pub mod fft;
 pub mod floor;
 pub mod plan;

@@ -4,14 +4,16 @@
 //! not explain, and patches that stand out only when smoothed, are judged as
 //! wandering tones or dropped as humps of noise.
 
-use super::cycle::{OF_LINES, OF_PATCH};
-use super::mean;
+use super::cycle::OF_PATCH;
+use super::fits::{Fit, followed};
 use super::peaks::{LOWEST, Level, peaks};
 use super::refine::{Line, Residual, View, refine};
+use super::regions::merge;
 use super::statistic::{Coarse, Fine, lower};
+use super::switching::{WIDEST_CYCLE, cycles, judge_cycle};
 use super::threshold;
-use super::track::{self, Target, Track};
-use super::wander::{Wanderer, judge, judge_cycle};
+use super::track;
+use super::wander::{Wanderer, judge};
 use crate::spectrum::Band;
 use crate::spectrum::fft::Complex64;
 use std::ops::Range;
@@ -29,14 +31,6 @@ const HUMP_CHANCE: f64 = 1e-6;
 /// A patch gathers the highest of many cells: it must hold this many times what
 /// a single steady line must.
 const PATCH_MARGIN: f64 = 3.0;
-/// A track that leaves a steady tone less probable than this shows wander.
-const UNSTEADY: f64 = 0.01;
-/// Lines that are looked at as tones that go on and off, the strongest.
-const MOST_CYCLES: usize = 60;
-/// Cells to either side that are cut out for one at most.
-const WIDEST_CYCLE: usize = 4000;
-/// The first side line of a switched tone has at least this share of its power.
-const LEAST_SIDE: f32 = 0.003;
 /// Share of the false alarms granted to peaks at full resolution.
 const FINE_SHARE: f64 = 0.75;
 
@@ -56,27 +50,6 @@ impl Found {
             rest: band,
         }
     }
-}
-
-/// A tone measured, in bins of the band's grid.
-#[derive(Debug, Clone)]
-pub struct Fit {
-    /// Mean frequency while present.
-    pub bin: f64,
-    /// Standard deviation of that mean.
-    pub bin_sd: f64,
-    /// rms excursion from the mean; 0 when steady.
-    pub wander: f64,
-    /// |c|·samples while present: the tone is 2·|c|·cos(…).
-    pub strength: f64,
-    /// Noise power per cell.
-    pub noise: f64,
-    /// First and last moment present, as fractions of the recording.
-    pub present: (f64, f64),
-    /// Share of the time between those.
-    pub duty: f64,
-    /// Frequency and phase over time.
-    pub track: Track,
 }
 
 /// Finds the tones of a band.
@@ -173,98 +146,6 @@ pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
     }
 }
 
-/// Every tone with its track.
-fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<Fit> {
-    let band = residual.band();
-    let mut work = track::Work::default();
-    // resolution cells in a bin
-    let cells = band.samples as f64 / band.grid as f64;
-    let alone = |own: usize, bin: f64| {
-        wanderers
-            .iter()
-            .enumerate()
-            .filter(|&(i, _)| i != own)
-            .map(|(_, w)| (w.bin - bin).abs() - w.strays)
-            .fold(f64::INFINITY, f64::min)
-    };
-    let steady = lines.iter().map(|l| {
-        let target = Target {
-            bin: l.bin,
-            strays: 0.0,
-            snr: l.snr(band.samples),
-            noise: l.noise,
-            present: (0.0, 1.0),
-            alone: alone(usize::MAX, l.bin),
-        };
-        let track = track::follow(band, &target, |k| residual.with(l, k), &mut work);
-        let (bin, bin_sd, wander) = settled(l, &track, cells);
-        Fit {
-            bin,
-            bin_sd,
-            wander,
-            strength: l.c.norm() * band.samples as f64,
-            noise: l.noise,
-            present: target.present,
-            duty: 1.0,
-            track,
-        }
-    });
-    let mut fits: Vec<Fit> = steady.collect();
-    fits.extend(wanderers.iter().enumerate().filter_map(|(i, w)| {
-        let target = Target {
-            bin: w.bin,
-            strays: w.strays,
-            snr: w.strength * w.strength / w.noise,
-            noise: w.noise,
-            present: w.present,
-            alone: alone(i, w.bin),
-        };
-        let track = track::follow(band, &target, |k| band.get(k), &mut work);
-        if track.jumps() {
-            return None;
-        }
-        // What was on and off has its mean from the stretches it was on.
-        let whole = (w.duty == 1.0).then(|| mean::mean(&track, w.bin * cells, w.present));
-        let (bin, bin_sd, wander) = match whole.flatten() {
-            Some(m) => (
-                w.bin + m.offset / cells,
-                m.variance.sqrt() / cells,
-                mean::excursion(&track) / cells,
-            ),
-            None => (w.bin, w.bin_sd, w.wander),
-        };
-        Some(Fit {
-            bin,
-            bin_sd,
-            wander,
-            strength: w.strength,
-            noise: w.noise,
-            present: w.present,
-            duty: w.duty,
-            track,
-        })
-    }));
-    fits
-}
-
-/// Frequency, its standard deviation and the wander, in bins, of a line fitted as
-/// steady, in the light of its track.
-fn settled(line: &Line, track: &Track, cells: f64) -> (f64, f64, f64) {
-    let Some(m) = mean::mean(track, line.bin * cells, (0.0, 1.0)) else {
-        return (line.bin, line.bin_sd.hypot(line.strayed), 0.0);
-    };
-    let wander = if m.steady < UNSTEADY {
-        mean::excursion(track) / cells
-    } else {
-        0.0
-    };
-    (
-        line.bin + m.shift / cells,
-        line.bin_sd.hypot(m.more.sqrt() / cells),
-        wander,
-    )
-}
-
 /// Does a wandering tone stray over `bin`?
 fn strays_over(w: &Wanderer, bin: f64) -> bool {
     (w.bin - bin).abs() < (3.0 * w.wander).max(1.5)
@@ -294,56 +175,6 @@ fn is_splinter(line: &Line, wanderers: &[Wanderer], band: &Band) -> bool {
         w.strength > strength
             && (strays_over(w, line.bin) || w.switching_at(line.bin, cells) > strength)
     })
-}
-
-/// Tones that go on and off: a strong peak among weaker ones may be one of them with
-/// the lines of its switching. The nearest of those is one switching rate away; four
-/// to a side hold most of the rest.
-fn cycles(
-    band: &Band,
-    fine: &Fine,
-    peaks: &[usize],
-    threshold: f64,
-    work: &mut track::Work,
-) -> Vec<Wanderer> {
-    let mut found: Vec<Wanderer> = Vec::new();
-    // strongest first, as they come
-    for &i in peaks.iter().take(MOST_CYCLES) {
-        let own = fine.hann[i];
-        let nearest = peaks
-            .iter()
-            .filter(|&&k| k.abs_diff(i) > 2 && fine.hann[k] > LEAST_SIDE * own)
-            .map(|&k| k.abs_diff(i))
-            .min();
-        let Some(nearest) = nearest else { continue };
-        // The wider the cut the sharper the switching shows, if nothing else is there.
-        for reach in [16 * nearest, 8 * nearest, 5 * nearest] {
-            if i < reach || i + reach >= band.bins.len() || reach > WIDEST_CYCLE {
-                continue;
-            }
-            let cells = i - reach..i + reach + 1;
-            let inside: Vec<usize> = peaks
-                .iter()
-                .copied()
-                .filter(|k| cells.contains(k))
-                .collect();
-            let taken = found.iter().any(|w| {
-                w.cells.start < cells.end + band.first_bin
-                    && cells.start + band.first_bin < w.cells.end
-            });
-            if taken || inside.len() < 3 || inside.iter().any(|&k| fine.hann[k] > own) {
-                continue;
-            }
-            let noise = f64::from(fine.hann_floor.level[i]);
-            let judged = judge_cycle(band, cells, noise, OF_LINES, work)
-                .filter(|t| t.strength.powi(2) * t.duty > threshold * noise);
-            if let Some(tone) = judged {
-                found.push(tone);
-                break;
-            }
-        }
-    }
-    found
 }
 
 /// Splits peaks into bunches of splinters (as ranges of cells) and the rest.
@@ -412,19 +243,6 @@ fn unsteady(line: &Line) -> bool {
         View::Hann => 15.5 / 1.94,
     };
     threshold::exceedance(shape, 2.5, line.leftover) < UNSTEADY_CHANCE
-}
-
-/// Joins ranges that overlap or lie at most `gap` apart.
-pub fn merge(mut ranges: Vec<Range<usize>>, gap: usize) -> Vec<Range<usize>> {
-    ranges.sort_by_key(|r| (r.start, r.end));
-    let mut merged: Vec<Range<usize>> = Vec::new();
-    for r in ranges {
-        match merged.last_mut() {
-            Some(last) if r.start <= last.end + gap => last.end = last.end.max(r.end),
-            _ => merged.push(r),
-        }
-    }
-    merged
 }
 
 /// What is known while broad patches are looked at.

@@ -2,6 +2,7 @@
 
 pub mod cycle;
 pub mod detect;
+pub mod fits;
 pub mod kernel;
 pub mod mean;
 pub mod merge;
@@ -9,6 +10,7 @@ pub mod peaks;
 pub mod refine;
 pub mod regions;
 pub mod statistic;
+pub mod switching;
 pub mod threshold;
 pub mod together;
 pub mod track;
@@ -17,11 +19,13 @@ pub mod wander;
 pub use track::TrackPoint;
 
 use crate::spectrum::condition::Condition;
+use crate::spectrum::display::Spectrum;
 use crate::spectrum::plan::Plan;
 use crate::spectrum::samples::Passes;
 use crate::spectrum::{Band, least_noise, slice, welch, whole};
 use crate::units::{SeenHz, U95, amplitude_db, power_db};
 use detect::Found;
+use fits::Fit;
 use track::Track;
 
 /// A tone's strength in one channel.
@@ -109,6 +113,8 @@ pub struct ToneSet {
     pub condition: Vec<Condition>,
     /// Weaker tones left out beyond [`MOST_TONES`].
     pub left_out: usize,
+    /// The spectrum of each channel looked at, for looking at.
+    pub spectra: Vec<Spectrum>,
 }
 
 /// Most tones reported of a recording, the strongest: a noiseless test signal can
@@ -138,6 +144,7 @@ pub fn find<P: Passes>(
     };
     let false_alarms = search.false_alarms / shares as f64;
     let mut rows = Rows::default();
+    let mut spectra = Vec::new();
     let condition;
     match plan {
         Plan::Whole { grid, .. } => {
@@ -149,6 +156,7 @@ pub fn find<P: Passes>(
                     continue;
                 }
                 let band = whole::transform(samples, grid, recording.rate_hz(), search.step);
+                spectra.push(Spectrum::of_band(&band, channel, search.full_scale));
                 let found = detect::detect(&band, false_alarms, &[]);
                 rows.own(&found, channel, search.full_scale);
                 searched.push((channel, found));
@@ -157,6 +165,11 @@ pub fn find<P: Passes>(
         }
         Plan::Segments { segment, .. } => {
             let averaged = welch::average(recording, segment, &|n| progress(n, 2 * frames))?;
+            spectra.extend(
+                chosen
+                    .iter()
+                    .map(|&c| Spectrum::of_averaged(&averaged, c, search.full_scale)),
+            );
             let regions = regions::regions(&averaged, &chosen, false_alarms, frames);
             let wants: Vec<_> = regions.iter().flat_map(|r| r.wants()).collect();
             if !wants.is_empty() {
@@ -199,6 +212,7 @@ pub fn find<P: Passes>(
         missing: condition.iter().map(|c| c.missing).collect(),
         condition,
         left_out,
+        spectra,
     })
 }
 
@@ -253,7 +267,7 @@ impl Rows {
             return;
         }
         let bands: Vec<&Band> = searched.iter().map(|(_, f)| &f.rest).collect();
-        let known: Vec<&detect::Fit> = searched.iter().flat_map(|(_, f)| &f.tones).collect();
+        let known: Vec<&Fit> = searched.iter().flat_map(|(_, f)| &f.tones).collect();
         for joint in together::together(&bands, &known, false_alarms) {
             let Some(band) = bands.first() else { return };
             let mut channels: Vec<ChannelLevel> = searched
@@ -288,7 +302,7 @@ impl Rows {
                 let inside =
                     bin >= band.first_bin as f64 && bin < (band.first_bin + band.bins.len()) as f64;
                 let steady = tone.wander_hz == 0.0 && tone.seen_hz.0 < half;
-                let near = |f: &&detect::Fit| (f.bin - bin).abs() < 4.0 + 3.0 * f.wander;
+                let near = |f: &&Fit| (f.bin - bin).abs() < 4.0 + 3.0 * f.wander;
                 if !inside
                     || !steady
                     || tone.channels.iter().any(|c| c.channel == *channel)

@@ -1,6 +1,6 @@
 //! Where in a long recording's averaged spectrum to look closer.
 
-use super::detect::{Found, merge, stand_out};
+use super::detect::{Found, stand_out};
 use super::statistic::Coarse;
 use crate::spectrum::Band;
 use crate::spectrum::slice::Want;
@@ -186,4 +186,17 @@ fn cores(views: &[Coarse], false_alarms: f64) -> Vec<Range<usize>> {
         }
     }
     merge(cores, 3)
+}
+
+/// Joins ranges that overlap or lie at most `gap` apart.
+pub fn merge(mut ranges: Vec<Range<usize>>, gap: usize) -> Vec<Range<usize>> {
+    ranges.sort_by_key(|r| (r.start, r.end));
+    let mut merged: Vec<Range<usize>> = Vec::new();
+    for r in ranges {
+        match merged.last_mut() {
+            Some(last) if r.start <= last.end + gap => last.end = last.end.max(r.end),
+            _ => merged.push(r),
+        }
+    }
+    merged
 }

@@ -8,7 +8,7 @@
 //! estimated block by block along the frequency axis: noise is shared at some
 //! frequencies and not at others.
 
-use super::detect::Fit;
+use super::fits::Fit;
 use super::kernel::dirichlet;
 use super::peaks::LOWEST;
 use super::refine::NOISE_REACH;

@@ -6,8 +6,6 @@
 //! looks the same in a spectrum, but its |z|² is exponentially distributed. The
 //! second moment of |z|² tells them apart.
 
-use super::cycle::{Demand, cycle};
-use super::track::Work;
 use crate::spectrum::Band;
 use crate::spectrum::fft::{Complex32, Complex64, ComplexFft};
 use statrs::function::erf::erfc;
@@ -43,35 +41,6 @@ pub struct Wanderer {
     pub cells: std::ops::Range<usize>,
 }
 
-/// Margin on the strength of a switched tone's side lines.
-const SIDE_MARGIN: f64 = 1.5;
-
-impl Wanderer {
-    /// The strength that a tone's going on and off may leave at `bin`; `cells` is
-    /// resolution cells in a bin. 0 for one that does not.
-    ///
-    /// A stretch on from a to b leaves ∫exp(−2πi·d·t)dt at d cells; stretches add up as
-    /// they are where the tone keeps its phase, and as their squares where it starts
-    /// anew.
-    pub fn switching_at(&self, bin: f64, cells: f64) -> f64 {
-        let d = (bin - self.bin) * cells;
-        if self.on.is_empty() || d.abs() < 1.0 {
-            return 0.0;
-        }
-        let sum: Complex64 = self
-            .on
-            .iter()
-            .map(|&(a, b)| {
-                let turn =
-                    |t: f64| Complex64::from_polar(1.0, -std::f64::consts::TAU * (d * t).fract());
-                turn(b) - turn(a)
-            })
-            .sum();
-        let each = 2.0 * (self.on.len() as f64).sqrt();
-        SIDE_MARGIN * self.strength * sum.norm().max(each) / (std::f64::consts::TAU * d.abs())
-    }
-}
-
 /// Chance that the mean square over the square mean of `n` exponential variates
 /// is at most `t`.
 ///
@@ -97,17 +66,17 @@ pub fn steadiness_of_noise(n: f64, t: f64) -> f64 {
 }
 
 /// The patch as a signal in time: `cells` of the band, critically sampled.
-struct Patch {
-    first: usize,
+pub(super) struct Patch {
+    pub(super) first: usize,
     /// Cells, and samples over the whole grid.
-    width: usize,
-    z: Vec<Complex32>,
+    pub(super) width: usize,
+    pub(super) z: Vec<Complex32>,
     power: f64,
-    noise: f64,
+    pub(super) noise: f64,
 }
 
 impl Patch {
-    fn cut(band: &Band, cells: std::ops::Range<usize>, noise: f64) -> Patch {
+    pub(super) fn cut(band: &Band, cells: std::ops::Range<usize>, noise: f64) -> Patch {
         let mut z = band.bins[cells.clone()].to_vec();
         let power = z.iter().map(|z| f64::from(z.norm_sqr())).sum();
         let noise = noise * z.len() as f64;
@@ -268,56 +237,6 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
         duty: 1.0,
         on: Vec::new(),
         strays: track.strays,
-        cells: band.first_bin + core.start..band.first_bin + core.end,
-    })
-}
-
-/// Judges the cells `core` of `band` as one tone that goes on and off.
-pub fn judge_cycle(
-    band: &Band,
-    core: std::ops::Range<usize>,
-    noise: f64,
-    demand: Demand,
-    work: &mut Work,
-) -> Option<Wanderer> {
-    let pad = (core.len() / 8).max(6);
-    let cells = core.start.saturating_sub(pad)..(core.end + pad).min(band.bins.len());
-    let patch = Patch::cut(band, cells, noise);
-    // The very ends ring, but a last stretch may be short.
-    let inner = 1;
-    let z = patch.z.get(inner..patch.z.len() - inner)?;
-    let found = cycle(z, patch.noise, demand, work)?;
-    let (first, last) = (found.on.first()?.start, found.on.last()?.end);
-    let n = patch.z.len() as f64;
-    // On at the spoilt ends is on from the start, or to the end.
-    let from = if first == 0 {
-        0.0
-    } else {
-        (first + inner) as f64 / n
-    };
-    let to = if last == z.len() {
-        1.0
-    } else {
-        (last + inner) as f64 / n
-    };
-    let samples_share = band.samples as f64 / band.grid as f64;
-    let width = patch.width as f64;
-    Some(Wanderer {
-        bin: patch.first as f64 + found.cycles.rem_euclid(1.0) * width,
-        bin_sd: found.cycles_sd * width,
-        wander: 0.0,
-        // a steady tone of |c| has a power of |X|² = (|c|·samples)² over the grid's
-        // share that holds samples
-        strength: (found.power * samples_share).sqrt(),
-        noise,
-        present: (from, to),
-        duty: found.duty(),
-        on: found
-            .on
-            .iter()
-            .map(|r| ((r.start + inner) as f64 / n, (r.end + inner) as f64 / n))
-            .collect(),
-        strays: 0.0,
         cells: band.first_bin + core.start..band.first_bin + core.end,
     })
 }

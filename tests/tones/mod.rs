@@ -190,6 +190,74 @@ fn missing_samples_are_bridged_and_counted() {
 }
 
 #[test]
+fn faults_are_reported_and_make_no_tones() {
+    let mut rng = StdRng::seed_from_u64(111);
+    let n = 60_000;
+    // 16-bit steps, so that repeats mean something
+    let quantised = |x: &[f32]| -> Vec<f32> { x.iter().map(|v| (v * 300.0).round()).collect() };
+    let mut x: Vec<f32> = noise(&mut rng, n);
+    for v in &mut x {
+        // an offset, which every dropout interrupts
+        *v += 8.0;
+    }
+    add(&mut x, 1000.0, 61.7, 0.5, 0.0);
+    let mut dropping = quantised(&x);
+    for start in (1_500..n).step_by(1_000) {
+        dropping[start..start + 25].fill(0.0);
+    }
+    let set = run(1000.0, vec![dropping]);
+    assert_eq!(set.tones.len(), 1, "{:?}", set.tones);
+    near(&set, 61.7, 0.01);
+    let dropped = 25 * (n - 1_500).div_ceil(1_000) as u64;
+    assert!(
+        set.condition[0].stuck.abs_diff(dropped) < dropped / 20,
+        "{dropped}: {:?}",
+        set.condition[0].stuck
+    );
+    let clipped: Vec<f32> = quantised(&x).iter().map(|v| v.min(2_700.0)).collect();
+    let set = run(1000.0, vec![clipped, vec![5.0; n]]);
+    assert!(set.condition[0].clipped > 500 && set.condition[0].stuck == 0);
+    assert!(set.condition[1].constant && !set.condition[0].constant);
+    assert!(
+        set.tones
+            .iter()
+            .all(|t| t.channels.iter().all(|c| c.channel == 0))
+    );
+}
+
+#[test]
+fn channels_find_together_what_none_finds_alone() {
+    let mut rng = StdRng::seed_from_u64(112);
+    let n = 30_000;
+    let (mut found, mut alone) = (0, 0);
+    for _ in 0..10 {
+        let channels: Vec<Vec<f32>> = (0..3)
+            .map(|_| {
+                let mut x = noise(&mut rng, n);
+                // 10.5 dB in a cell: 1.5 dB below one channel's threshold
+                let phase = TAU * rng.random::<f64>();
+                add(
+                    &mut x,
+                    1000.0,
+                    123.45,
+                    (4.0 * 11.2 / n as f64).sqrt(),
+                    phase,
+                );
+                x
+            })
+            .collect();
+        alone += run(1000.0, vec![channels[0].clone()]).tones.len();
+        let set = run(1000.0, channels);
+        found += usize::from(set.tones.len() == 1 && set.tones[0].channels.len() >= 2);
+    }
+    assert!(found >= 7 && alone <= 4, "together {found}, alone {alone}");
+    // The same noise in every channel adds nothing.
+    let mut x = noise(&mut rng, n);
+    add(&mut x, 1000.0, 123.45, (4.0 * 7.0 / n as f64).sqrt(), 0.0);
+    assert!(run(1000.0, vec![x; 3]).tones.is_empty());
+}
+
+#[test]
 fn a_tone_that_comes_and_goes_is_timed() {
     let mut rng = StdRng::seed_from_u64(107);
     let (rate, n) = (1000.0, 100_000);
