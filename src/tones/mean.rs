@@ -158,10 +158,10 @@ impl Filter {
         let s = self.p[c][c] + variance;
         let gain: [f64; 3] = std::array::from_fn(|i| self.p[i][c] / s);
         let row = self.p[c];
-        for i in 0..3 {
-            self.x[i] += gain[i] * off;
-            for j in 0..3 {
-                self.p[i][j] -= gain[i] * row[j];
+        for ((x, p), g) in self.x.iter_mut().zip(&mut self.p).zip(gain) {
+            *x += g * off;
+            for (p, r) in p.iter_mut().zip(row) {
+                *p -= g * r;
             }
         }
         self.mirror();

@@ -130,8 +130,9 @@ pub fn together(bands: &[&Band], known: &[&Fit], false_alarms: f64) -> Vec<Joint
             .collect();
         let lambda = largest_eigenvalue(&quiet, c);
         let needed = c as f64 * threshold::ratio(c as f64 / lambda, WORTH, per_cell);
-        for i in cells.start.max(lowest)..cells.end.min(highest) {
-            let power = plain[i].max(sum(&|f| &f.between, i));
+        let (from, to) = (cells.start.max(lowest), cells.end.min(highest));
+        for (i, &here) in plain.iter().enumerate().take(to).skip(from) {
+            let power = here.max(sum(&|f| &f.between, i));
             if power > 0.8 * needed {
                 candidates.push((power, i, needed, lambda));
             }

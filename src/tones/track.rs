@@ -310,7 +310,7 @@ pub fn follow(
     let wanted = (PER_WINDOW * windows).max((6.0 * target.strays + 8.0 * cell) as usize);
     let width = crate::spectrum::fft::next_fast_len(wanted)
         .min((2.0 * room) as usize & !1)
-        .min(band.grid / 2 & !1);
+        .min((band.grid / 2) & !1);
     let base = Baseband::cut(band, centre as i64, width, bin);
     let points = windows_of(&base, windows, target, cell, work);
     if points.len() < 2 {
