@@ -13,6 +13,7 @@ pub mod evidence;
 pub mod fold;
 pub mod frontend;
 pub mod report;
+pub mod scan;
 pub mod sources;
 pub mod spectrum;
 pub mod suspects;

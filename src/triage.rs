@@ -5,19 +5,24 @@ use crate::evidence::reference::Reference;
 use crate::evidence::{self, Evidence};
 use crate::fold::{Chain, ChainError};
 use crate::sources::Site;
+use crate::spectrum::samples::{OnThreads, Passes};
 use crate::suspects::{self, Cause, Finding, Inference, Scene, SourceFit, Verdict};
 use crate::tones::{self, Search, Tone, ToneSet};
+use std::num::NonZeroUsize;
 use std::path::Path;
 
 /// What the analyst asks for.
 #[derive(Debug, Clone, Default)]
 pub struct Options {
-    /// Overrides the file's sample rate, Hz.
-    pub rate_hz: Option<f64>,
+    /// How to read the recording.
+    pub open: OpenOptions,
     /// 1-based channel; `None` for all.
     pub channel: Option<usize>,
     /// Tracks of sources, logged elsewhere.
     pub references: Vec<Reference>,
+    /// Threads that may work on a long recording; `None` for as many as there are
+    /// cores. No result depends on it.
+    pub threads: Option<NonZeroUsize>,
 }
 
 /// One recording's result.
@@ -27,6 +32,8 @@ pub struct Triage {
     pub recording: String,
     /// What was read.
     pub spec: Spec,
+    /// Runs of samples missing between time stamps.
+    pub gaps: u64,
     /// Value and unit of full scale where the site file tells it.
     pub full_scale: Option<(f64, String)>,
     /// The tones.
@@ -70,13 +77,8 @@ pub fn run(
     options: &Options,
     progress: &(dyn Fn(u64, u64) + Sync),
 ) -> Result<Triage, TriageError> {
-    let capture = Capture::open(
-        path,
-        &OpenOptions {
-            rate_hz: options.rate_hz,
-        },
-    )?;
-    let spec = capture.spec().clone();
+    let capture = Capture::open(path, &options.open)?;
+    let mut spec = capture.spec().clone();
     let channels = match options.channel {
         None => Vec::new(),
         Some(asked) if (1..=spec.channels.len()).contains(&asked) => vec![asked - 1],
@@ -102,7 +104,12 @@ pub fn run(
         channels,
         ..Search::default()
     };
-    let tones = tones::find(&capture, &search, progress)?;
+    let threads = options
+        .threads
+        .map_or_else(|| capture.threads(), NonZeroUsize::get);
+    let (tones, notes) =
+        tones::mended::find_mended(&OnThreads(&capture, threads), &search, progress)?;
+    spec.notes.extend(notes);
     let up_to_hz = site.recorder.front_end.bandwidth_hz;
     let evidence = evidence::gather(
         &capture,
@@ -122,6 +129,7 @@ pub fn run(
     Ok(Triage {
         recording: path.to_string_lossy().into_owned(),
         spec,
+        gaps: capture.gaps(),
         full_scale,
         tones,
         sources: site

@@ -2,7 +2,7 @@
 //! to whom the exact instants matter. [`super::Blocks`] hands out evenly numbered
 //! frames instead.
 
-use super::cells::Cell;
+use super::csv::Place;
 use super::csv_rows::Rows;
 use super::error::CaptureError;
 
@@ -31,8 +31,7 @@ impl StampedBlock {
 #[derive(Debug)]
 pub struct StampedBlocks {
     pub(super) rows: Rows,
-    /// Column and offset of each channel.
-    pub(super) channels: Vec<(usize, f64)>,
+    pub(super) channels: Vec<Place>,
     pub(super) rows_per_block: usize,
     pub(super) next_frame: u64,
 }
@@ -63,11 +62,8 @@ impl StampedBlocks {
             };
             block.frames.push(frame);
             block.times_s.push(time);
-            for (samples, &(column, offset)) in block.samples.iter_mut().zip(&self.channels) {
-                samples.push(match self.rows.value(column) {
-                    Cell::Number(number) => super::csv::narrow(number - offset),
-                    _ => f32::NAN,
-                });
+            for (samples, place) in block.samples.iter_mut().zip(&self.channels) {
+                samples.push(place.sample(&self.rows));
             }
         }
         Ok(!block.frames.is_empty())

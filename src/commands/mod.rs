@@ -2,9 +2,12 @@
 
 mod fold;
 mod help_files;
+mod inspect;
 mod output;
 mod progress;
 mod rates;
+mod reading;
+mod scan;
 mod site;
 mod sources;
 mod triage;
@@ -34,6 +37,12 @@ pub enum Command {
     /// Find the tones of recordings and rank what could have made each
     #[command(after_help = triage::HELP)]
     Triage(triage::Arguments),
+    /// What recordings were taken for: layout, rate, gaps, what was assumed
+    #[command(after_help = inspect::HELP)]
+    Inspect(inspect::Arguments),
+    /// Find and judge the tones of many recordings, in parallel, and what comes back
+    #[command(after_help = scan::HELP)]
+    Scan(scan::Arguments),
     /// Where analog frequencies land once sampled
     #[command(after_help = fold::HELP)]
     Fold(fold::Arguments),
@@ -66,6 +75,8 @@ pub fn one_line(error: &clap::Error) -> String {
 pub fn run(command: Command) -> ExitCode {
     let done = match command {
         Command::Triage(arguments) => triage::run(&arguments),
+        Command::Inspect(arguments) => inspect::run(&arguments),
+        Command::Scan(arguments) => scan::run(&arguments),
         Command::Fold(arguments) => fold::run(&arguments),
         Command::Unfold(arguments) => unfold::run(&arguments),
         Command::Sources(arguments) => sources::run(&arguments),

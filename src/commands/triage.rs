@@ -4,8 +4,9 @@ use super::output::{
     SOME_FAILED, Stop, complain, is_stdout, shown, spare, to_file, to_stdout, usage,
 };
 use super::progress::Progress;
+use super::reading::Reading;
 use super::site::load_site;
-use super::values::{Channel, Drawing, DrawingKind, channel, drawing, how_many, positive};
+use super::values::{Channel, Drawing, DrawingKind, channel, drawing, how_many};
 use clap::Args;
 use foldtrace::evidence::reference::{Reference, ReferenceFile};
 use foldtrace::report::page::{self, Failed, Input, PictureError, Record, Subject, command_line};
@@ -36,16 +37,13 @@ Examples:
 /// Options of `triage`.
 #[derive(Debug, Args)]
 pub struct Arguments {
-    /// Recordings: WAV, or CSV logs
+    /// Recordings: WAV, FLAC, or CSV logs
     #[arg(value_name = "REC", required = true)]
     pub recordings: Vec<PathBuf>,
     /// What is known of the place: a site file (TOML) or a list (CSV: name,hz,tolerance,orders);
     /// without it, a built-in list of common sources
     #[arg(long, value_name = "FILE")]
     pub site: Option<PathBuf>,
-    /// Sample rate, where the file does not tell it or tells it wrong
-    #[arg(long, value_name = "HZ", allow_negative_numbers = true, value_parser = positive)]
-    pub rate: Option<f64>,
     /// One channel, counted from 1, or all of them merged
     #[arg(long, value_name = "N|all", default_value = "all", value_parser = channel)]
     pub channel: Channel,
@@ -68,6 +66,8 @@ pub struct Arguments {
     /// Suspects listed per tone
     #[arg(long, value_name = "N", default_value = "5", value_parser = how_many)]
     pub top: NonZeroUsize,
+    #[command(flatten)]
+    pub reading: Reading,
 }
 
 /// Runs the command.
@@ -103,12 +103,13 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
     spare(inputs.map(PathBuf::as_path), &exports)?;
     let (site, site_name) = load_site(arguments.site.as_deref())?;
     let options = triage::Options {
-        rate_hz: arguments.rate,
+        open: arguments.reading.open_options(),
         channel: match arguments.channel {
             Channel::All => None,
             Channel::One(n) => Some(n.get()),
         },
         references: references(&arguments.reference, &site)?,
+        threads: None,
     };
     let top = arguments.top.get();
     let width = io::stdout()

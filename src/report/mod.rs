@@ -4,6 +4,7 @@
 pub mod json;
 pub mod ladder;
 pub mod page;
+pub mod reading;
 pub mod sources_table;
 pub mod strip;
 pub mod suspect_list;

@@ -55,54 +55,79 @@ fn verdict(v: Verdict) -> &'static str {
     }
 }
 
+fn csv_writer<W: Write>(out: W) -> csv::Writer<W> {
+    csv::WriterBuilder::new()
+        .terminator(csv::Terminator::CRLF)
+        .from_writer(out)
+}
+
 /// Writes the header and every result's rows; `top` suspects a tone at most, and
 /// always the row `unlisted`.
 ///
 /// # Errors
 /// If `out` cannot be written.
-pub fn write(results: &[Triage], top: usize, out: impl Write) -> csv::Result<()> {
-    let mut csv = csv::WriterBuilder::new()
-        .terminator(csv::Terminator::CRLF)
-        .from_writer(out);
-    csv.write_record(COLUMNS)?;
+pub fn write(results: &[Triage], top: usize, mut out: impl Write) -> csv::Result<()> {
+    write_header(&mut out)?;
     for result in results {
-        for (tone, finding) in result.rows() {
-            let unlisted = finding.unlisted_direct + finding.unlisted_folded;
-            let mut rows: Vec<(Option<&Suspect>, f64)> = finding
-                .suspects
-                .iter()
-                .take(top)
-                .map(|s| (Some(s), s.probability))
-                .collect();
-            rows.push((None, unlisted));
-            rows.sort_by(|a, b| b.1.total_cmp(&a.1));
-            for (rank, (suspect, p)) in rows.into_iter().enumerate() {
-                let mut record = tone_cells(result, tone);
-                record.push(verdict(finding.verdict).into());
-                record.push(format!("{:.6}", finding.folded_probability));
-                record.push((rank + 1).to_string());
-                match suspect {
-                    Some(s) => {
-                        let (true_hz, u95) = with_u95(s.true_hz.0, s.true_hz_u95);
-                        record.extend([
-                            defuse(&s.cause.name()),
-                            defuse(&s.line),
-                            true_hz,
-                            u95,
-                            s.zone.to_string(),
-                            s.sense.is_inverted().to_string(),
-                            probability(p),
-                            format!("{:.4}", s.coincidence),
-                        ]);
-                    }
-                    None => {
-                        record.push("unlisted".into());
-                        record.extend(std::iter::repeat_n(String::new(), 5));
-                        record.extend([probability(p), String::new()]);
-                    }
+        write_rows(result, top, &mut out)?;
+    }
+    out.flush()?;
+    Ok(())
+}
+
+/// Writes the header alone.
+///
+/// # Errors
+/// If `out` cannot be written.
+pub fn write_header(out: impl Write) -> csv::Result<()> {
+    let mut csv = csv_writer(out);
+    csv.write_record(COLUMNS)?;
+    csv.flush()?;
+    Ok(())
+}
+
+/// Writes one result's rows without the header; see [`write`].
+///
+/// # Errors
+/// If `out` cannot be written.
+pub fn write_rows(result: &Triage, top: usize, out: impl Write) -> csv::Result<()> {
+    let mut csv = csv_writer(out);
+    for (tone, finding) in result.rows() {
+        let unlisted = finding.unlisted_direct + finding.unlisted_folded;
+        let mut rows: Vec<(Option<&Suspect>, f64)> = finding
+            .suspects
+            .iter()
+            .take(top)
+            .map(|s| (Some(s), s.probability))
+            .collect();
+        rows.push((None, unlisted));
+        rows.sort_by(|a, b| b.1.total_cmp(&a.1));
+        for (rank, (suspect, p)) in rows.into_iter().enumerate() {
+            let mut record = tone_cells(result, tone);
+            record.push(verdict(finding.verdict).into());
+            record.push(format!("{:.6}", finding.folded_probability));
+            record.push((rank + 1).to_string());
+            match suspect {
+                Some(s) => {
+                    let (true_hz, u95) = with_u95(s.true_hz.0, s.true_hz_u95);
+                    record.extend([
+                        defuse(&s.cause.name()),
+                        defuse(&s.line),
+                        true_hz,
+                        u95,
+                        s.zone.to_string(),
+                        s.sense.is_inverted().to_string(),
+                        probability(p),
+                        format!("{:.4}", s.coincidence),
+                    ]);
                 }
-                csv.write_record(&record)?;
+                None => {
+                    record.push("unlisted".into());
+                    record.extend(std::iter::repeat_n(String::new(), 5));
+                    record.extend([probability(p), String::new()]);
+                }
             }
+            csv.write_record(&record)?;
         }
     }
     csv.flush()?;

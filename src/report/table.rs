@@ -1,8 +1,9 @@
 //! The table on the terminal: what was read, a row per tone with its suspects,
 //! the sources that were fitted, and one sentence at the end.
 
+use super::reading;
 use super::strip;
-use super::text::{count, hertz, percent, plain, with_u95};
+use super::text::{count, percent, plain, with_u95};
 use crate::spectrum::condition::Condition;
 use crate::suspects::{Finding, Ground, Suspect, Verdict};
 use crate::tones::Tone;
@@ -83,27 +84,7 @@ pub fn write(
 
 fn what_was_read(result: &Triage, site_name: &str, out: &mut dyn Write) -> io::Result<()> {
     let spec = &result.spec;
-    writeln!(
-        out,
-        "{HEAD}{}{HEAD:#}: {}, {} Hz, {}, {}, resolves {} Hz",
-        plain(&result.recording),
-        plain(&spec.format),
-        hertz(spec.rate_hz),
-        count(spec.channels.len(), "channel", "channels"),
-        duration(spec.duration_s()),
-        hertz(result.tones.cell_hz),
-    )?;
-    if !spec.normalised {
-        let names: Vec<String> = spec
-            .channels
-            .iter()
-            .map(|c| match &c.unit {
-                Some(unit) => format!("{} [{}]", plain(&c.name), plain(unit)),
-                None => plain(&c.name),
-            })
-            .collect();
-        writeln!(out, "  columns: {}", names.join(", "))?;
-    }
+    reading::write(&result.recording, spec, Some(result.tones.cell_hz), out)?;
     match &result.full_scale {
         Some((value, unit)) => {
             writeln!(out, "  0 dBFS = amplitude {value} {}", plain(unit))?;
@@ -112,9 +93,6 @@ fn what_was_read(result: &Triage, site_name: &str, out: &mut dyn Write) -> io::R
             writeln!(out, "  0 dBFS = amplitude 1 (full scale is not described)")?;
         }
         None => {}
-    }
-    for note in &spec.notes {
-        writeln!(out, "  {}", plain(note))?;
     }
     condition(result, out)?;
     writeln!(out, "  sources: {}", plain(site_name))
@@ -164,16 +142,6 @@ fn condition(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
         writeln!(out, "  channel {} holds one value only", dead.join(", "))?;
     }
     Ok(())
-}
-
-pub(super) fn duration(seconds: f64) -> String {
-    if seconds < 120.0 {
-        format!("{} s", hertz(seconds))
-    } else if seconds < 7200.0 {
-        format!("{:.1} min", seconds / 60.0)
-    } else {
-        format!("{:.2} h", seconds / 3600.0)
-    }
 }
 
 /// One printed line: a tone's own cells are only on its first.

@@ -5,6 +5,7 @@ pub mod detect;
 pub mod fits;
 pub mod kernel;
 pub mod mean;
+pub mod mended;
 pub mod merge;
 pub mod peaks;
 pub mod refine;

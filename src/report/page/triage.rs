@@ -9,8 +9,9 @@ use super::verdicts::{Sentence, Tally, sentences, tally};
 use super::{Frame, Record, signed};
 use crate::evidence::reference::Reference;
 use crate::fold::Chain;
+use crate::report::reading::duration;
 use crate::report::table::{
-    self, EXPLAINS_SOMETHING, WORTH_A_LINE, duration, latent_word, luck, unlisted_words,
+    self, EXPLAINS_SOMETHING, WORTH_A_LINE, latent_word, luck, unlisted_words,
 };
 use crate::report::text::{count, hertz, percent, plain, with_u95};
 use crate::sources::Site;
