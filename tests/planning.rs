@@ -30,6 +30,7 @@ fn tones(list: &[(f64, f64)]) -> Vec<Tone> {
             linewidth_hz: 0.0,
             track: Vec::new(),
             track_step_s: 0.0,
+            duty: 1.0,
             channels: Vec::new(),
         })
         .collect()

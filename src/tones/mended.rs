@@ -106,6 +106,7 @@ fn mend<P: Passes>(
         return Ok((moved(found, stretch_s(stretch.from)), vec![note]));
     }
     let missing = first.missing.clone();
+    let condition = first.condition.clone();
     let model = match first.plan {
         Plan::Whole { .. } => Model::pursue(recording)?,
         // Too long to be held: a tone is steady between gaps, if it is at all.
@@ -130,6 +131,7 @@ fn mend<P: Passes>(
         tone.seen_hz_u95 /= present.sqrt();
     }
     tones.missing = missing;
+    tones.condition = condition;
     let note = match drawn {
         0 => Vec::new(),
         1 => vec!["the strongest steady tone was drawn on through the missing samples".into()],
