@@ -39,6 +39,8 @@ fn main() {
                 site: &scene.site,
                 chain: &scene.chain,
                 duration_s: scene.duration_s,
+                full_scale_known: true,
+                evidence: None,
             };
             let found = infer(&own);
             // Only what can be tried here: other rates.
@@ -60,6 +62,8 @@ fn main() {
             site: &scene.site,
             chain: &scene.chain,
             duration_s: scene.duration_s,
+            full_scale_known: true,
+            evidence: None,
         };
         let found = infer(&own);
         let truth = &scene.truth[tone];

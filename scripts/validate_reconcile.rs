@@ -49,6 +49,7 @@ fn seen(rng: &mut StdRng, f: f64, snr_db: f64, rate_hz: f64, epsilon: f64, noisy
         wander_hz: 0.0,
         linewidth_hz: 0.0,
         track: Vec::new(),
+        track_step_s: 0.0,
         channels: Vec::new(),
     }
 }
@@ -64,6 +65,8 @@ fn put_together(sites: &[&Site], rates_hz: &[f64], tones: &[Vec<Tone>]) -> Recon
             site: sites[i.min(sites.len() - 1)],
             chain: &chains[i],
             duration_s: SECONDS,
+            full_scale_known: true,
+            evidence: None,
         })
         .collect();
     let found: Vec<_> = scenes.iter().map(infer).collect();
@@ -205,6 +208,8 @@ fn places(seed: u64, count: u64) {
             site: &here.site,
             chain: &here.chain,
             duration_s: here.duration_s,
+            full_scale_known: true,
+            evidence: None,
         };
         // With nothing, or next to nothing, in one of them there is nothing to compare.
         if tones.len().min(here.tones.len()) >= 3 {

@@ -105,6 +105,13 @@ fn bound(amplitude: f64, sigma: f64, n: f64) -> f64 {
     (24.0 * sigma * sigma / (amplitude * amplitude * n * (n * n - 1.0))).sqrt() / TAU
 }
 
+/// A share with its standard error.
+fn share(part: usize, of: usize) -> String {
+    let p = part as f64 / of.max(1) as f64;
+    let se = ((p * (1.0 - p)).max(0.25 / of.max(1) as f64) / of.max(1) as f64).sqrt();
+    format!("{p:.4} ± {se:.4}")
+}
+
 fn nearest(set: &ToneSet, f: f64) -> Option<&foldtrace::tones::Tone> {
     set.tones
         .iter()
@@ -253,6 +260,75 @@ fn sensitivity(trials: usize, rng: &mut StdRng) {
     }
 }
 
+/// Tones that stray by less than shows, or a little more: does the interval of their
+/// mean hold?
+fn strays(trials: usize, rng: &mut StdRng) {
+    for (low, high) in [(0.003, 0.03), (0.03, 0.3), (0.3, 3.0), (3.0, 30.0)] {
+        let (mut inside, mut found, mut rows) = (0, 0, 0);
+        let mut widths = 0.0;
+        for _ in 0..trials {
+            let n = 65_536;
+            let cell = 1.0 / n as f64;
+            let rms = cell * low * f64::powf(high / low, rng.random());
+            let memory = n as f64 * 0.02 * 50f64.powf(rng.random());
+            let keep = (-1.0 / memory).exp();
+            let f = 0.05 + 0.4 * rng.random::<f64>();
+            let mut x = white(rng, n);
+            let snr = 10f64.powf(2.0 + 3.0 * rng.random::<f64>());
+            let amplitude = (4.0 * snr / n as f64).sqrt();
+            let (mut u, mut smooth) = (normal(rng), normal(rng));
+            let walk: Vec<f64> = (0..n)
+                .map(|_| {
+                    u = keep * u + (1.0 - keep * keep).sqrt() * normal(rng);
+                    smooth += (u - smooth) * (1.0 - keep);
+                    smooth
+                })
+                .collect();
+            let scale = rms / (walk.iter().map(|w| w * w).sum::<f64>() / n as f64).sqrt();
+            let mut phase = rng.random::<f64>();
+            let mut mean = 0.0;
+            for (v, w) in x.iter_mut().zip(&walk) {
+                *v += amplitude * (TAU * phase).cos();
+                phase += f + scale * w;
+                mean += (f + scale * w) / n as f64;
+            }
+            let set = run(&x);
+            rows += set.tones.len();
+            let reach = 3.0 * cell + 2.0 * rms;
+            if let Some(t) = nearest(&set, mean).filter(|t| (t.seen_hz.0 - mean).abs() < reach) {
+                found += 1;
+                let ok = (t.seen_hz.0 - mean).abs() <= t.seen_hz_u95;
+                inside += usize::from(ok);
+                if std::env::var_os("SHOW").is_some() {
+                    for p in &t.track {
+                        if ((p.seen_hz.0 - mean) / (5.0 * p.sd_hz + 5.0 * rms)).abs() > 1.0 {
+                            println!("ODD {:?} mean {mean} step {} n {n}", p, t.track_step_s);
+                        }
+                    }
+                }
+                widths += (t.seen_hz_u95 / bound(amplitude, 1.0, n as f64)).ln();
+                if !ok && std::env::var_os("SHOW").is_some() {
+                    println!(
+                        "rms {:.4} cells, memory {:.3}, snr {:.1} dB, off {:.3} cells, u95 {:.3}, wander {:.3}, points {}",
+                        rms / cell,
+                        memory / n as f64,
+                        10.0 * snr.log10(),
+                        (t.seen_hz.0 - mean) / cell,
+                        t.seen_hz_u95 / cell,
+                        t.wander_hz / cell,
+                        t.track.len()
+                    );
+                }
+            }
+        }
+        println!(
+            "straying {low} to {high} cells rms: {found} of {trials} found, {rows} rows; u95 holds {}, typically {:.1} x a steady tone's",
+            share(inside, found),
+            (widths / found as f64).exp() / 1.96
+        );
+    }
+}
+
 /// 40 lines of a fundamental that wanders 0.1 % rms with a time constant.
 fn family(trials: usize, rng: &mut StdRng) {
     let (mut rows, mut lines, mut found, mut inside) = (0, 0, 0, 0);
@@ -329,6 +405,9 @@ fn main() {
     }
     if wants("sensitivity") {
         sensitivity(trials * 2, rng);
+    }
+    if wants("strays") {
+        strays(trials, rng);
     }
     if wants("family") {
         family(trials.div_ceil(20), rng);

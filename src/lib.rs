@@ -10,6 +10,7 @@
 
 pub mod candidates;
 pub mod capture;
+pub mod evidence;
 pub mod fold;
 pub mod frontend;
 pub mod plan;

@@ -1,6 +1,8 @@
 //! The main job, end to end: one recording in depth.
 
 use crate::capture::{Capture, CaptureError, OpenOptions, Spec};
+use crate::evidence::reference::Reference;
+use crate::evidence::{self, Evidence};
 use crate::fold::{Chain, ChainError};
 use crate::plan::{self, rates};
 use crate::sources::Site;
@@ -11,10 +13,12 @@ use std::path::Path;
 /// What the analyst asks for.
 #[derive(Debug, Clone, Default)]
 pub struct Options {
-    /// Overrides the file's sample rate, Hz.
-    pub rate_hz: Option<f64>,
+    /// How to read the recording.
+    pub open: OpenOptions,
     /// 1-based channel; `None` for all.
     pub channel: Option<usize>,
+    /// Tracks of sources, logged elsewhere.
+    pub references: Vec<Reference>,
 }
 
 /// One recording's result.
@@ -34,6 +38,8 @@ pub struct Triage {
     pub sources: Vec<String>,
     /// What was assumed of the clock before, ± parts per million.
     pub clock_described_ppm: f64,
+    /// What movement, phase and time stamps say.
+    pub evidence: Evidence,
     /// Suspects and fitted sources.
     pub inference: Inference,
     /// The best next test for the most doubtful tone, if one is open.
@@ -69,13 +75,8 @@ pub fn run(
     options: &Options,
     progress: &(dyn Fn(u64, u64) + Sync),
 ) -> Result<Triage, TriageError> {
-    let capture = Capture::open(
-        path,
-        &OpenOptions {
-            rate_hz: options.rate_hz,
-        },
-    )?;
-    let spec = capture.spec().clone();
+    let capture = Capture::open(path, &options.open)?;
+    let mut spec = capture.spec().clone();
     let channels = match options.channel {
         None => Vec::new(),
         Some(asked) if (1..=spec.channels.len()).contains(&asked) => vec![asked - 1],
@@ -101,12 +102,23 @@ pub fn run(
         channels,
         ..Search::default()
     };
-    let tones = tones::find(&capture, &search, progress)?;
+    let (tones, notes) = tones::mended::find_mended(&capture, &search, progress)?;
+    spec.notes.extend(notes);
+    let up_to_hz = site.recorder.front_end.bandwidth_hz;
+    let evidence = evidence::gather(
+        &capture,
+        &tones.tones,
+        &chain,
+        &options.references,
+        up_to_hz,
+    )?;
     let scene = Scene {
         tones: &tones.tones,
         site,
         chain: &chain,
         duration_s: spec.duration_s(),
+        full_scale_known: spec.normalised || full_scale.is_some(),
+        evidence: Some(&evidence),
     };
     let inference = suspects::infer(&scene);
     let next = plan::next(&scene, &inference, &rates::usual(spec.rate_hz));
@@ -122,6 +134,7 @@ pub fn run(
             .map(|s| s.name.clone())
             .collect(),
         clock_described_ppm: site.recorder.assumed_clock_ppm(),
+        evidence,
         inference,
         next,
         chain,
@@ -136,6 +149,8 @@ impl Triage {
             site,
             chain: &self.chain,
             duration_s: self.spec.duration_s(),
+            full_scale_known: self.spec.normalised || self.full_scale.is_some(),
+            evidence: Some(&self.evidence),
         }
     }
 

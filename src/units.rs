@@ -8,7 +8,7 @@ use serde::Serialize;
 pub struct TrueHz(pub f64);
 
 /// A frequency as it shows in the recording, in hertz, in `[0, rate/2]`.
-#[derive(Debug, Clone, Copy, PartialEq, PartialOrd, Serialize)]
+#[derive(Debug, Clone, Copy, Default, PartialEq, PartialOrd, Serialize)]
 #[serde(transparent)]
 pub struct SeenHz(pub f64);
 

@@ -228,6 +228,65 @@ fn a_rate_given_overrides_the_file() {
 }
 
 #[test]
+fn inspect_says_what_was_read_as_triage_does() {
+    let folder = tempfile::tempdir().unwrap();
+    let rows: String = (0..600)
+        .map(|i| {
+            let (day, second) = (5 + i / 400, i % 400);
+            format!(
+                "{day:02}/07/2031 00:{:02}:{:02};{},5\n",
+                second / 60,
+                second % 60,
+                i % 7
+            )
+        })
+        .collect();
+    let log = file(&folder, "log.csv", format!("Zeit;U [V]\n{rows}").as_bytes());
+    let done = foldtrace(&["inspect", text(&log)]);
+    assert_eq!(done.status.code(), Some(0));
+    let screen = stdout(&done);
+    let line = "  read as: semicolon, decimal comma, names in line 1, rows from line 2, time in column 1 as day-first date, 1 Hz";
+    assert!(screen.lines().any(|l| l.starts_with(line)), "{screen}");
+    assert!(screen.contains("columns: U [V]"), "{screen}");
+    // Triage says the same lines, and how finely it resolves.
+    let triage = stdout(&foldtrace(&["triage", text(&log)]));
+    for line in screen.lines().skip(1) {
+        assert!(triage.contains(line), "{line:?} is not in {triage}");
+    }
+
+    let said = foldtrace(&[
+        "inspect",
+        text(&log),
+        "--time-as",
+        "month-first",
+        "--rate",
+        "2.5",
+    ]);
+    assert!(
+        stdout(&said).contains("month-first date, 2.5 Hz"),
+        "{}",
+        stdout(&said)
+    );
+
+    let both = foldtrace(&["inspect", text(&folder.path().join("none.csv")), text(&log)]);
+    assert_eq!(both.status.code(), Some(1));
+    assert!(complaint(&both).contains("none.csv"));
+    assert!(stdout(&both).contains("read as"));
+    for wrong in [
+        ["--delimiter", "ab"],
+        ["--decimal", "dot"],
+        ["--first-row", "0"],
+        ["--time-as", "weeks"],
+    ] {
+        let refused = foldtrace(&["inspect", text(&log), wrong[0], wrong[1]]);
+        assert_eq!(refused.status.code(), Some(2), "{wrong:?}");
+        assert!(complaint(&refused).contains(wrong[0]), "{wrong:?}");
+    }
+    let lost = foldtrace(&["inspect", text(&log), "--time", "clock"]);
+    assert!(complaint(&lost).contains("has no column \"clock\", only 1 \"Zeit\", 2 \"U\""));
+}
+
+#[test]
 fn a_channel_that_is_not_there_is_named() {
     let folder = tempfile::tempdir().unwrap();
     let good = wav(&folder, "good.wav", 8000, 0.25);

@@ -5,6 +5,8 @@ mod capture;
 mod cli;
 mod fold;
 mod frontend;
+mod mended;
+mod page;
 mod planning;
 mod sample_data;
 mod sources;

@@ -29,6 +29,7 @@ fn tones(list: &[(f64, f64)]) -> Vec<Tone> {
             wander_hz: 0.0,
             linewidth_hz: 0.0,
             track: Vec::new(),
+            track_step_s: 0.0,
             channels: Vec::new(),
         })
         .collect()
@@ -48,6 +49,8 @@ fn together(site: &str, recordings: &[(f64, Vec<(f64, f64)>)]) -> Reconciled {
             site: &site,
             chain,
             duration_s: 60.0,
+            full_scale_known: true,
+            evidence: None,
         })
         .collect();
     let found: Vec<_> = scenes.iter().map(infer).collect();
@@ -334,7 +337,7 @@ fn reconcile_needs_two_recordings() {
     assert_eq!(output.status.code(), Some(2));
     let output = foldtrace(&["reconcile", SKID[0], "absent.wav"]);
     assert_eq!(output.status.code(), Some(1));
-    let output = foldtrace(&["reconcile", SKID[0], SKID[1], "--rate", "1,2,3"]);
+    let output = foldtrace(&["reconcile", SKID[0], SKID[1], "--rates", "1,2,3"]);
     assert_eq!(output.status.code(), Some(2));
     let output = foldtrace(&[&["reconcile"], &SKID[..], &["--json", SKID[1]]].concat());
     assert_eq!(output.status.code(), Some(2));
@@ -355,6 +358,8 @@ fn a_plan_says_what_will_be_seen() {
         site: &site,
         chain: &chain,
         duration_s: 60.0,
+        full_scale_known: true,
+        evidence: None,
     };
     let inference = infer(&scene);
     let planned = plan(&scene, &inference, &[11_025.0, 16_000.0]);

@@ -28,9 +28,7 @@ fn tones(list: &[(f64, f64, f64, f64)]) -> Vec<Tone> {
             from_s: 0.0,
             to_s: 60.0,
             wander_hz,
-            linewidth_hz: 0.0,
-            track: Vec::new(),
-            channels: Vec::new(),
+            ..Tone::default()
         })
         .collect()
 }
@@ -43,6 +41,8 @@ fn run(site: &str, rate_hz: f64, tones: &[Tone]) -> Inference {
         site: &site,
         chain: &chain,
         duration_s: 60.0,
+        full_scale_known: true,
+        evidence: None,
     })
 }
 
@@ -285,6 +285,8 @@ fn shares_sum_to_one_and_stay_in_range() {
             site: &s.site,
             chain: &s.chain,
             duration_s: s.duration_s,
+            full_scale_known: true,
+            evidence: None,
         });
         assert_eq!(inference.findings.len(), s.tones.len());
         for f in &inference.findings {

@@ -600,13 +600,12 @@ fn observe(
                 from_s: 0.0,
                 to_s: 1.0 / cell,
                 wander_hz: if visible { measured } else { 0.0 },
-                linewidth_hz: 0.0,
-                track: Vec::new(),
                 channels: vec![ChannelLevel {
                     channel: 0,
                     level_dbfs: p.level_dbfs,
                     snr_db,
                 }],
+                ..Tone::default()
             },
             p.truth,
         ));

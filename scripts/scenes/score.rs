@@ -106,6 +106,8 @@ impl Scores {
             site: &s.site,
             chain: &s.chain,
             duration_s: s.duration_s,
+            full_scale_known: true,
+            evidence: None,
         });
         for (finding, truth) in inference.findings.iter().zip(&s.truth) {
             let outcome = judge(finding, truth);

@@ -1,5 +1,6 @@
 //! Single cells of a table: numbers, missing values, column names and units.
 
+use super::numbers::{DecimalStyle, read_number};
 use super::text::to_text;
 
 /// What a cell holds.
@@ -43,6 +44,37 @@ const MISSING: &[&str] = &[
     "#num!",
     "#ref!",
     "missing",
+    "nodata",
+    "no data",
+    "n.d.",
+    "timeout",
+    "fault",
+    "open",
+    "short",
+    "over range",
+    "overrange",
+    "under range",
+    "underrange",
+    "udf",
+    "unfl",
+    "----",
+    "-----",
+    "------",
+    "-.-",
+    "--.-",
+    "--.--",
+    "***",
+    "*****",
+    "#####",
+    "#name?",
+    "#null!",
+    ".",
+    "<na>",
+    "-nan",
+    "+nan",
+    "nan(ind)",
+    "1.#snan",
+    "+inf",
     "1.#ind",
     "-1.#ind",
     "1.#qnan",
@@ -52,26 +84,64 @@ const MISSING: &[&str] = &[
     "-nan(ind)",
 ];
 
-/// Reads a cell: decimal point or comma, exponent, either minus sign.
-pub(super) fn read_cell(bytes: &[u8]) -> Cell {
-    // Quotes are there where the reader was not told to expect any.
-    let bytes = match trim(bytes) {
-        [b'"', inside @ .., b'"'] => trim(inside),
+/// From here on, a number means "not a number" or "out of range": 9.91E37 and
+/// 9.9E37 in SCPI-1999, volume 1, section 7.2.
+const NO_VALUE: f64 = 9.9e37;
+
+/// Reads a cell.
+#[inline]
+pub(super) fn read_cell(bytes: &[u8], style: DecimalStyle) -> Cell {
+    match read_number(bytes, style) {
+        Some(number) if number.abs() < NO_VALUE => Cell::Number(number),
+        _ => read_odd_cell(bytes, style),
+    }
+}
+
+#[cold]
+fn read_odd_cell(bytes: &[u8], style: DecimalStyle) -> Cell {
+    // Quotes are there where the reader was not told to expect any; `="1.5"`
+    // and `'1.5` keep spreadsheets from reading a number.
+    let mut bytes = trim(bytes);
+    bytes = bytes.strip_prefix(b"=").unwrap_or(bytes);
+    bytes = match bytes {
+        [b'"', inside @ .., b'"'] | [b'\'', inside @ .., b'\''] | [b'\'', inside @ ..] => {
+            trim(inside)
+        }
         bytes => bytes,
     };
     if bytes.is_empty() {
         return Cell::Missing;
     }
-    match parse(bytes).or_else(|| parse_mended(bytes)) {
-        Some(number) if number.is_finite() => Cell::Number(number),
+    match read_number(bytes, style) {
+        Some(number) if number.abs() < NO_VALUE => Cell::Number(number),
         Some(_) => Cell::Missing,
         None if is_missing_mark(bytes) => Cell::Missing,
         None => Cell::Word,
     }
 }
 
+/// A number with a unit behind it: `5 V`, `1.5mV`. Gives where the unit starts.
+pub(super) fn unit_suffix(bytes: &[u8], style: DecimalStyle) -> Option<&str> {
+    let bytes = trim(bytes);
+    let start = 1 + bytes.iter().rposition(|c| c.is_ascii_digit())?;
+    let (number, unit) = bytes.split_at_checked(start)?;
+    // "m/s2" ends in a digit.
+    let unit = std::str::from_utf8(unit).ok()?.trim();
+    read_number(trim(number), style)?;
+    (!unit.is_empty() && is_unit(unit)).then_some(unit)
+}
+
 /// Without blanks, also the non-breaking ones of Latin-1 and UTF-8.
+#[inline]
 pub(super) fn trim(bytes: &[u8]) -> &[u8] {
+    // Nearly always there are none.
+    match bytes {
+        [first, .., last] if first.is_ascii_graphic() && last.is_ascii_graphic() => bytes,
+        _ => trim_blanks(bytes),
+    }
+}
+
+fn trim_blanks(bytes: &[u8]) -> &[u8] {
     let mut bytes = bytes.trim_ascii();
     loop {
         bytes = match bytes {
@@ -85,50 +155,37 @@ pub(super) fn trim(bytes: &[u8]) -> &[u8] {
     }
 }
 
-fn parse(bytes: &[u8]) -> Option<f64> {
-    std::str::from_utf8(bytes).ok()?.parse().ok()
-}
-
-/// Decimal comma, and the minus sign of typography.
-fn parse_mended(bytes: &[u8]) -> Option<f64> {
-    const LONGEST: usize = 64;
-    const MINUS: &[u8] = "\u{2212}".as_bytes();
-    let (sign, digits) = match bytes.strip_prefix(MINUS) {
-        Some(rest) => (-1.0, rest),
-        None => (1.0, bytes),
-    };
-    if sign < 0.0
-        && !digits
-            .first()
-            .is_some_and(|&c| c.is_ascii_digit() || c == b'.' || c == b',')
-    {
-        return None;
-    }
-    let mut buffer = [0; LONGEST];
-    let copy = buffer.get_mut(..digits.len())?;
-    copy.copy_from_slice(digits);
-    let mut marks = copy.iter_mut().filter(|c| matches!(c, b',' | b'.'));
-    // Two marks would be thousands separators, which cannot be told apart.
-    if let (Some(mark), None) = (marks.next(), marks.next()) {
-        *mark = b'.';
-    }
-    parse(copy).map(|number| sign * number)
-}
-
 fn is_missing_mark(bytes: &[u8]) -> bool {
     MISSING
         .iter()
         .any(|mark| bytes.eq_ignore_ascii_case(mark.as_bytes()))
 }
 
-/// Whether a record is a remark: `#`, `%`, `//`, or a `;` that is not the
-/// delimiter.
-pub(super) fn is_remark(first: &[u8], delimiter: u8) -> bool {
-    let first = first.trim_ascii_start();
-    first.starts_with(b"#") && !is_missing_mark(first.trim_ascii_end())
-        || first.starts_with(b"%")
-        || first.starts_with(b"//")
-        || (first.starts_with(b";") && delimiter != b';')
+/// What marks a line as a remark.
+#[derive(Debug, Clone, Default, PartialEq, Eq)]
+pub(super) enum Remarks {
+    /// `#`, `%`, `//`, or a `;` that is not the delimiter.
+    #[default]
+    Usual,
+    /// What the user says.
+    Start(Vec<u8>),
+}
+
+impl Remarks {
+    /// Whether a record with this first cell is a remark.
+    pub(super) fn marks(&self, first: &[u8], delimiter: u8) -> bool {
+        let first = first.trim_ascii_start();
+        if let Remarks::Start(start) = self {
+            return !start.is_empty() && first.starts_with(start);
+        }
+        match first.first() {
+            Some(b'#') => !is_missing_mark(first.trim_ascii_end()),
+            Some(b'%') => true,
+            Some(b'/') => first.starts_with(b"//"),
+            Some(b';') => delimiter != b';',
+            _ => false,
+        }
+    }
 }
 
 /// A column's heading, taken apart.
@@ -137,6 +194,8 @@ pub(super) struct Heading {
     /// Without the unit.
     pub name: String,
     pub unit: Option<String>,
+    /// Unit behind each number of the column.
+    pub suffix: Option<String>,
 }
 
 /// `accel [m/s^2]`, `U (V)`, `t/s` or plain `x`. Control characters stay: who
@@ -164,6 +223,7 @@ pub(super) fn read_heading(bytes: &[u8]) -> Heading {
                 return Heading {
                     name: name.into(),
                     unit: Some(unit.into()),
+                    suffix: None,
                 };
             }
         }
@@ -174,15 +234,35 @@ pub(super) fn read_heading(bytes: &[u8]) -> Heading {
                 return Heading {
                     name: name.trim().into(),
                     unit: Some(unit.trim().into()),
+                    suffix: None,
                 };
             }
+        }
+    }
+    // accel_g, current_mA: but x_in and run_1 are names.
+    if let Some((name, unit)) = text.rsplit_once('_') {
+        if ENDINGS.contains(&unit) && !name.is_empty() {
+            return Heading {
+                name: name.into(),
+                unit: Some(unit.into()),
+                suffix: None,
+            };
         }
     }
     Heading {
         name: text.into(),
         unit: None,
+        suffix: None,
     }
 }
+
+/// Units that stand behind an underscore and are hardly a word of a name.
+const ENDINGS: &[&str] = &[
+    "V", "mV", "uV", "kV", "A", "mA", "uA", "kA", "W", "kW", "Hz", "kHz", "Pa", "hPa", "kPa",
+    "MPa", "mbar", "bar", "psi", "g", "mg", "degC", "degF", "deg", "rad", "rpm", "mm", "um", "nm",
+    "cm", "m", "mps", "mps2", "ms2", "m_s2", "N", "kN", "Nm", "dB", "mT", "uT", "nT", "ohm", "pct",
+    "percent", "ppm", "lx", "dBm", "dBV", "ips", "K",
+];
 
 /// Units of what recorders measure, without prefix.
 const UNITS: &[&str] = &[
@@ -219,23 +299,36 @@ mod tests {
             ("\u{2212}3.5", -3.5),
             ("\u{A0}4\u{A0}", 4.0),
             ("\"6\"", 6.0),
+            ("=\"6.5\"", 6.5),
+            ("'7", 7.0),
+            ("1,234.5", 1234.5),
+            ("1.234,5", 1234.5),
         ] {
-            assert_eq!(read_cell(text.as_bytes()), Cell::Number(number), "{text:?}");
+            assert_eq!(
+                read_cell(text.as_bytes(), DecimalStyle::Either),
+                Cell::Number(number),
+                "{text:?}"
+            );
         }
-        assert_eq!(read_cell(b"\xA04\xA0"), Cell::Number(4.0));
+        assert_eq!(
+            read_cell(b"\xA04\xA0", DecimalStyle::Either),
+            Cell::Number(4.0)
+        );
         assert_eq!(trim("à".as_bytes()), "à".as_bytes());
-        assert_eq!(read_cell(b"4\xA0"), Cell::Number(4.0));
+        assert_eq!(read_cell(b"4\xA0", DecimalStyle::Either), Cell::Number(4.0));
         for text in [
-            "", "  ", "NaN", "nan", "inf", "-inf", "1e999", "#N/A", "ol", "--", "\"\"",
+            "", "  ", "NaN", "nan", "inf", "-inf", "1e999", "#N/A", "ol", "--", "\"\"", "9.91E37",
         ] {
-            assert_eq!(read_cell(text.as_bytes()), Cell::Missing, "{text:?}");
+            assert_eq!(
+                read_cell(text.as_bytes(), DecimalStyle::Either),
+                Cell::Missing,
+                "{text:?}"
+            );
         }
         let long = "1".repeat(1000) + "x";
         for text in [
             "x",
             "1.2.3",
-            "1,234.5",
-            "1.234,5",
             "1 2",
             "0x10",
             "5 V",
@@ -244,19 +337,23 @@ mod tests {
             "\u{2212}-1",
             &long,
         ] {
-            assert_eq!(read_cell(text.as_bytes()), Cell::Word, "{text:?}");
+            assert_eq!(
+                read_cell(text.as_bytes(), DecimalStyle::Either),
+                Cell::Word,
+                "{text:?}"
+            );
         }
     }
 
     #[test]
     fn remarks() {
         for text in ["# x", "#", " #x", "% x", "// x", "; x"] {
-            assert!(is_remark(text.as_bytes(), b','), "{text:?}");
+            assert!(Remarks::Usual.marks(text.as_bytes(), b','), "{text:?}");
         }
         for text in ["#N/A", "#VALUE!", "x", "/x", ""] {
-            assert!(!is_remark(text.as_bytes(), b','), "{text:?}");
+            assert!(!Remarks::Usual.marks(text.as_bytes(), b','), "{text:?}");
         }
-        assert!(!is_remark(b";1", b';'));
+        assert!(!Remarks::Usual.marks(b";1", b';'));
     }
 
     #[test]

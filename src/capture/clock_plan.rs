@@ -16,6 +16,21 @@ pub(super) struct ClockPlan {
     pub shared: bool,
     /// Time of the first frame on the line less its stamp.
     pub start: f64,
+    /// Most frames that a gap may hold; a longer one is a clock that was set.
+    pub longest_gap: u64,
+}
+
+impl ClockPlan {
+    /// Exact stamps of a known period.
+    pub(super) fn even(period: f64) -> ClockPlan {
+        ClockPlan {
+            period,
+            scatter: 0.0,
+            shared: false,
+            start: 0.0,
+            longest_gap: u64::MAX,
+        }
+    }
 }
 
 /// Collects stamps until they suffice for a [`ClockPlan`].
@@ -24,14 +39,28 @@ pub(super) struct ClockProbe {
     /// Each stamp, and how many rows in succession have it.
     runs: Vec<(f64, u64)>,
     rows: u64,
+    /// Rows that are wholly like the one before.
+    copies: u64,
+    /// Least step that the stamps' decimals can tell, in seconds; 0 if unknown.
+    resolution: f64,
 }
 
 impl ClockProbe {
-    /// Takes a stamp; `true` when no more are needed.
-    pub(super) fn take(&mut self, stamp: f64) -> bool {
+    /// For stamps written to so many seconds.
+    pub(super) fn new(resolution: f64) -> ClockProbe {
+        ClockProbe {
+            resolution,
+            ..ClockProbe::default()
+        }
+    }
+
+    /// Takes a stamp; `true` when no more are needed. `copy`: the row is wholly
+    /// like the one before it.
+    pub(super) fn take(&mut self, stamp: f64, copy: bool) -> bool {
         const ROWS: u64 = 4096;
         const RUNS: usize = 8;
         self.rows += 1;
+        self.copies += u64::from(copy);
         match self.runs.last_mut() {
             Some((last, count)) if *last == stamp => *count += 1,
             _ => self.runs.push((stamp, 1)),
@@ -47,8 +76,12 @@ impl ClockProbe {
         let steps = sorted(differences(&stamps, 1).filter(|&step| step > 0.0));
         let step = quantile(&steps, 0.5)?;
         let repeats = self.rows - self.runs.len() as u64;
-        let plan = if repeats as f64 >= SHARED * self.rows as f64 {
+        let rounded = repeats as f64 >= SHARED * self.rows as f64
+            || self.copies == 0 && repeats_evenly(&self.runs);
+        let plan = if rounded {
             self.rounded(step)
+        } else if lacks_teeth(&steps, step, self.resolution) {
+            Some(ClockPlan::even(comb_period(&stamps, step)))
         } else {
             bursts(&steps, step).or_else(|| single(&stamps, step))
         };
@@ -77,6 +110,7 @@ impl ClockProbe {
             scatter: step,
             shared: true,
             start: 0.0,
+            longest_gap: u64::MAX,
         })
     }
 
@@ -103,6 +137,47 @@ impl ClockProbe {
     }
 }
 
+/// Whether nearly all steps are one period and the others whole multiples of it,
+/// finer than the stamps' rounding could make them: samples are lost, however
+/// regularly.
+fn lacks_teeth(steps: &[f64], step: f64, resolution: f64) -> bool {
+    const OFF: f64 = 0.02;
+    const SINGLE: f64 = 0.6;
+    if resolution <= 0.0 || step < 1.9 * resolution || steps.is_empty() {
+        return false;
+    }
+    let whole = |&&one: &&f64| {
+        let times = one / step;
+        times > 0.5 && (times - times.round()).abs() < OFF * times
+    };
+    let on_comb = steps.iter().filter(whole).count() as f64;
+    let single = steps
+        .iter()
+        .filter(|&&one| (one / step - 1.0).abs() < OFF)
+        .count() as f64;
+    let n = steps.len() as f64;
+    // More missing than there are would be rows that come in bursts.
+    let total: f64 = steps.iter().sum();
+    on_comb >= 0.99 * n && single >= SINGLE * n && single < n && total < 2.0 * n * step
+}
+
+/// Whether now and then two rows share a stamp, at even distances: stamps
+/// rounded to a step that is a little longer than the period.
+fn repeats_evenly(runs: &[(f64, u64)]) -> bool {
+    const FEWEST: usize = 4;
+    let places: Vec<usize> = (0..runs.len())
+        .filter(|&place| runs.get(place).is_some_and(|run| run.1 == 2))
+        .collect();
+    let apart = places.windows(2).map(|pair| match pair {
+        [a, b] => b - a,
+        _ => 0,
+    });
+    let (least, most) = (apart.clone().min(), apart.max());
+    places.len() >= FEWEST
+        && runs.iter().all(|run| run.1 <= 2)
+        && matches!((least, most), (Some(least), Some(most)) if most - least <= 1)
+}
+
 /// Rows stamped on arrival: many short steps, and most of the time in long
 /// ones, which are too many and too long for lost samples.
 fn bursts(steps: &[f64], step: f64) -> Option<ClockPlan> {
@@ -123,6 +198,7 @@ fn bursts(steps: &[f64], step: f64) -> Option<ClockPlan> {
         scatter: quantile(&long, 0.95)?,
         shared: true,
         start: 0.0,
+        longest_gap: u64::MAX,
     })
 }
 
@@ -138,6 +214,7 @@ fn single(stamps: &[f64], step: f64) -> Option<ClockPlan> {
         scatter,
         shared: false,
         start: 0.0,
+        longest_gap: u64::MAX,
     };
     // The ends of a window scatter against each other by 1.4 times as much
     // (5 % to 95 %) if evenly distributed.
@@ -244,7 +321,7 @@ mod tests {
     fn plan(stamps: impl Iterator<Item = f64>) -> Option<ClockPlan> {
         let mut probe = ClockProbe::default();
         for stamp in stamps {
-            if probe.take(stamp) {
+            if probe.take(stamp, false) {
                 break;
             }
         }

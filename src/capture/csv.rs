@@ -8,10 +8,15 @@ use super::cells::Cell;
 use super::clock::Clock;
 use super::clock_plan::{ClockPlan, ClockProbe};
 use super::csv_rows::{Rows, Source};
-use super::csv_scan::Scan;
-use super::csv_sniff::{Table, sniff};
+use super::csv_scan::{ColumnScan, Scan};
+use super::csv_sniff::{Table, TimeColumn, sniff};
+use super::csv_split::end_lines;
 use super::error::CaptureError;
 use super::line_limit::LONGEST_LINE;
+use super::numbers::DecimalStyle;
+use super::options::TextEncoding;
+use super::stamped::StampedBlocks;
+use super::stamps::StampFormat;
 use super::text::Encoding;
 use super::wording::nine_digits;
 use super::{Block, Channel, OpenOptions, Spec};
@@ -22,10 +27,29 @@ pub(super) struct CsvRecipe {
     source: Source,
     table: Arc<Table>,
     plan: Option<ClockPlan>,
-    /// Column and offset of each channel.
-    channels: Vec<(usize, f64)>,
+    channels: Vec<Place>,
     frames: u64,
-    gaps: u64,
+}
+
+/// Where a channel's samples are.
+#[derive(Debug, Clone, Copy)]
+pub(super) struct Place {
+    column: usize,
+    /// Subtracted from each.
+    offset: f64,
+    /// The number that stands for none.
+    stand_in: Option<f64>,
+}
+
+impl Place {
+    /// The channel's sample in the current row.
+    #[inline]
+    pub(super) fn sample(&self, rows: &Rows) -> f32 {
+        match rows.value(self.column) {
+            Cell::Number(number) if Some(number) != self.stand_in => narrow(number - self.offset),
+            _ => f32::NAN,
+        }
+    }
 }
 
 /// Finds out the table's layout from its first lines, then reads it through
@@ -37,11 +61,11 @@ pub(super) fn open(
 ) -> Result<(Spec, CsvRecipe), CaptureError> {
     let (source, table) = read_head(path, options)?;
     match read_through(&source, &table, options) {
-        Err(
-            CaptureError::TimeNotIncreasing { .. }
-            | CaptureError::BadStamps { .. }
-            | CaptureError::GapTooLong { .. },
-        ) if options.rate_hz.is_some() => read_through(&source, &table.without_time(), options),
+        Err(CaptureError::TimeNotIncreasing { .. } | CaptureError::BadStamps { .. })
+            if options.rate_hz.is_some() =>
+        {
+            read_through(&source, &table.without_time(), options)
+        }
         result => result,
     }
 }
@@ -52,7 +76,7 @@ fn read_through(
     options: &OpenOptions,
 ) -> Result<(Spec, CsvRecipe), CaptureError> {
     let table = Arc::new(table.clone());
-    let plan =
+    let mut plan =
         match table.time {
             Some(time) => Some(plan_clock(source, &table)?.map_err(|rows| {
                 CaptureError::TimeNotIncreasing {
@@ -64,26 +88,53 @@ fn read_through(
             })?),
             None => None,
         };
-    let scan = Scan::run(source, &table, plan)?;
+    let mut scan = Scan::run(source, &table, plan)?;
     scan.check(&table)?;
+    if let (Some(longest_gap), Some(plan)) = (scan.longest_believed(), &mut plan) {
+        plan.longest_gap = longest_gap;
+        scan = Scan::run(source, &table, Some(*plan))?;
+        scan.check(&table)?;
+    }
     let mut notes = table.notes.clone();
     scan.note(&table, &mut notes);
-    let rate_hz = rate(&scan, &table, options, &mut notes)?;
-    let columns = scan.columns.iter();
-    let channels: Vec<(usize, f64)> = columns
-        .filter_map(|column| Some((column.column, column.first?)))
+    let (rate_hz, rate_hz_u95) = rate(&scan, &table, options, &mut notes)?;
+    let columns = scan.columns.iter().filter(|column| !column.is_worded());
+    let mut channels: Vec<Place> = columns
+        .filter_map(|column| {
+            Some(Place {
+                column: column.column,
+                offset: column.origin()?,
+                stand_in: column.stand_in().map(|(one, _)| one),
+            })
+        })
         .collect();
-    let described = channels.iter().map(|&(column, offset)| Channel {
-        name: table.column_name(column),
-        unit: table
-            .columns
-            .get(column)
-            .and_then(|heading| heading.unit.clone()),
-        offset,
-    });
+    if channels.is_empty() {
+        // Every value is missing, which is worth saying, but no error.
+        let columns = scan.columns.iter();
+        let place = |column: &ColumnScan| Place {
+            column: column.column,
+            offset: 0.0,
+            stand_in: None,
+        };
+        channels = columns.map(place).collect();
+    }
+    let described = channels
+        .iter()
+        .map(|&Place { column, offset, .. }| Channel {
+            name: table.column_name(column),
+            unit: table
+                .columns
+                .get(column)
+                .and_then(|heading| heading.unit.clone()),
+            offset,
+        });
+    let gaps = scan.clock.as_ref().map_or(0, |clock| clock.counts.gaps);
     let spec = Spec {
         path: source.path.clone(),
         rate_hz,
+        rate_hz_u95,
+        read_as: read_as(source, &table)?,
+        gaps,
         channels: described.collect(),
         frames: scan.frames,
         format: "CSV".into(),
@@ -100,7 +151,6 @@ fn read_through(
             plan,
             channels,
             frames: scan.frames,
-            gaps: scan.clock.map_or(0, |clock| clock.counts.gaps),
         },
     ))
 }
@@ -115,7 +165,13 @@ fn read_head(path: PathBuf, options: &OpenOptions) -> Result<(Source, Table), Ca
     std::fs::File::open(&source.path)?
         .take(4096)
         .read_to_end(&mut start)?;
-    source.encoding = Encoding::of(&start).ok_or(CaptureError::NotARecording)?;
+    source.encoding = match options.layout.encoding {
+        Some(TextEncoding::Utf16Le) => Encoding::Utf16Le,
+        Some(TextEncoding::Utf16Be) => Encoding::Utf16Be,
+        Some(TextEncoding::Utf8) => Encoding::Bytes,
+        Some(TextEncoding::Latin1) => Encoding::Latin1,
+        None => Encoding::of(&start).ok_or(CaptureError::NotARecording)?,
+    };
     let mut head = Vec::new();
     // One byte more than a line may have, so that a longer one shows.
     let limit = LONGEST_LINE + 1;
@@ -125,39 +181,79 @@ fn read_head(path: PathBuf, options: &OpenOptions) -> Result<(Source, Table), Ca
         .read_to_end(&mut head)?;
     let whole = head.len() <= limit;
     source.cr_only = !head.contains(&b'\n') && head.contains(&b'\r');
+    end_lines(&mut head);
     if source.cr_only {
         head.iter_mut()
             .filter(|byte| **byte == b'\r')
             .for_each(|byte| *byte = b'\n');
     }
-    let table = sniff(&head, whole, options.rate_hz.is_some())?;
+    let table = sniff(&head, whole, options)?;
     Ok((source, table))
 }
 
 /// The sample period from as many first rows as it takes; the number of rows
 /// where time never moves.
 fn plan_clock(source: &Source, table: &Arc<Table>) -> Result<Result<ClockPlan, u64>, CaptureError> {
+    if let Some(StampFormat::Samples { rate_hz }) = table.time.map(|time| time.format) {
+        return Ok(Ok(ClockPlan::even(1.0 / rate_hz)));
+    }
     let mut rows = Rows::open(source, table, None)?;
-    let mut probe = ClockProbe::default();
+    let mut probe = ClockProbe::new(resolution(source, table)?);
+    let (mut before, mut row) = (Vec::new(), Vec::new());
     while rows.next_row()?.is_some() {
-        if rows.stamp().is_some_and(|stamp| probe.take(stamp)) {
+        row.clear();
+        for column in 0..table.columns.len() {
+            row.extend_from_slice(rows.bytes(column));
+            row.push(table.delimiter);
+        }
+        let copy = row == before;
+        std::mem::swap(&mut row, &mut before);
+        if rows
+            .last_stamp()
+            .is_some_and(|stamp| probe.take(stamp, copy))
+        {
             break;
         }
     }
     Ok(probe.plan().ok_or(rows.counts.rows))
 }
 
-/// The rate that counts, with a note of what was taken over what: one from the
-/// user before the time column, and that before a line above the table.
+/// Least step between time stamps that their decimals can tell, in seconds.
+fn resolution(source: &Source, table: &Arc<Table>) -> Result<f64, CaptureError> {
+    const ROWS: usize = 100;
+    let Some(time) = table.time else {
+        return Ok(0.0);
+    };
+    let mut rows = Rows::open(source, table, None)?;
+    let mut least = f64::INFINITY;
+    for _ in 0..ROWS {
+        if rows.next_row()?.is_none() {
+            break;
+        }
+        if let Some(step) = time.format.resolution(rows.bytes(time.column)) {
+            least = least.min(step);
+        }
+    }
+    Ok(if least.is_finite() { least } else { 0.0 })
+}
+
+/// The rate that counts and the half-width of its 95 % interval where it was
+/// measured, with a note of what was taken over what: one from the user before
+/// the time column, and that before a line above the table.
 fn rate(
     scan: &Scan,
     table: &Table,
     options: &OpenOptions,
     notes: &mut Vec<String>,
-) -> Result<f64, CaptureError> {
-    let stamped = scan.clock.as_ref().map(Clock::rate_hz);
+) -> Result<(f64, Option<f64>), CaptureError> {
+    // A count of samples tells no rate.
+    let counted = |time: &TimeColumn| matches!(time.format, StampFormat::Samples { .. });
+    let stamped = match table.time {
+        Some(time) if !counted(&time) => scan.clock.as_ref().map(Clock::rate_hz),
+        _ => None,
+    };
     let told = match (stamped, table.told_rate) {
-        (Some(stamped), _) => Some((stamped, "the time column".to_owned())),
+        (Some((stamped, _)), _) => Some((stamped, "the time column".to_owned())),
         (None, Some((line, rate_hz))) => Some((rate_hz, format!("line {line}"))),
         (None, None) => None,
     };
@@ -169,7 +265,7 @@ fn rate(
             } else {
                 format!("sample rate {rate} Hz taken from --rate, not {other} Hz from {place}")
             });
-            Ok(given)
+            Ok((given, None))
         }
         (None, Some((told, place))) => {
             if stamped.is_none() {
@@ -178,18 +274,58 @@ fn rate(
                     nine_digits(told)
                 ));
             }
-            Ok(told)
+            Ok((told, stamped.map(|(_, u95)| u95)))
         }
-        (Some(given), None) => Ok(given),
+        (Some(given), None) => Ok((given, None)),
         (None, None) => Err(CaptureError::NoTime),
     }
 }
 
-impl CsvRecipe {
-    pub(super) fn gaps(&self) -> u64 {
-        self.gaps
+/// What was taken for what, one clause each.
+fn read_as(source: &Source, table: &Table) -> Result<Vec<String>, CaptureError> {
+    let mut clauses = Vec::new();
+    match source.encoding {
+        Encoding::Bytes => {}
+        Encoding::Latin1 => clauses.push("Latin-1".into()),
+        Encoding::Utf16Le | Encoding::Utf16Be => clauses.push("UTF-16".into()),
     }
+    let width = table.columns.len();
+    clauses.push(match table.delimiter {
+        _ if width == 1 => "one column".into(),
+        b',' => "comma".into(),
+        b';' => "semicolon".into(),
+        b'\t' => "tab".into(),
+        b' ' => "blanks".into(),
+        b'|' => "vertical bar".into(),
+        other => format!("delimiter {:?}", char::from(other)),
+    });
+    match (table.decimal, table.marks) {
+        (DecimalStyle::Comma, _) | (_, (false, true)) => clauses.push("decimal comma".into()),
+        (DecimalStyle::Point, _) | (_, (true, false)) => clauses.push("decimal point".into()),
+        (_, (true, true)) => clauses.push("decimal point or comma".into()),
+        (_, (false, false)) => {}
+    }
+    if table.quoted {
+        clauses.push("quotes".into());
+    }
+    clauses.push(match table.names_line {
+        Some(line) => format!("names in line {line}"),
+        None => "no names".into(),
+    });
+    clauses.push(format!("rows from line {}", table.first_line));
+    match table.time {
+        None => clauses.push("no time column".into()),
+        Some(time) => {
+            let mut rows = Rows::open(source, &Arc::new(table.clone()), None)?;
+            rows.next_row()?;
+            let words = time.format.words(rows.bytes(time.column));
+            clauses.push(format!("time in column {} as {words}", time.column + 1));
+        }
+    }
+    Ok(clauses)
+}
 
+impl CsvRecipe {
     pub(super) fn blocks(&self, frames_per_block: usize) -> Result<CsvBlocks, CaptureError> {
         Ok(CsvBlocks {
             rows: Rows::open(&self.source, &self.table, self.plan)?,
@@ -201,13 +337,29 @@ impl CsvRecipe {
             row_waits: false,
         })
     }
+
+    /// Rows with their own times; `None` without a time column.
+    pub(super) fn stamped(
+        &self,
+        rows_per_block: usize,
+    ) -> Result<Option<StampedBlocks>, CaptureError> {
+        if self.plan.is_none() {
+            return Ok(None);
+        }
+        Ok(Some(StampedBlocks {
+            rows: Rows::open(&self.source, &self.table, self.plan)?,
+            channels: self.channels.clone(),
+            rows_per_block,
+            next_frame: 0,
+        }))
+    }
 }
 
 /// One pass over the samples.
 #[derive(Debug)]
 pub(super) struct CsvBlocks {
     rows: Rows,
-    channels: Vec<(usize, f64)>,
+    channels: Vec<Place>,
     frames: u64,
     frames_per_block: usize,
     next_frame: u64,
@@ -238,11 +390,8 @@ impl CsvBlocks {
                 filled += n;
                 continue;
             }
-            for (samples, &(column, offset)) in block.samples.iter_mut().zip(&self.channels) {
-                samples.push(match self.rows.value(column) {
-                    Cell::Number(number) => narrow(number - offset),
-                    _ => f32::NAN,
-                });
+            for (samples, place) in block.samples.iter_mut().zip(&self.channels) {
+                samples.push(place.sample(&self.rows));
             }
             self.row_waits = false;
             filled += 1;

@@ -1,19 +1,79 @@
 //! Which character separates the cells of a table.
 
-use super::csv_lines::{Line, split};
+use super::cells::Remarks;
+use super::csv_lines::{Line, join_pairs, split};
 use super::csv_sniff::{is_data, tally, tally_cell, usual_width};
 use super::error::CaptureError;
 
 /// Characters that do nothing but separate, the less ambiguous first.
-const DELIMITERS: &[u8] = b"\t;,";
+const DELIMITERS: &[u8] = b"\t;|,";
 
-/// The delimiter that makes the best table of the first lines, and the lines
-/// split by it.
-pub(super) fn choose_delimiter(lines: &[(usize, &[u8])]) -> Result<(u8, Vec<Line>), CaptureError> {
-    let (mut delimiter, mut records) = (b' ', split(lines, b' '));
+/// How the lines of a table are split.
+pub(super) struct Splitting {
+    pub delimiter: u8,
+    /// Each second delimiter is a decimal comma.
+    pub paired: bool,
+    pub lines: Vec<Line>,
+}
+
+/// Splits by the delimiter that the user says, that a line `sep=;` says, or
+/// else that makes the best table of the first lines.
+pub(super) fn choose_delimiter(
+    lines: &[(usize, &[u8])],
+    told: Option<u8>,
+    remarks: &Remarks,
+) -> Result<Splitting, CaptureError> {
+    let told = told.or_else(|| {
+        let (_, first) = lines.first()?;
+        match first.trim_ascii().trim_ascii_start() {
+            [b'"', inside @ .., b'"'] => declared(inside),
+            first => declared(first),
+        }
+    });
+    let split_by = |delimiter| split(lines, delimiter, remarks);
+    let (mut delimiter, mut records) = match told {
+        Some(told) => (told, split_by(told)),
+        None => best(&split_by),
+    };
+    if delimiter == b',' {
+        match halved_numbers(&records) {
+            // One column: any delimiter but the comma reads it.
+            Some(2) if told.is_none() => {
+                delimiter = b';';
+                records = split_by(delimiter);
+            }
+            Some(_) => {
+                return Ok(Splitting {
+                    delimiter,
+                    paired: true,
+                    lines: join_pairs(records, delimiter),
+                });
+            }
+            None => {}
+        }
+    }
+    Ok(Splitting {
+        delimiter,
+        paired: false,
+        lines: records,
+    })
+}
+
+/// The delimiter that a line `sep=;` declares, as spreadsheets write it.
+fn declared(line: &[u8]) -> Option<u8> {
+    match line {
+        [b's' | b'S', b'e' | b'E', b'p' | b'P', b'=', delimiter] => Some(*delimiter),
+        // A tab was trimmed.
+        [b's' | b'S', b'e' | b'E', b'p' | b'P', b'='] => Some(b'\t'),
+        _ => None,
+    }
+}
+
+fn best(split_by: &dyn Fn(u8) -> Vec<Line>) -> (u8, Vec<Line>) {
+    let blanks = (b' ', split_by(b' '));
     let real = DELIMITERS
         .iter()
-        .map(|&delimiter| (delimiter, split(lines, delimiter)))
+        .map(|&delimiter| (delimiter, split_by(delimiter)))
         .reduce(|best, next| {
             if fit(&next.1).score > fit(&best.1).score {
                 next
@@ -21,23 +81,10 @@ pub(super) fn choose_delimiter(lines: &[(usize, &[u8])]) -> Result<(u8, Vec<Line
                 best
             }
         });
-    if let Some(real) = real {
-        if fit(&real.1).goes_before_blanks(&fit(&records)) {
-            (delimiter, records) = real;
-        }
+    match real {
+        Some(real) if fit(&real.1).goes_before_blanks(&fit(&blanks.1)) => real,
+        _ => blanks,
     }
-    if delimiter == b',' {
-        match halved_numbers(&records) {
-            // One column: any delimiter but the comma reads it.
-            Some(2) => {
-                delimiter = b';';
-                records = split(lines, delimiter);
-            }
-            Some(_) => return Err(CaptureError::AmbiguousCommas),
-            None => {}
-        }
-    }
-    Ok((delimiter, records))
 }
 
 /// How well a delimiter fits.

@@ -2,13 +2,10 @@
 
 use csv::ByteRecord;
 
-use super::cells::is_remark;
+use super::cells::Remarks;
 use super::error::CaptureError;
 use super::line_limit::LONGEST_LINE;
 use super::text::squeeze;
-
-/// Lines looked at.
-const MOST_LINES: usize = 1000;
 
 /// A line of the file.
 pub(super) struct Line {
@@ -20,14 +17,15 @@ pub(super) struct Line {
     pub remark: bool,
 }
 
-/// Start and bytes of each line.
+/// Start and bytes of each line, so many at most.
 pub(super) fn physical_lines(
     head: &[u8],
     whole: bool,
+    most: usize,
 ) -> Result<Vec<(usize, &[u8])>, CaptureError> {
     let mut lines = Vec::new();
     let mut start = 0;
-    for line in head.split_inclusive(|&c| c == b'\n').take(MOST_LINES) {
+    for line in head.split_inclusive(|&c| c == b'\n').take(most) {
         let complete = line.ends_with(b"\n");
         if line.len() > LONGEST_LINE {
             let line = lines.len() as u64 + 1;
@@ -45,7 +43,7 @@ pub(super) fn physical_lines(
 }
 
 /// Splits each line for itself, so that a stray quote spoils one line only.
-pub(super) fn split(lines: &[(usize, &[u8])], delimiter: u8) -> Vec<Line> {
+pub(super) fn split(lines: &[(usize, &[u8])], delimiter: u8, remarks: &Remarks) -> Vec<Line> {
     let mut split = Vec::new();
     for (&(start, bytes), number) in lines.iter().zip(1..) {
         let squeezed;
@@ -58,7 +56,7 @@ pub(super) fn split(lines: &[(usize, &[u8])], delimiter: u8) -> Vec<Line> {
         };
         let cells = cells_of(bytes, delimiter);
         if !cells.is_empty() {
-            let remark = is_remark(cells.get(0).unwrap_or_default(), delimiter);
+            let remark = remarks.marks(cells.get(0).unwrap_or_default(), delimiter);
             split.push(Line {
                 start,
                 number,
@@ -68,6 +66,27 @@ pub(super) fn split(lines: &[(usize, &[u8])], delimiter: u8) -> Vec<Line> {
         }
     }
     split
+}
+
+/// The lines with each second delimiter taken as a decimal comma. Lines of
+/// words stay as they are.
+pub(super) fn join_pairs(lines: Vec<Line>, delimiter: u8) -> Vec<Line> {
+    let pairs = |line: Line| {
+        let bare = |cell: &[u8]| {
+            let digits = cell.strip_prefix(b"-").unwrap_or(cell);
+            digits.iter().all(u8::is_ascii_digit)
+        };
+        if line.remark || line.cells.len() % 2 == 1 || !line.cells.iter().all(bare) {
+            return line;
+        }
+        let mut cells = ByteRecord::new();
+        let mut halves = line.cells.iter();
+        while let (Some(whole), Some(decimals)) = (halves.next(), halves.next()) {
+            cells.push_field(&[whole, &[delimiter], decimals].concat());
+        }
+        Line { cells, ..line }
+    };
+    lines.into_iter().map(pairs).collect()
 }
 
 /// The cells of one line, as a CSV reader would give them. Such a reader is

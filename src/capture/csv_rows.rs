@@ -7,10 +7,11 @@ use std::sync::Arc;
 
 use csv::ByteRecord;
 
-use super::cells::{Cell, is_remark, read_cell};
+use super::cells::{Cell, read_cell, trim};
 use super::clock::{Advance, Clock};
 use super::clock_plan::ClockPlan;
 use super::csv_sniff::Table;
+use super::csv_split::Splitter;
 use super::dates::DAY_S;
 use super::error::CaptureError;
 use super::line_limit::{LONGEST_LINE, LineLimit, TooLong};
@@ -44,15 +45,71 @@ pub(super) struct Row {
     pub missing: u64,
 }
 
-/// Reads rows one by one into a record that is reused.
+type Text = BlankReader<TextReader<File>>;
+
+/// Records one after the other; each takes the place of the one before.
+enum Records {
+    Plain(Splitter<Text>),
+    /// Where cells may be in quotes.
+    Quoted {
+        reader: Box<csv::Reader<LineLimit<Text>>>,
+        record: ByteRecord,
+    },
+}
+
+impl Records {
+    /// Goes to the next record and tells its line; `None` at the end.
+    fn next(&mut self, first_line: u64) -> Result<Option<u64>, CaptureError> {
+        match self {
+            Records::Plain(splitter) => {
+                let before = splitter.next(first_line)?;
+                Ok(before.map(|lines| first_line + lines))
+            }
+            Records::Quoted { reader, record } => {
+                let more = reader
+                    .read_byte_record(record)
+                    .map_err(|e| plain_error(e, first_line))?;
+                let line = record.position().map_or(0, csv::Position::line);
+                Ok(more.then(|| first_line + line.saturating_sub(1)))
+            }
+        }
+    }
+
+    fn len(&self) -> usize {
+        match self {
+            Records::Plain(splitter) => splitter.len(),
+            Records::Quoted { record, .. } => record.len(),
+        }
+    }
+
+    #[inline]
+    fn get(&self, cell: usize) -> Option<&[u8]> {
+        match self {
+            Records::Plain(splitter) => splitter.get(cell),
+            Records::Quoted { record, .. } => record.get(cell),
+        }
+    }
+
+    /// Whether the cells from `first` on are blank.
+    fn is_blank_from(&self, first: usize) -> bool {
+        (first..self.len()).all(|cell| {
+            self.get(cell)
+                .is_none_or(|cell| cell.trim_ascii().is_empty())
+        })
+    }
+}
+
+/// Reads rows one by one.
 pub(super) struct Rows {
     table: Arc<Table>,
-    reader: csv::Reader<LineLimit<BlankReader<TextReader<File>>>>,
-    record: ByteRecord,
+    records: Records,
     origin: Option<Stamp>,
-    /// Seconds of the days that clock times have passed, and the last one.
-    days: f64,
+    /// Seconds added for midnights passed and hours of daylight saving.
+    shift: f64,
     last: f64,
+    last_stamp: Option<f64>,
+    /// The last step that was not 0.
+    usual_step: f64,
     pub clock: Option<Clock>,
     pub counts: RowCounts,
 }
@@ -67,6 +124,8 @@ pub(super) struct RowCounts {
     pub short: u64,
     pub long: u64,
     pub last_line: u64,
+    /// Hours that daylight saving took or gave.
+    pub daylight: u64,
     /// Line of the first stamp that did not increase, and of the first that
     /// could not be read.
     pub first_back: Option<u64>,
@@ -94,20 +153,28 @@ impl Rows {
             &mut std::io::sink(),
         )?;
         let text = BlankReader::new(text, table.delimiter == b' ');
-        let reader = csv::ReaderBuilder::new()
-            .has_headers(false)
-            .flexible(true)
-            .delimiter(table.delimiter)
-            .quoting(table.quoted)
-            .buffer_capacity(64 * 1024)
-            .from_reader(LineLimit::new(text, table.delimiter, table.quoted));
+        let records = if table.quoted {
+            let reader = csv::ReaderBuilder::new()
+                .has_headers(false)
+                .flexible(true)
+                .delimiter(table.delimiter)
+                .buffer_capacity(64 * 1024)
+                .from_reader(LineLimit::new(text, table.delimiter, true));
+            Records::Quoted {
+                reader: Box::new(reader),
+                record: ByteRecord::new(),
+            }
+        } else {
+            Records::Plain(Splitter::new(text, table.delimiter, table.paired))
+        };
         Ok(Rows {
             table: Arc::clone(table),
-            reader,
-            record: ByteRecord::new(),
+            records,
             origin: None,
-            days: 0.0,
+            shift: 0.0,
             last: 0.0,
+            last_stamp: None,
+            usual_step: 0.0,
             clock: plan.map(Clock::new),
             counts: RowCounts::default(),
         })
@@ -118,8 +185,9 @@ impl Rows {
         while self.read_record()? {
             let line = self.counts.last_line;
             let stamp = self.stamp();
-            if stamp.is_none() && self.table.time.is_some() && !self.has_number() {
-                self.counts.wordy += u64::from(!self.is_blank());
+            self.last_stamp = stamp;
+            if stamp.is_none() && self.is_wordy() {
+                self.counts.wordy += u64::from(!self.records.is_blank_from(0));
                 continue;
             }
             let missing = match &mut self.clock {
@@ -145,8 +213,9 @@ impl Rows {
             };
             self.counts.rows += 1;
             let width = self.table.columns.len();
-            self.counts.short += u64::from(self.record.len() < width);
-            self.counts.long += u64::from(self.record.len() > width && self.has_surplus());
+            let cells = self.records.len();
+            self.counts.short += u64::from(cells < width);
+            self.counts.long += u64::from(cells > width && !self.records.is_blank_from(width));
             return Ok(Some(Row { line, missing }));
         }
         Ok(None)
@@ -154,67 +223,116 @@ impl Rows {
 
     /// Reads a record that is no remark; `false` at the end.
     fn read_record(&mut self) -> Result<bool, CaptureError> {
-        let first_line = self.table.first_line;
-        loop {
-            let more = self
-                .reader
-                .read_byte_record(&mut self.record)
-                .map_err(|e| plain_error(e, first_line))?;
-            if !more {
-                return Ok(false);
-            }
-            super::limit_channels(self.record.len() as u64)?;
-            let line = self.record.position().map_or(0, csv::Position::line);
-            self.counts.last_line = first_line + line.saturating_sub(1);
-            let first = self.record.get(0).unwrap_or_default();
-            if !is_remark(first, self.table.delimiter) {
+        let table = &self.table;
+        while let Some(line) = self.records.next(table.first_line)? {
+            super::limit_channels(self.records.len() as u64)?;
+            self.counts.last_line = line;
+            let first = self.records.get(0).unwrap_or_default();
+            if !table.remarks.marks(first, table.delimiter) {
                 return Ok(true);
             }
         }
+        Ok(false)
+    }
+
+    /// Seconds from the first stamp to that of the current row.
+    pub(super) fn last_stamp(&self) -> Option<f64> {
+        self.last_stamp
     }
 
     /// Seconds since the first stamp.
-    pub(super) fn stamp(&mut self) -> Option<f64> {
+    fn stamp(&mut self) -> Option<f64> {
+        const DAY: f64 = DAY_S as f64;
+        const HOUR: f64 = 3600.0;
         let time = self.table.time?;
-        let stamp = time.format.read(self.record.get(time.column)?)?;
-        let origin = *self.origin.get_or_insert(stamp);
-        let mut since = stamp.since(origin) + self.days;
-        // Past midnight, a clock time goes back by most of a day.
-        if time.format == StampFormat::ClockTime {
-            const DAY: f64 = DAY_S as f64;
-            if since < self.last - DAY / 2.0 {
-                self.days += DAY;
-                since += DAY;
-            }
-            self.last = since;
+        let cell = self.records.get(time.column)?;
+        let mut stamp = time
+            .format
+            .read(self.table.without_unit(cell, time.column))?;
+        if let Some((column, format)) = time.fraction {
+            let fraction = format.read(self.records.get(column)?)?;
+            stamp.seconds = stamp.seconds.saturating_add(fraction.seconds);
+            stamp.rest += fraction.rest;
         }
+        let origin = *self.origin.get_or_insert(stamp);
+        let since = match time.backwards {
+            false => stamp.since(origin),
+            true => origin.since(stamp),
+        };
+        let mut since = since + self.shift;
+        let step = since - self.last;
+        // Past midnight, a clock time goes back by most of a day.
+        if time.format == StampFormat::ClockTime && step < -DAY / 2.0 {
+            self.shift += DAY;
+            since += DAY;
+        } else if time.local && self.passes_daylight_saving(stamp, step) {
+            self.shift -= HOUR * step.signum();
+            since -= HOUR * step.signum();
+            self.counts.daylight += 1;
+        }
+        if since != self.last {
+            self.usual_step = since - self.last;
+        }
+        self.last = since;
         Some(since)
     }
 
-    fn has_number(&self) -> bool {
-        let mut values = self.table.values.iter();
-        values.any(|&column| matches!(self.value(column), Cell::Number(_)))
+    /// Whether a step in local time is an hour that daylight saving took or
+    /// gave: between one step and the next an hour more or less, at a full hour,
+    /// where steps are far shorter.
+    fn passes_daylight_saving(&self, stamp: Stamp, step: f64) -> bool {
+        const HOUR: f64 = 3600.0;
+        const LONGEST: f64 = 60.0;
+        let usual = self.usual_step;
+        let off = step.abs() - HOUR - usual * step.signum();
+        let past_hour = stamp.seconds.rem_euclid(3600) as f64 + stamp.rest;
+        let slack = 1.5 * usual + 1e-6;
+        usual > 0.0 && usual < LONGEST && off.abs() <= slack && past_hour <= usual + slack
     }
 
-    fn is_blank(&self) -> bool {
-        self.record.iter().all(|cell| cell.trim_ascii().is_empty())
+    /// The first stamp, in seconds.
+    pub(super) fn origin_s(&self) -> Option<f64> {
+        self.origin.map(|stamp| stamp.seconds as f64 + stamp.rest)
     }
 
-    fn has_surplus(&self) -> bool {
-        let surplus = self.record.iter().skip(self.table.columns.len());
-        surplus
-            .into_iter()
-            .any(|cell| !cell.trim_ascii().is_empty())
+    /// Whether a row without a stamp is no row of samples: nothing in it, or a
+    /// heading again. Without a time column, an empty row is a missing sample
+    /// if it has as many cells as the others.
+    fn is_wordy(&self) -> bool {
+        let table = &self.table;
+        let mut values = table.values.iter().map(|&column| self.value(column));
+        match table.time {
+            Some(_) => !values.any(|cell| matches!(cell, Cell::Number(_))),
+            None if self.records.len() < table.columns.len() => {
+                !values.any(|cell| matches!(cell, Cell::Number(_)))
+            }
+            None => values.all(|cell| cell == Cell::Word),
+        }
     }
 
     /// Bytes of a cell of the current row.
     pub(super) fn bytes(&self, column: usize) -> &[u8] {
-        self.record.get(column).unwrap_or_default()
+        self.records.get(column).unwrap_or_default()
     }
 
     /// A cell of the current row.
+    #[inline]
     pub(super) fn value(&self, column: usize) -> Cell {
-        read_cell(self.bytes(column))
+        let bytes = self.bytes(column);
+        match read_cell(bytes, self.table.decimal) {
+            Cell::Word => self.without_unit(bytes, column),
+            cell => cell,
+        }
+    }
+
+    /// A number with the unit that all cells of its column have.
+    #[cold]
+    fn without_unit(&self, bytes: &[u8], column: usize) -> Cell {
+        let number = self.table.without_unit(bytes, column);
+        if number.len() == bytes.len() {
+            return Cell::Word;
+        }
+        read_cell(trim(number), self.table.decimal)
     }
 }
 

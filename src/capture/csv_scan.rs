@@ -15,25 +15,88 @@ const MOST_BAD: f64 = 0.2;
 /// Frames missing per row in the file beyond which the stamps are not believed.
 const MOST_MISSING_PER_ROW: u64 = 100;
 
+/// Numbers that loggers write where they have none (common practice).
+const STAND_INS: [f64; 10] = [
+    -9999.0, -999.0, -99999.0, -999.25, -9999.9, -999.9, 9999.0, 99999.0, 999_999.0, -999_999.0,
+];
+
 /// What one pass over all rows found.
 pub(super) struct Scan {
     pub columns: Vec<ColumnScan>,
     pub frames: u64,
     counts: RowCounts,
     pub clock: Option<Clock>,
-    /// Longest gap in frames, and the line after it.
+    /// Line after the longest gap.
     longest_gap: (u64, u64),
 }
 
 #[derive(Debug, Clone, Default)]
 pub(super) struct ColumnScan {
     pub column: usize,
-    /// First number.
+    /// First number that is no stand-in.
     pub first: Option<f64>,
     numbers: u64,
+    /// Least and largest number that is no stand-in.
+    range: Option<(f64, f64)>,
+    /// How often each stand-in was met.
+    stand_ins: [u64; STAND_INS.len()],
     words: u64,
     /// Line and cell of the first word.
     word: Option<(u64, String)>,
+}
+
+impl ColumnScan {
+    fn take(&mut self, number: f64) {
+        self.numbers += 1;
+        if number.abs() >= 999.0
+            && let Some(place) = STAND_INS.iter().position(|&one| one == number)
+            && let Some(count) = self.stand_ins.get_mut(place)
+        {
+            *count += 1;
+            return;
+        }
+        self.first.get_or_insert(number);
+        self.range = Some(match self.range {
+            Some((least, most)) => (least.min(number), most.max(number)),
+            None => (number, number),
+        });
+    }
+
+    /// A number that stands for none, and how often: one far from all others,
+    /// which are most.
+    pub(super) fn stand_in(&self) -> Option<(f64, u64)> {
+        const FAR: f64 = 3.0;
+        let (least, most) = self.range?;
+        let far = |one: f64| {
+            let off = if one < least { least - one } else { one - most };
+            off > FAR * (most - least)
+        };
+        let mut met = STAND_INS.iter().zip(self.stand_ins);
+        let (&one, count) = met.find(|&(&one, count)| count > 0 && far(one))?;
+        (2 * count < self.numbers).then_some((one, count))
+    }
+
+    /// Too many words for slips.
+    pub(super) fn is_worded(&self) -> bool {
+        self.words as f64 > MOST_BAD * (self.numbers + self.words) as f64
+    }
+
+    fn share_of_words(&self) -> String {
+        format!(
+            "words in {} of {} cells of this column",
+            self.words,
+            self.numbers + self.words
+        )
+    }
+
+    /// Any number, to measure the others from.
+    pub(super) fn origin(&self) -> Option<f64> {
+        let stand_in = || {
+            let mut met = STAND_INS.iter().zip(self.stand_ins);
+            met.find(|(_, count)| *count > 0).map(|(&one, _)| one)
+        };
+        self.first.or_else(stand_in)
+    }
 }
 
 impl Scan {
@@ -60,10 +123,7 @@ impl Scan {
             }
             for column in &mut columns {
                 match rows.value(column.column) {
-                    Cell::Number(number) => {
-                        column.first.get_or_insert(number);
-                        column.numbers += 1;
-                    }
+                    Cell::Number(number) => column.take(number),
                     Cell::Missing => {}
                     Cell::Word => {
                         column.words += 1;
@@ -89,22 +149,17 @@ impl Scan {
         if rows == 0 {
             return Err(CaptureError::NoSamples);
         }
-        for column in &self.columns {
-            let cells = column.numbers + column.words;
-            let Some((line, text)) = &column.word else {
-                continue;
-            };
-            if column.words as f64 > MOST_BAD * cells as f64 {
+        // A column of remarks costs nothing as long as there is one of numbers.
+        let all_worded = self.columns.iter().all(ColumnScan::is_worded);
+        if let Some(column) = self.columns.iter().find(|_| all_worded) {
+            if let Some((line, text)) = &column.word {
                 return Err(CaptureError::NotANumber {
                     line: *line,
                     column: column.column + 1,
                     text: text.clone(),
-                    share: format!("words in {} of {cells} cells of this column", column.words),
+                    share: column.share_of_words(),
                 });
             }
-        }
-        if self.columns.iter().all(|column| column.first.is_none()) {
-            return Err(CaptureError::NoNumbers);
         }
         let (Some(clock), Some(time)) = (&self.clock, table.time) else {
             return Ok(());
@@ -127,15 +182,15 @@ impl Scan {
                 line: self.counts.first_back.unwrap_or(table.first_line),
             });
         }
-        if counts.missing > rows.saturating_mul(MOST_MISSING_PER_ROW) {
-            let (missing, line) = self.longest_gap;
-            return Err(CaptureError::GapTooLong {
-                line,
-                missing,
-                rows,
-            });
-        }
         Ok(())
+    }
+
+    /// The longest gap to believe in, in frames, if the gaps are too long for
+    /// the rows: longer ones are a clock that was set.
+    pub(super) fn longest_believed(&self) -> Option<u64> {
+        let rows = self.counts.rows;
+        let counts = self.clock.as_ref()?.counts;
+        (counts.missing > rows.saturating_mul(MOST_MISSING_PER_ROW)).then_some(rows)
     }
 
     /// Says what was mended.
@@ -184,9 +239,22 @@ impl Scan {
                 "rows have no readable time",
                 next,
             );
+            note(
+                counts.set_ahead,
+                "jump ahead in time is too long for a gap",
+                "jumps ahead in time are too long for gaps",
+                "taken as a clock that was set, with no sample lost",
+            );
+            note(
+                self.counts.daylight,
+                "hour of daylight saving",
+                "hours of daylight saving",
+                "taken as a step of the clock, with no sample lost",
+            );
             if counts.gaps > 0 {
+                let (longest, line) = self.longest_gap;
                 notes.push(format!(
-                    "{} in the time column: {} filled in as missing",
+                    "{} in the time column: {} filled in as missing (the longest, {longest}, before line {line})",
                     count(counts.gaps, "gap", "gaps"),
                     count(counts.missing, "sample was", "samples were"),
                 ));
@@ -195,8 +263,17 @@ impl Scan {
         }
         for column in &self.columns {
             let name = table.column_name(column.column);
-            if column.first.is_none() {
+            if let Some((one, count)) = column.stand_in() {
+                notes.push(format!(
+                    "column {name:?}: {one} stands for no value {count} times: taken as missing"
+                ));
+            }
+            if column.origin().is_none()
+                && self.columns.iter().any(|other| other.origin().is_some())
+            {
                 notes.push(format!("column {name:?} holds no numbers: left out"));
+            } else if column.origin().is_none() {
+                notes.push(format!("column {name:?} holds no numbers"));
             } else if let Some((line, text)) = &column.word {
                 notes.push(format!(
                     "column {name:?} has {} (first: line {line}, {text:?}): taken as missing",

@@ -3,24 +3,38 @@
 
 use csv::ByteRecord;
 
-use super::cells::{Cell, Heading, is_remark, is_unit, read_cell, read_heading};
+use super::cells::{Cell, Heading, Remarks, read_cell, unit_suffix};
 use super::csv_delimiter::choose_delimiter;
+use super::csv_headings::{given_headings, headings};
 use super::csv_lines::{Line, physical_lines};
 use super::error::CaptureError;
+use super::numbers::{DecimalStyle, told_style};
+use super::options::{DecimalSign, OpenOptions};
 use super::stamps::StampFormat;
+
+/// Lines looked at first.
+const MOST_LINES: usize = 1000;
 
 /// The plan for reading a table.
 #[derive(Debug, Clone, PartialEq)]
 pub(super) struct Table {
     pub delimiter: u8,
+    /// Each second delimiter is a decimal comma.
+    pub paired: bool,
     /// Cells may be in quotes.
     pub quoted: bool,
+    pub decimal: DecimalStyle,
+    /// Decimal points and commas were seen.
+    pub marks: (bool, bool),
+    pub remarks: Remarks,
     /// Bytes of decoded text before the first row of numbers.
     pub skip_bytes: u64,
     /// 1-based line of that row.
     pub first_line: u64,
     pub columns: Vec<Heading>,
     pub time: Option<TimeColumn>,
+    /// Line of the names, if there is one.
+    pub names_line: Option<u64>,
     /// Line above the table that tells a sample rate in hertz, and that rate.
     pub told_rate: Option<(u64, f64)>,
     /// Indices of the columns of values.
@@ -35,6 +49,12 @@ pub(super) struct Table {
 pub(super) struct TimeColumn {
     pub column: usize,
     pub format: StampFormat,
+    /// Written local time, which daylight saving may move.
+    pub local: bool,
+    /// Later rows are earlier.
+    pub backwards: bool,
+    /// The column with the fractions of the seconds, and its format.
+    pub fraction: Option<(usize, StampFormat)>,
 }
 
 /// How the cells of a column mostly read.
@@ -54,7 +74,11 @@ impl Tally {
 
 /// Finds the layout of the table that starts with `head`. `whole`: the head is
 /// all there is.
-pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table, CaptureError> {
+pub(super) fn sniff(
+    head: &[u8],
+    whole: bool,
+    options: &OpenOptions,
+) -> Result<Table, CaptureError> {
     if head.trim_ascii().is_empty() {
         return Err(if whole {
             CaptureError::Empty
@@ -62,12 +86,98 @@ pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table,
             CaptureError::NoNumbers
         });
     }
-    let lines = physical_lines(head, whole)?;
-    let (delimiter, records) = choose_delimiter(&lines)?;
-    let width = usual_width(&records);
-    let tallies = tally(&records, width);
-    let first = records.iter().position(|line| is_data(line, &tallies));
-    let Some(first) = first else {
+    let most = match sniff_lines(head, whole, options, MOST_LINES) {
+        // A long preamble; looking at so many lines at once takes its time.
+        Err(CaptureError::NoNumbers | CaptureError::NoSamples) => usize::MAX,
+        other => return other,
+    };
+    sniff_lines(head, whole, options, most)
+}
+
+/// As [`sniff`], from so many lines at most.
+fn sniff_lines(
+    head: &[u8],
+    whole: bool,
+    options: &OpenOptions,
+    most: usize,
+) -> Result<Table, CaptureError> {
+    let layout = &options.layout;
+    let remarks = match &layout.comment {
+        Some(start) => Remarks::Start(start.as_bytes().to_vec()),
+        None => Remarks::Usual,
+    };
+    let lines = physical_lines(head, whole, most)?;
+    let splitting = choose_delimiter(&lines, layout.delimiter, &remarks)?;
+    let (delimiter, records) = (splitting.delimiter, splitting.lines);
+    let start = match layout.first_row {
+        Some(line) => place_of(&records, lines.len(), line, "first-row")?,
+        None => 0,
+    };
+    let rows_only = records.get(start..).unwrap_or_default();
+    let width = usual_width(rows_only);
+    let tallies = tally(rows_only, width);
+    let first = match layout.first_row {
+        Some(_) => start,
+        None => find_first(&records, width, &tallies, whole)?,
+    };
+    super::limit_channels(width as u64)?;
+    let (before, data) = records.split_at(first);
+    let start = data.first().map_or(0, |line| line.start);
+    let (columns, names_line) = match given_headings(&records, lines.len(), width, layout)? {
+        Some(given) => given,
+        None => headings(before, width),
+    };
+    let mut table = Table {
+        delimiter,
+        paired: splitting.paired,
+        // Without this, a stray quote in a remark could swallow rows.
+        quoted: layout.quoted.unwrap_or_else(|| {
+            lines
+                .iter()
+                .filter(|(at, bytes)| *at >= start && !remarks.marks(bytes, delimiter))
+                .any(|(_, bytes)| bytes.contains(&b'"'))
+        }),
+        decimal: match layout.decimal {
+            Some(DecimalSign::Point) => DecimalStyle::Point,
+            Some(DecimalSign::Comma) => DecimalStyle::Comma,
+            None => decimal_style(data),
+        },
+        marks: marks(data),
+        remarks,
+        skip_bytes: start as u64,
+        first_line: data.first().map_or(1, |line| line.number),
+        columns,
+        time: None,
+        names_line,
+        told_rate: None,
+        values: Vec::new(),
+        left_out: Vec::new(),
+        notes: Vec::new(),
+    };
+    if table.paired {
+        table
+            .notes
+            .push("commas both separate the columns and mark decimals: taken in pairs".into());
+        table.decimal = DecimalStyle::Comma;
+    }
+    table.told_rate = before.iter().rev().find_map(|line| {
+        let (_, bytes) = lines.iter().find(|(start, _)| *start == line.start)?;
+        Some((line.number, super::csv_rate::read_rate(bytes)?))
+    });
+    find_suffixes(&mut table, data);
+    super::csv_time::find_time(&mut table, &rows(data), options)?;
+    choose_values(&mut table, data, &tally(data, width))?;
+    Ok(table)
+}
+
+/// The first row of numbers.
+fn find_first(
+    records: &[Line],
+    width: usize,
+    tallies: &[Tally],
+    whole: bool,
+) -> Result<usize, CaptureError> {
+    let Some(first) = records.iter().position(|line| is_data(line, tallies)) else {
         let header_only = whole && records.iter().filter(|line| !line.remark).count() <= 2;
         return Err(if header_only {
             CaptureError::NoSamples
@@ -75,39 +185,71 @@ pub(super) fn sniff(head: &[u8], whole: bool, rate_given: bool) -> Result<Table,
             CaptureError::NoNumbers
         });
     };
-    super::limit_channels(width as u64)?;
     // Rows with a bad cell may come first, right under a heading of words.
     let heading = records
         .iter()
         .take(first)
         .rposition(|line| is_wordy(line, width));
-    let first = heading.map_or(first, |heading| heading + 1);
-    let (before, data) = records.split_at(first);
-    let start = data.first().map_or(0, |line| line.start);
-    let mut table = Table {
-        delimiter,
-        // Without this, a stray quote in a remark could swallow rows.
-        quoted: lines
-            .iter()
-            .filter(|(at, bytes)| *at >= start && !is_remark(bytes, delimiter))
-            .any(|(_, bytes)| bytes.contains(&b'"')),
-        skip_bytes: start as u64,
-        first_line: data.first().map_or(1, |line| line.number),
-        columns: headings(before, width),
-        time: None,
-        told_rate: None,
-        values: Vec::new(),
-        left_out: Vec::new(),
-        notes: Vec::new(),
-    };
-    table.told_rate = before.iter().rev().find_map(|line| {
-        let (_, bytes) = lines.iter().find(|(start, _)| *start == line.start)?;
-        Some((line.number, super::csv_rate::read_rate(bytes)?))
-    });
-    let rate_known = rate_given || table.told_rate.is_some();
-    super::csv_time::find_time(&mut table, &rows(data), rate_known)?;
-    choose_values(&mut table, data, &tallies)?;
-    Ok(table)
+    Ok(heading.map_or(first, |heading| heading + 1))
+}
+
+/// Index of the record on a line, or of the next one after it.
+pub(super) fn place_of(
+    records: &[Line],
+    lines: usize,
+    line: u64,
+    option: &'static str,
+) -> Result<usize, CaptureError> {
+    let place = records.iter().position(|record| record.number >= line);
+    place.ok_or(CaptureError::NoSuchLine {
+        option,
+        line,
+        lines: lines as u64,
+    })
+}
+
+/// Decimal mark of a table with grouped thousands, which tell it.
+fn decimal_style(data: &[Line]) -> DecimalStyle {
+    let cells = data.iter().filter(|line| !line.remark);
+    let mut styles = cells
+        .flat_map(|line| line.cells.iter())
+        .filter_map(|cell| told_style(super::cells::trim(cell)));
+    styles.next().unwrap_or_default()
+}
+
+/// Whether decimal points and commas are seen in numbers.
+fn marks(data: &[Line]) -> (bool, bool) {
+    let mut seen = (false, false);
+    for cell in data
+        .iter()
+        .filter(|line| !line.remark)
+        .flat_map(|line| line.cells.iter())
+    {
+        if matches!(read_cell(cell, DecimalStyle::Either), Cell::Number(_)) {
+            seen.0 |= cell.contains(&b'.');
+            seen.1 |= cell.contains(&b',');
+        }
+    }
+    seen
+}
+
+/// Units behind the numbers, where a column mostly has the same one.
+fn find_suffixes(table: &mut Table, data: &[Line]) {
+    let decimal = table.decimal;
+    for (column, heading) in table.columns.iter_mut().enumerate() {
+        let cells = || {
+            let rows = data.iter().filter(|line| !line.remark);
+            rows.filter_map(move |line| line.cells.get(column))
+        };
+        let Some(suffix) = cells().find_map(|cell| unit_suffix(cell, decimal)) else {
+            continue;
+        };
+        let same = cells().filter(|cell| unit_suffix(cell, decimal) == Some(suffix));
+        if 2 * same.count() > cells().count() {
+            heading.suffix = Some(suffix.to_owned());
+            heading.unit.get_or_insert_with(|| suffix.to_owned());
+        }
+    }
 }
 
 /// The lines that are no remarks.
@@ -118,13 +260,30 @@ fn rows(data: &[Line]) -> Vec<&ByteRecord> {
         .collect()
 }
 
+/// What a cell may hold before the table's decimal mark and units are known.
+enum Content {
+    Number,
+    Time,
+    Missing,
+    Word,
+}
+
+fn content(cell: &[u8]) -> Content {
+    match read_cell(cell, DecimalStyle::Either) {
+        Cell::Number(_) => Content::Number,
+        Cell::Missing => Content::Missing,
+        Cell::Word if StampFormat::is_written(cell) => Content::Time,
+        Cell::Word if unit_suffix(cell, DecimalStyle::Either).is_some() => Content::Number,
+        Cell::Word => Content::Word,
+    }
+}
+
 /// 1 for a number or time, 1 for a word.
 pub(super) fn tally_cell(cell: &[u8]) -> (usize, usize) {
-    match read_cell(cell) {
-        Cell::Number(_) => (1, 0),
-        Cell::Missing => (0, 0),
-        Cell::Word if StampFormat::is_written(cell) => (1, 0),
-        Cell::Word => (0, 1),
+    match content(cell) {
+        Content::Number | Content::Time => (1, 0),
+        Content::Missing => (0, 0),
+        Content::Word => (0, 1),
     }
 }
 
@@ -149,11 +308,11 @@ pub(super) fn tally(lines: &[Line], width: usize) -> Vec<Tally> {
         .filter(|line| !line.remark && line.cells.len() == width)
     {
         for (tally, cell) in tallies.iter_mut().zip(&line.cells) {
-            match read_cell(cell) {
-                Cell::Number(_) => tally.numbers += 1,
-                Cell::Missing => {}
-                Cell::Word if StampFormat::is_written(cell) => tally.times += 1,
-                Cell::Word => tally.words += 1,
+            match content(cell) {
+                Content::Number => tally.numbers += 1,
+                Content::Time => tally.times += 1,
+                Content::Missing => {}
+                Content::Word => tally.words += 1,
             }
         }
     }
@@ -181,83 +340,14 @@ fn is_wordy(line: &Line, width: usize) -> bool {
     line.cells.len() == width && numbers == 0 && words > 0
 }
 
-/// Names and units from the lines before the data.
-fn headings(before: &[Line], width: usize) -> Vec<Heading> {
-    let mut rows = before
-        .iter()
-        .rev()
-        .map(|line| header_cells(line, width))
-        .skip_while(|cells| cells.iter().all(|cell| cell.is_empty()));
-    let fits = |cells: &Vec<Vec<u8>>| {
-        // A trailing delimiter may be in the header or in the rows only.
-        let filled = cells.iter().filter(|cell| !cell.is_empty()).count();
-        let numbers = cells.iter().filter(|cell| tally_cell(cell).0 > 0).count();
-        cells.len().abs_diff(width) <= 1 && 2 * numbers <= filled && (width == 1 || filled > 1)
-    };
-    let last = rows.next().filter(fits);
-    let mut units = None;
-    let mut names = last;
-    if names
-        .as_ref()
-        .is_some_and(|cells| cells.iter().all(|cell| is_unit_cell(cell)))
-    {
-        // A row of units only, if there are names above it.
-        if let Some(above) = rows.next().filter(fits) {
-            units = names.replace(above);
-        }
-    }
-    (0..width)
-        .map(|column| {
-            let cell = |row: &Option<Vec<Vec<u8>>>| {
-                row.as_ref()
-                    .and_then(|row| row.get(column))
-                    .cloned()
-                    .unwrap_or_default()
-            };
-            let mut heading = read_heading(&cell(&names));
-            let unit = read_heading(&cell(&units));
-            let unit = unit.unit.unwrap_or(unit.name);
-            if !unit.is_empty() {
-                heading.unit = Some(unit.trim_matches(['[', ']', '(', ')']).into());
-            }
-            heading
-        })
-        .collect()
-}
-
-/// The cells of a line before the data, without the mark of a remark.
-fn header_cells(line: &Line, width: usize) -> Vec<Vec<u8>> {
-    let mut cells: Vec<Vec<u8>> = line
-        .cells
-        .iter()
-        .map(|cell| super::cells::trim(cell).to_vec())
-        .collect();
-    if line.remark {
-        if let Some(first) = cells.first_mut() {
-            let marks = first.iter().take_while(|c| b"#%/; \t".contains(c)).count();
-            first.drain(..marks);
-        }
-        // A mark set off by the delimiter is no cell.
-        if cells.len() > width && cells.first().is_some_and(Vec::is_empty) {
-            cells.remove(0);
-        }
-    }
-    cells
-}
-
-fn is_unit_cell(cell: &[u8]) -> bool {
-    let text = super::text::to_text(cell);
-    let bare = text.trim().trim_matches(['[', ']', '(', ')']);
-    bare.is_empty()
-        || bare == "-"
-        || bare.len() < text.trim().len()
-        || is_unit(bare)
-        || StampFormat::from_unit(bare).is_some()
-}
-
 /// Columns of numbers are channels; what else there is, is noted.
 fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<(), CaptureError> {
     let time = table.time.map(|time| time.column);
+    // Nothing but marks of missing values is a channel without a sample.
+    let no_numbers = tallies
+        .iter()
+        .enumerate()
+        .all(|(column, tally)| Some(column) == time || tally.numbers == 0);
     let full = tallies
         .iter()
         .map(|tally| tally.numbers)
@@ -278,6 +368,11 @@ fn choose_values(table: &mut Table, data: &[Line], tallies: &[Tally]) -> Result<
             table
                 .notes
                 .push(format!("column {name:?} holds {what}: left out"));
+        } else if no_numbers && tally.words == 0 && tally.times == 0 {
+            let marked = |line: &Line| line.cells.get(column).is_some_and(|c| !c.is_empty());
+            if data.iter().any(|line| !line.remark && marked(line)) {
+                table.values.push(column);
+            }
         } else if table.is_unnamed(column) && 2 * tally.numbers < full {
             // Settings beside the first rows, or a trailing delimiter.
             if tally.numbers > 0 {
@@ -320,6 +415,14 @@ impl Table {
             }
             _ => format!("column {number}"),
         }
+    }
+
+    /// A cell without the unit that all cells of its column have.
+    pub(super) fn without_unit<'a>(&self, cell: &'a [u8], column: usize) -> &'a [u8] {
+        let suffix = self.columns.get(column).and_then(|c| c.suffix.as_ref());
+        let number =
+            suffix.and_then(|suffix| super::cells::trim(cell).strip_suffix(suffix.as_bytes()));
+        number.unwrap_or(cell)
     }
 
     /// The same table, with a time column that is of no use.

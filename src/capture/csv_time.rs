@@ -5,6 +5,8 @@ use csv::ByteRecord;
 use super::cells::{Cell, Heading, read_cell};
 use super::csv_sniff::{Table, TimeColumn};
 use super::error::CaptureError;
+use super::numbers::DecimalStyle;
+use super::options::{OpenOptions, TimeChoice};
 use super::stamps::{Stamp, StampFormat};
 
 /// Words in the heading of a time column.
@@ -19,6 +21,17 @@ const TIME_WORDS: &[&str] = &[
     "datetime",
     "utc",
     "epoch",
+    // As loggers of other languages say it.
+    "zeit",
+    "uhrzeit",
+    "zeitstempel",
+    "zeitpunkt",
+    "temps",
+    "tiempo",
+    "tempo",
+    "tijd",
+    "tid",
+    "czas",
 ];
 
 /// Words in the heading of a column that counts rows.
@@ -33,6 +46,7 @@ struct Trial {
     read: usize,
     /// Steps from one stamp to the next.
     steps: Vec<f64>,
+    all_below_a_second: bool,
 }
 
 /// Finds the time column, if there is one, and leaves out columns that only
@@ -40,15 +54,174 @@ struct Trial {
 pub(super) fn find_time(
     table: &mut Table,
     rows: &[&ByteRecord],
-    rate_known: bool,
+    options: &OpenOptions,
 ) -> Result<(), CaptureError> {
-    let mut best: Option<(usize, TimeColumn)> = None;
+    let rate_hz = options
+        .rate_hz
+        .or(table.told_rate.map(|(_, rate_hz)| rate_hz));
+    let notation = options.layout.time_as;
+    let told = match notation {
+        Some(notation) => Some(
+            notation
+                .format(rate_hz)
+                .ok_or(CaptureError::SamplesNeedRate)?,
+        ),
+        None => None,
+    };
+    match &options.layout.time {
+        Some(TimeChoice::Nothing) => {
+            return match rate_hz {
+                Some(_) => Ok(()),
+                None => Err(CaptureError::NoTime),
+            };
+        }
+        Some(TimeChoice::Column(asked)) => {
+            let column = find_column(table, asked)?;
+            set_time(table, rows, column, told);
+            leave_out_counts(table, rows);
+            return Ok(());
+        }
+        None => {}
+    }
+    search(table, rows, told.is_none());
+    if table.time.is_none() {
+        // A count of samples tells lost ones, once the rate is known.
+        let count = (0..table.columns.len()).find(|&column| counts_rows(table, rows, column));
+        if let (Some(column), Some(rate_hz)) = (count, rate_hz) {
+            set_time(table, rows, column, Some(StampFormat::Samples { rate_hz }));
+        }
+    }
+    leave_out_counts(table, rows);
+    if table.time.is_none() && !table.left_out(0) {
+        time_in_first_column(table, rows, rate_hz.is_some());
+    }
+    if let (Some(format), Some(time)) = (told, table.time) {
+        set_time(table, rows, time.column, Some(format));
+    } else if told.is_some() {
+        set_time(table, rows, 0, told);
+    }
+    match table.time {
+        Some(_) => Ok(()),
+        None if rate_hz.is_some() => Ok(()),
+        None if table.left_out(0) => Err(CaptureError::OnlyIndex),
+        None => Err(CaptureError::NoTime),
+    }
+}
+
+/// A column of whole seconds and one of their fractions, as in `sec,usec`:
+/// numbers below a second in a unit that the heading says.
+#[allow(clippy::type_complexity)]
+fn find_fraction(
+    table: &Table,
+    rows: &[&ByteRecord],
+) -> Option<((usize, StampFormat), (usize, StampFormat))> {
+    let named = |column: usize| table.columns.get(column).and_then(named_time);
+    let columns = 0..table.columns.len();
+    let fraction = columns.clone().find_map(|column| {
+        let format = named(column)?.format?;
+        let StampFormat::Decimal { exponent } = format else {
+            return None;
+        };
+        let trial = Trial::of(table, rows, column, Some(format));
+        // Elapsed milliseconds may stay below a second in the first rows.
+        let says_time = table.columns.get(column).is_some_and(says_time);
+        let wraps = !says_time || trial.steps.iter().any(|&step| step < 0.0);
+        let below = exponent > 0 && trial.read == rows.len() && trial.all_below_a_second;
+        (wraps && below && trial.format == format).then_some((column, format))
+    })?;
+    let whole = columns
+        .filter(|&column| column != fraction.0)
+        .find_map(|column| {
+            let trial = Trial::of(table, rows, column, named(column)?.format);
+            let whole = trial
+                .steps
+                .iter()
+                .all(|step| step.fract() == 0.0 && *step >= 0.0);
+            let stands = trial.steps.contains(&0.0);
+            (named(column).is_some() && whole && stands && trial.read == rows.len())
+                .then_some((column, trial.format))
+        })?;
+    Some((whole, fraction))
+}
+
+/// Index of the column that the user means.
+fn find_column(table: &Table, asked: &str) -> Result<usize, CaptureError> {
+    let width = table.columns.len();
+    let by_name = |name: &str| {
+        let matches = |column: &usize| table.column_name(*column).eq_ignore_ascii_case(name);
+        (0..width).find(matches)
+    };
+    let by_number = || {
+        let number: usize = asked.parse().ok()?;
+        number.checked_sub(1).filter(|&column| column < width)
+    };
+    by_number().or_else(|| by_name(asked)).ok_or_else(|| {
+        const SHOWN: usize = 12;
+        let mut names: Vec<String> = (0..width.min(SHOWN))
+            .map(|column| format!("{} {:?}", column + 1, table.column_name(column)))
+            .collect();
+        if width > SHOWN {
+            names.push(format!("… {width}"));
+        }
+        CaptureError::NoSuchColumn {
+            asked: asked.to_owned(),
+            has: names.join(", "),
+        }
+    })
+}
+
+fn set_time(table: &mut Table, rows: &[&ByteRecord], column: usize, format: Option<StampFormat>) {
+    let named = table.columns.get(column).and_then(named_time);
+    let cells = cells_of(table, rows, column);
+    let format = format
+        .unwrap_or_else(|| StampFormat::of_cells(&cells, named.and_then(|named| named.format)));
+    table.time = Some(TimeColumn {
+        column,
+        format,
+        local: format.is_local(&cells),
+        backwards: runs_backwards(&cells, format),
+        fraction: None,
+    });
+    if table.time.is_some_and(|time| time.backwards) {
+        table
+            .notes
+            .push("time runs backwards: rows taken in the order of the file".into());
+    }
+}
+
+/// Whether nearly all stamps go back: a table sorted the other way round.
+fn runs_backwards(cells: &[&[u8]], format: StampFormat) -> bool {
+    let stamps: Vec<Stamp> = cells.iter().filter_map(|cell| format.read(cell)).collect();
+    let back = stamps
+        .windows(2)
+        .filter(|pair| matches!(pair, [a, b] if b.since(*a) < 0.0));
+    stamps.len() > 2 && back.count() * 20 >= 19 * (stamps.len() - 1)
+}
+
+fn cells_of<'a>(table: &Table, rows: &[&'a ByteRecord], column: usize) -> Vec<&'a [u8]> {
+    let cell =
+        |row: &&'a ByteRecord| table.without_unit(row.get(column).unwrap_or_default(), column);
+    rows.iter().map(cell).collect()
+}
+
+fn leave_out_counts(table: &mut Table, rows: &[&ByteRecord]) {
+    for column in 0..table.columns.len() {
+        let is_time = table.time.is_some_and(|time| time.column == column);
+        if !is_time && counts_rows(table, rows, column) {
+            table.leave_out(column, "only counts the rows");
+        }
+    }
+}
+
+/// The column whose heading says time and whose cells run like one.
+fn search(table: &mut Table, rows: &[&ByteRecord], guessing: bool) {
+    let mut best: Option<(usize, usize, StampFormat)> = None;
     let mut times = Vec::new();
     for (column, heading) in table.columns.iter().enumerate() {
         let Some(named) = named_time(heading) else {
             continue;
         };
-        let trial = Trial::of(rows, column, named.format);
+        let trial = Trial::of(table, rows, column, named.format);
         // Most cells must be times; a name that is none must at least run like one.
         if trial.read * 2 <= rows.len() || !(named.sure || trial.is_steady()) {
             continue;
@@ -57,43 +230,27 @@ pub(super) fn find_time(
         if trial.mostly_ahead() {
             times.push(column);
         }
-        if best.as_ref().is_none_or(|&(least, _)| faults < least) {
-            best = Some((
-                faults,
-                TimeColumn {
-                    column,
-                    format: trial.format,
-                },
-            ));
+        if best.as_ref().is_none_or(|&(least, ..)| faults < least) {
+            best = Some((faults, column, trial.format));
         }
     }
-    table.time = best.map(|(_, time)| time);
-    if let Some(time) = table.time {
-        let cells: Vec<&[u8]> = rows
-            .iter()
-            .map(|row| row.get(time.column).unwrap_or_default())
-            .collect();
-        table.notes.extend(time.format.assumption(&cells));
+    if let Some((_, column, format)) = best {
+        set_time(table, rows, column, Some(format));
+        let assumed = format.assumption(&cells_of(table, rows, column));
+        table.notes.extend(assumed.filter(|_| guessing));
+    }
+    if let Some((seconds, fraction)) = find_fraction(table, rows) {
+        set_time(table, rows, seconds.0, Some(seconds.1));
+        if let Some(time) = &mut table.time {
+            time.fraction = Some(fraction);
+        }
+        table.leave_out(fraction.0, "holds the fractions of the seconds");
+        return;
     }
     for column in times {
         if table.time.is_some_and(|time| time.column != column) {
             table.leave_out(column, "is a second time");
         }
-    }
-    for column in 0..table.columns.len() {
-        let is_time = table.time.is_some_and(|time| time.column == column);
-        if !is_time && counts_rows(table, rows, column) {
-            table.leave_out(column, "only counts the rows");
-        }
-    }
-    if table.time.is_none() && !table.left_out(0) {
-        time_in_first_column(table, rows, rate_known);
-    }
-    match table.time {
-        Some(_) => Ok(()),
-        None if rate_known => Ok(()),
-        None if table.left_out(0) => Err(CaptureError::OnlyIndex),
-        None => Err(CaptureError::NoTime),
     }
 }
 
@@ -102,7 +259,7 @@ pub(super) fn find_time(
 /// seconds.
 fn time_in_first_column(table: &mut Table, rows: &[&ByteRecord], rate_known: bool) {
     let full = (0..table.columns.len().saturating_sub(1))
-        .map(|column| (column, Trial::of(rows, column, None)))
+        .map(|column| (column, Trial::of(table, rows, column, None)))
         .find(|(_, trial)| trial.read == rows.len());
     let Some((column, trial)) = full else {
         return;
@@ -119,10 +276,7 @@ fn time_in_first_column(table: &mut Table, rows: &[&ByteRecord], rate_known: boo
         }
         return;
     }
-    table.time = Some(TimeColumn {
-        column,
-        format: trial.format,
-    });
+    set_time(table, rows, column, Some(trial.format));
     let unit = if seconds { " in seconds" } else { "" };
     table.notes.push(format!(
         "{:?} taken as the time{unit}",
@@ -146,14 +300,20 @@ fn counts_rows(table: &Table, rows: &[&ByteRecord], column: usize) -> bool {
     if !(unnamed || named) || rows.len() < 2 {
         return false;
     }
-    let whole = |row: &&ByteRecord| match read_cell(row.get(column).unwrap_or_default()) {
-        Cell::Number(number) if number.fract() == 0.0 => Some(number),
-        _ => None,
+    let whole = |row: &&ByteRecord| {
+        let cell = row.get(column).unwrap_or_default();
+        match read_cell(cell, DecimalStyle::Either) {
+            Cell::Number(number) if number.fract() == 0.0 => Some(number),
+            _ => None,
+        }
     };
-    rows.windows(2).all(|pair| {
-        let mut numbers = pair.iter().map(whole);
-        matches!((numbers.next(), numbers.next()), (Some(Some(a)), Some(Some(b))) if b - a == 1.0)
-    })
+    let numbers: Vec<f64> = rows.iter().filter_map(whole).collect();
+    let ones = numbers
+        .windows(2)
+        .filter(|pair| matches!(pair, [a, b] if b - a == 1.0));
+    // Under a name that says so, some rows may be lost.
+    let least = if named { 0.9 } else { 1.0 };
+    numbers.len() == rows.len() && ones.count() as f64 >= least * (rows.len() - 1) as f64
 }
 
 /// A heading that says time.
@@ -164,9 +324,14 @@ struct NamedTime {
     sure: bool,
 }
 
+fn says_time(heading: &Heading) -> bool {
+    let words = words_of(&heading.name);
+    words.iter().any(|word| TIME_WORDS.contains(&word.as_str()))
+}
+
 fn named_time(heading: &Heading) -> Option<NamedTime> {
     let words = words_of(&heading.name);
-    let says_time = words.iter().any(|word| TIME_WORDS.contains(&word.as_str()));
+    let says_time = says_time(heading);
     if let Some(unit) = &heading.unit {
         let format = StampFormat::from_unit(unit)?;
         return Some(NamedTime {
@@ -196,11 +361,13 @@ pub(super) fn words_of(name: &str) -> Vec<String> {
 
 impl Trial {
     /// Reads a column as times in `format`, or in the format its cells suggest.
-    fn of(rows: &[&ByteRecord], column: usize, format: Option<StampFormat>) -> Trial {
-        let cells: Vec<&[u8]> = rows
-            .iter()
-            .map(|row| row.get(column).unwrap_or_default())
-            .collect();
+    fn of(
+        table: &Table,
+        rows: &[&ByteRecord],
+        column: usize,
+        format: Option<StampFormat>,
+    ) -> Trial {
+        let cells = cells_of(table, rows, column);
         let format = StampFormat::of_cells(&cells, format);
         let stamps: Vec<Stamp> = cells.iter().filter_map(|cell| format.read(cell)).collect();
         let steps = stamps.windows(2).map(|pair| match pair {
@@ -210,6 +377,9 @@ impl Trial {
         Trial {
             format,
             read: stamps.len(),
+            all_below_a_second: stamps
+                .iter()
+                .all(|stamp| stamp.seconds == 0 && stamp.rest >= 0.0),
             steps: steps.collect(),
         }
     }

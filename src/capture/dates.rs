@@ -17,16 +17,40 @@ pub(super) enum DateOrder {
 /// Seconds count from 1970-01-01 UTC, or local time where no zone is given.
 pub(super) fn read_date_time(bytes: &[u8], order: DateOrder) -> Option<Stamp> {
     let (days, rest) = read_date(bytes, order)?;
-    let rest = match rest {
-        [b'T' | b't' | b' ' | b'_' | b',' | b'-', rest @ ..] => rest.trim_ascii_start(),
-        _ => return None,
+    let time = match rest {
+        [b'T' | b't' | b' ' | b'_' | b',' | b'-' | b':', rest @ ..] => {
+            let rest = rest.trim_ascii_start();
+            read_time(rest, 24).or_else(|| read_compact_time(rest))?
+        }
+        // 20310507235908
+        rest => read_compact_time(rest)?,
     };
-    let time = read_time(rest, 24)?;
     let seconds = days.checked_mul(DAY_S)?.checked_add(time.seconds)?;
     Some(Stamp {
         seconds,
         rest: time.rest,
     })
+}
+
+/// Whether a time ends in a zone.
+pub(super) fn has_zone(bytes: &[u8]) -> bool {
+    let Some(time) = bytes.iter().rposition(|&c| c == b':' || c == b'T') else {
+        return false;
+    };
+    let end = bytes.get(time..).unwrap_or_default();
+    // The colon may be that within the zone.
+    let before = bytes.get(time.saturating_sub(3)..time).unwrap_or_default();
+    end.iter().any(|c| b"Z+-Cz".contains(c)) || before.starts_with(b"+") || before.starts_with(b"-")
+}
+
+/// What the order of a date is called.
+pub(super) fn words(bytes: &[u8], order: DateOrder) -> &'static str {
+    let year_first = leading_digits(bytes).is_some_and(|(first, _)| first.len() >= 4);
+    match order {
+        _ if year_first => "date with the year first",
+        DateOrder::DayFirst => "day-first date",
+        DateOrder::MonthFirst => "month-first date",
+    }
 }
 
 /// Reads `23:59:08.25`, `11:59:08 PM`, `23:59:08Z`, or an elapsed time whose
@@ -44,9 +68,12 @@ pub(super) fn is_date(bytes: &[u8]) -> bool {
 
 /// Days since 1970-01-01, and what follows the date.
 fn read_date(bytes: &[u8], order: DateOrder) -> Option<(i64, &[u8])> {
-    let (first, rest) = leading_digits(bytes)?;
-    // 20310507
-    if first.len() == 8 {
+    let Some((first, rest)) = leading_digits(bytes) else {
+        return read_named_date(bytes);
+    };
+    // 20310507, and so on to 20310507235908
+    if let 8 | 14 | 17 = first.len() {
+        let (first, rest) = bytes.split_at_checked(8)?;
         let year = whole_number(first.get(..4)?)?;
         let month = whole_number(first.get(4..6)?)?;
         return Some((days(year, month, whole_number(first.get(6..)?)?)?, rest));
@@ -54,8 +81,14 @@ fn read_date(bytes: &[u8], order: DateOrder) -> Option<(i64, &[u8])> {
     let (&mark, rest) = rest
         .split_first()
         .filter(|(mark, _)| b"-/. ".contains(mark))?;
-    let (second, rest) = leading_digits(rest).or_else(|| leading_letters(rest))?;
-    let rest = rest.strip_prefix(&[mark])?;
+    let blanks = rest.trim_ascii_start();
+    let (second, rest) = leading_digits(rest).or_else(|| leading_letters(blanks))?;
+    // "7. May 2031"
+    let named = second.first().is_some_and(u8::is_ascii_alphabetic);
+    let rest = match rest {
+        [b' ', rest @ ..] if named => rest,
+        rest => rest.strip_prefix(&[mark])?,
+    };
     let (third, rest) = leading_digits(rest)?;
     let numbers = (
         whole_number(first)?,
@@ -78,6 +111,19 @@ fn read_date(bytes: &[u8], order: DateOrder) -> Option<(i64, &[u8])> {
     Some((days(year, month, day)?, rest))
 }
 
+/// `May 7, 2031 23:59`, or `Wed May  7 2031`.
+fn read_named_date(bytes: &[u8]) -> Option<(i64, &[u8])> {
+    let blanks = |rest: &[u8]| rest.iter().take_while(|c| b" ,.-".contains(c)).count();
+    let (mut name, mut rest) = leading_letters(bytes)?;
+    if month_or_number(name).is_none() {
+        (name, rest) = leading_letters(bytes.get(name.len() + blanks(rest)..)?)?;
+    }
+    let month = month_or_number(name)?;
+    let (day, rest) = leading_digits(rest.get(blanks(rest)..)?)?;
+    let (year, rest) = leading_digits(rest.get(blanks(rest)..)?).filter(|(y, _)| y.len() == 4)?;
+    Some((days(whole_number(year)?, month, whole_number(day)?)?, rest))
+}
+
 fn leading_digits(bytes: &[u8]) -> Option<(&[u8], &[u8])> {
     let n = bytes.iter().take_while(|c| c.is_ascii_digit()).count();
     (n > 0).then(|| bytes.split_at(n))
@@ -94,7 +140,15 @@ fn month_or_number(bytes: &[u8]) -> Option<i64> {
         return whole_number(bytes);
     }
     let name = bytes.get(..3)?.to_ascii_lowercase();
-    let place = MONTHS.chunks_exact(3).position(|month| month == name)?;
+    let english = match name.as_slice() {
+        // As German loggers write them.
+        b"mai" => b"may",
+        b"okt" => b"oct",
+        b"dez" => b"dec",
+        b"mrz" => b"mar",
+        name => name,
+    };
+    let place = MONTHS.chunks_exact(3).position(|month| month == english)?;
     i64::try_from(place + 1).ok()
 }
 
@@ -116,6 +170,27 @@ fn days(year: i64, month: i64, day: i64) -> Option<i64> {
     let from_march = (month + 9) % 12;
     let day_of_year = (153 * from_march + 2) / 5 + day - 1;
     Some(year * 365 + year / 4 - year / 100 + year / 400 + day_of_year - 719_468)
+}
+
+/// `235908` or `235908.25`, or with the milliseconds right behind.
+fn read_compact_time(bytes: &[u8]) -> Option<Stamp> {
+    let (digits, rest) = leading_digits(bytes)?;
+    let (whole, millis) = match digits.len() {
+        6 => (digits, None),
+        9 => digits
+            .split_at_checked(6)
+            .map(|(whole, ms)| (whole, Some(ms)))?,
+        _ => return None,
+    };
+    let (fraction, zone) = match (millis, rest) {
+        (Some(millis), rest) => (millis, rest),
+        (None, [b'.' | b',', rest @ ..]) => leading_digits(rest)?,
+        (None, rest) => (&b""[..], rest),
+    };
+    let two = |from: usize| whole.get(from..from + 2);
+    let mark = if fraction.is_empty() { &b""[..] } else { b"." };
+    let colons = [two(0)?, b":", two(2)?, b":", two(4)?, mark, fraction, zone].concat();
+    read_time(&colons, 24)
 }
 
 /// Hours below `hours`, minutes, perhaps seconds, AM or PM, and zone.
@@ -168,6 +243,10 @@ fn read_zone(zone: &[u8]) -> Option<i64> {
         [] | b"Z" | b"z" | b"UTC" | b"GMT" => return Some(0),
         [b'+', digits @ ..] => (1, digits),
         [b'-', digits @ ..] => (-1, digits),
+        b"CET" | b"MEZ" => return Some(3600),
+        b"CEST" | b"MESZ" => return Some(7200),
+        // An abbreviation moves all stamps alike, unless it changes.
+        [_, _, _] | [_, _, _, _] if zone.iter().all(u8::is_ascii_uppercase) => return Some(0),
         _ => return None,
     };
     let (hours, minutes) = digits.split_at_checked(2)?;

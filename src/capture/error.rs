@@ -35,10 +35,10 @@ pub enum CaptureError {
         rate_hz: f64,
     },
     /// Neither RIFF nor text.
-    #[error("is not a WAV or CSV recording (export it as PCM WAV or as CSV)")]
+    #[error("is not a WAV, FLAC or CSV recording (export it as PCM WAV or as CSV)")]
     NotARecording,
     /// A format known by its first bytes, which is not read.
-    #[error("is {what}, not a WAV or CSV recording ({help})")]
+    #[error("is {what}, not a WAV, FLAC or CSV recording ({help})")]
     ForeignFormat {
         /// Name of the format, with its article.
         what: &'static str,
@@ -67,6 +67,18 @@ pub enum CaptureError {
     BadWavHeader {
         /// The fault, with the bad value in it.
         what: String,
+    },
+    /// A FLAC file without a frame that can be read.
+    #[error("damaged FLAC: {what}")]
+    BadFlac {
+        /// The fault.
+        what: String,
+    },
+    /// A FLAC file with samples of a rare size.
+    #[error("FLAC with {bits}-bit samples (8, 12, 16, 20 and 24 are read; convert it to PCM WAV)")]
+    UnsupportedFlac {
+        /// Bits per sample.
+        bits: u8,
     },
     /// Sample coding that is not PCM (linear, A-law, mu-law) or float.
     #[error("WAV with {coding} (convert it to PCM first)")]
@@ -103,16 +115,32 @@ pub enum CaptureError {
     /// The time of the samples is not told.
     #[error("no time column found: give the sample rate with --rate HZ")]
     NoTime,
-    /// Commas as delimiters and as decimal marks.
-    #[error(
-        "commas both separate the columns and mark decimals (export with semicolons or with decimal points)"
-    )]
-    AmbiguousCommas,
     /// A first column of 0, 1, 2, … without a name: rows or seconds?
     #[error(
         "no time column found (the first column only counts the rows): give the sample rate with --rate HZ"
     )]
     OnlyIndex,
+    /// An option names a column that is not there.
+    #[error("has no column {asked:?}, only {has} (--time takes a name or a number from 1)")]
+    NoSuchColumn {
+        /// As asked for.
+        asked: String,
+        /// The columns, by number and name.
+        has: String,
+    },
+    /// An option names a line beyond the first ones, in which the layout is found.
+    #[error("has no line {line} among the first {lines} (--{option})")]
+    NoSuchLine {
+        /// The option.
+        option: &'static str,
+        /// As asked for.
+        line: u64,
+        /// Lines that are looked at.
+        lines: u64,
+    },
+    /// A count of samples is a time only with a rate.
+    #[error("sample numbers are no time by themselves: give the sample rate with --rate HZ")]
+    SamplesNeedRate,
     /// Only words where numbers are expected.
     #[error("line {line}, column {column}: {text:?} is not a number ({share})")]
     NotANumber {
@@ -151,19 +179,6 @@ pub enum CaptureError {
         /// Rows with such a cell.
         bad: u64,
         /// Rows in all.
-        rows: u64,
-    },
-    /// A gap so long that the stamps are wrong or the file holds two recordings.
-    #[error(
-        "line {line}: the time jumps ahead by {}, with {} in the file (cut the recording there, or mend the stamp)",
-        count(*missing, "sample", "samples"), count(*rows, "row", "rows")
-    )]
-    GapTooLong {
-        /// 1-based line after the gap.
-        line: u64,
-        /// Samples that would have to be filled in.
-        missing: u64,
-        /// Rows in the file.
         rows: u64,
     },
     /// The second pass found another file than the first.

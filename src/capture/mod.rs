@@ -5,10 +5,15 @@
 //!
 //! WAV: `riff` walks the chunks without trusting a size, `wav` decodes blocks,
 //! with `companded` for A-law and mu-law.
-//! CSV: `text` and `line_limit` give bounded lines in UTF-8, `csv_lines`,
-//! `csv_delimiter`, `csv_sniff` and `csv_time` find the layout from the first
-//! lines, `stamps` and `dates` read times, `clock_plan` and `clock` turn them into frame numbers and
-//! a rate, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks.
+//! FLAC: `flac_head` reads what stands before frames, `flac` goes from one to
+//! the next.
+//! CSV: `text` and `line_limit` give bounded lines in UTF-8; `csv_lines`,
+//! `csv_delimiter`, `csv_sniff`, `csv_headings`, `csv_rate` and `csv_time` find
+//! the layout from the first lines, as far as `options` leave it open. `cells`
+//! and `numbers` read cells, `stamps` and `dates` times; `clock_plan` and `clock`
+//! turn these into frame numbers and a rate. `csv_split` splits plain rows in
+//! place, `csv_rows` and `csv_scan` read all rows once, `csv` hands out blocks,
+//! `stamped` rows with their own times.
 
 mod cells;
 mod clock;
@@ -16,17 +21,26 @@ mod clock_plan;
 mod companded;
 mod csv;
 mod csv_delimiter;
+mod csv_headings;
 mod csv_lines;
 mod csv_rate;
 mod csv_rows;
 mod csv_scan;
 mod csv_sniff;
+mod csv_split;
 mod csv_time;
 mod dates;
 mod error;
+mod flac;
+mod flac_head;
+#[cfg(fuzzing)]
+pub mod fuzzing;
 mod line_limit;
+mod numbers;
+mod options;
 mod probe;
 mod riff;
+mod stamped;
 mod stamps;
 mod text;
 mod wav;
@@ -36,6 +50,10 @@ use std::fs::File;
 use std::path::{Path, PathBuf};
 
 pub use error::CaptureError;
+pub use options::{
+    DecimalSign, LayoutOptions, OpenOptions, TextEncoding, TimeChoice, TimeNotation,
+};
+pub use stamped::{StampedBlock, StampedBlocks};
 
 use probe::Kind;
 
@@ -43,13 +61,6 @@ use probe::Kind;
 const LEAST_FRAMES: u64 = 16;
 /// Most channels, so that no header makes us allocate without bound.
 const MOST_CHANNELS: u64 = 4096;
-
-/// What the user says about a recording.
-#[derive(Debug, Clone, Copy, Default, PartialEq)]
-pub struct OpenOptions {
-    /// Sample rate in hertz; goes before what the file says. Need not be whole.
-    pub rate_hz: Option<f64>,
-}
 
 /// One channel of a recording.
 #[derive(Debug, Clone, PartialEq)]
@@ -70,6 +81,8 @@ pub struct Spec {
     pub path: PathBuf,
     /// Samples per second and channel, > 0.
     pub rate_hz: f64,
+    /// Half-width of its 95 % interval where time stamps tell the rate.
+    pub rate_hz_u95: Option<f64>,
     /// In file order, never empty.
     pub channels: Vec<Channel>,
     /// Samples per channel.
@@ -86,6 +99,12 @@ pub struct Spec {
     /// For A-law and mu-law it is the step around zero, where it is smallest.
     /// `None` for float WAV and CSV, whose steps are not known.
     pub step: Option<f64>,
+    /// What the file was taken for: layout, time column, where the rate is from;
+    /// one clause each.
+    pub read_as: Vec<String>,
+    /// Runs of samples missing between time stamps; their frames are NaN.
+    /// 0 for formats whose frames have no stamps.
+    pub gaps: u64,
     /// What was assumed or mended while reading, one clause each.
     pub notes: Vec<String>,
 }
@@ -132,6 +151,7 @@ pub struct Capture {
 #[derive(Debug, Clone)]
 enum Recipe {
     Wav(wav::WavRecipe),
+    Flac(flac::FlacRecipe),
     Csv(csv::CsvRecipe),
 }
 
@@ -154,12 +174,16 @@ impl Capture {
                 let (spec, recipe) = wav::open(path.to_owned(), file, length, options)?;
                 (spec, Recipe::Wav(recipe))
             }
+            Kind::Flac => {
+                let (spec, recipe) = flac::open(path.to_owned(), file, length, options)?;
+                (spec, Recipe::Flac(recipe))
+            }
             Kind::Text => {
                 let (spec, recipe) = csv::open(path.to_owned(), options)?;
                 (spec, Recipe::Csv(recipe))
             }
         };
-        if spec.frames < LEAST_FRAMES {
+        if spec.frames < LEAST_FRAMES && !options.any_length {
             return Err(CaptureError::TooShort {
                 frames: spec.frames,
                 least: LEAST_FRAMES,
@@ -173,13 +197,9 @@ impl Capture {
         &self.spec
     }
 
-    /// Runs of samples missing between time stamps; their frames are NaN.
-    /// 0 for WAV, whose frames have no stamps.
+    /// Runs of samples missing between time stamps, as in [`Spec::gaps`].
     pub fn gaps(&self) -> u64 {
-        match &self.recipe {
-            Recipe::Wav(_) => 0,
-            Recipe::Csv(csv) => csv.gaps(),
-        }
+        self.spec.gaps
     }
 
     /// Starts a pass over all samples, `frames_per_block` frames at a time (at
@@ -191,8 +211,24 @@ impl Capture {
         let frames_per_block = frames_per_block.max(1);
         Ok(Blocks(match &self.recipe {
             Recipe::Wav(wav) => Pass::Wav(wav.blocks(frames_per_block)?),
+            Recipe::Flac(flac) => Pass::Flac(Box::new(flac.blocks(frames_per_block)?)),
             Recipe::Csv(csv) => Pass::Csv(Box::new(csv.blocks(frames_per_block)?)),
         }))
+    }
+
+    /// Starts a pass over the rows that have a time of their own, with that time;
+    /// `None` where the file has none (WAV, FLAC, or a CSV without a time column).
+    ///
+    /// # Errors
+    /// Where the file can no longer be opened.
+    pub fn stamped_blocks(
+        &self,
+        rows_per_block: usize,
+    ) -> Result<Option<StampedBlocks>, CaptureError> {
+        match &self.recipe {
+            Recipe::Wav(_) | Recipe::Flac(_) => Ok(None),
+            Recipe::Csv(csv) => csv.stamped(rows_per_block.max(1)),
+        }
     }
 }
 
@@ -203,6 +239,7 @@ pub struct Blocks(Pass);
 #[derive(Debug)]
 enum Pass {
     Wav(wav::WavBlocks),
+    Flac(Box<flac::FlacBlocks>),
     Csv(Box<csv::CsvBlocks>),
 }
 
@@ -215,6 +252,7 @@ impl Blocks {
     pub fn next_into(&mut self, block: &mut Block) -> Result<bool, CaptureError> {
         match &mut self.0 {
             Pass::Wav(wav) => wav.next_into(block),
+            Pass::Flac(flac) => flac.next_into(block),
             Pass::Csv(csv) => csv.next_into(block),
         }
     }

@@ -5,16 +5,18 @@ use std::io::{Seek, SeekFrom};
 use std::path::Path;
 
 use super::error::{CaptureError, excerpt};
+use super::flac_head;
 use super::riff;
 use super::text::Encoding;
 
 /// Bytes that are looked at.
 const HEAD: usize = 4096;
 
-/// The two kinds of recording.
+/// The kinds of recording.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub(super) enum Kind {
     Wav,
+    Flac,
     Text,
 }
 
@@ -47,7 +49,6 @@ const FOREIGN: &[(usize, &[u8], &str, &str)] = &[
     (0, b"\xFF\xF1", "AAC audio", CONVERT),
     (0, b"\xFF\xF9", "AAC audio", CONVERT),
     (0, b"OggS", "Ogg audio", CONVERT),
-    (0, b"fLaC", "FLAC audio", CONVERT),
     (0, b"wvpk", "WavPack audio", CONVERT),
     (4, b"ftyp", "MPEG-4 audio or video", CONVERT),
     (8, b"AIFF", "an AIFF file", CONVERT),
@@ -55,7 +56,7 @@ const FOREIGN: &[(usize, &[u8], &str, &str)] = &[
     (0, b"caff\x00\x01", "a CAF file", CONVERT),
     (0, b".snd\x00", "an AU file", CONVERT),
     (0, b"riff\x2E\x91\xCF\x11", "a Wave64 file", CONVERT),
-    (0, b"RIFX", "a big-endian RIFX file", CONVERT),
+    (0, b"RIFX", "a RIFX file of another kind than WAVE", CONVERT),
     (0, b"MThd\x00", "a MIDI file", "it holds notes, not samples"),
     (0, b"\x1A\x45\xDF\xA3", "a Matroska file", CONVERT),
     (0, b"RIFF", "a RIFF file of another kind than WAVE", CONVERT),
@@ -97,7 +98,16 @@ pub(super) fn probe(file: &mut File, path: &Path) -> Result<Kind, CaptureError> 
             .iter()
             .any(|wav| ext.eq_ignore_ascii_case(wav))
     });
-    kind(buffer.get(..got).unwrap_or_default(), named_wav)
+    let head = buffer.get(..got).unwrap_or_default();
+    // A tag may stand before a FLAC stream; before anything else it is MP3.
+    if let Some(length) = flac_head::id3_length(head) {
+        let mut magic = [0; 4];
+        file.seek(SeekFrom::Start(length))?;
+        if riff::read_up_to(file, &mut magic)? == magic.len() && magic == *b"fLaC" {
+            return Ok(Kind::Flac);
+        }
+    }
+    kind(head, named_wav)
 }
 
 fn kind(head: &[u8], named_wav: bool) -> Result<Kind, CaptureError> {
@@ -106,6 +116,9 @@ fn kind(head: &[u8], named_wav: bool) -> Result<Kind, CaptureError> {
     }
     if riff::is_wave(head) {
         return Ok(Kind::Wav);
+    }
+    if head.starts_with(b"fLaC") {
+        return Ok(Kind::Flac);
     }
     let starts =
         |at: usize, magic: &[u8]| head.get(at..).is_some_and(|rest| rest.starts_with(magic));

@@ -1,7 +1,7 @@
 //! The chunks of a RIFF/WAVE file, read without trusting any of its sizes.
 //!
 //! Layout after the "Multimedia Programming Interface and Data Specifications
-//! 1.0" (RIFF), Microsoft's `WAVEFORMATEXTENSIBLE`, and EBU Tech 3306 (RF64,
+//! 1.0" (RIFF, and RIFX with the big end of each number first), Microsoft's `WAVEFORMATEXTENSIBLE`, and EBU Tech 3306 (RF64,
 //! with the 64-bit sizes in a `ds64` chunk).
 
 use std::io::{Read, Seek, SeekFrom};
@@ -15,6 +15,14 @@ const CHUNK_HEADER: u64 = 8;
 const UNKNOWN_SIZE: u32 = u32::MAX;
 /// Chunks looked at before the file is given up as garbage.
 const MOST_CHUNKS: usize = 10_000;
+/// Bytes searched for a chunk behind damage.
+const SEARCHED: u64 = 1 << 20;
+
+/// Which end of a number comes first.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+struct Order {
+    big: bool,
+}
 
 /// How samples are coded.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -51,6 +59,8 @@ pub(super) struct Layout {
     pub frames: u64,
     /// RF64 or BW64 rather than RIFF.
     pub large: bool,
+    /// RIFX: the big end of each number comes first.
+    pub big_end: bool,
     pub notes: Vec<String>,
 }
 
@@ -69,7 +79,10 @@ pub(super) fn walk<F: Read + Seek>(file: &mut F, length: u64) -> Result<Layout, 
     if read_up_to(file, &mut head)? < head.len() || !is_wave(&head) {
         return Err(bad("the file ends inside it".into()));
     }
-    let large = !head.starts_with(b"RIFF");
+    let order = Order {
+        big: head.starts_with(b"RIFX"),
+    };
+    let large = head.starts_with(b"RF64") || head.starts_with(b"BW64");
     let mut notes = Vec::new();
     let mut format = None;
     let mut data: Option<(Chunk, u64)> = None;
@@ -77,36 +90,69 @@ pub(super) fn walk<F: Read + Seek>(file: &mut F, length: u64) -> Result<Layout, 
     let mut at = head.len() as u64;
 
     for _ in 0..MOST_CHUNKS {
-        let Some(chunk) = read_chunk(file, at)? else {
-            break;
+        let wanted: &[&[u8; 4]] = match (&format, &data) {
+            (None, None) => &[b"fmt ", b"data"],
+            (None, Some(_)) => &[b"fmt "],
+            (Some(_), None) => &[b"data"],
+            (Some(_), Some(_)) => &[],
+        };
+        let Some(chunk) = order.read_chunk(file, at)? else {
+            match search(file, at, wanted)? {
+                Some(next) => {
+                    notes.push(format!(
+                        "{} of no chunk from byte {at} on: skipped",
+                        count(next - at, "byte", "bytes")
+                    ));
+                    at = next;
+                    continue;
+                }
+                None => break,
+            }
         };
         let start = chunk.start;
         let rest = length.saturating_sub(start);
         let mut size = u64::from(chunk.size);
         match &chunk.id {
-            b"fmt " if format.is_none() => format = Some(read_format(file, size, &mut notes)?),
+            b"fmt " if format.is_none() => {
+                format = Some(order.read_format(file, size, &mut notes)?);
+            }
             b"ds64" if large => large_data_size = read_ds64(file)?,
             b"bext" => notes.extend(read_bext(file, size)?),
-            b"data" if data.is_none() => {
+            // An empty one before it was given up by its recorder.
+            b"data" if data.as_ref().is_none_or(|&(_, size)| size == 0) => {
                 if chunk.size == UNKNOWN_SIZE && large {
                     size = large_data_size.filter(|&size| size > 0).unwrap_or(size);
                 }
-                if chunk.size == 0 && rest > 0 && read_chunk(file, chunk.start)?.is_none() {
+                if chunk.size == 0 && rest > 0 && order.read_chunk(file, chunk.start)?.is_none() {
                     notes.push("the header was never finished: read to the end of the file".into());
                     size = rest;
-                } else if size < rest && is_wrapped(file, &chunk, size, rest)? {
+                } else if size < rest && order.is_wrapped(file, &chunk, size, rest)? {
                     notes.push("more than 4 GiB of samples: read to the end of the file".into());
                     size = rest;
                 }
                 data = Some((chunk, size));
+                if start.checked_add(size).is_none_or(|end| end >= length) {
+                    break;
+                }
+                at = order.next_chunk(file, start, size)?;
+                continue;
             }
             b"data" => notes.push("a second data chunk was left out".into()),
             _ => {}
         }
         if start.checked_add(size).is_none_or(|end| end >= length) {
-            break;
+            // A lie, if there is still a chunk to come.
+            let Some(next) = search(file, start, wanted)? else {
+                break;
+            };
+            notes.push(format!(
+                "chunk {:?} claims {size} bytes, more than the file has: skipped",
+                String::from_utf8_lossy(&chunk.id)
+            ));
+            at = next;
+            continue;
         }
-        at = next_chunk(file, start, size)?;
+        at = order.next_chunk(file, start, size)?;
     }
 
     let format = format.ok_or_else(|| bad("no format chunk".into()))?;
@@ -138,6 +184,7 @@ pub(super) fn walk<F: Read + Seek>(file: &mut F, length: u64) -> Result<Layout, 
         data_start: chunk.start,
         frames: bytes / frame,
         large,
+        big_end: order.big,
         notes,
     })
 }
@@ -145,7 +192,7 @@ pub(super) fn walk<F: Read + Seek>(file: &mut F, length: u64) -> Result<Layout, 
 /// Whether the first 12 bytes are those of a wave file.
 pub(super) fn is_wave(head: &[u8]) -> bool {
     let magic = head.get(..4).unwrap_or_default();
-    matches!(magic, b"RIFF" | b"RF64" | b"BW64") && head.get(8..12) == Some(b"WAVE")
+    matches!(magic, b"RIFF" | b"RIFX" | b"RF64" | b"BW64") && head.get(8..12) == Some(b"WAVE")
 }
 
 fn bad(what: String) -> CaptureError {
@@ -166,188 +213,252 @@ pub(super) fn read_up_to<F: Read>(file: &mut F, buffer: &mut [u8]) -> std::io::R
     Ok(filled)
 }
 
-/// The chunk header at `at`; `None` at the end of the file or where the four
-/// bytes cannot be an identifier (printable ASCII by the RIFF specification).
-fn read_chunk<F: Read + Seek>(file: &mut F, at: u64) -> Result<Option<Chunk>, CaptureError> {
-    let mut header = [0; CHUNK_HEADER as usize];
-    file.seek(SeekFrom::Start(at))?;
-    if read_up_to(file, &mut header)? < header.len() {
+/// Where the next of some chunks starts, within a bounded stretch from `from` on.
+fn search<F: Read + Seek>(
+    file: &mut F,
+    from: u64,
+    wanted: &[&[u8; 4]],
+) -> Result<Option<u64>, CaptureError> {
+    if wanted.is_empty() {
         return Ok(None);
     }
-    let [a, b, c, d, size @ ..] = header;
-    let id = [a, b, c, d];
-    if !id.iter().all(|byte| (b' '..=b'~').contains(byte)) {
-        return Ok(None);
+    let mut stretch = Vec::new();
+    file.seek(SeekFrom::Start(from))?;
+    file.take(SEARCHED).read_to_end(&mut stretch)?;
+    let found = stretch
+        .windows(4)
+        .position(|id| wanted.iter().any(|wanted| id == *wanted));
+    Ok(found.map(|step| from + step as u64))
+}
+
+impl Order {
+    /// A number of up to eight bytes.
+    fn number(self, bytes: &[u8]) -> u64 {
+        let add = |sum: u64, &byte: &u8| sum << 8 | u64::from(byte);
+        if self.big {
+            bytes.iter().fold(0, add)
+        } else {
+            bytes.iter().rev().fold(0, add)
+        }
     }
-    Ok(Some(Chunk {
-        id,
-        size: u32::from_le_bytes(size),
-        start: at + CHUNK_HEADER,
-    }))
-}
 
-/// Where the chunk after one of `size` bytes from `start` on begins: after a
-/// pad byte if the size is odd, but some writers forget it.
-fn next_chunk<F: Read + Seek>(file: &mut F, start: u64, size: u64) -> Result<u64, CaptureError> {
-    let end = start + size;
-    if size.is_multiple_of(2) {
-        return Ok(end);
+    fn u16(self, bytes: &[u8], at: usize) -> Option<u16> {
+        bytes.get(at..at + 2).map(|bytes| self.number(bytes) as u16)
     }
-    let known = |chunk: &Option<Chunk>| {
-        let id = chunk.as_ref().map(|chunk| chunk.id);
-        id.is_some_and(|id| [b"fmt ", b"data", b"fact", b"LIST", b"bext"].contains(&&id))
-    };
-    let padded = read_chunk(file, end + 1)?;
-    let unpadded = read_chunk(file, end)?;
-    let forgotten = !known(&padded) && (known(&unpadded) || padded.is_none() && unpadded.is_some());
-    Ok(if forgotten { end } else { end + 1 })
-}
 
-/// A data chunk of more than 4 GiB whose 32-bit size has wrapped around: whole
-/// multiples of 2^32 more than it says reach past where it claims to end, and
-/// no chunk starts there.
-fn is_wrapped<F: Read + Seek>(
-    file: &mut F,
-    chunk: &Chunk,
-    size: u64,
-    rest: u64,
-) -> Result<bool, CaptureError> {
-    if rest - size < 1 << 32 {
-        return Ok(false);
+    fn u64(self, bytes: &[u8], at: usize) -> Option<u64> {
+        bytes.get(at..at + 8).map(|bytes| self.number(bytes))
     }
-    let next = next_chunk(file, chunk.start, size)?;
-    Ok(read_chunk(file, next)?.is_none())
-}
 
-fn le_u16(bytes: &[u8], at: usize) -> Option<u16> {
-    bytes
-        .get(at..at + 2)?
-        .try_into()
-        .ok()
-        .map(u16::from_le_bytes)
-}
+    fn u32(self, bytes: &[u8], at: usize) -> Option<u32> {
+        bytes.get(at..at + 4).map(|bytes| self.number(bytes) as u32)
+    }
 
-fn le_u32(bytes: &[u8], at: usize) -> Option<u32> {
-    bytes
-        .get(at..at + 4)?
-        .try_into()
-        .ok()
-        .map(u32::from_le_bytes)
-}
+    /// The chunk header at `at`; `None` at the end of the file or where the four
+    /// bytes cannot be an identifier (printable ASCII by the RIFF specification).
+    fn read_chunk<F: Read + Seek>(
+        self,
+        file: &mut F,
+        at: u64,
+    ) -> Result<Option<Chunk>, CaptureError> {
+        let mut header = [0; CHUNK_HEADER as usize];
+        file.seek(SeekFrom::Start(at))?;
+        if read_up_to(file, &mut header)? < header.len() {
+            return Ok(None);
+        }
+        let [a, b, c, d, size @ ..] = header;
+        let id = [a, b, c, d];
+        if !id.iter().all(|byte| (b' '..=b'~').contains(byte)) {
+            return Ok(None);
+        }
+        Ok(Some(Chunk {
+            id,
+            size: self.number(&size) as u32,
+            start: at + CHUNK_HEADER,
+        }))
+    }
 
-fn le_u64(bytes: &[u8], at: usize) -> Option<u64> {
-    bytes
-        .get(at..at + 8)?
-        .try_into()
-        .ok()
-        .map(u64::from_le_bytes)
-}
+    /// Where the chunk after one of `size` bytes from `start` on begins: after a
+    /// pad byte if the size is odd, but some writers forget it.
+    fn next_chunk<F: Read + Seek>(
+        self,
+        file: &mut F,
+        start: u64,
+        size: u64,
+    ) -> Result<u64, CaptureError> {
+        let end = start + size;
+        if size.is_multiple_of(2) {
+            return Ok(end);
+        }
+        let known = |chunk: &Option<Chunk>| {
+            let id = chunk.as_ref().map(|chunk| chunk.id);
+            id.is_some_and(|id| [b"fmt ", b"data", b"fact", b"LIST", b"bext"].contains(&&id))
+        };
+        let padded = self.read_chunk(file, end + 1)?;
+        let unpadded = self.read_chunk(file, end)?;
+        let forgotten =
+            !known(&padded) && (known(&unpadded) || padded.is_none() && unpadded.is_some());
+        Ok(if forgotten { end } else { end + 1 })
+    }
 
-/// Reads a `fmt ` chunk of `size` bytes from where the file stands.
-fn read_format<F: Read>(
-    file: &mut F,
-    size: u64,
-    notes: &mut Vec<String>,
-) -> Result<Format, CaptureError> {
-    let mut buffer = [0; 40];
-    let wanted = buffer
-        .len()
-        .min(usize::try_from(size).unwrap_or(usize::MAX));
-    let got = read_up_to(file, buffer.get_mut(..wanted).unwrap_or_default())?;
-    let bytes = buffer.get(..got).unwrap_or_default();
-    let short = || {
-        bad(format!(
-            "format chunk of {} (16 are needed)",
-            count(got as u64, "byte", "bytes")
-        ))
-    };
-    let mut tag = le_u16(bytes, 0).ok_or_else(short)?;
-    let channels = le_u16(bytes, 2).ok_or_else(short)?;
-    let rate_hz = le_u32(bytes, 4).ok_or_else(short)?;
-    let byte_rate = le_u32(bytes, 8).ok_or_else(short)?;
-    let frame = le_u16(bytes, 12).ok_or_else(short)?;
-    let bits = le_u16(bytes, 14).ok_or_else(short)?;
-    let mut valid_bits = bits;
-    const EXTENSIBLE: u16 = 0xFFFE;
-    if tag == EXTENSIBLE {
-        let cut = || {
+    /// A data chunk of more than 4 GiB whose 32-bit size has wrapped around: whole
+    /// multiples of 2^32 more than it says reach past where it claims to end, and
+    /// no chunk starts there.
+    fn is_wrapped<F: Read + Seek>(
+        self,
+        file: &mut F,
+        chunk: &Chunk,
+        size: u64,
+        rest: u64,
+    ) -> Result<bool, CaptureError> {
+        if rest - size < 1 << 32 {
+            return Ok(false);
+        }
+        let next = self.next_chunk(file, chunk.start, size)?;
+        Ok(self.read_chunk(file, next)?.is_none())
+    }
+
+    /// Reads a `fmt ` chunk of `size` bytes from where the file stands.
+    fn read_format<F: Read>(
+        self,
+        file: &mut F,
+        size: u64,
+        notes: &mut Vec<String>,
+    ) -> Result<Format, CaptureError> {
+        let mut buffer = [0; 40];
+        let wanted = buffer
+            .len()
+            .min(usize::try_from(size).unwrap_or(usize::MAX));
+        let got = read_up_to(file, buffer.get_mut(..wanted).unwrap_or_default())?;
+        let bytes = buffer.get(..got).unwrap_or_default();
+        let short = || {
             bad(format!(
-                "extensible format chunk of {} (40 are needed)",
+                "format chunk of {} (14 are needed)",
                 count(got as u64, "byte", "bytes")
             ))
         };
-        // A writer that leaves the valid bits 0 means all of them.
-        valid_bits = le_u16(bytes, 18)
-            .filter(|&n| n > 0 && n <= bits)
-            .unwrap_or(bits);
-        tag = le_u16(bytes, 24).ok_or_else(cut)?;
-        // The rest of KSDATAFORMAT_SUBTYPE_*: a coding number made a GUID.
-        const GUID_TAIL: &[u8] = b"\x00\x00\x00\x00\x10\x00\x80\x00\x00\xAA\x00\x38\x9B\x71";
-        if bytes.get(26..40).ok_or_else(cut)? != GUID_TAIL {
-            let coding = "an unknown extensible sample coding".into();
+        let mut tag = self.u16(bytes, 0).ok_or_else(short)?;
+        let mut channels = self.u16(bytes, 2).ok_or_else(short)?;
+        let mut rate_hz = self.u32(bytes, 4).ok_or_else(short)?;
+        let byte_rate = self.u32(bytes, 8).ok_or_else(short)?;
+        let frame = self.u16(bytes, 12).ok_or_else(short)?;
+        // The oldest headers end before the bits.
+        let mut bits = self.u16(bytes, 14).unwrap_or(0);
+        if bits == 0 && channels > 0 && frame > 0 && frame.is_multiple_of(channels) {
+            bits = (frame / channels).saturating_mul(8);
+            notes.push(format!(
+                "no bits per sample in the header: {bits} taken from the frame size of {}",
+                count(frame.into(), "byte", "bytes")
+            ));
+        }
+        if channels == 0 && bits > 0 && frame > 0 && frame.is_multiple_of(bits.div_ceil(8)) {
+            channels = frame / bits.div_ceil(8);
+            notes.push(format!(
+                "0 channels in the header: {channels} taken from the frame size of {}",
+                count(frame.into(), "byte", "bytes")
+            ));
+        }
+        let mut valid_bits = bits;
+        const EXTENSIBLE: u16 = 0xFFFE;
+        if tag == EXTENSIBLE {
+            let cut = || {
+                bad(format!(
+                    "extensible format chunk of {} (40 are needed)",
+                    count(got as u64, "byte", "bytes")
+                ))
+            };
+            // A writer that leaves the valid bits 0 means all of them.
+            valid_bits = self
+                .u16(bytes, 18)
+                .filter(|&n| n > 0 && n <= bits)
+                .unwrap_or(bits);
+            // KSDATAFORMAT_SUBTYPE_*: a coding number of 32 bits made a GUID,
+            // whose first three numbers are in the order of the file.
+            let (at, tail): (usize, &[u8]) = if self.big {
+                (26, b"\x00\x00\x00\x10\x80\x00\x00\xAA\x00\x38\x9B\x71")
+            } else {
+                (24, b"\x00\x00\x10\x00\x80\x00\x00\xAA\x00\x38\x9B\x71")
+            };
+            tag = self.u16(bytes, at).ok_or_else(cut)?;
+            let padding = self.u16(bytes, 50 - at).ok_or_else(cut)?;
+            if padding != 0 || bytes.get(28..40).ok_or_else(cut)? != tail {
+                let coding = "an unknown extensible sample coding".into();
+                return Err(CaptureError::UnsupportedCoding { coding });
+            }
+        }
+        let coding = match tag {
+            1 => Coding::Integer,
+            3 => Coding::Float,
+            6 => Coding::ALaw,
+            7 => Coding::MuLaw,
+            _ => {
+                return Err(CaptureError::UnsupportedCoding {
+                    coding: coding_name(tag),
+                });
+            }
+        };
+        if channels == 0 {
+            return Err(bad("0 channels".into()));
+        }
+        super::limit_channels(channels.into())?;
+        if bits == 0 {
+            return Err(bad("0 bits per sample".into()));
+        }
+        // The container is what the frame size says, if that is possible.
+        let least = bits.div_ceil(8);
+        let width = match frame / channels {
+            width
+                if frame % channels == 0
+                    && (width == least || width > least && matches!(width, 2 | 3 | 4 | 8)) =>
+            {
+                width
+            }
+            _ => {
+                notes.push(format!(
+                    "impossible frame size of {}: taken as {}",
+                    count(frame.into(), "byte", "bytes"),
+                    u32::from(least) * u32::from(channels)
+                ));
+                least
+            }
+        };
+        let supported = match coding {
+            Coding::Integer => (1..=64).contains(&bits) && (1..=8).contains(&width),
+            Coding::Float => matches!((bits, width), (32, 4) | (64, 8)),
+            Coding::ALaw | Coding::MuLaw => bits == 8 && width == 1,
+        };
+        if !supported {
+            let kind = match coding {
+                Coding::Float => "float",
+                Coding::Integer => "integer",
+                Coding::ALaw => "A-law",
+                Coding::MuLaw => "mu-law",
+            };
+            let coding = format!(
+                "{bits}-bit {kind} samples in {}",
+                count(width.into(), "byte", "bytes")
+            );
             return Err(CaptureError::UnsupportedCoding { coding });
         }
-    }
-    let coding = match tag {
-        1 => Coding::Integer,
-        3 => Coding::Float,
-        6 => Coding::ALaw,
-        7 => Coding::MuLaw,
-        _ => {
-            return Err(CaptureError::UnsupportedCoding {
-                coding: coding_name(tag),
-            });
-        }
-    };
-    if channels == 0 {
-        return Err(bad("0 channels".into()));
-    }
-    super::limit_channels(channels.into())?;
-    if bits == 0 {
-        return Err(bad("0 bits per sample".into()));
-    }
-    // The container is what the frame size says, if that is possible.
-    let least = bits.div_ceil(8);
-    let width = match frame / channels {
-        width if frame % channels == 0 && width >= least && width <= 8 => width,
-        _ => {
+        let frame = u32::from(width) * u32::from(channels);
+        if rate_hz == 0 && byte_rate > 0 && byte_rate.is_multiple_of(frame) {
+            rate_hz = byte_rate / frame;
             notes.push(format!(
-                "impossible frame size of {}: taken as {}",
-                count(frame.into(), "byte", "bytes"),
-                u32::from(least) * u32::from(channels)
+                "sample rate 0 in the header: {rate_hz} Hz taken from the byte rate {byte_rate}"
             ));
-            least
         }
-    };
-    let supported = match coding {
-        Coding::Integer => (1..=32).contains(&bits) && (1..=4).contains(&width),
-        Coding::Float => bits == 8 * width && (width == 4 || width == 8),
-        Coding::ALaw | Coding::MuLaw => bits == 8 && width == 1,
-    };
-    if !supported {
-        let kind = match coding {
-            Coding::Float => "float",
-            Coding::Integer => "integer",
-            Coding::ALaw => "A-law",
-            Coding::MuLaw => "mu-law",
-        };
-        let coding = format!(
-            "{bits}-bit {kind} samples in {}",
-            count(width.into(), "byte", "bytes")
-        );
-        return Err(CaptureError::UnsupportedCoding { coding });
+        let true_rate = u64::from(rate_hz) * u64::from(frame);
+        if u64::from(byte_rate) != true_rate {
+            notes.push(format!("byte rate {byte_rate} does not fit the sample rate {rate_hz} Hz: the sample rate was taken"));
+        }
+        Ok(Format {
+            coding,
+            channels,
+            rate_hz,
+            valid_bits,
+            width,
+        })
     }
-    let true_rate = u64::from(rate_hz) * u64::from(width) * u64::from(channels);
-    if u64::from(byte_rate) != true_rate {
-        notes.push(format!("byte rate {byte_rate} does not fit the sample rate {rate_hz} Hz: the sample rate was taken"));
-    }
-    Ok(Format {
-        coding,
-        channels,
-        rate_hz,
-        valid_bits,
-        width,
-    })
 }
 
 /// Names of the format codes met most, from the registry in RFC 2361.
@@ -365,7 +476,9 @@ fn coding_name(tag: u16) -> String {
 fn read_ds64<F: Read>(file: &mut F) -> Result<Option<u64>, CaptureError> {
     let mut buffer = [0; 16];
     let got = read_up_to(file, &mut buffer)?;
-    Ok(buffer.get(..got).and_then(|bytes| le_u64(bytes, 8)))
+    Ok(buffer
+        .get(..got)
+        .and_then(|bytes| Order { big: false }.u64(bytes, 8)))
 }
 
 /// Start of the recording from a broadcast extension chunk (EBU Tech 3285).

@@ -1,7 +1,8 @@
 //! Times written in a table: what they look like and how they are read.
 
 use super::cells::trim;
-use super::dates::{DateOrder, read_clock_time, read_date_time};
+use super::dates::{DateOrder, has_zone, read_clock_time, read_date_time};
+use super::numbers::{DecimalStyle, Digits, read_digits};
 
 /// A point in time, split so that a date in seconds keeps its nanoseconds.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -32,8 +33,10 @@ impl Stamp {
 pub(super) enum StampFormat {
     /// A number times `10^-exponent` seconds.
     Decimal { exponent: u32 },
-    /// A number times so many seconds: minutes, hours.
-    Multiple { seconds: f64 },
+    /// A number times so many seconds: minutes, hours, days.
+    Multiple { seconds: u32 },
+    /// A count of samples.
+    Samples { rate_hz: f64 },
     /// Hours, minutes and seconds, of the day or elapsed.
     ClockTime,
     /// A date and a time.
@@ -49,14 +52,78 @@ impl StampFormat {
             "us" | "µs" | "μs" | "usec" | "micros" | "microsecond" | "microseconds" => 6,
             "ns" | "nsec" | "nanos" | "nanosecond" | "nanoseconds" => 9,
             "min" | "mins" | "minute" | "minutes" => {
-                return Some(StampFormat::Multiple { seconds: 60.0 });
+                return Some(StampFormat::Multiple { seconds: 60 });
             }
             "h" | "hr" | "hrs" | "hour" | "hours" => {
-                return Some(StampFormat::Multiple { seconds: 3600.0 });
+                return Some(StampFormat::Multiple { seconds: 3600 });
             }
+            "d" | "day" | "days" => return Some(StampFormat::DAYS),
             _ => return None,
         };
         Some(StampFormat::Decimal { exponent })
+    }
+
+    /// Days, as spreadsheets count them.
+    pub(super) const DAYS: StampFormat = StampFormat::Multiple { seconds: 86_400 };
+
+    /// Written local time: without a zone, so that daylight saving may move it.
+    pub(super) fn is_local(self, cells: &[&[u8]]) -> bool {
+        match self {
+            StampFormat::ClockTime | StampFormat::DateTime { .. } => {
+                !cells.iter().any(|cell| has_zone(trim(cell)))
+            }
+            _ => false,
+        }
+    }
+
+    /// In words, for a line that says how a table was read.
+    pub(super) fn words(self, first: &[u8]) -> String {
+        let number = number(first).unwrap_or(0.0).abs();
+        match self {
+            StampFormat::Decimal { exponent } => {
+                let unit = match exponent {
+                    0 => "seconds",
+                    3 => "milliseconds",
+                    6 => "microseconds",
+                    _ => "nanoseconds",
+                };
+                // 1e9 s after 1970 is the year 2001.
+                let epoch = number / 10f64.powi(exponent as i32) > 1e9;
+                format!("{unit}{}", if epoch { " since 1970" } else { "" })
+            }
+            StampFormat::Multiple { seconds: 60 } => "minutes".into(),
+            StampFormat::Multiple { seconds: 3600 } => "hours".into(),
+            StampFormat::Multiple { .. } => "days".into(),
+            StampFormat::Samples { .. } => "sample numbers".into(),
+            StampFormat::ClockTime => "hours, minutes and seconds".into(),
+            StampFormat::DateTime { order } => super::dates::words(trim(first), order).into(),
+        }
+    }
+
+    /// Worth of the last digit of a cell that is not 0, in seconds; `None` where that is not
+    /// plain.
+    pub(super) fn resolution(self, cell: &[u8]) -> Option<f64> {
+        let cell = trim(cell);
+        let mark = cell.iter().rposition(|&c| c == b'.' || c == b',');
+        let digits = mark.map_or(0, |mark| {
+            let rest = cell.get(mark + 1..).unwrap_or_default();
+            let digits = rest.iter().take_while(|c| c.is_ascii_digit()).count();
+            // Zeros that end every cell tell nothing.
+            let rest = rest.get(..digits).unwrap_or_default();
+            rest.iter()
+                .rposition(|&c| c != b'0')
+                .map_or(0, |last| last + 1)
+        });
+        let last = 10f64.powi(-i32::try_from(digits).ok()?);
+        match self {
+            StampFormat::Decimal { exponent } => {
+                read_digits(cell, DecimalStyle::Either)?;
+                Some(last / 10f64.powi(i32::try_from(exponent).ok()?))
+            }
+            StampFormat::Multiple { seconds } => Some(last * f64::from(seconds)),
+            StampFormat::ClockTime | StampFormat::DateTime { .. } if digits > 0 => Some(last),
+            _ => None,
+        }
     }
 
     /// Reads one cell; `None` where it holds no such time.
@@ -64,7 +131,8 @@ impl StampFormat {
         let bytes = trim(bytes);
         match self {
             StampFormat::Decimal { exponent } => read_decimal(bytes, exponent),
-            StampFormat::Multiple { seconds } => Stamp::from_seconds(number(bytes)? * seconds),
+            StampFormat::Multiple { seconds } => read_multiple(bytes, seconds),
+            StampFormat::Samples { rate_hz } => Stamp::from_seconds(number(bytes)? / rate_hz),
             StampFormat::ClockTime => read_clock_time(bytes),
             StampFormat::DateTime { order } => read_date_time(bytes, order),
         }
@@ -72,7 +140,7 @@ impl StampFormat {
 }
 
 fn number(bytes: &[u8]) -> Option<f64> {
-    match super::cells::read_cell(bytes) {
+    match super::cells::read_cell(bytes, DecimalStyle::Either) {
         super::cells::Cell::Number(number) => Some(number),
         _ => None,
     }
@@ -80,45 +148,62 @@ fn number(bytes: &[u8]) -> Option<f64> {
 
 /// Digits with a decimal mark are read exactly; anything else as `f64`.
 fn read_decimal(bytes: &[u8], exponent: u32) -> Option<Stamp> {
-    read_digits(bytes, exponent)
-        .or_else(|| Stamp::from_seconds(number(bytes)? / 10f64.powi(exponent.try_into().ok()?)))
+    match read_digits(bytes, DecimalStyle::Either) {
+        Some(digits) => exact(digits, 1, exponent),
+        None => Stamp::from_seconds(number(bytes)? / 10f64.powi(exponent.try_into().ok()?)),
+    }
 }
 
-fn read_digits(bytes: &[u8], exponent: u32) -> Option<Stamp> {
-    let (negative, digits) = match bytes.strip_prefix(b"-") {
-        Some(rest) => (true, rest),
-        None => (false, bytes),
-    };
-    let mark = digits.iter().position(|&c| matches!(c, b'.' | b','));
-    let (whole, fraction) = digits.split_at(mark.unwrap_or(digits.len()));
-    let whole = whole_number(whole)?;
-    let fraction = match fraction.get(1..) {
-        // More digits than fit exactly are of no use.
-        Some(fraction) => {
-            let kept = fraction.get(..15).unwrap_or(fraction);
-            if !fraction.iter().all(u8::is_ascii_digit) {
-                return None;
-            }
-            whole_number(kept).unwrap_or(0) as f64 / 10f64.powi(kept.len() as i32)
+fn read_multiple(bytes: &[u8], seconds: u32) -> Option<Stamp> {
+    match read_digits(bytes, DecimalStyle::Either) {
+        Some(digits) => exact(digits, seconds, 0),
+        None => Stamp::from_seconds(number(bytes)? * f64::from(seconds)),
+    }
+}
+
+/// The digits times `factor * 10^-exponent` seconds, whole seconds split off
+/// exactly.
+#[inline]
+fn exact(digits: Digits, factor: u32, exponent: u32) -> Option<Stamp> {
+    let places = digits.decimals + exponent;
+    let quick = POWERS
+        .get(places as usize)
+        .zip(digits.mantissa.checked_mul(factor.into()));
+    let (whole, rest) = match quick {
+        Some((&unit, all)) => (all / unit, (all % unit) as f64 / unit as f64),
+        None => {
+            let unit = 10u128.checked_pow(places)?;
+            let all = u128::from(digits.mantissa) * u128::from(factor);
+            let whole = u64::try_from(all / unit).ok()?;
+            (whole, (all % unit) as f64 / unit as f64)
         }
-        None => 0.0,
     };
-    let unit = 10i64.checked_pow(exponent)?;
-    let (seconds, rest) = (
-        whole / unit,
-        ((whole % unit) as f64 + fraction) / unit as f64,
-    );
-    Some(if negative {
+    let whole = i64::try_from(whole).ok().filter(|&whole| whole < 1 << 62)?;
+    Some(if digits.negative {
         Stamp {
-            seconds: -seconds,
+            seconds: -whole,
             rest: -rest,
         }
     } else {
-        Stamp { seconds, rest }
+        Stamp {
+            seconds: whole,
+            rest,
+        }
     })
 }
 
-/// Digits only, at least one, at most what an `i64` holds.
+/// Powers of ten in 64 bits.
+const POWERS: [u64; 20] = {
+    let mut powers = [1; 20];
+    let mut place = 1;
+    while place < 20 {
+        powers[place] = 10 * powers[place - 1];
+        place += 1;
+    }
+    powers
+};
+
+/// Digits only, up to what an `i64` holds.
 pub(super) fn whole_number(digits: &[u8]) -> Option<i64> {
     if digits.is_empty() {
         return None;
@@ -134,6 +219,11 @@ impl StampFormat {
     /// be known from the heading. Numbers without a unit are seconds, or the
     /// epoch in a smaller unit where they are too large for that.
     pub(super) fn of_cells(cells: &[&[u8]], named: Option<StampFormat>) -> StampFormat {
+        if are_compact_dates(cells) {
+            return StampFormat::DateTime {
+                order: DateOrder::DayFirst,
+            };
+        }
         let first = cells.iter().find_map(|cell| number(cell)).unwrap_or(0.0);
         // 1e11 s is past the year 5000; the epoch reached 1e11 ms in 1973.
         let exponent = match first.abs() {
@@ -142,9 +232,14 @@ impl StampFormat {
             n if n < 1e17 => 6,
             _ => 9,
         };
+        let numbers = if are_serial_days(cells) {
+            StampFormat::DAYS
+        } else {
+            StampFormat::Decimal { exponent }
+        };
         // Where they fit equally, the first.
         let formats = [
-            named.unwrap_or(StampFormat::Decimal { exponent }),
+            named.unwrap_or(numbers),
             StampFormat::ClockTime,
             StampFormat::DateTime {
                 order: DateOrder::DayFirst,
@@ -209,4 +304,46 @@ impl StampFormat {
         );
         differs.then(|| format!("dates were read {taken} first, not {why} first"))
     }
+}
+
+/// Days since the end of 1899, as spreadsheets count: numbers of this century
+/// whose steps are a round time or rate if taken as days, but not as seconds.
+fn are_serial_days(cells: &[&[u8]]) -> bool {
+    const CENTURY: std::ops::Range<f64> = 36_526.0..73_051.0;
+    const DAY_S: f64 = 86_400.0;
+    let numbers: Vec<f64> = cells.iter().filter_map(|cell| number(cell)).collect();
+    let (Some(first), Some(last)) = (numbers.first(), numbers.last()) else {
+        return false;
+    };
+    let step = (last - first) / (numbers.len() - 1).max(1) as f64;
+    /// Well below the half of the last of two digits, well above rounding.
+    const ROUND: f64 = 0.002;
+    step > 0.0
+        && numbers.iter().all(|number| CENTURY.contains(number))
+        && off_round(step * DAY_S) < ROUND
+        && off_round(step) > ROUND
+}
+
+/// How far, as a share, a step or its rate is from one of at most two digits.
+fn off_round(step: f64) -> f64 {
+    let off = |value: f64| {
+        let scale = 10f64.powf(1.0 - value.log10().floor());
+        ((value * scale).round() / (value * scale) - 1.0).abs()
+    };
+    off(step).min(off(1.0 / step))
+}
+
+/// Dates like 20310507235908, which are numbers too. No count of units since
+/// 1970 has 14 or 17 digits in our day.
+fn are_compact_dates(cells: &[&[u8]]) -> bool {
+    let order = DateOrder::DayFirst;
+    let mut filled = cells
+        .iter()
+        .map(|cell| trim(cell))
+        .filter(|c| !c.is_empty());
+    let is_date = |cell: &[u8]| {
+        let digits = cell.iter().take_while(|c| c.is_ascii_digit()).count();
+        matches!(digits, 14 | 17) && read_date_time(cell, order).is_some()
+    };
+    filled.clone().next().is_some() && filled.all(is_date)
 }

@@ -9,7 +9,12 @@ pub(super) enum Encoding {
     Bytes,
     Utf16Le,
     Utf16Be,
+    /// ISO 8859-1, whatever it looks like.
+    Latin1,
 }
+
+/// So many zeros in a row end a text: room that was set aside for it.
+const MOST_ZEROS: usize = 1 << 26;
 
 const UTF8_BOM: &[u8] = b"\xEF\xBB\xBF";
 
@@ -34,6 +39,10 @@ impl Encoding {
         match (share(0), share(1)) {
             (true, false) => Some(Encoding::Utf16Be),
             (false, true) => Some(Encoding::Utf16Le),
+            // A block that never reached the card reads as zeros.
+            _ if 2 * head.iter().filter(|&&byte| byte == 0).count() <= head.len() => {
+                Some(Encoding::Bytes)
+            }
             _ => None,
         }
     }
@@ -42,9 +51,11 @@ impl Encoding {
     pub(super) fn looks_like_text(self, head: &[u8]) -> bool {
         let odd = |unit: u16| unit < 32 && ![9, 10, 12, 13].contains(&unit) || unit == 127;
         let (odd, all) = match self {
-            Encoding::Bytes => (
-                head.iter().filter(|&&byte| odd(byte.into())).count(),
-                head.len(),
+            Encoding::Bytes | Encoding::Latin1 => (
+                head.iter()
+                    .filter(|&&byte| byte != 0 && odd(byte.into()))
+                    .count(),
+                head.iter().filter(|&&byte| byte != 0).count(),
             ),
             _ => {
                 let units = head.chunks_exact(2).map(|pair| self.unit(pair));
@@ -107,7 +118,7 @@ impl<R: Read> TextReader<R> {
         }
     }
 
-    /// Takes in and converts the next bytes of UTF-16.
+    /// Takes in and converts the next bytes of UTF-16 or Latin-1.
     fn refill(&mut self) -> io::Result<()> {
         self.ready.clear();
         self.given = 0;
@@ -116,6 +127,15 @@ impl<R: Read> TextReader<R> {
             .inner
             .read(self.raw.get_mut(self.held..).unwrap_or_default())?;
         let mut end = self.held + got;
+        if self.encoding == Encoding::Latin1 {
+            for &byte in self.raw.get(..end).unwrap_or_default() {
+                let mut utf8 = [0; 2];
+                let coded = char::from(byte).encode_utf8(&mut utf8);
+                self.ready.extend_from_slice(coded.as_bytes());
+            }
+            self.held = 0;
+            return Ok(());
+        }
         let mut units: Vec<u16> = self
             .raw
             .get(..end)
@@ -146,9 +166,42 @@ impl<R: Read> TextReader<R> {
         Ok(())
     }
 
+    /// Reads bytes and leaves out zeros, which are no text.
+    fn read_without_zeros(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
+        let mut zeros = 0;
+        loop {
+            let got = self.inner.read(buffer)?;
+            let read = buffer.get_mut(..got).unwrap_or_default();
+            if got > 0 && read.iter().all(|&byte| byte == 0) {
+                zeros += got;
+                if zeros > MOST_ZEROS {
+                    return Ok(0);
+                }
+                continue;
+            }
+            let Some(first) = memchr::memchr(0, read) else {
+                return Ok(got);
+            };
+            let mut kept = first;
+            for at in first..got {
+                if let Some(&byte) = read.get(at)
+                    && byte != 0
+                {
+                    if let Some(place) = read.get_mut(kept) {
+                        *place = byte;
+                    }
+                    kept += 1;
+                }
+            }
+            if kept > 0 {
+                return Ok(kept);
+            }
+        }
+    }
+
     fn read_raw(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
         if self.encoding == Encoding::Bytes && self.given == self.ready.len() {
-            return self.inner.read(buffer);
+            return self.read_without_zeros(buffer);
         }
         while self.given == self.ready.len() {
             let before = self.held;
@@ -332,7 +385,9 @@ mod tests {
             .collect();
         assert_eq!(Encoding::of(&utf16), Some(Encoding::Utf16Be));
         assert_eq!(Encoding::of(b"t,x"), Some(Encoding::Bytes));
-        assert_eq!(Encoding::of(b"t,\x00\x00\x00\x01x"), None);
+        assert_eq!(Encoding::of(b"t\x00\x00\x00\x00\x01x\x00"), None);
+        assert!(!Encoding::Bytes.looks_like_text(b"t,x\x00\x01\x00y"));
+        assert!(Encoding::Bytes.looks_like_text(b"t,x\n1,2\x00\x00\x00\n"));
         assert!(Encoding::Bytes.looks_like_text(b"t,x\r\n"));
         assert!(!Encoding::Bytes.looks_like_text(b"t,x\x01\x02\r\n"));
     }

@@ -67,6 +67,15 @@ pub(super) fn open(
     let spec = Spec {
         path: path.clone(),
         rate_hz,
+        rate_hz_u95: None,
+        read_as: vec![format!(
+            "rate from {}",
+            match options.rate_hz {
+                Some(_) => "--rate",
+                None => "the header",
+            }
+        )],
+        gaps: 0,
         channels: (1..=format.channels)
             .map(|n| Channel {
                 name: n.to_string(),
@@ -97,7 +106,11 @@ fn format_name(layout: &Layout) -> String {
         width,
         ..
     } = layout.format;
-    let container = if layout.large { "RF64" } else { "WAV" };
+    let container = match layout {
+        Layout { large: true, .. } => "RF64",
+        Layout { big_end: true, .. } => "RIFX WAV",
+        _ => "WAV",
+    };
     match coding {
         Coding::Float => format!("{valid_bits}-bit float {container}"),
         Coding::ALaw => format!("A-law {container}"),
@@ -161,10 +174,12 @@ fn find_samples(
             .unwrap_or_default()
             .chunks_exact(width.into())
         {
-            let value = bytes
-                .iter()
-                .rev()
-                .fold(0i64, |sum, &byte| sum << 8 | i64::from(byte));
+            let add = |sum: i64, &byte: &u8| sum << 8 | i64::from(byte);
+            let value = if layout.big_end {
+                bytes.iter().fold(0, add)
+            } else {
+                bytes.iter().rev().fold(0, add)
+            };
             let extended = value << (64 - container) >> (64 - container);
             upper &= value & ((1 << spare) - 1) == 0;
             repeated &= extended << (64 - valid_bits) >> (64 - valid_bits) == extended;
@@ -241,9 +256,13 @@ impl WavRecipe {
             (Coding::Integer, 3) => deal(bytes, samples, |[a, b, c]| {
                 (i32::from_le_bytes([0, a, b, c]) << shift) as f32 * FULL_32
             }),
-            (Coding::Integer, _) => deal(bytes, samples, |four| {
+            (Coding::Integer, 4) => deal(bytes, samples, |four| {
                 (i32::from_le_bytes(four) << shift) as f32 * FULL_32
             }),
+            (Coding::Integer, 5) => deal(bytes, samples, |five: [u8; 5]| wide(&five, shift)),
+            (Coding::Integer, 6) => deal(bytes, samples, |six: [u8; 6]| wide(&six, shift)),
+            (Coding::Integer, 7) => deal(bytes, samples, |seven: [u8; 7]| wide(&seven, shift)),
+            (Coding::Integer, _) => deal(bytes, samples, |eight: [u8; 8]| wide(&eight, shift)),
             (Coding::Float, 8) => {
                 deal(bytes, samples, |eight| {
                     present(f64::from_le_bytes(eight) as f32)
@@ -257,6 +276,15 @@ impl WavRecipe {
 /// NaN is the one mark of a missing sample.
 fn present(sample: f32) -> f32 {
     if sample.is_finite() { sample } else { f32::NAN }
+}
+
+/// An integer of more than four bytes, whose upper end is that of 64 bits.
+fn wide(bytes: &[u8], shift: u32) -> f32 {
+    const FULL_64: f32 = 1.0 / 9_223_372_036_854_775_808.0;
+    let add = |sum: u64, &byte: &u8| sum << 8 | u64::from(byte);
+    let spare = 64 - 8 * bytes.len() as u32;
+    let value = bytes.iter().rev().fold(0, add) << spare << shift;
+    (value as i64) as f32 * FULL_64
 }
 
 /// Deals interleaved samples of `W` bytes out to the channels.
@@ -304,6 +332,10 @@ impl WavBlocks {
                 },
                 _ => e.into(),
             })?;
+            if self.recipe.layout.big_end {
+                raw.chunks_exact_mut(format.width.into())
+                    .for_each(<[u8]>::reverse);
+            }
             self.recipe.decode(raw, &mut block.samples);
             wanted -= piece;
         }

@@ -9,7 +9,7 @@ use foldtrace::units::TrueHz;
 use std::process::ExitCode;
 
 /// Shown after the options.
-pub const HELP: &str = "Example:\n  foldtrace fold 100 1200 --rate 80\n  foldtrace fold 30000 --rate 8000 --stage 48000   (recorded at 48000 Hz, then reduced to 8000 Hz)";
+pub const HELP: &str = "Examples:\n  foldtrace fold 4933.53 --rate 8000               (a line of the sample data's drive)\n  foldtrace fold 30000 --rate 8000 --stage 48000   (recorded at 48000 Hz, then reduced to 8000 Hz)";
 
 /// Options of `fold`.
 #[derive(Debug, Args)]

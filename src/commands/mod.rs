@@ -1,11 +1,14 @@
 //! One file per command: its arguments, and what it does with the library.
 
 mod fold;
+mod help_files;
+mod inspect;
 mod output;
 mod plan;
 mod predict;
 mod progress;
 mod rates;
+mod reading;
 mod reconcile;
 mod site;
 mod sources;
@@ -45,6 +48,9 @@ pub enum Command {
     /// Foresee where the listed sources will be seen, and rank sample rates
     #[command(after_help = predict::HELP)]
     Predict(predict::Arguments),
+    /// What recordings were taken for: layout, rate, gaps, what was assumed
+    #[command(after_help = inspect::HELP)]
+    Inspect(inspect::Arguments),
     /// Where analog frequencies land once sampled
     #[command(after_help = fold::HELP)]
     Fold(fold::Arguments),
@@ -54,6 +60,9 @@ pub enum Command {
     /// Every line of the listed sources with its frequency and tolerance
     #[command(after_help = sources::HELP)]
     Sources(sources::Arguments),
+    /// Write shell completions and manual pages into a folder
+    #[command(after_help = help_files::HELP)]
+    HelpFiles(help_files::Arguments),
 }
 
 /// The gist of a usage error without the pages around it.
@@ -77,9 +86,11 @@ pub fn run(command: Command) -> ExitCode {
         Command::Reconcile(arguments) => reconcile::run(&arguments),
         Command::Plan(arguments) => plan::run(&arguments),
         Command::Predict(arguments) => predict::run(&arguments),
+        Command::Inspect(arguments) => inspect::run(&arguments),
         Command::Fold(arguments) => fold::run(&arguments),
         Command::Unfold(arguments) => unfold::run(&arguments),
         Command::Sources(arguments) => sources::run(&arguments),
+        Command::HelpFiles(arguments) => help_files::run(&arguments),
     };
     match done {
         Ok(code) => code,

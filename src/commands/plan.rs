@@ -2,6 +2,7 @@
 
 use super::output::{Stop, is_stdout, shown, spare, terminal_width, to_file, to_stdout};
 use super::progress::Progress;
+use super::reading::Reading;
 use super::site::load_site;
 use super::values::{how_many, positive};
 use clap::Args;
@@ -39,15 +40,14 @@ pub struct Arguments {
     /// What is known of the place: a site file (TOML) or a list (CSV)
     #[arg(long, value_name = "FILE")]
     pub site: Option<PathBuf>,
-    /// Sample rate, where the file does not tell it or tells it wrong
-    #[arg(long, value_name = "HZ", allow_negative_numbers = true, value_parser = positive)]
-    pub rate: Option<f64>,
     /// Write everything as JSON; `-` writes it to stdout in place of the table
     #[arg(long, value_name = "FILE")]
     pub json: Option<PathBuf>,
     /// Tests listed
     #[arg(long, value_name = "N", default_value = "6", value_parser = how_many)]
     pub top: NonZeroUsize,
+    #[command(flatten)]
+    pub reading: Reading,
 }
 
 /// Runs the command.
@@ -58,8 +58,8 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
     spare(inputs.map(PathBuf::as_path), &exports)?;
     let (site, _) = load_site(arguments.site.as_deref())?;
     let options = triage::Options {
-        rate_hz: arguments.rate,
-        channel: None,
+        open: arguments.reading.open_options(),
+        ..triage::Options::default()
     };
     let progress = Progress::new();
     let done = triage::run(&arguments.recording, &site, &options, &|done, of| {

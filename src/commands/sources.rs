@@ -8,7 +8,7 @@ use std::path::PathBuf;
 use std::process::ExitCode;
 
 /// Shown after the options.
-pub const HELP: &str = "Example:\n  foldtrace sources --site sample-data/orrowmere.toml\n  foldtrace sources                (the built-in list)";
+pub const HELP: &str = "Examples:\n  foldtrace sources                (the built-in list)\n  foldtrace sources --site sample-data/orrowmere.toml";
 
 /// Options of `sources`.
 #[derive(Debug, Args)]

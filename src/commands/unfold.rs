@@ -9,7 +9,8 @@ use foldtrace::units::{SeenHz, TrueHz};
 use std::process::ExitCode;
 
 /// Shown after the options.
-pub const HELP: &str = "Example:\n  foldtrace unfold 20 --rate 80 --up-to 500";
+pub const HELP: &str =
+    "Example:\n  foldtrace unfold 3066.46 --rate 8000 --up-to 20000   (tone 33 of the sample data)";
 
 /// Options of `unfold`.
 #[derive(Debug, Args)]

@@ -1,6 +1,7 @@
 //! Values on the command line, checked as they are parsed.
 
 use std::num::NonZeroUsize;
+use std::path::{Path, PathBuf};
 
 /// Which channels to use.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -55,4 +56,37 @@ pub fn not_negative(text: &str) -> Result<f64, String> {
         v if v >= 0.0 => Ok(v),
         _ => Err("must not be below 0".into()),
     }
+}
+
+/// What a picture is written as.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum DrawingKind {
+    /// Pixels.
+    Png,
+    /// Lines and letters.
+    Svg,
+}
+
+/// A picture to write.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct Drawing {
+    /// Where.
+    pub path: PathBuf,
+    /// By the ending of the name.
+    pub kind: DrawingKind,
+}
+
+/// A file name that ends in `.png` or `.svg`.
+pub fn drawing(text: &str) -> Result<Drawing, String> {
+    let path = Path::new(text);
+    let ending = path.extension().map(|e| e.to_ascii_lowercase());
+    let kind = match ending.as_ref().and_then(|e| e.to_str()) {
+        Some("png") => DrawingKind::Png,
+        Some("svg") => DrawingKind::Svg,
+        _ => return Err("give a name that ends in .png or .svg".into()),
+    };
+    Ok(Drawing {
+        path: path.to_owned(),
+        kind,
+    })
 }

@@ -67,6 +67,7 @@ fn recording(result: &Triage, top: usize) -> Value {
                 "wander_hz": tone.wander_hz,
                 "linewidth_hz": tone.linewidth_hz,
                 "track": tone.track,
+                "track_step_s": tone.track_step_s,
                 "channels": channels,
                 "verdict": finding.verdict,
                 "folded_probability": finding.folded_probability,
@@ -74,7 +75,9 @@ fn recording(result: &Triage, top: usize) -> Value {
                     "probability": finding.unlisted_direct + finding.unlisted_folded,
                     "in_band": finding.unlisted_direct,
                     "folded": finding.unlisted_folded,
+                    "at": finding.unlisted_at,
                 },
+                "rests_on": finding.grounds,
                 "suspects": suspects,
             })
         })
@@ -94,6 +97,7 @@ fn recording(result: &Triage, top: usize) -> Value {
         "analysis": result.tones.plan,
         "tones": tones,
         "sources": sources(result),
+        "evidence": result.evidence,
         "clock": {"ppm": result.inference.clock.ppm, "ppm_u95": result.inference.clock.ppm_u95},
         "next_test": result.next,
         "summary": result.summary(),

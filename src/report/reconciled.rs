@@ -1,7 +1,8 @@
 //! Several recordings together: table, suspect list and JSON.
 
+use super::reading::duration;
 use super::suspect_list::{self, Cells};
-use super::table::{HEAD, QUIET, duration, interval, luck, verdict, wrapped};
+use super::table::{HEAD, QUIET, interval, luck, verdict, wrapped};
 use super::text::{count, hertz, percent, plain, with_u95};
 use crate::reconcile::{Belonging, Physical, Reconciled, Row};
 use crate::suspects::Verdict;

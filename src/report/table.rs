@@ -2,22 +2,28 @@
 //! the sources that were fitted, and one sentence at the end.
 
 use super::plan_table;
-use super::text::{count, hertz, percent, plain, with_u95};
-use crate::suspects::{Finding, Suspect, Verdict};
+use super::reading;
+use super::strip;
+use super::text::{count, percent, plain, with_u95};
+use crate::suspects::{Finding, Ground, Suspect, Verdict};
 use crate::tones::Tone;
 use crate::triage::Triage;
+use crate::units::U95;
 use anstyle::{AnsiColor, Style};
 use std::io::{self, Write};
 
 /// A latent's own name without that of the source it is printed beside.
-fn latent_word(latent: &str, source: &str) -> String {
+pub(super) fn latent_word(latent: &str, source: &str) -> String {
     let rest = latent.strip_prefix(source).unwrap_or(latent).trim();
     plain(if rest.is_empty() { "at" } else { rest })
 }
 
 /// Suspects less probable than this are not worth a line on the screen; they
 /// stay in the exports.
-const WORTH_A_LINE: f64 = 0.02;
+pub(super) const WORTH_A_LINE: f64 = 0.02;
+
+/// A source that explains fewer tones is only as probable as it was before.
+pub(super) const EXPLAINS_SOMETHING: f64 = 0.05;
 
 pub(super) const QUIET: Style = Style::new().dimmed();
 pub(super) const HEAD: Style = Style::new().bold();
@@ -44,6 +50,9 @@ pub fn write(
     out: &mut dyn Write,
 ) -> io::Result<()> {
     what_was_read(result, site_name, out)?;
+    if let Some(strip) = strip::line(result, width) {
+        writeln!(out, "  {strip}")?;
+    }
     let rows: Vec<(&Tone, &Finding)> = result.rows().collect();
     if !rows.is_empty() {
         tones(&rows, top, width, out)?;
@@ -55,6 +64,9 @@ pub fn write(
             )?;
         }
         sources(result, out)?;
+        for line in from_time(result) {
+            writeln!(out, "{line}")?;
+        }
     }
     if let Some(next) = &result.next {
         writeln!(out)?;
@@ -79,27 +91,7 @@ pub fn write(
 
 fn what_was_read(result: &Triage, site_name: &str, out: &mut dyn Write) -> io::Result<()> {
     let spec = &result.spec;
-    writeln!(
-        out,
-        "{HEAD}{}{HEAD:#}: {}, {} Hz, {}, {}, resolves {} Hz",
-        plain(&result.recording),
-        plain(&spec.format),
-        hertz(spec.rate_hz),
-        count(spec.channels.len(), "channel", "channels"),
-        duration(spec.duration_s()),
-        hertz(result.tones.cell_hz),
-    )?;
-    if !spec.normalised {
-        let names: Vec<String> = spec
-            .channels
-            .iter()
-            .map(|c| match &c.unit {
-                Some(unit) => format!("{} [{}]", plain(&c.name), plain(unit)),
-                None => plain(&c.name),
-            })
-            .collect();
-        writeln!(out, "  columns: {}", names.join(", "))?;
-    }
+    reading::write(&result.recording, spec, Some(result.tones.cell_hz), out)?;
     match &result.full_scale {
         Some((value, unit)) => {
             writeln!(out, "  0 dBFS = amplitude {value} {}", plain(unit))?;
@@ -108,9 +100,6 @@ fn what_was_read(result: &Triage, site_name: &str, out: &mut dyn Write) -> io::R
             writeln!(out, "  0 dBFS = amplitude 1 (full scale is not described)")?;
         }
         None => {}
-    }
-    for note in &spec.notes {
-        writeln!(out, "  {}", plain(note))?;
     }
     let missing: u64 = result.tones.missing.iter().sum();
     if missing > 0 {
@@ -123,16 +112,6 @@ fn what_was_read(result: &Triage, site_name: &str, out: &mut dyn Write) -> io::R
     writeln!(out, "  sources: {}", plain(site_name))
 }
 
-pub(super) fn duration(seconds: f64) -> String {
-    if seconds < 120.0 {
-        format!("{} s", hertz(seconds))
-    } else if seconds < 7200.0 {
-        format!("{:.1} min", seconds / 60.0)
-    } else {
-        format!("{:.2} h", seconds / 3600.0)
-    }
-}
-
 /// One printed line: a tone's own cells are only on its first.
 struct Row {
     tone: Option<[String; 3]>,
@@ -141,6 +120,8 @@ struct Row {
     chance: String,
     /// True frequency, zone, luck; or words where nothing listed is meant.
     rest: Result<[String; 3], String>,
+    /// What decided; once per tone.
+    rests_on: &'static str,
 }
 
 fn rows(tones: &[(&Tone, &Finding)], top: usize) -> Vec<Row> {
@@ -180,6 +161,10 @@ fn rows(tones: &[(&Tone, &Finding)], top: usize) -> Vec<Row> {
                     ]),
                     None => Err(unlisted_words(finding)),
                 },
+                rests_on: match finding.grounds.first() {
+                    Some(ground) if first => ground_word(*ground),
+                    _ => "",
+                },
             });
         }
     }
@@ -190,7 +175,17 @@ pub(super) fn interval((value, u95): &(String, String)) -> String {
     format!("{value} ± {u95}")
 }
 
-const HEADINGS: [&str; 9] = [
+pub(super) fn ground_word(ground: Ground) -> &'static str {
+    match ground {
+        Ground::Frequency => "frequency",
+        Ground::Family => "family",
+        Ground::Movement => "movement",
+        Ground::Phase => "phase",
+        Ground::Timestamps => "timestamps",
+    }
+}
+
+const HEADINGS: [&str; 10] = [
     "tone",
     "seen Hz ± 95 %",
     "dBFS",
@@ -200,6 +195,7 @@ const HEADINGS: [&str; 9] = [
     "true Hz ± 95 %",
     "zone",
     "by luck",
+    "rests on",
 ];
 
 fn tones(
@@ -228,7 +224,8 @@ fn tones(
     let zone = widest(7, &of_rest(1));
     let by_luck = HEADINGS[8].len();
     let left = n + seen + dbfs + word + 6;
-    let right = name + chance + truth + zone + by_luck + 8;
+    let rests_on = widest(9, &|r| Some(r.rests_on.len()));
+    let right = name + chance + truth + zone + by_luck + rests_on + 10;
     // Beside each other if they fit, else suspects below their tone.
     let below = width.is_some_and(|w| left + 2 + right > w);
     let indent = if below { n + 2 } else { left + 2 };
@@ -244,8 +241,8 @@ fn tones(
     };
     writeln!(
         out,
-        "{gap}{:<name$}  {:>chance$}  {:>truth$}  {:<zone$}  {:>by_luck$}{QUIET:#}",
-        HEADINGS[4], HEADINGS[5], HEADINGS[6], HEADINGS[7], HEADINGS[8],
+        "{gap}{:<name$}  {:>chance$}  {:>truth$}  {:<zone$}  {:>by_luck$}  {}{QUIET:#}",
+        HEADINGS[4], HEADINGS[5], HEADINGS[6], HEADINGS[7], HEADINGS[8], HEADINGS[9],
     )?;
     for row in &rows {
         match (&row.tone, row.verdict) {
@@ -263,10 +260,19 @@ fn tones(
             Ok([true_hz, in_zone, lucky]) => {
                 writeln!(
                     out,
-                    "{true_hz:>truth$}  {in_zone:<zone$}  {lucky:>by_luck$}"
+                    "{}",
+                    format!(
+                        "{true_hz:>truth$}  {in_zone:<zone$}  {lucky:>by_luck$}  {}",
+                        row.rests_on
+                    )
+                    .trim_end()
                 )?;
             }
-            Err(words) => writeln!(out, "{QUIET}{words}{QUIET:#}")?,
+            Err(words) => {
+                let room = truth + zone + by_luck + 4;
+                let line = format!("{words:<room$}  {}", row.rests_on);
+                writeln!(out, "{QUIET}{}{QUIET:#}", line.trim_end())?;
+            }
         }
     }
     for line in wrapped(
@@ -318,7 +324,14 @@ pub(super) fn luck(coincidence: f64) -> String {
     }
 }
 
-fn unlisted_words(finding: &Finding) -> String {
+pub(super) fn unlisted_words(finding: &Finding) -> String {
+    if let Some(at) = &finding.unlisted_at {
+        let (hz, u95) = with_u95(at.true_hz.0, at.true_hz_u95);
+        return format!(
+            "at {hz} ± {u95} Hz by its time stamps ({})",
+            percent(at.probability)
+        );
+    }
     let all = finding.unlisted_direct + finding.unlisted_folded;
     let share = if all > 0.0 {
         finding.unlisted_folded / all
@@ -334,11 +347,34 @@ fn unlisted_words(finding: &Finding) -> String {
     }
 }
 
+/// What time stamps and references say, where there are any, a line each.
+pub(super) fn from_time(result: &Triage) -> Vec<String> {
+    let evidence = &result.evidence;
+    let stamps = evidence.stamps.as_ref().filter(|s| s.jitter_s > 0.0);
+    let rate = evidence.sampling.as_ref();
+    let stamps = stamps
+        .map(|s| &s.statement)
+        .into_iter()
+        .chain(rate.and_then(|s| s.statement.as_ref()))
+        .map(|said| format!("time stamps: {}", plain(said)));
+    let references = evidence.references.iter().map(|r| {
+        let (hz, sd) = with_u95(r.mean_hz, (U95 * r.mean_sd_hz).max(1e-9 * r.mean_hz));
+        let mut line = format!("reference {}: {hz} ± {sd} Hz", plain(&r.source));
+        if r.offset_u95_s > 0.0 {
+            let (offset, u95) = with_u95(r.offset_s, r.offset_u95_s);
+            line.push_str(&format!(
+                ", its clock is {offset} ± {u95} s off the recording's"
+            ));
+        }
+        line
+    });
+    stamps.chain(references).collect()
+}
+
 fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
     let fits: Vec<_> = result
         .fits()
-        // A source that explains nothing is only as probable as it was before.
-        .filter(|(_, f)| f.tones_explained >= 0.05)
+        .filter(|(_, f)| f.tones_explained >= EXPLAINS_SOMETHING)
         .collect();
     if fits.is_empty() {
         return Ok(());
@@ -372,11 +408,17 @@ fn sources(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
             latents.join(", ")
         )?;
     }
-    let clock = &result.inference.clock;
-    // Worth a line where the recording itself narrows it.
-    if clock.latents > 0 && clock.ppm_u95 < 0.8 * result.clock_described_ppm {
-        let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
-        writeln!(out, "recorder's clock: {ppm} ± {u95} ppm")?;
+    if let Some(clock) = clock(result) {
+        writeln!(out, "recorder's clock: {clock}")?;
     }
     Ok(())
+}
+
+/// The fitted error of the recorder's clock, where the recording itself narrows it.
+pub(super) fn clock(result: &Triage) -> Option<String> {
+    let clock = &result.inference.clock;
+    (clock.latents > 0 && clock.ppm_u95 < 0.8 * result.clock_described_ppm).then(|| {
+        let (ppm, u95) = with_u95(clock.ppm, clock.ppm_u95);
+        format!("{ppm} ± {u95} ppm")
+    })
 }

@@ -3,12 +3,13 @@
 use std::fmt::Write;
 
 /// A name from outside made safe for a terminal: control characters and marks
-/// that reorder text are shown as escapes.
+/// that reorder text are shown as escapes, and so are the two code points that XML
+/// cannot hold.
 pub fn plain(name: &str) -> String {
     let mut out = String::with_capacity(name.len());
     for c in name.chars() {
         let reorders = matches!(c, '\u{200e}' | '\u{200f}' | '\u{202a}'..='\u{202e}' | '\u{2066}'..='\u{2069}');
-        if c.is_control() || reorders {
+        if c.is_control() || reorders || matches!(c, '\u{fffe}' | '\u{ffff}') {
             // escape_unicode never fails; write! to a String neither
             let _ = write!(out, "{}", c.escape_unicode());
         } else {

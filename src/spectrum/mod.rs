@@ -7,6 +7,8 @@
 //! narrow bands only, so that memory does not grow with length while resolution
 //! does.
 
+pub mod condition;
+pub mod display;
 pub mod fft;
 pub mod floor;
 pub mod plan;
@@ -38,6 +40,9 @@ pub struct Band {
     /// Noise power per bin, E|X|², that rounding alone makes: none lower can be
     /// measured. See [`least_noise`].
     pub least_noise: f32,
+    /// Noise power per bin as seen from afar, spread evenly over the band; empty where
+    /// the band itself is all there is.
+    pub floor: Vec<f32>,
 }
 
 /// Noise power per bin of `samples` samples of mean square `power`, given in whole
@@ -54,6 +59,14 @@ impl Band {
     /// Spacing of the bins, Hz.
     pub fn bin_hz(&self) -> f64 {
         self.rate_hz / self.grid as f64
+    }
+
+    /// Noise power seen from afar at the band's bin `i`; infinite where not known.
+    pub fn known_floor(&self, i: usize) -> f32 {
+        self.floor
+            .get(i * self.floor.len() / self.bins.len().max(1))
+            .copied()
+            .unwrap_or(f32::INFINITY)
     }
 
     /// The bin at absolute index `k`; bins below 0 and above grid/2 are the

@@ -5,7 +5,8 @@
 //! is handed to the sink in order, so sums are formed in one order whatever
 //! thread finishes first.
 
-use super::samples::{Bridge, Pass, Passes};
+use super::condition::{Condition, Mender};
+use super::samples::{Pass, Passes};
 use crate::capture::Block;
 use std::collections::BTreeMap;
 use std::sync::{Mutex, mpsc};
@@ -61,7 +62,7 @@ pub struct Group {
 }
 
 /// Runs `work` on every group and hands the results to `sink` in order; returns
-/// the number of missing samples that were bridged, per channel.
+/// the condition of the samples, per channel.
 ///
 /// `progress` is told the frames read so far.
 ///
@@ -74,7 +75,7 @@ pub fn for_each_group<P, S, R>(
     new_state: impl Fn() -> S + Sync,
     work: impl Fn(&mut S, &Group) -> R + Sync,
     mut sink: impl FnMut(R),
-) -> Result<Vec<u64>, P::Error>
+) -> Result<Vec<Condition>, P::Error>
 where
     P: Passes,
     R: Send,
@@ -132,14 +133,14 @@ fn read_groups<P: Passes>(
     layout: Layout,
     progress: &(dyn Fn(u64) + Sync),
     mut send: impl FnMut(Group) -> bool,
-) -> Result<Vec<u64>, P::Error> {
+) -> Result<Vec<Condition>, P::Error> {
     let channels = recording.channels();
     let hop = layout.hop();
     let per_group = layout.group(channels);
     let mut left = layout.count(recording.frames());
     let lead = if layout.padded { hop } else { 0 };
     let mut buffers: Vec<Vec<f32>> = vec![vec![0.0; lead]; channels];
-    let mut bridges = vec![Bridge::default(); channels];
+    let mut menders = vec![Mender::default(); channels];
     let mut index = 0;
     let mut pass = recording.pass()?;
     let mut block = Block::default();
@@ -147,10 +148,10 @@ fn read_groups<P: Passes>(
     loop {
         let more = pass.next_into(&mut block)?;
         if more {
-            for ((buffer, bridge), samples) in
-                buffers.iter_mut().zip(&mut bridges).zip(&mut block.samples)
+            for ((buffer, mender), samples) in
+                buffers.iter_mut().zip(&mut menders).zip(&mut block.samples)
             {
-                bridge.fill(samples);
+                mender.fill(samples);
                 buffer.extend_from_slice(samples);
             }
             read += block.samples.first().map_or(0, Vec::len) as u64;
@@ -192,7 +193,7 @@ fn read_groups<P: Passes>(
             break;
         }
     }
-    Ok(bridges.into_iter().map(|b| b.missing).collect())
+    Ok(menders.into_iter().map(Mender::finish).collect())
 }
 
 #[cfg(test)]

@@ -143,6 +143,7 @@ impl Decimated {
             samples: frames,
             rate_hz,
             least_noise: 0.0,
+            floor: Vec::new(),
         }
     }
 }

@@ -1,5 +1,6 @@
 //! Averaged modified periodograms (Welch 1967).
 
+use super::condition::Condition;
 use super::fft::HannFft;
 use super::samples::Passes;
 use super::segments::{Layout, for_each_group};
@@ -16,8 +17,8 @@ pub struct Averaged {
     pub count: u64,
     /// Sample rate, Hz.
     pub rate_hz: f64,
-    /// Missing samples bridged, per channel.
-    pub missing: Vec<u64>,
+    /// Condition of the samples, per channel.
+    pub condition: Vec<Condition>,
 }
 
 impl Averaged {
@@ -69,7 +70,7 @@ pub fn average<P: Passes>(
     let bins = segment / 2 + 1;
     let plan = HannFft::new(segment);
     let mut sums = vec![vec![0.0f64; bins]; channels];
-    let missing = for_each_group(
+    let condition = for_each_group(
         recording,
         layout,
         progress,
@@ -108,6 +109,6 @@ pub fn average<P: Passes>(
         segment,
         count,
         rate_hz: recording.rate_hz(),
-        missing,
+        condition,
     })
 }

@@ -1,8 +1,9 @@
 //! The transform of a whole short recording, one channel at a time.
 
 use super::Band;
+use super::condition::{Condition, Mender};
 use super::fft::{Complex32, RealFft};
-use super::samples::{Bridge, Pass, Passes};
+use super::samples::{Pass, Passes};
 use crate::capture::Block;
 
 /// Every channel's samples, bridged and with their mean removed.
@@ -10,8 +11,8 @@ use crate::capture::Block;
 pub struct Loaded {
     /// `channels[c][n]`.
     pub channels: Vec<Vec<f32>>,
-    /// Missing samples bridged, per channel.
-    pub missing: Vec<u64>,
+    /// Condition of the samples, per channel.
+    pub condition: Vec<Condition>,
 }
 
 /// Reads all samples; only for recordings that [`super::plan::Plan`] calls whole.
@@ -20,16 +21,16 @@ pub struct Loaded {
 /// The recording's own.
 pub fn load<P: Passes>(recording: &P, progress: &dyn Fn(u64)) -> Result<Loaded, P::Error> {
     let mut channels = vec![Vec::with_capacity(recording.frames() as usize); recording.channels()];
-    let mut bridges = vec![Bridge::default(); channels.len()];
+    let mut menders = vec![Mender::default(); channels.len()];
     let mut pass = recording.pass()?;
     let mut block = Block::default();
     while pass.next_into(&mut block)? {
-        for ((channel, bridge), samples) in channels
+        for ((channel, mender), samples) in channels
             .iter_mut()
-            .zip(&mut bridges)
+            .zip(&mut menders)
             .zip(&mut block.samples)
         {
-            bridge.fill(samples);
+            mender.fill(samples);
             channel.extend_from_slice(samples);
         }
         progress(channels.first().map_or(0, Vec::len) as u64);
@@ -42,7 +43,7 @@ pub fn load<P: Passes>(recording: &P, progress: &dyn Fn(u64)) -> Result<Loaded, 
     }
     Ok(Loaded {
         channels,
-        missing: bridges.into_iter().map(|b| b.missing).collect(),
+        condition: menders.into_iter().map(Mender::finish).collect(),
     })
 }
 
@@ -66,5 +67,6 @@ pub fn transform(mut channel: Vec<f32>, grid: usize, rate_hz: f64, step: Option<
         samples,
         rate_hz,
         least_noise: super::least_noise(samples, power, step),
+        floor: Vec::new(),
     }
 }

@@ -6,8 +6,11 @@ use super::prior::Normal;
 use super::scene::Scene;
 use super::shares::{Shares, collect};
 use super::solution::Solution;
+use super::timely::Timely;
 use super::unlisted::Origins;
-use super::{Cause, ClockFit, Finding, Inference, Place, SourceFit, Suspect, Verdict, clock};
+use super::{
+    Cause, ClockFit, Finding, Ground, Inference, Place, SourceFit, Suspect, Verdict, clock,
+};
 use crate::sources::{LatentId, Line};
 use crate::units::{Sense, TrueHz, U95};
 
@@ -16,7 +19,7 @@ const LEAST: f64 = 1e-6;
 
 /// Puts the solutions, with their weights, into words.
 pub(super) fn attribute(scene: &Scene, solutions: &[(f64, Solution)]) -> Inference {
-    let shares = collect(scene, solutions);
+    let mut shares = collect(scene, solutions);
     let best = solutions
         .iter()
         .max_by(|a, b| a.0.total_cmp(&b.0))
@@ -49,17 +52,30 @@ pub(super) fn attribute(scene: &Scene, solutions: &[(f64, Solution)]) -> Inferen
                 suspects: Vec::new(),
                 unlisted_direct: share - folded,
                 unlisted_folded: folded,
+                unlisted_at: None,
+                grounds: Vec::new(),
             }
         })
         .collect();
-    let explained = propose(scene, &shares, &origins, epsilon, &mut findings);
-    name_byproducts(scene, solutions, &mut findings);
+    let timely = Timely::new(scene, &shares);
+    if let Some(timely) = &timely {
+        timely.reweigh(&mut shares);
+    }
+    propose(scene, &shares, &origins, epsilon, &mut findings);
+    name_byproducts(scene, solutions, &origins, &mut findings);
+    if let Some(timely) = &timely {
+        for finding in &mut findings {
+            timely.finish(finding);
+        }
+    }
+    let explained = explained(scene, &findings);
     for finding in &mut findings {
         finding
             .suspects
             .sort_by(|a, b| b.probability.total_cmp(&a.probability));
         finding.folded_probability = finding.folded_probability.clamp(0.0, 1.0);
         finding.verdict = Verdict::from_folded_probability(finding.folded_probability);
+        rest(finding, &explained, timely.as_ref());
     }
     Inference {
         findings,
@@ -74,16 +90,35 @@ pub(super) fn attribute(scene: &Scene, solutions: &[(f64, Solution)]) -> Inferen
     }
 }
 
-/// Enters every proposal; returns the number of tones each source explains.
+/// What the most probable explanation rests on.
+fn rest(finding: &mut Finding, explained: &[f64], timely: Option<&Timely>) {
+    let top = finding
+        .suspects
+        .first()
+        .filter(|s| s.probability > finding.unlisted_direct + finding.unlisted_folded);
+    let mut grounds = timely.map_or(Vec::new(), |t| t.grounds(finding, top));
+    let family = match top.map(|s| &s.cause) {
+        Some(Cause::Source { source, .. }) => explained
+            .get(*source)
+            .is_some_and(|e| e - top.map_or(0.0, |s| s.probability) > 0.9),
+        _ => false,
+    };
+    if family {
+        grounds.push(Ground::Family);
+    }
+    grounds.push(Ground::Frequency);
+    finding.grounds = grounds;
+}
+
+/// Enters every proposal.
 fn propose(
     scene: &Scene,
     shares: &Shares,
     origins: &Origins,
     epsilon: Normal,
     findings: &mut [Finding],
-) -> Vec<f64> {
+) {
     let catalogue = &scene.site.catalogue;
-    let mut explained = vec![0.0; catalogue.sources.len()];
     for (proposal, worth) in shares {
         let Some(finding) = findings.get_mut(proposal.tone) else {
             continue;
@@ -103,9 +138,6 @@ fn propose(
             continue;
         };
         finding.folded_probability += folded;
-        if let Some(e) = explained.get_mut(proposal.source) {
-            *e += total;
-        }
         let best = worth
             .zones
             .iter()
@@ -145,6 +177,18 @@ fn propose(
                 .collect(),
         });
     }
+}
+
+/// Expected number of tones that each source explains.
+fn explained(scene: &Scene, findings: &[Finding]) -> Vec<f64> {
+    let mut explained = vec![0.0; scene.site.catalogue.sources.len()];
+    for s in findings.iter().flat_map(|f| &f.suspects) {
+        if let Cause::Source { source, .. } = s.cause
+            && let Some(e) = explained.get_mut(source)
+        {
+            *e += s.probability;
+        }
+    }
     explained
 }
 
@@ -154,15 +198,23 @@ const MOST_BYPRODUCTS: usize = 4;
 /// Enters products of tones and artefacts of the recorder. A product whose parents
 /// are lines of one listed source, and which is a line of that source itself, goes
 /// under the source's name.
-fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut [Finding]) {
+fn name_byproducts(
+    scene: &Scene,
+    solutions: &[(f64, Solution)],
+    origins: &Origins,
+    findings: &mut [Finding],
+) {
     let Some((_, first)) = solutions.first() else {
         return;
     };
     let mut entered: Vec<(usize, Suspect)> = Vec::new();
-    for b in first.byproducts.iter() {
+    for (k, b) in first.byproducts.products.iter().enumerate() {
         let probability: f64 = solutions
             .iter()
-            .map(|(w, s)| w * s.left_over(b.tone).1 * b.density)
+            .map(|(w, s)| {
+                let open = s.gates.open.get(k).copied().unwrap_or(0.0);
+                w * s.left_over(b.tone).1 * open * b.density
+            })
             .sum();
         if probability < LEAST {
             continue;
@@ -170,6 +222,15 @@ fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut 
         let nu = scene.tones.get(b.tone).map_or(0.0, |t| t.seen_hz.0);
         let u95 = scene.tones.get(b.tone).map_or(0.0, |t| t.seen_hz_u95);
         let suspect = match &b.maker {
+            Maker::Unlisted => {
+                if let Some(finding) = findings.get_mut(b.tone) {
+                    let folded = probability * origins.folded(nu);
+                    finding.folded_probability += folded;
+                    finding.unlisted_folded += folded;
+                    finding.unlisted_direct += probability - folded;
+                }
+                continue;
+            }
             Maker::Recorder => Suspect {
                 cause: Cause::Recorder,
                 line: b.label.clone(),
@@ -257,7 +318,7 @@ fn name_byproducts(scene: &Scene, solutions: &[(f64, Solution)], findings: &mut 
 fn chance_of_byproduct(scene: &Scene, solution: &Solution, tone: usize) -> f64 {
     let half = scene.chain.file_rate_hz() / 2.0;
     let var = solution.tones.get(tone).map_or(0.0, |t| t.var);
-    solution.byproducts.len() as f64 * (2.0 * U95 * var.sqrt() / half).min(1.0)
+    solution.byproducts.products.len() as f64 * (2.0 * U95 * var.sqrt() / half).min(1.0)
 }
 
 fn parent_hz(scene: &Scene, findings: &[Finding], i: usize) -> f64 {

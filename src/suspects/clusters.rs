@@ -24,6 +24,8 @@ pub(super) struct ClusterLine {
     /// Variance beyond the cluster's latents, Hz².
     pub var: f64,
     pub faintness: Faintness,
+    /// What the front end does to it.
+    pub gain: Gain,
 }
 
 /// One of a cluster's sources.
@@ -229,6 +231,7 @@ impl Cluster {
                     b,
                     var,
                     faintness,
+                    gain: *gain,
                 });
             }
             members.push(Member {

@@ -7,13 +7,15 @@
 //! with one another, with `unlisted` tones and with the recorder's `clock` in
 //! `sweep` and `mixture`; `attribute` puts the result into words. Harmonics
 //! of other tones and the recorder's own artefacts are `byproducts`; families that
-//! nobody listed are `hidden` beside the listed ones.
+//! nobody listed are `hidden` beside the listed ones. Evidence from time is multiplied
+//! in at the end (`timely`).
 
 mod attribute;
 mod byproducts;
 mod clock;
 mod clusters;
 mod evaluate;
+mod gates;
 mod hidden;
 mod mixture;
 mod modes;
@@ -25,6 +27,7 @@ mod shares;
 mod solution;
 mod strength;
 mod sweep;
+mod timely;
 mod unlisted;
 mod wander;
 
@@ -73,8 +76,7 @@ pub struct Suspect {
     pub probability: f64,
     /// Listed lines expected this close by pure chance.
     pub coincidence: f64,
-    /// Every place on the ladder where it could be; their probabilities sum to
-    /// `probability`. `true_hz`, `zone` and `sense` are those of the best.
+    /// Every place on the ladder where it could be, with probabilities in proportion. `true_hz`, `zone` and `sense` are those of the best.
     pub places: Vec<Place>,
 }
 
@@ -114,6 +116,35 @@ impl Verdict {
     }
 }
 
+/// What an explanation rests on.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize)]
+#[serde(rename_all = "lowercase")]
+pub enum Ground {
+    /// Where the tone is seen.
+    Frequency,
+    /// Other tones of the same source.
+    Family,
+    /// It moves with something.
+    Movement,
+    /// It turns in phase with something.
+    Phase,
+    /// Uneven time stamps.
+    Timestamps,
+}
+
+/// Where time stamps say that an unlisted tone is.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
+pub struct Placed {
+    /// The analog frequency.
+    pub true_hz: TrueHz,
+    /// ±, 95 %, Hz.
+    pub true_hz_u95: f64,
+    /// Nyquist zone, from 1.
+    pub zone: u64,
+    /// That it is there, if the tone is unlisted.
+    pub probability: f64,
+}
+
 /// What is concluded about one tone.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct Finding {
@@ -129,6 +160,10 @@ pub struct Finding {
     pub unlisted_direct: f64,
     /// See `unlisted_direct`.
     pub unlisted_folded: f64,
+    /// Where the unlisted tone is, if time stamps tell.
+    pub unlisted_at: Option<Placed>,
+    /// What the most probable explanation rests on, the decisive first.
+    pub grounds: Vec<Ground>,
 }
 
 /// What the recording says of one listed source.

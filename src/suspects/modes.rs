@@ -8,7 +8,7 @@
 use super::clusters::{Cluster, ClusterLine};
 use super::prior::{PRIOR_REACH, Prior};
 use super::scene::{Ladders, Measured, Meeting};
-use super::strength::{PerClass, Strengths};
+use super::strength::{self, PerClass, Strengths};
 use super::wander;
 
 /// A line meeting a tone.
@@ -122,11 +122,15 @@ impl Setting<'_> {
     }
 
     pub fn odds(&self, line: &ClusterLine, tone: &Measured, image: bool) -> PerClass {
-        if image {
+        let odds = if image {
             let fainter = line.faintness.fainter(IMAGE_DB);
             self.strengths.odds(&fainter, tone.snr_db)
         } else {
             self.strengths.odds(&line.faintness, tone.snr_db)
+        };
+        match strength::bearable(tone.level_dbfs, line.gain) {
+            1.0 => odds,
+            part => odds.map(|o| part * o),
         }
     }
 
@@ -311,7 +315,8 @@ impl Broad {
                         sum
                     });
                 let scale = [line.a[0] * centre, 0.0];
-                let ratio = setting.mean_ratios.get(t, scale, cluster.quartz);
+                let ratio = setting.mean_ratios.get(t, scale, cluster.quartz)
+                    * strength::bearable(t.level_dbfs, line.gain);
                 // The rung nearest to where the line is expected.
                 let best = (2.0 * setting.half_hz * (nominal / (2.0 * setting.half_hz)).floor()
                     + t.nu)

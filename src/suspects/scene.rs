@@ -1,6 +1,7 @@
 //! What inference works on: tones prepared for it, and where a listed line can
 //! meet them.
 
+use crate::evidence::Evidence;
 use crate::fold::Chain;
 use crate::sources::Site;
 use crate::tones::Tone;
@@ -17,6 +18,11 @@ pub struct Scene<'a> {
     pub chain: &'a Chain,
     /// Length of the recording, s, > 0.
     pub duration_s: f64,
+    /// Levels are against the converter's full scale; in a log whose full scale
+    /// nobody described they are only against one unit.
+    pub full_scale_known: bool,
+    /// Evidence from time, where it was gathered.
+    pub evidence: Option<&'a Evidence>,
 }
 
 /// A tone as a measurement: a position with its variance, a strength, a wander.
@@ -26,7 +32,8 @@ pub(super) struct Measured {
     /// Variance of `nu`, Hz².
     pub var: f64,
     pub snr_db: f64,
-    pub level_dbfs: f64,
+    /// Where full scale is known.
+    pub level_dbfs: Option<f64>,
     pub wander_hz: f64,
     /// Below this a wander cannot be told from none, Hz.
     pub wander_floor_hz: f64,
@@ -76,7 +83,7 @@ pub(super) fn measure(scene: &Scene) -> Vec<Measured> {
                 nu: t.seen_hz.0.clamp(0.0, half),
                 var: position_variance(t, scene.duration_s),
                 snr_db: if t.snr_db.is_finite() { t.snr_db } else { 20.0 },
-                level_dbfs: t.level_dbfs,
+                level_dbfs: Some(t.level_dbfs).filter(|l| scene.full_scale_known && l.is_finite()),
                 wander_hz: wander(t),
                 wander_floor_hz: (3.0 * sd).max(0.3 * cell_hz),
             }
@@ -191,7 +198,7 @@ mod tests {
                 nu,
                 var: 1e-6,
                 snr_db: 30.0,
-                level_dbfs: -40.0,
+                level_dbfs: Some(-40.0),
                 wander_hz: 0.0,
                 wander_floor_hz: 0.01,
             })

@@ -46,6 +46,20 @@ impl Worth {
         self.zones.values().map(|s| s.mass).sum()
     }
 
+    /// Multiplies the mass of each zone.
+    pub fn scale_zones(&mut self, factor: impl Fn(&Share) -> f64) {
+        let before = self.mass();
+        for share in self.zones.values_mut() {
+            let factor = factor(share);
+            share.mass *= factor;
+            share.sum *= factor;
+            share.square *= factor;
+        }
+        let scale = self.mass() / before.max(1e-300);
+        self.coincidence *= scale;
+        self.fundamental *= scale;
+    }
+
     pub fn folded(&self) -> f64 {
         self.zones
             .iter()

@@ -1,8 +1,9 @@
 //! A solution: every cluster's posterior and what it tells each tone.
 
-use super::byproducts::Byproduct;
+use super::byproducts;
 use super::clusters::Cluster;
 use super::evaluate::Value;
+use super::gates;
 use super::hidden::Standing;
 use super::modes::Places;
 use super::prior::{Normal, Prior};
@@ -39,9 +40,9 @@ pub(super) struct Solution {
     pub level_density: Rc<Vec<f64>>,
     /// The least the density of unlisted tones can become at each tone.
     pub least: Rc<Vec<f64>>,
-    pub byproducts: Rc<Vec<Byproduct>>,
-    /// Their density at each tone.
-    pub byproduct_density: Rc<Vec<f64>>,
+    pub byproducts: Rc<byproducts::Found>,
+    /// What their gates tell the tones.
+    pub gates: gates::Told,
     pub solved: Vec<Solved>,
     /// Sum of all messages at each tone.
     pub told: Vec<f64>,
@@ -54,6 +55,9 @@ pub(super) fn unlisted_rate(count: f64) -> f64 {
     (1.0 + count) / 1.3
 }
 
+/// Gates compete among themselves: times each looks.
+const GATE_ROUNDS: usize = 3;
+
 impl Solution {
     /// Density of unlisted tones like tone `i`, per Hz and dB.
     pub fn background(&self, i: usize) -> f64 {
@@ -62,12 +66,19 @@ impl Solution {
         (get(&self.unlisted_rate) * density * get(&self.level_density)).max(1e-300)
     }
 
-    /// Density of all that is no source: unlisted tones and by-products.
+    /// What clusters compete with apart from each other: unlisted tones and the
+    /// recorder's artefacts.
     pub fn sourceless(&self, i: usize) -> f64 {
-        self.background(i) + self.byproduct_density.get(i).copied().unwrap_or(0.0)
+        self.background(i) + self.gates.rival_density.get(i).copied().unwrap_or(0.0)
     }
 
-    /// Everything but cluster `but` at tone `i`.
+    /// Everything at tone `i`, distortion included.
+    fn total(&self, i: usize) -> f64 {
+        let get = |v: &[f64]| v.get(i).copied().unwrap_or(0.0);
+        self.others(i, None) + get(&self.gates.density) - get(&self.gates.rival_density)
+    }
+
+    /// Everything but cluster `but` at tone `i` that clusters compete with.
     pub fn others(&self, i: usize, but: Option<usize>) -> f64 {
         let told = self.told.get(i).copied().unwrap_or(0.0);
         let own = but
@@ -137,16 +148,38 @@ impl Solution {
     pub fn left_over(&self, i: usize) -> (f64, f64) {
         let claimed: f64 = self.solved.iter().filter_map(|s| s.share.get(i)).sum();
         let left = (1.0 - claimed).max(0.0);
-        let all = self.sourceless(i);
+        let all = self.background(i) + self.gates.density.get(i).copied().unwrap_or(0.0);
         (left * self.background(i) / all, left / all)
     }
 
-    /// Settles the shares from the messages.
+    /// Settles the shares from the messages, once the gates of by-products have
+    /// looked at what is explained.
     pub fn settle(&mut self) {
-        let total = self.all_others(None);
+        for _ in 0..GATE_ROUNDS {
+            self.look_for_byproducts(false);
+        }
+        let total: Vec<f64> = (0..self.tones.len()).map(|i| self.total(i)).collect();
         for s in &mut self.solved {
             s.share = s.message.iter().zip(&total).map(|(m, t)| m / t).collect();
         }
+    }
+
+    /// Lets the gates of by-products, or the rivals of sources among them, look at
+    /// what everything else explains.
+    pub fn look_for_byproducts(&mut self, rivals: bool) {
+        let others: Vec<f64> = self
+            .told
+            .iter()
+            .enumerate()
+            .map(|(i, told)| self.background(i) + told)
+            .collect();
+        self.gates = gates::look(
+            &self.byproducts.gates,
+            &self.byproducts.products,
+            &others,
+            &self.gates,
+            rivals,
+        );
     }
 
     /// Bethe's approximation of the log evidence.

@@ -163,6 +163,28 @@ impl Strengths {
     }
 }
 
+/// An analog level this far above full scale is more than the input bears, dB, and
+/// how sharply.
+const HEADROOM_DB: f64 = 12.0;
+const HEADROOM_SD_DB: f64 = 3.0;
+/// Nothing is quite impossible.
+const LEAST_BEARABLE: f64 = 1e-9;
+
+/// Probability that the input bears the analog level that a line seen at
+/// `level_dbfs` must have before a front end of `gain`; 1 where levels say nothing.
+pub(super) fn bearable(level_dbfs: Option<f64>, gain: Gain) -> f64 {
+    let Some(level) = level_dbfs else { return 1.0 };
+    // A front end that is not well known may be the most lenient of its kind: how
+    // probable that is, the classes of strength already say.
+    let lenient = gain.mean_db + 2.0 * gain.sd_db;
+    let over = (level - lenient.min(0.0) - HEADROOM_DB) / HEADROOM_SD_DB;
+    if over < -4.0 {
+        1.0
+    } else {
+        normal_above(over, 1.0).max(LEAST_BEARABLE)
+    }
+}
+
 /// What decides whether a line shows.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub(super) struct Faintness {

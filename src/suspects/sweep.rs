@@ -24,7 +24,7 @@ use super::scene::{Ladders, Scene, measure};
 use super::solution::{Solution, Solved, unlisted_rate};
 use super::strength::Strengths;
 use super::wander::MeanRatios;
-use super::{byproducts, clock, clusters, mixture, pairs, places, unlisted};
+use super::{byproducts, clock, clusters, gates, mixture, pairs, places, unlisted};
 use std::rc::Rc;
 
 /// Of a group of sources that exclude each other, that none is.
@@ -160,16 +160,10 @@ pub(super) fn solve(scene: &Scene) -> Vec<(f64, Solution)> {
         .zip(&level_density)
         .map(|(u, l)| (u.total() * l).max(1e-300))
         .collect();
-    let byproducts = byproducts::find(scene, &tones, &one);
-    let mut byproduct_density = vec![0.0; tones.len()];
-    for b in &byproducts {
-        if let Some(d) = byproduct_density.get_mut(b.tone) {
-            *d += b.density;
-        }
-    }
+    let byproducts = byproducts::find(scene, &tones, &level_density, threshold_db(scene));
     let mut start = Solution {
+        gates: gates::Told::default(),
         byproducts: Rc::new(byproducts),
-        byproduct_density: Rc::new(byproduct_density),
         // Before looking, nothing is explained: sources have to win each tone.
         unlisted_rate: vec![unlisted_rate(tones.len() as f64); tones.len()],
         least: Rc::new(one.iter().map(|d| unlisted_rate(0.0) * d).collect()),
@@ -203,6 +197,7 @@ pub(super) fn solve(scene: &Scene) -> Vec<(f64, Solution)> {
             share: Vec::new(),
         });
     }
+    start.look_for_byproducts(true);
     first_look(&problem, &mut start);
     let orders = orders(&start);
     let mut found: Vec<(f64, Solution)> = Vec::new();
@@ -319,6 +314,7 @@ fn run(
             update(c, &mut solution);
         }
         solution.add_up();
+        solution.look_for_byproducts(true);
         update_unlisted(&mut solution);
         let after = solution.shares();
         let moved = before

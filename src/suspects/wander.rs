@@ -185,7 +185,7 @@ mod tests {
             nu: 100.0,
             var: 1e-6,
             snr_db: 40.0,
-            level_dbfs: -40.0,
+            level_dbfs: Some(-40.0),
             wander_hz,
             wander_floor_hz: 0.005,
         }

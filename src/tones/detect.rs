@@ -4,10 +4,12 @@
 //! not explain, and patches that stand out only when smoothed, are judged as
 //! wandering tones or dropped as humps of noise.
 
+use super::mean;
 use super::peaks::{LOWEST, Level, peaks};
 use super::refine::{Line, Residual, View, refine};
-use super::statistic::{Coarse, Fine};
+use super::statistic::{Coarse, Fine, lower};
 use super::threshold;
+use super::track::{self, Target, Track};
 use super::wander::{Wanderer, judge};
 use crate::spectrum::Band;
 use crate::spectrum::fft::Complex64;
@@ -26,22 +28,41 @@ const HUMP_CHANCE: f64 = 1e-6;
 /// A patch gathers the highest of many cells: it must hold this many times what
 /// a single steady line must.
 const PATCH_MARGIN: f64 = 3.0;
+/// A track that leaves a steady tone less probable than this shows wander.
+const UNSTEADY: f64 = 0.01;
 /// Share of the false alarms granted to peaks at full resolution.
 const FINE_SHARE: f64 = 0.75;
 
 /// What was found in a band.
 pub struct Found {
-    /// Steady tones.
-    pub lines: Vec<Line>,
-    /// Tones that move or come and go.
-    pub wanderers: Vec<Wanderer>,
+    /// Steady tones, and tones that move or come and go.
+    pub tones: Vec<Fit>,
+}
+
+/// A tone measured, in bins of the band's grid.
+#[derive(Debug, Clone)]
+pub struct Fit {
+    /// Mean frequency while present.
+    pub bin: f64,
+    /// Standard deviation of that mean.
+    pub bin_sd: f64,
+    /// rms excursion from the mean; 0 when steady.
+    pub wander: f64,
+    /// |c|·samples while present: the tone is 2·|c|·cos(…).
+    pub strength: f64,
+    /// Noise power per cell.
+    pub noise: f64,
+    /// First and last moment present, as fractions of the recording.
+    pub present: (f64, f64),
+    /// Frequency and phase over time.
+    pub track: Track,
 }
 
 /// Finds the tones of a band.
 ///
 /// `false_alarms` is the expected number of tones found in the whole band when
-/// it holds noise only.
-pub fn detect(band: &Band, false_alarms: f64) -> Found {
+/// it holds noise only. `broad` are cells that stood out of a view wider than the band.
+pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
     let mut fine = Fine::new(band);
     let level = Level::new(&fine, FINE_SHARE * false_alarms);
     let (bunches, singles) = bunches(&peaks(band, &fine, &level));
@@ -72,6 +93,7 @@ pub fn detect(band: &Band, false_alarms: f64) -> Found {
     }
     let scales = Coarse::ladder(&fine.hann, 1.0, band.first_bin == 0)
         .map(|mut coarse| {
+            lower(&mut coarse.floor, band, coarse.stride);
             coarse.floor.raise(band.least_noise);
             coarse
         })
@@ -91,35 +113,140 @@ pub fn detect(band: &Band, false_alarms: f64) -> Found {
     };
     search.settle_all(patches);
     search.coarse((1.0 - FINE_SHARE) * false_alarms);
+    let unexplained = broad
+        .iter()
+        .filter(|p| !search.accounted(p, search.excess(p)))
+        .cloned()
+        .collect();
+    search.settle_all(unexplained);
     let Patches {
-        mut lines,
+        lines,
         wanderers,
+        mut residual,
         ..
     } = search;
-    lines.retain(|l| l.bin.is_finite() && l.bin >= SLOWEST && stands_out(l, band.samples, &level));
-    one_row_each(lines, wanderers, band.samples)
+    let wanderers = apart(wanderers);
+    let (lines, splinters): (Vec<Line>, Vec<Line>) = lines.into_iter().partition(|l| {
+        l.bin.is_finite()
+            && l.bin >= SLOWEST
+            && stands_out(l, band.samples, &level)
+            && !is_splinter(l, &wanderers, band.samples)
+    });
+    for line in splinters.iter().filter(|l| l.bin.is_finite()) {
+        residual.add(line, 1.0);
+    }
+    Found {
+        tones: followed(&residual, &lines, &wanderers),
+    }
+}
+
+/// Every tone with its track.
+fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<Fit> {
+    let band = residual.band();
+    let mut work = track::Work::default();
+    // resolution cells in a bin
+    let cells = band.samples as f64 / band.grid as f64;
+    let alone = |own: usize, bin: f64| {
+        wanderers
+            .iter()
+            .enumerate()
+            .filter(|&(i, _)| i != own)
+            .map(|(_, w)| (w.bin - bin).abs() - w.strays)
+            .fold(f64::INFINITY, f64::min)
+    };
+    let steady = lines.iter().map(|l| {
+        let target = Target {
+            bin: l.bin,
+            strays: 0.0,
+            snr: l.snr(band.samples),
+            noise: l.noise,
+            present: (0.0, 1.0),
+            alone: alone(usize::MAX, l.bin),
+        };
+        let track = track::follow(band, &target, |k| residual.with(l, k), &mut work);
+        let (bin, bin_sd, wander) = settled(l, &track, cells);
+        Fit {
+            bin,
+            bin_sd,
+            wander,
+            strength: l.c.norm() * band.samples as f64,
+            noise: l.noise,
+            present: target.present,
+            track,
+        }
+    });
+    let mut fits: Vec<Fit> = steady.collect();
+    fits.extend(wanderers.iter().enumerate().map(|(i, w)| {
+        let target = Target {
+            bin: w.bin,
+            strays: w.strays,
+            snr: w.strength * w.strength / w.noise,
+            noise: w.noise,
+            present: w.present,
+            alone: alone(i, w.bin),
+        };
+        let track = track::follow(band, &target, |k| band.get(k), &mut work);
+        let (bin, bin_sd, wander) = match mean::mean(&track, w.bin * cells, w.present) {
+            Some(m) => (
+                w.bin + m.offset / cells,
+                m.variance.sqrt() / cells,
+                mean::excursion(&track) / cells,
+            ),
+            None => (w.bin, w.bin_sd, w.wander),
+        };
+        Fit {
+            bin,
+            bin_sd,
+            wander,
+            strength: w.strength,
+            noise: w.noise,
+            present: w.present,
+            track,
+        }
+    }));
+    fits
+}
+
+/// Frequency, its standard deviation and the wander, in bins, of a line fitted as
+/// steady, in the light of its track.
+fn settled(line: &Line, track: &Track, cells: f64) -> (f64, f64, f64) {
+    let Some(m) = mean::mean(track, line.bin * cells, (0.0, 1.0)) else {
+        return (line.bin, line.bin_sd.hypot(line.strayed), 0.0);
+    };
+    let wander = if m.steady < UNSTEADY {
+        mean::excursion(track) / cells
+    } else {
+        0.0
+    };
+    (
+        line.bin + m.shift / cells,
+        line.bin_sd.hypot(m.more.sqrt() / cells),
+        wander,
+    )
+}
+
+/// Does a wandering tone stray over `bin`?
+fn strays_over(w: &Wanderer, bin: f64) -> bool {
+    (w.bin - bin).abs() < (3.0 * w.wander).max(1.5)
 }
 
 /// Drops what lies where a stronger wandering tone strays: its splinters.
-fn one_row_each(mut lines: Vec<Line>, mut wanderers: Vec<Wanderer>, samples: usize) -> Found {
+fn apart(mut wanderers: Vec<Wanderer>) -> Vec<Wanderer> {
     wanderers.sort_by(|a, b| b.strength.total_cmp(&a.strength));
     let mut kept: Vec<Wanderer> = Vec::new();
-    let within = |w: &Wanderer, bin: f64| (w.bin - bin).abs() < (3.0 * w.wander).max(1.5);
     for tone in wanderers {
-        if !kept.iter().any(|k| within(k, tone.bin)) {
+        if !kept.iter().any(|k| strays_over(k, tone.bin)) {
             kept.push(tone);
         }
     }
-    lines.retain(|l| {
-        let strength = l.c.norm() * samples as f64;
-        !kept
-            .iter()
-            .any(|k| k.strength > strength && within(k, l.bin))
-    });
-    Found {
-        lines,
-        wanderers: kept,
-    }
+    kept
+}
+
+fn is_splinter(line: &Line, wanderers: &[Wanderer], samples: usize) -> bool {
+    let strength = line.c.norm() * samples as f64;
+    wanderers
+        .iter()
+        .any(|w| w.strength > strength && strays_over(w, line.bin))
 }
 
 /// Splits peaks into bunches of splinters (as ranges of cells) and the rest.
@@ -167,6 +294,7 @@ fn start(band: &Band, fine: &Fine, i: usize) -> Line {
             View::Hann => hann_floor,
         }),
         view,
+        strayed: 0.0,
         leftover: 1.0,
     }
 }
@@ -357,14 +485,21 @@ impl Patches {
             let patches: Vec<Range<usize>> =
                 stand_out(&self.scales[scale], false_alarms / tests as f64)
                     .into_iter()
-                    .filter(|p| !self.explained(&self.scales[scale], p))
+                    .filter(|p| !self.accounted(p, self.scales[scale].excess(p)))
                     .collect();
             self.settle_all(patches);
         }
     }
 
-    /// Do the tones already found account for what stands out in a patch?
-    fn explained(&self, coarse: &Coarse, patch: &Range<usize>) -> bool {
+    /// Power above the floor in a patch, at full resolution.
+    fn excess(&self, patch: &Range<usize>) -> f64 {
+        (patch.start..patch.end.min(self.fine.hann.len()))
+            .map(|k| f64::from(self.fine.hann[k]) - self.base(k))
+            .sum()
+    }
+
+    /// Do the tones already found account for the power that stands out in a patch?
+    fn accounted(&self, patch: &Range<usize>, excess: f64) -> bool {
         let first = self.band().first_bin;
         let of_lines: f64 = self
             .lines
@@ -378,7 +513,7 @@ impl Patches {
             .filter(|w| w.cells.end > patch.start + first && w.cells.start < patch.end + first)
             .map(|w| w.strength * w.strength * (w.present.1 - w.present.0))
             .sum();
-        of_lines + of_wanderers > 0.7 * coarse.excess(patch)
+        of_lines + of_wanderers > 0.7 * excess
     }
 }
 

@@ -2,19 +2,27 @@
 
 pub mod detect;
 pub mod kernel;
+pub mod mean;
+pub mod mended;
 pub mod merge;
 pub mod peaks;
 pub mod refine;
 pub mod regions;
 pub mod statistic;
 pub mod threshold;
+pub mod track;
 pub mod wander;
 
+pub use track::TrackPoint;
+
+use crate::spectrum::condition::Condition;
+use crate::spectrum::display::Spectrum;
 use crate::spectrum::plan::Plan;
 use crate::spectrum::samples::Passes;
 use crate::spectrum::{least_noise, slice, welch, whole};
 use crate::units::{SeenHz, U95, amplitude_db, power_db};
 use detect::Found;
+use track::Track;
 
 /// A tone's strength in one channel.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
@@ -27,19 +35,8 @@ pub struct ChannelLevel {
     pub snr_db: f64,
 }
 
-/// A tone's frequency in one stretch of time.
-#[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
-pub struct TrackPoint {
-    /// Middle of the stretch, seconds from the start.
-    pub at_s: f64,
-    /// Seen frequency.
-    pub seen_hz: SeenHz,
-    /// Its standard deviation, Hz.
-    pub sd_hz: f64,
-}
-
 /// One spectral line that was seen.
-#[derive(Debug, Clone, PartialEq, serde::Serialize)]
+#[derive(Debug, Clone, Default, PartialEq, serde::Serialize)]
 pub struct Tone {
     /// From 1, in order of seen frequency.
     pub number: usize,
@@ -61,9 +58,12 @@ pub struct Tone {
     /// Full width at half height of a line broadened by normal wander: 2.355 × the
     /// rms wander, Hz; 0 when steady.
     pub linewidth_hz: f64,
-    /// Frequency over time of a tone that wanders or comes and goes; empty for a
-    /// steady one.
+    /// Frequency and phase over time, of a steady tone too; empty where the tone is too
+    /// weak to be followed, or moves too fast. See [`track`].
     pub track: Vec<TrackPoint>,
+    /// Length of the track's windows, s: the recording's over a power of two; 0 without
+    /// a track.
+    pub track_step_s: f64,
     /// Every channel in which it was seen, strongest first.
     pub channels: Vec<ChannelLevel>,
 }
@@ -103,8 +103,12 @@ pub struct ToneSet {
     pub cell_hz: f64,
     /// Missing samples bridged, per channel.
     pub missing: Vec<u64>,
+    /// What else is wrong with the samples, per channel.
+    pub condition: Vec<Condition>,
     /// Weaker tones left out beyond [`MOST_TONES`].
     pub left_out: usize,
+    /// The spectrum of each channel looked at, for looking at.
+    pub spectra: Vec<Spectrum>,
 }
 
 /// Most tones reported of a recording, the strongest: a noiseless test signal can
@@ -129,22 +133,29 @@ pub fn find<P: Passes>(
         .collect();
     let false_alarms = search.false_alarms / chosen.len().max(1) as f64;
     let mut per_channel = Vec::new();
-    let missing;
+    let mut spectra = Vec::new();
+    let condition;
     match plan {
         Plan::Whole { grid, .. } => {
             let loaded = whole::load(recording, &|n| progress(n, frames))?;
-            missing = loaded.missing;
+            condition = loaded.condition;
             for (channel, samples) in loaded.channels.into_iter().enumerate() {
                 if !chosen.contains(&channel) || samples.is_empty() {
                     continue;
                 }
                 let band = whole::transform(samples, grid, recording.rate_hz(), search.step);
-                let found = detect::detect(&band, false_alarms);
+                spectra.push(Spectrum::of_band(&band, channel, search.full_scale));
+                let found = detect::detect(&band, false_alarms, &[]);
                 per_channel.push((channel, tones_of(&found, &band, channel, search.full_scale)));
             }
         }
         Plan::Segments { segment, .. } => {
             let averaged = welch::average(recording, segment, &|n| progress(n, 2 * frames))?;
+            spectra.extend(
+                chosen
+                    .iter()
+                    .map(|&c| Spectrum::of_averaged(&averaged, c, search.full_scale)),
+            );
             let regions: Vec<_> = chosen
                 .iter()
                 .flat_map(|&c| regions::regions(&averaged, c, false_alarms, frames))
@@ -157,13 +168,15 @@ pub fn find<P: Passes>(
                 for (region, band) in regions.iter().zip(&mut bands) {
                     let power = averaged.mean_square(region.want.channel);
                     band.least_noise = least_noise(band.samples, power, search.step);
+                    band.floor = region.floor(band.samples);
                 }
                 for &channel in &chosen {
                     let mut tones = Vec::new();
                     for (region, band) in regions.iter().zip(&bands) {
                         if region.want.channel == channel {
                             let share = band.bins.len() as f64 / (band.grid / 2) as f64;
-                            let mut found = detect::detect(band, false_alarms * share);
+                            let mut found =
+                                detect::detect(band, false_alarms * share, &[region.cells(band)]);
                             region.keep_core(&mut found, band);
                             tones.extend(tones_of(&found, band, channel, search.full_scale));
                         }
@@ -171,7 +184,7 @@ pub fn find<P: Passes>(
                     per_channel.push((channel, tones));
                 }
             }
-            missing = averaged.missing;
+            condition = averaged.condition;
         }
     }
     let cell_hz = recording.rate_hz() / frames.max(1) as f64;
@@ -180,8 +193,10 @@ pub fn find<P: Passes>(
         tones,
         plan,
         cell_hz,
-        missing,
+        missing: condition.iter().map(|c| c.missing).collect(),
+        condition,
         left_out,
+        spectra,
     })
 }
 
@@ -197,20 +212,24 @@ fn tones_of(
     // The noise is itself an estimate, worth about 93 cells: Student's factor to
     // first order, 1 + (z² + 1)/4n.
     let student = 1.0 + (U95 * U95 + 1.0) / (4.0 * 93.0);
-    let tone = |bin: f64, sd: f64, strength: f64, noise: f64, present: (f64, f64), wander: f64| {
-        let level_dbfs = amplitude_db(2.0 * strength / band.samples as f64 / full_scale);
-        let snr_db = power_db(strength * strength / noise);
+    let tone = |fit: &detect::Fit| {
+        let level_dbfs = amplitude_db(2.0 * fit.strength / band.samples as f64 / full_scale);
+        let snr_db = power_db(fit.strength * fit.strength / fit.noise);
         Tone {
             number: 0,
-            seen_hz: SeenHz((bin * bin_hz).clamp(0.0, band.rate_hz / 2.0)),
-            seen_hz_u95: student * U95 * sd * bin_hz,
+            seen_hz: SeenHz((fit.bin * bin_hz).clamp(0.0, band.rate_hz / 2.0)),
+            seen_hz_u95: student * U95 * fit.bin_sd * bin_hz,
             level_dbfs,
             snr_db,
-            from_s: present.0 * duration,
-            to_s: present.1 * duration,
-            wander_hz: wander * bin_hz,
-            linewidth_hz: 2.355 * wander * bin_hz,
-            track: Vec::new(),
+            from_s: fit.present.0 * duration,
+            to_s: fit.present.1 * duration,
+            wander_hz: fit.wander * bin_hz,
+            linewidth_hz: 2.355 * fit.wander * bin_hz,
+            track: points(&fit.track, bin_hz, duration, band.rate_hz / 2.0),
+            track_step_s: match fit.track.windows {
+                0 => 0.0,
+                windows => duration / windows as f64,
+            },
             channels: vec![ChannelLevel {
                 channel,
                 level_dbfs,
@@ -218,21 +237,19 @@ fn tones_of(
             }],
         }
     };
-    let steady = found.lines.iter().map(|l| {
-        let strength = l.c.norm() * band.samples as f64;
-        tone(l.bin, l.bin_sd, strength, l.noise, (0.0, 1.0), 0.0)
-    });
-    let moving = found.wanderers.iter().map(|w| Tone {
-        track: w
-            .track
-            .iter()
-            .map(|p| TrackPoint {
-                at_s: p.at * duration,
-                seen_hz: SeenHz((p.bin * bin_hz).clamp(0.0, band.rate_hz / 2.0)),
-                sd_hz: p.sd * bin_hz,
-            })
-            .collect(),
-        ..tone(w.bin, w.bin_sd, w.strength, w.noise, w.present, w.wander)
-    });
-    steady.chain(moving).collect()
+    found.tones.iter().map(tone).collect()
+}
+
+fn points(track: &Track, bin_hz: f64, duration: f64, half_hz: f64) -> Vec<TrackPoint> {
+    track
+        .points
+        .iter()
+        .map(|p| TrackPoint {
+            at_s: (p.index as f64 + 0.5) * duration / track.windows as f64,
+            seen_hz: SeenHz((p.bin * bin_hz).clamp(0.0, half_hz)),
+            sd_hz: p.bin_sd * bin_hz,
+            turns: p.turns,
+            turns_sd: p.turns_sd,
+        })
+        .collect()
 }

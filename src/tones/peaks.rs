@@ -162,6 +162,22 @@ fn above_pedestal(
 /// `from_lag` is the first lag at which steady noise has none: 1, or 3 under a
 /// Hann window, whose neighbours its floor has counted already.
 fn correlation(power: &[f32], floor: &[f32], from_lag: usize) -> f64 {
+    // A broad tone or hump is correlated too, but only where it is: most parts of the
+    // band decide.
+    let part = (power.len() / 16).max(256);
+    let mut parts: Vec<f64> = power
+        .chunks(part)
+        .zip(floor.chunks(part))
+        .map(|(p, f)| correlation_in(p, f, from_lag))
+        .collect();
+    let mid = parts.len() / 2;
+    if parts.is_empty() {
+        return 1.0;
+    }
+    *parts.select_nth_unstable_by(mid, f64::total_cmp).1
+}
+
+fn correlation_in(power: &[f32], floor: &[f32], from_lag: usize) -> f64 {
     // capped, so that tones do not count
     let y: Vec<f32> = power
         .iter()

@@ -45,6 +45,9 @@ pub struct Line {
     pub noise: f64,
     /// How it is fitted.
     pub view: View,
+    /// How far its mean may be from where a steady one fits best, standard deviation,
+    /// bins, by what is left of it.
+    pub strayed: f64,
     /// Mean of |residual|² over noise in the cells around it once it is taken
     /// out: about 1 for a steady tone.
     pub leftover: f64,
@@ -103,6 +106,14 @@ impl Residual {
             let z = z * sign;
             self.band.bins[(k - first) as usize] += Complex32::new(z.re as f32, z.im as f32);
         }
+    }
+
+    /// Bin `k` with `line`, which is at present taken out, back in it; not its mirror
+    /// image.
+    pub fn with(&self, line: &Line, k: i64) -> Option<Complex32> {
+        let (n, m) = (self.band.samples, self.band.grid);
+        let z = line.c * dirichlet(k as f64 - line.bin, n, m).0;
+        Some(self.band.get(k)? + Complex32::new(z.re as f32, z.im as f32))
     }
 
     /// Median-based noise power around `bin` in the chosen view.
@@ -287,7 +298,7 @@ pub fn refine(band: &Band, lines: &mut [Line]) -> Residual {
         // phase it strayed by; about a third of that may pass for frequency.
         let strayed = (line.leftover - 1.5).max(0.0) * around.len() as f64
             / line.snr(band.samples).max(1e-300);
-        line.bin_sd = line.bin_sd.hypot(0.3 * strayed.sqrt());
+        line.strayed = 0.3 * strayed.sqrt();
     }
     residual
 }

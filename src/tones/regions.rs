@@ -7,8 +7,11 @@ use crate::spectrum::slice::Want;
 use crate::spectrum::welch::Averaged;
 use std::ops::Range;
 
-/// Bins on either side of what stood out: skirts, and a floor to stand on.
+/// Bins on either side of what stood out, for skirts.
 const MARGIN: usize = 8;
+/// Cells of the whole recording on either side, for a floor to stand on: several of
+/// the windows in which it is estimated.
+const FLOOR_CELLS: u64 = 768;
 /// Complex samples over all bands that a second pass may keep, about 24 MB with
 /// their transform.
 const KEPT: u64 = 1 << 20;
@@ -19,9 +22,25 @@ pub struct Region {
     /// The band to cut out, wider than the core.
     pub want: Want,
     core: Range<usize>,
+    /// Noise power per sample in each bin of the band, the least that any resolution
+    /// sees.
+    floor: Vec<f32>,
 }
 
 impl Region {
+    /// The noise per cell of the whole recording, for each bin of the band: what is
+    /// wide beside the band would pass for noise in it.
+    pub fn floor(&self, samples: usize) -> Vec<f32> {
+        self.floor.iter().map(|f| f * samples as f32).collect()
+    }
+
+    /// The core's cells in `band`.
+    pub fn cells(&self, band: &Band) -> Range<usize> {
+        let ratio = band.bins.len() / self.want.bins.max(1);
+        let cells = |bin: usize| bin.saturating_sub(self.want.first) * ratio;
+        cells(self.core.start)..cells(self.core.end).min(band.bins.len())
+    }
+
     /// Drops what was found in the margins: another region's, or cut off there.
     pub fn keep_core(&self, found: &mut Found, band: &Band) {
         // bins of the whole recording per bin of a segment
@@ -30,8 +49,7 @@ impl Region {
             (self.core.start as f64 - 2.5) * ratio,
             (self.core.end as f64 + 1.5) * ratio,
         );
-        found.lines.retain(|l| l.bin >= a && l.bin < b);
-        found.wanderers.retain(|w| w.bin >= a && w.bin < b);
+        found.tones.retain(|t| t.bin >= a && t.bin < b);
     }
 }
 
@@ -66,15 +84,28 @@ pub fn regions(averaged: &Averaged, channel: usize, false_alarms: f64, frames: u
     let mut by_width: Vec<Region> = merge(cores, 3)
         .into_iter()
         .map(|core| {
-            let first = core.start.saturating_sub(MARGIN);
-            let end = (core.end + MARGIN).min(bins);
+            // The floor must not be the tone's own foot: as much again on either side.
+            let margin = MARGIN
+                .max(core.len() * 3 / 2)
+                .max(FLOOR_CELLS.div_ceil(per_bin) as usize);
+            let first = core.start.saturating_sub(margin);
+            let end = (core.end + margin).min(bins);
             let count = (end - first).max(16).next_multiple_of(2);
             let first = first.min(bins.saturating_sub(count));
+            let count = count.min(bins & !1);
             Region {
+                floor: (first..first + count)
+                    .map(|bin| {
+                        views
+                            .iter()
+                            .filter_map(|v| v.floor.level.get(bin / v.stride))
+                            .fold(f32::INFINITY, |low, &f| low.min(f))
+                    })
+                    .collect(),
                 want: Want {
                     channel,
                     first,
-                    bins: count.min(bins & !1),
+                    bins: count,
                 },
                 core,
             }

@@ -45,9 +45,11 @@ impl Fine {
         }
         let from_zero = band.first_bin == 0;
         let mut plain_floor = floor::estimate(&plain, 1.0, 1.0, from_zero);
+        lower(&mut plain_floor, band, 1);
         plain_floor.raise(band.least_noise);
         let worth = 1.0 / (1.0 + 2.0 * HANN_CORRELATION.iter().sum::<f64>());
         let mut hann_floor = floor::estimate(&hann, 1.0, worth, from_zero);
+        lower(&mut hann_floor, band, 1);
         hann_floor.raise(band.least_noise);
         Fine {
             plain,
@@ -55,6 +57,17 @@ impl Fine {
             hann,
             plain_floor,
             hann_floor,
+        }
+    }
+}
+
+/// A tone that fills much of a band would be its floor: where the floor is clearly
+/// more than what is known from afar, that holds.
+pub fn lower(floor: &mut Floor, band: &Band, stride: usize) {
+    for (i, level) in floor.level.iter_mut().enumerate() {
+        let known = band.known_floor(i * stride);
+        if *level > 1.5 * known {
+            *level = known;
         }
     }
 }

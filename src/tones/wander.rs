@@ -30,21 +30,10 @@ pub struct Wanderer {
     pub noise: f64,
     /// First and last moment present, as fractions of the recording.
     pub present: (f64, f64),
-    /// Frequency over time.
-    pub track: Vec<TrackPoint>,
+    /// Furthest excursion from the mean, bins.
+    pub strays: f64,
     /// Cells it occupies.
     pub cells: std::ops::Range<usize>,
-}
-
-/// Frequency in one time window.
-#[derive(Debug, Clone, Copy)]
-pub struct TrackPoint {
-    /// Centre of the window as a fraction of the recording.
-    pub at: f64,
-    /// Frequency, bins of the band's grid.
-    pub bin: f64,
-    /// Its standard deviation, bins.
-    pub sd: f64,
 }
 
 /// Chance that the mean square over the square mean of `n` exponential variates
@@ -240,7 +229,7 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
             from as f64 / patch.z.len() as f64,
             to as f64 / patch.z.len() as f64,
         ),
-        track: track.points,
+        strays: track.strays,
         cells: band.first_bin + core.start..band.first_bin + core.end,
     })
 }
@@ -250,7 +239,7 @@ const SURE_OF_TURNS: f64 = 0.12;
 
 /// A tone followed through time.
 struct Track {
-    points: Vec<TrackPoint>,
+    strays: f64,
     mean: f64,
     mean_sd: f64,
     wander: f64,
@@ -344,19 +333,14 @@ fn track(patch: &Patch, from: usize, to: usize, tone_power: f64) -> Option<Track
         (average, ((sd * sd + moved / 4.0) / k).sqrt())
     };
     let width = patch.width as f64;
-    let n_all = patch.z.len() as f64;
     Some(Track {
         mean: patch.first as f64 + mean * width,
         mean_sd: mean_sd * width,
         wander: (variance - sd * sd).max(0.0).sqrt() * width,
-        points: found
+        strays: found
             .iter()
-            .map(|w| TrackPoint {
-                at: (start as f64 + w.middle + 0.5) / n_all,
-                bin: patch.first as f64 + w.cycles * width,
-                sd: sd * width,
-            })
-            .collect(),
+            .map(|w| (w.cycles - mean).abs() * width)
+            .fold(0.0, f64::max),
     })
 }
 

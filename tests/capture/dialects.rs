@@ -252,8 +252,14 @@ fn a_decimal_comma_is_not_a_delimiter() {
     }
     for header in ["t,U\n", ""] {
         let text = table(header, 48, |i| format!("0,{:04},{}", i * 10, quarter(i)));
-        let message = refusal(&folder.write("two.csv", text));
-        assert!(message.contains("commas both"), "{message}");
+        let capture = open(&folder.write("two.csv", text)).unwrap();
+        assert!((capture.spec().rate_hz - 1000.0).abs() < 1e-6);
+        assert_eq!(read(&capture, 99), expected, "{header:?}");
+        assert!(
+            notes(&capture).contains("commas both"),
+            "{}",
+            notes(&capture)
+        );
     }
 }
 

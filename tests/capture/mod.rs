@@ -3,6 +3,10 @@
 
 mod csv;
 mod dialects;
+mod finds;
+mod flac;
+mod layout;
+mod odd;
 mod riff;
 mod stamps;
 mod wav;
@@ -44,6 +48,7 @@ fn open_at(path: &Path, rate_hz: f64) -> Result<Capture, CaptureError> {
         path,
         &OpenOptions {
             rate_hz: Some(rate_hz),
+            ..OpenOptions::default()
         },
     )
 }

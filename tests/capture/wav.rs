@@ -138,8 +138,8 @@ fn wav_faults_are_named() {
         (wav(&[fmt(1, 1, 0, 16, 2), data()]), "--rate HZ"),
         (wav(&[fmt(1, 1, 8000, 0, 0), data()]), "0 bits"),
         (
-            wav(&[fmt(1, 1, 8000, 40, 5), data()]),
-            "40-bit integer samples",
+            wav(&[fmt(1, 1, 8000, 72, 9), data()]),
+            "72-bit integer samples",
         ),
         (
             wav(&[fmt(3, 1, 8000, 16, 2), data()]),
@@ -176,7 +176,7 @@ fn wav_faults_are_named() {
             b"t,a\n0,1\n".to_vec(),
             "is not a WAV file: it starts with the text \"t,a",
         ),
-        ((0..255).collect(), "not a WAV or CSV recording"),
+        ((0..255).collect(), "not a WAV, FLAC or CSV recording"),
     ];
     for (bytes, message) in cases {
         let text = refusal(&folder.write("fault.wav", &bytes));

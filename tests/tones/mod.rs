@@ -2,6 +2,8 @@
 //! interval that holds. The full figures come from `scripts/validate_tones.rs`;
 //! these are the ones that fit a test run. Seeds are fixed.
 
+mod tracks;
+
 use foldtrace::spectrum::plan::Plan;
 use foldtrace::spectrum::samples::InMemory;
 use foldtrace::tones::{Search, Tone, ToneSet, find};
