@@ -12,28 +12,31 @@
 //! file, which has been read once before so that neither pays for the disk.
 #![forbid(unsafe_code)]
 
-use std::error::Error;
 use std::fs::File;
 use std::io::{BufWriter, Read, Write};
 use std::path::{Path, PathBuf};
 use std::process::{Command, ExitCode, Stdio};
-use std::sync::atomic::{AtomicBool, Ordering};
-use std::time::{Duration, Instant};
+use std::time::Instant;
 
 use clap::{Parser, Subcommand};
 
-type Result<T> = std::result::Result<T, Box<dyn Error>>;
+#[path = "timing/mod.rs"]
+mod timing;
+
+use timing::{Result, median, run, verdict};
 
 /// Wall time of the program over that of the bare loop: at most this.
-const BAR_RATIO: f64 = 2.5;
+const BAR_RATIO: f64 = 0.8;
 /// Peak memory of the program: at most this.
-const BAR_MIB: f64 = 100.0;
+const BAR_MIB: f64 = 64.0;
+/// SciPy's wall time over that of the program: at least this.
+const BAR_SCIPY: f64 = 12.0;
 
 const RATE_HZ: u32 = 48_000;
 /// Segment of the bare loop, samples; successive segments overlap by half.
 const SEGMENT: usize = 65_536;
-/// How often the memory of a child is looked up.
-const POLL: Duration = Duration::from_millis(20);
+/// Segment of the program's own averaging, which SciPy is given too.
+const PROGRAM_SEGMENT: &str = "262144";
 
 /// Time `foldtrace triage` against a bare transform loop.
 #[derive(Parser)]
@@ -47,6 +50,10 @@ struct Options {
     /// The program to time [default: foldtrace, beside the examples folder].
     #[arg(long)]
     program: Option<PathBuf>,
+    /// A Python with NumPy and SciPy: times its `welch` and `find_peaks` on the file too,
+    /// once, without the start of the interpreter.
+    #[arg(long, value_name = "PYTHON")]
+    scipy: Option<PathBuf>,
     /// Keep the recording and say where it is.
     #[arg(long)]
     keep: bool,
@@ -91,7 +98,7 @@ fn compare(options: &Options) -> Result<bool> {
     let this = std::env::current_exe()?;
     let program = match &options.program {
         Some(path) => path.clone(),
-        None => beside_examples(&this)?,
+        None => timing::program()?,
     };
 
     let began = Instant::now();
@@ -110,6 +117,7 @@ fn compare(options: &Options) -> Result<bool> {
 
     println!("pair    bare loop       program   ratio    program's peak");
     let mut ratios = Vec::with_capacity(options.pairs);
+    let mut times = Vec::with_capacity(options.pairs);
     let mut peaks = Vec::with_capacity(options.pairs);
     for pair in 1..=options.pairs {
         let a = run(Command::new(&this).arg("bare").arg(file.path()))?;
@@ -122,8 +130,13 @@ fn compare(options: &Options) -> Result<bool> {
             mib(b.peak_mib)
         );
         ratios.push(ratio);
+        times.push(b.wall_s);
         peaks.extend(b.peak_mib);
     }
+    let scipy = options.scipy.as_deref();
+    let scipy_s = scipy
+        .map(|python| scipy_s(python, file.path()))
+        .transpose()?;
     if options.keep {
         let (_, path) = file.keep()?;
         println!("recording kept: {}", path.display());
@@ -142,90 +155,32 @@ fn compare(options: &Options) -> Result<bool> {
         mib(peak),
         verdict(small)
     );
-    Ok(fast && small)
+    let mut ahead = true;
+    if let Some(scipy_s) = scipy_s {
+        let times = scipy_s / median(&mut times);
+        ahead = times >= BAR_SCIPY;
+        println!(
+            "SciPy      {scipy_s:.1} s, {times:.1} times as long, bar {BAR_SCIPY}: {}",
+            verdict(ahead)
+        );
+    }
+    Ok(fast && small && ahead)
 }
 
-fn verdict(met: bool) -> &'static str {
-    if met { "met" } else { "MISSED" }
+/// Seconds that SciPy takes for the same segments of the same file, and its peaks.
+fn scipy_s(python: &Path, file: &Path) -> Result<f64> {
+    let output = Command::new(python)
+        .arg("scripts/welch_scipy.py")
+        .args([file.as_os_str(), PROGRAM_SEGMENT.as_ref()])
+        .stderr(Stdio::inherit())
+        .output()?;
+    let text = String::from_utf8_lossy(&output.stdout);
+    let seconds = text.split_whitespace().next().and_then(|s| s.parse().ok());
+    seconds.ok_or_else(|| format!("{}: SciPy gave no time", python.display()).into())
 }
 
 fn mib(peak: Option<f64>) -> String {
     peak.map_or("not measured".to_owned(), |p| format!("{p:.1} MiB"))
-}
-
-fn median(values: &mut [f64]) -> f64 {
-    values.sort_by(f64::total_cmp);
-    let upper = values.len() / 2;
-    let lower = (values.len() - 1) / 2;
-    0.5 * (values[lower] + values[upper])
-}
-
-/// `target/release/examples/bench_hour` → `target/release/foldtrace`.
-fn beside_examples(this: &Path) -> Result<PathBuf> {
-    let name = format!("foldtrace{}", std::env::consts::EXE_SUFFIX);
-    let path = this
-        .parent()
-        .and_then(Path::parent)
-        .map(|folder| folder.join(name))
-        .filter(|path| path.is_file());
-    path.ok_or_else(|| {
-        "no foldtrace here yet: run `cargo build --release`, or give --program".into()
-    })
-}
-
-/// What one child took.
-struct Run {
-    wall_s: f64,
-    /// Largest resident set; `None` where the system does not tell it.
-    peak_mib: Option<f64>,
-}
-
-/// Runs a child to its end. Its standard output is dropped; its standard error
-/// is shown only if it fails.
-fn run(command: &mut Command) -> Result<Run> {
-    let name = command.get_program().to_string_lossy().into_owned();
-    let began = Instant::now();
-    let child = command
-        .stdin(Stdio::null())
-        .stdout(Stdio::null())
-        .stderr(Stdio::piped())
-        .spawn()
-        .map_err(|e| format!("{name}: cannot be started: {e}"))?;
-    let pid = child.id();
-    let ended = AtomicBool::new(false);
-    let (output, wall_s, peak_kib) = std::thread::scope(|scope| {
-        let poll = scope.spawn(|| {
-            let mut peak = None;
-            while !ended.load(Ordering::Relaxed) {
-                // The kernel's own high-water mark, so that only what grows
-                // within the last poll can be missed.
-                peak = peak.max(high_water_kib(pid));
-                std::thread::park_timeout(POLL);
-            }
-            peak
-        });
-        let output = child.wait_with_output();
-        let wall_s = began.elapsed().as_secs_f64();
-        ended.store(true, Ordering::Relaxed);
-        poll.thread().unpark();
-        (output, wall_s, poll.join().unwrap_or(None))
-    });
-    let output = output?;
-    if !output.status.success() {
-        let said = String::from_utf8_lossy(&output.stderr);
-        return Err(format!("{name} failed ({}) {}", output.status, said.trim()).into());
-    }
-    Ok(Run {
-        wall_s,
-        peak_mib: peak_kib.map(|kib| kib as f64 / 1024.0),
-    })
-}
-
-/// `VmHWM` of a living process, KiB. Linux only.
-fn high_water_kib(pid: u32) -> Option<u64> {
-    let status = std::fs::read_to_string(format!("/proc/{pid}/status")).ok()?;
-    let line = status.lines().find_map(|l| l.strip_prefix("VmHWM:"))?;
-    line.split_whitespace().next()?.parse().ok()
 }
 
 /// Half-overlapped Hann segments, power accumulated per bin; returns the sum.

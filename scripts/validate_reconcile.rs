@@ -231,6 +231,8 @@ fn places(seed: u64, count: u64) {
                 tones: &there.tones,
                 chain: &there.chain,
                 duration_s: there.duration_s,
+                full_scale_known: true,
+                evidence: None,
                 ..own
             };
             mixed += usize::from(alone(&own, &other) < 0.5);

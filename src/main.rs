@@ -18,7 +18,7 @@ fn main() -> ExitCode {
             }
             ErrorKind::DisplayHelpOnMissingArgumentOrSubcommand => {
                 commands::complain(
-                    &"say what to do: triage, inspect, reconcile, plan, predict, fold, unfold or sources (see foldtrace --help)",
+                    &"say what to do: triage, scan, reconcile, plan, predict, inspect, fold, unfold or sources (see foldtrace --help)",
                 );
                 ExitCode::from(commands::WRONG_USAGE)
             }

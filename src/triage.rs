@@ -6,8 +6,10 @@ use crate::evidence::{self, Evidence};
 use crate::fold::{Chain, ChainError};
 use crate::plan::{self, rates};
 use crate::sources::Site;
+use crate::spectrum::samples::{OnThreads, Passes};
 use crate::suspects::{self, Cause, Finding, Inference, Scene, SourceFit, Verdict};
 use crate::tones::{self, Search, Tone, ToneSet};
+use std::num::NonZeroUsize;
 use std::path::Path;
 
 /// What the analyst asks for.
@@ -19,6 +21,9 @@ pub struct Options {
     pub channel: Option<usize>,
     /// Tracks of sources, logged elsewhere.
     pub references: Vec<Reference>,
+    /// Threads that may work on a long recording; `None` for as many as there are
+    /// cores. No result depends on it.
+    pub threads: Option<NonZeroUsize>,
 }
 
 /// One recording's result.
@@ -28,6 +33,8 @@ pub struct Triage {
     pub recording: String,
     /// What was read.
     pub spec: Spec,
+    /// Runs of samples missing between time stamps.
+    pub gaps: u64,
     /// Value and unit of full scale where the site file tells it.
     pub full_scale: Option<(f64, String)>,
     /// Every rate the signal went through.
@@ -102,7 +109,11 @@ pub fn run(
         channels,
         ..Search::default()
     };
-    let (tones, notes) = tones::mended::find_mended(&capture, &search, progress)?;
+    let threads = options
+        .threads
+        .map_or_else(|| capture.threads(), NonZeroUsize::get);
+    let (tones, notes) =
+        tones::mended::find_mended(&OnThreads(&capture, threads), &search, progress)?;
     spec.notes.extend(notes);
     let up_to_hz = site.recorder.front_end.bandwidth_hz;
     let evidence = evidence::gather(
@@ -125,6 +136,7 @@ pub fn run(
     Ok(Triage {
         recording: path.to_string_lossy().into_owned(),
         spec,
+        gaps: capture.gaps(),
         full_scale,
         tones,
         sources: site

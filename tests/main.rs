@@ -3,12 +3,14 @@
 
 mod capture;
 mod cli;
+mod evidence;
 mod fold;
 mod frontend;
 mod mended;
 mod page;
 mod planning;
 mod sample_data;
+mod scan;
 mod sources;
 mod spectrum;
 mod suspects;

@@ -7,8 +7,11 @@ use super::error::CaptureError;
 use super::options::LayoutOptions;
 use super::stamps::StampFormat;
 
+/// A heading for each column, and the line that the names are from.
+type Headings = (Vec<Heading>, Option<u64>);
+
 /// Names and units from the lines before the data, and the line of the names.
-pub(super) fn headings(before: &[Line], width: usize) -> (Vec<Heading>, Option<u64>) {
+pub(super) fn headings(before: &[Line], width: usize) -> Headings {
     let mut rows = before
         .iter()
         .rev()
@@ -94,7 +97,7 @@ pub(super) fn given_headings(
     lines: usize,
     width: usize,
     layout: &LayoutOptions,
-) -> Result<Option<(Vec<Heading>, Option<u64>)>, CaptureError> {
+) -> Result<Option<Headings>, CaptureError> {
     let cells_of = |line: Option<u64>, option| -> Result<_, CaptureError> {
         match line {
             None | Some(0) => Ok(None),

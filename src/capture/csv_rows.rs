@@ -49,7 +49,7 @@ type Text = BlankReader<TextReader<File>>;
 
 /// Records one after the other; each takes the place of the one before.
 enum Records {
-    Plain(Splitter<Text>),
+    Plain(Box<Splitter<Text>>),
     /// Where cells may be in quotes.
     Quoted {
         reader: Box<csv::Reader<LineLimit<Text>>>,
@@ -165,7 +165,7 @@ impl Rows {
                 record: ByteRecord::new(),
             }
         } else {
-            Records::Plain(Splitter::new(text, table.delimiter, table.paired))
+            Records::Plain(Box::new(Splitter::new(text, table.delimiter, table.paired)))
         };
         Ok(Rows {
             table: Arc::clone(table),

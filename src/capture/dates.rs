@@ -250,11 +250,10 @@ fn read_zone(zone: &[u8]) -> Option<i64> {
         _ => return None,
     };
     let (hours, minutes) = digits.split_at_checked(2)?;
-    let minutes = minutes.strip_prefix(b":").unwrap_or(minutes);
-    let minutes = if minutes.is_empty() {
-        0
-    } else {
-        whole_number(minutes)?
+    let minutes = match minutes.strip_prefix(b":").unwrap_or(minutes) {
+        [] => 0,
+        two @ [_, _] => whole_number(two)?,
+        _ => return None,
     };
     Some(sign * (whole_number(hours)? * 60 + minutes) * 60)
 }
@@ -359,6 +358,7 @@ mod tests {
             "a-b-c d:e",
             "2031-05-07 13:00 PM",
             "2031-05-07 10:00 Mars",
+            "2031-05-07 10:00+02:999999999999999999",
             "99999999 10:00",
         ] {
             assert_eq!(seconds(text, DateOrder::DayFirst), None, "{text}");

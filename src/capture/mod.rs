@@ -163,10 +163,10 @@ impl Capture {
     /// # Errors
     /// Where the file cannot be read or is no recording; see [`CaptureError`].
     pub fn open(path: &Path, options: &OpenOptions) -> Result<Capture, CaptureError> {
-        if let Some(rate_hz) = options.rate_hz {
-            if !(rate_hz.is_finite() && rate_hz > 0.0) {
-                return Err(CaptureError::BadRate { rate_hz });
-            }
+        if let Some(rate_hz) = options.rate_hz
+            && !(rate_hz.is_finite() && rate_hz > 0.0)
+        {
+            return Err(CaptureError::BadRate { rate_hz });
         }
         let (mut file, length) = open_file(path)?;
         let (spec, recipe) = match probe::probe(&mut file, path)? {
@@ -256,6 +256,16 @@ impl Blocks {
             Pass::Csv(csv) => csv.next_into(block),
         }
     }
+}
+
+/// Whether a file begins as a wave file does, whatever its name.
+///
+/// # Errors
+/// If it cannot be read.
+pub fn begins_as_wave(path: &Path) -> std::io::Result<bool> {
+    let mut head = [0; 12];
+    let got = riff::read_up_to(&mut File::open(path)?, &mut head)?;
+    Ok(riff::is_wave(head.get(..got).unwrap_or_default()))
 }
 
 /// Opens a regular file and tells its length in bytes.

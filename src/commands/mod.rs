@@ -10,6 +10,7 @@ mod progress;
 mod rates;
 mod reading;
 mod reconcile;
+mod scan;
 mod site;
 mod sources;
 mod triage;
@@ -51,6 +52,9 @@ pub enum Command {
     /// What recordings were taken for: layout, rate, gaps, what was assumed
     #[command(after_help = inspect::HELP)]
     Inspect(inspect::Arguments),
+    /// Find and judge the tones of many recordings, in parallel, and what comes back
+    #[command(after_help = scan::HELP)]
+    Scan(scan::Arguments),
     /// Where analog frequencies land once sampled
     #[command(after_help = fold::HELP)]
     Fold(fold::Arguments),
@@ -87,6 +91,7 @@ pub fn run(command: Command) -> ExitCode {
         Command::Plan(arguments) => plan::run(&arguments),
         Command::Predict(arguments) => predict::run(&arguments),
         Command::Inspect(arguments) => inspect::run(&arguments),
+        Command::Scan(arguments) => scan::run(&arguments),
         Command::Fold(arguments) => fold::run(&arguments),
         Command::Unfold(arguments) => unfold::run(&arguments),
         Command::Sources(arguments) => sources::run(&arguments),

@@ -8,6 +8,7 @@ use super::reading::Reading;
 use super::site::load_site;
 use super::values::{how_many, positive};
 use clap::Args;
+
 use foldtrace::plan::rates::usual;
 use foldtrace::reconcile::{Capture, reconcile};
 use foldtrace::report::{reconciled, text::plain};

@@ -109,6 +109,7 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
             Channel::One(n) => Some(n.get()),
         },
         references: references(&arguments.reference, &site)?,
+        threads: None,
     };
     let top = arguments.top.get();
     let width = terminal_width();

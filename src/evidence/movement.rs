@@ -16,6 +16,9 @@ use std::f64::consts::PI;
 pub(super) const LEAST_POINTS: usize = 6;
 /// Points at most; more are averaged.
 const MOST_POINTS: usize = 512;
+/// Powers of the wander's spectrum that are tried: flat to that of a phase whose
+/// frequency walks at random, and steeper.
+const POWERS: std::ops::RangeInclusive<i32> = 0..=6;
 /// A point this many robust standard deviations from its neighbours is a jump.
 const JUMP: f64 = 6.0;
 
@@ -192,7 +195,7 @@ pub fn compare(first: &Series, second: &Series) -> Option<Following> {
         if !slope.is_finite() || slope == 0.0 {
             continue;
         }
-        for power in 0..=4 {
+        for power in POWERS {
             let weight: f64 = (1..=x.len()).map(|k| (k as f64).powi(-power)).sum();
             let start = [slope, (sure / weight).ln(), 0.0];
             let steps = [0.3 * slope.abs(), 1.0, 0.7];
@@ -231,10 +234,35 @@ pub fn compare(first: &Series, second: &Series) -> Option<Following> {
     })
 }
 
+/// ln p(both | one movement at the ratio `slope`) − ln p(both | independent) of two
+/// evenly spaced signals with their noise variances.
+pub(super) fn at_ratio(first: (&[f64], f64), second: (&[f64], f64), slope: f64) -> Option<f64> {
+    let (y, x) = (cosine_terms(first.0), cosine_terms(second.0));
+    let square = |v: &[f64]| v.iter().map(|a| a * a).sum::<f64>();
+    if y.len() != x.len() || square(&y) <= 0.0 || square(&x) <= 0.0 {
+        return None;
+    }
+    let floor = |v: f64, terms: &[f64]| v.max(1e-12 * square(terms) / terms.len() as f64);
+    let (vy, vx) = (floor(first.1, &y), floor(second.1, &x));
+    let mut best = f64::NEG_INFINITY;
+    for power in POWERS {
+        let weight: f64 = (1..=x.len()).map(|k| (k as f64).powi(-power)).sum();
+        let start = [slope, (square(&x) / weight).ln(), 0.0];
+        let (at, value) = climb(start, [0.0, 1.0, 0.7], &|p| {
+            together(&y, &x, vy, vx, power, p)
+        });
+        best = best.max(value - at[2].abs());
+    }
+    Some(best - best_alone(&x, vx) - best_alone(&y, vy))
+}
+
 /// Two tracks on the same windows, means and jumps taken out.
 pub(super) fn common_points(first: &Series, second: &Series) -> Option<(Vec<f64>, Vec<f64>)> {
     Common::new(first, second).map(|c| (c.y, c.x))
 }
+
+/// Frequency and sd of both tracks in one window.
+type Pair = ((f64, f64), (f64, f64));
 
 /// Two tracks on the same windows, means taken out.
 struct Common {
@@ -292,12 +320,12 @@ impl Common {
         };
         let y = centre(pairs.iter().map(|p| p.0.0).collect());
         let x = centre(pairs.iter().map(|p| p.1.0).collect());
-        let mean =
-            |f: &dyn Fn(&((f64, f64), (f64, f64))) -> f64| pairs.iter().map(f).sum::<f64>() / n;
         let square = |v: &[f64]| v.iter().map(|a| a * a).sum::<f64>() / n;
+        let noise =
+            |sd: &dyn Fn(&Pair) -> f64| pairs.iter().map(|p| sd(p).powi(2)).sum::<f64>() / n;
         // Even a track said to be exact is so to a millionth of its movement only.
-        let vy = mean(&|p| p.0.1 * p.0.1).max(1e-12 * square(&y));
-        let vx = mean(&|p| p.1.1 * p.1.1).max(1e-12 * square(&x));
+        let vy = noise(&|p| p.0.1).max(1e-12 * square(&y));
+        let vx = noise(&|p| p.1.1).max(1e-12 * square(&x));
         Some(Common {
             jumps: before - pairs.len(),
             y,
@@ -353,7 +381,7 @@ fn cosine_terms(values: &[f64]) -> Vec<f64> {
 fn best_alone(terms: &[f64], noise: f64) -> f64 {
     let squares: f64 = terms.iter().map(|t| t * t).sum();
     let mut best = f64::NEG_INFINITY;
-    for power in 0..=4 {
+    for power in POWERS {
         let weight: f64 = (1..=terms.len()).map(|k| (k as f64).powi(-power)).sum();
         let value = |p: &[f64; 3]| {
             let strength = p[1].exp();

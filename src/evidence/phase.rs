@@ -10,13 +10,17 @@
 //! (1 − x)^(C−1): T = −(C−1)·ln(1 − P/E) is exponential under independence, and is
 //! the log-likelihood gained when a line is there. A steady tone, or one that moves on
 //! a path of its own, is not evenly spread; so the same T is taken along rival paths:
-//! none, the tone's own, and the base's path shifted in time, reversed and turned
-//! upside down, which have its statistics and not its moments. They are given every
-//! frequency that the tone's uncertainty allows; the lock has to be at its own.
+//! none, and the base's path shifted in time, reversed and turned upside down, which
+//! have its statistics and not its moments. They are given every frequency that the
+//! tone's uncertainty allows; the lock has to be at its own. Where a tone's own turns
+//! can be counted, its phase and the base's are compared as two movements instead
+//! ([`super::movement`]).
 
 use super::baseband::{Baseband, PhaseTrack, Request, bands};
+use super::movement;
 use super::timestamps::ln_sum_exp;
 use crate::fold::fold;
+use crate::spectrum::Band;
 use crate::spectrum::fft::{Complex32, Complex64, ComplexFft};
 use crate::spectrum::samples::Passes;
 use crate::tones::Tone;
@@ -43,10 +47,6 @@ const OCCAM: f64 = 2.0;
 /// Chance, over all orders tested in a recording, at which a line without a tone is
 /// still listed.
 const HIDDEN_CHANCE: f64 = 1e-5;
-/// What a free path costs per term of its cosine series: some three bits of prior
-/// over posterior width each.
-const PER_TERM: f64 = 3.0;
-
 /// A line found to turn with a base.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct PhaseLock {
@@ -76,8 +76,6 @@ pub struct PhaseLock {
 struct Base {
     tone: usize,
     channel: usize,
-    /// Power over noise in a resolution cell.
-    snr: f64,
     track: PhaseTrack,
 }
 
@@ -115,9 +113,8 @@ pub fn locks<P: Passes>(recording: &P, tones: &[Tone]) -> Result<Vec<PhaseLock>,
         let (Some(base), Some(band)) = (bases.get(pair.base), band) else {
             continue;
         };
-        let signal = Baseband::new(band);
         let own = pair.tone.and_then(|i| tones.get(i));
-        if let Some(lock) = test(pair, base, &signal, own) {
+        if let Some(lock) = test(pair, base, band, own) {
             locks.push(lock);
         }
     }
@@ -157,11 +154,10 @@ fn bases<P: Passes>(recording: &P, tones: &[Tone], cell_hz: f64) -> Result<Vec<B
         let (Some(tone), Some(band)) = (tones.get(*i), band) else {
             continue;
         };
-        if let Some(track) = follow(tone, request, &Baseband::new(band), cell_hz) {
+        if let Some(track) = follow(tone, request, &Baseband::tapered(band), cell_hz) {
             bases.push(Base {
                 tone: *i,
                 channel: request.channel,
-                snr: ratio(tone.snr_db),
                 track,
             });
         }
@@ -309,7 +305,8 @@ fn ln_line(t: f64) -> f64 {
     }
 }
 
-fn test(pair: &Pair, base: &Base, signal: &Baseband, tone: Option<&Tone>) -> Option<PhaseLock> {
+fn test(pair: &Pair, base: &Base, band: &Band, tone: Option<&Tone>) -> Option<PhaseLock> {
+    let signal = Baseband::new(band);
     let n = signal.z.len();
     let cells = n as f64;
     let energy: f64 = signal.z.iter().map(|z| z.norm_sqr()).sum();
@@ -357,56 +354,17 @@ fn test(pair: &Pair, base: &Base, signal: &Baseband, tone: Option<&Tone>) -> Opt
         add(&|t| -order * back(t), 0.0);
     }
     let shared = (rivals.len() as f64).ln();
-    let mut independent = ln_sum_exp(rivals.iter().copied()) - shared;
-    let mut with = ln_line(t0);
-    // A strong tone's own phase can be followed too: along it, with a price for every
-    // freedom, it competes as independent; and what is left of it after the base's
-    // phase may be the base's own noise, whose size is known.
-    if let Some(tone) = tone {
-        let snr = ratio(tone.snr_db);
-        let coherent = |z: &[Complex64]| {
-            let sum: Complex64 = z.iter().sum();
-            ln_line(gain(sum.norm_sqr() / cells, energy, cells))
-        };
-        if let Some(own) = PhaseTrack::follow(signal, tone.seen_hz.0, cells / snr) {
-            let off = own.mean_hz - pair.seen_hz;
-            let along_own = coherent(&along(&|t| off * t + own.at(t)));
-            let cost = PER_TERM * own.terms as f64;
-            independent = ln_sum_exp([independent, along_own - cost].into_iter());
-        }
-        let left = Baseband {
-            reference_hz: 0.0,
-            step_s: signal.step_s,
-            z: locked,
-        };
-        if let Some(rest) = PhaseTrack::follow(&left, 0.0, cells / snr) {
-            let middle = 0.5 * length;
-            let path = |t: f64| rest.mean_hz * (t - middle) + rest.at(t);
-            let freed: Vec<Complex64> = left
-                .z
-                .iter()
-                .enumerate()
-                .map(|(i, z)| z * Complex64::from_polar(1.0, -TAU * path(left.at_s(i))))
-                .collect();
-            // Each term of the path: base noise, n times over, and the tone's own. The
-            // base may be noisier than its floor says, at the ends above all, where it
-            // was cut out of its surroundings: up to 32 times is tried, at a price.
-            let per_sample = |snr: f64| cells / (2.0 * snr) / (TAU * TAU);
-            let (own, of_base) = (per_sample(snr), order * order * per_sample(base.snr));
-            let squares: f64 = (0..n).map(|i| path(left.at_s(i)).powi(2)).sum();
-            let terms = rest.terms as f64;
-            let prior = (0..=5)
-                .map(|double| {
-                    let all = own + of_base * 2f64.powi(double);
-                    -0.5 * (squares / all + terms * (all / own).ln()) - f64::from(double)
-                })
-                .fold(f64::NEG_INFINITY, f64::max);
-            let refined = coherent(&freed) + prior;
-            with = with.max(refined);
-        }
-    }
+    let independent = ln_sum_exp(rivals.iter().copied()) - shared;
     // Half for anything spread evenly, whose gain is 0.
     let independent = ln_sum_exp([0.0, independent].into_iter()) - 2f64.ln();
+    // A tone so strong that its own turns can be counted is compared turn by turn: the
+    // base may then be the noisier of the two.
+    let counted = tone.and_then(|tone| {
+        let smooth = Baseband::tapered(band);
+        let own = PhaseTrack::follow(&smooth, tone.seen_hz.0, cells / ratio(tone.snr_db))?;
+        turn_by_turn(&own, &base.track, order)
+    });
+    let ln_ratio = counted.unwrap_or(ln_line(t0) - independent);
     let rest = (energy - power) / (cells - 1.0);
     Some(PhaseLock {
         tone: pair.tone,
@@ -415,10 +373,25 @@ fn test(pair: &Pair, base: &Base, signal: &Baseband, tone: Option<&Tone>) -> Opt
         seen_hz: SeenHz(pair.seen_hz),
         sense: pair.sense,
         multiplier: order,
-        ln_ratio: with - independent,
+        ln_ratio,
         p_value: (-t0).exp(),
         snr_db: crate::units::power_db((power / rest - 1.0).max(1e-3)),
     })
+}
+
+/// Windows in which two phases are compared, at most.
+const MOST_WINDOWS: usize = 256;
+
+/// Log-likelihood ratio of two counted phases being one movement at a given ratio to
+/// each having its own; lines taken out, so that frequency does not count.
+fn turn_by_turn(own: &PhaseTrack, base: &PhaseTrack, order: f64) -> Option<f64> {
+    let windows = own.samples().min(base.samples()) / 2;
+    let windows = windows.min(MOST_WINDOWS);
+    let from = own.margin_s().max(base.margin_s());
+    let to = own.duration_s().min(base.duration_s()) - from;
+    let (y, vy) = own.windows(windows, from, to)?;
+    let (x, vx) = base.windows(windows, from, to)?;
+    movement::at_ratio((&y, vy), (&x, vx), order)
 }
 
 /// Power in half cells about 0.

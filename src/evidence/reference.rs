@@ -13,7 +13,7 @@ use serde::Serialize;
 use std::path::{Path, PathBuf};
 
 /// Fewest points of a reference track.
-const LEAST_POINTS: usize = 4;
+const LEAST_POINTS: usize = 6;
 /// Most points kept, about a day of one-second values.
 const MOST_POINTS: usize = 100_000;
 /// Stamps beyond this many seconds are dates, on the one scale all dates share.
@@ -202,21 +202,22 @@ fn pulses(path: &Path) -> Result<Option<(Series, f64)>, ReferenceError> {
     Ok(Some((series, origin)))
 }
 
-/// Gives every point the noise that its second differences show: of white noise they
-/// have six times the variance, of slow movement next to none.
+/// Gives every point the noise that its fourth differences show: of white noise they
+/// have 70 times the variance, of slow movement next to none. Noise overestimated
+/// would make every slope against the reference too steep.
 fn with_noise(mut series: Series) -> Series {
     let mut squares: Vec<f64> = series
         .hz
-        .windows(3)
+        .windows(5)
         .map(|w| match w {
-            [a, b, c] => (a - 2.0 * b + c).abs(),
+            [a, b, c, d, e] => (a - 4.0 * b + 6.0 * c - 4.0 * d + e).abs(),
             _ => 0.0,
         })
         .collect();
     squares.sort_unstable_by(f64::total_cmp);
     // Median of the absolute, so that jumps do not count.
     let typical = squares.get(squares.len() / 2).copied().unwrap_or(0.0);
-    let sd = 1.4826 * typical / 6f64.sqrt();
+    let sd = 1.4826 * typical / 70f64.sqrt();
     series.sd_hz.iter_mut().for_each(|s| *s = sd);
     series
 }

@@ -457,7 +457,7 @@ impl ToneFit {
         if let [one] = best.0.as_slice() {
             noise = noise.max(local_noise(best.1, one.shift_hz, block_s));
         }
-        if !(noise > 0.0) {
+        if noise.is_nan() || noise <= 0.0 {
             return None;
         }
         let mut gains: Vec<f64> = fits.iter().map(|f| 0.5 * explained(f) / noise).collect();

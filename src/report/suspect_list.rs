@@ -55,11 +55,15 @@ pub(super) fn verdict(v: Verdict) -> &'static str {
     }
 }
 
+fn csv_writer<W: Write>(out: W) -> csv::Writer<W> {
+    csv::WriterBuilder::new()
+        .terminator(csv::Terminator::CRLF)
+        .from_writer(out)
+}
+
 /// A writer of the list, its header written.
 pub(super) fn begin<W: Write>(out: W) -> csv::Result<csv::Writer<W>> {
-    let mut csv = csv::WriterBuilder::new()
-        .terminator(csv::Terminator::CRLF)
-        .from_writer(out);
+    let mut csv = csv_writer(out);
     csv.write_record(COLUMNS)?;
     Ok(csv)
 }
@@ -69,42 +73,62 @@ pub(super) fn begin<W: Write>(out: W) -> csv::Result<csv::Writer<W>> {
 ///
 /// # Errors
 /// If `out` cannot be written.
-pub fn write(results: &[Triage], top: usize, out: impl Write) -> csv::Result<()> {
-    let mut csv = begin(out)?;
+pub fn write(results: &[Triage], top: usize, mut out: impl Write) -> csv::Result<()> {
+    write_header(&mut out)?;
     for result in results {
-        for (tone, finding) in result.rows() {
-            let unlisted = finding.unlisted_direct + finding.unlisted_folded;
-            let mut rows: Vec<(Option<&Suspect>, f64)> = finding
-                .suspects
-                .iter()
-                .take(top)
-                .map(|s| (Some(s), s.probability))
-                .collect();
-            rows.push((None, unlisted));
-            rows.sort_by(|a, b| b.1.total_cmp(&a.1));
-            for (rank, (suspect, p)) in rows.into_iter().enumerate() {
-                let cells = Cells {
-                    suspect: suspect.map_or("unlisted".into(), |s| s.cause.name()),
-                    line: suspect.map_or("", |s| &s.line),
-                    true_hz: suspect.map(|s| (s.true_hz.0, s.true_hz_u95)),
-                    zone: suspect.map(|s| (s.zone, s.sense.is_inverted())),
-                    probability: p,
-                    coincidence: suspect.map(|s| s.coincidence),
-                };
-                let mut record = tone_cells(
-                    &result.recording,
-                    &result.channel_names(tone),
-                    tone.number,
-                    tone,
-                );
-                record.extend([
-                    verdict(finding.verdict).to_owned(),
-                    format!("{:.6}", finding.folded_probability),
-                    (rank + 1).to_string(),
-                ]);
-                record.extend(cells.record());
-                csv.write_record(&record)?;
-            }
+        write_rows(result, top, &mut out)?;
+    }
+    out.flush()?;
+    Ok(())
+}
+
+/// Writes the header alone.
+///
+/// # Errors
+/// If `out` cannot be written.
+pub fn write_header(out: impl Write) -> csv::Result<()> {
+    begin(out)?.flush()?;
+    Ok(())
+}
+
+/// Writes one result's rows without the header; see [`write`].
+///
+/// # Errors
+/// If `out` cannot be written.
+pub fn write_rows(result: &Triage, top: usize, out: impl Write) -> csv::Result<()> {
+    let mut csv = csv_writer(out);
+    for (tone, finding) in result.rows() {
+        let unlisted = finding.unlisted_direct + finding.unlisted_folded;
+        let mut rows: Vec<(Option<&Suspect>, f64)> = finding
+            .suspects
+            .iter()
+            .take(top)
+            .map(|s| (Some(s), s.probability))
+            .collect();
+        rows.push((None, unlisted));
+        rows.sort_by(|a, b| b.1.total_cmp(&a.1));
+        for (rank, (suspect, p)) in rows.into_iter().enumerate() {
+            let cells = Cells {
+                suspect: suspect.map_or("unlisted".into(), |s| s.cause.name()),
+                line: suspect.map_or("", |s| &s.line),
+                true_hz: suspect.map(|s| (s.true_hz.0, s.true_hz_u95)),
+                zone: suspect.map(|s| (s.zone, s.sense.is_inverted())),
+                probability: p,
+                coincidence: suspect.map(|s| s.coincidence),
+            };
+            let mut record = tone_cells(
+                &result.recording,
+                &result.channel_names(tone),
+                tone.number,
+                tone,
+            );
+            record.extend([
+                verdict(finding.verdict).to_owned(),
+                format!("{:.6}", finding.folded_probability),
+                (rank + 1).to_string(),
+            ]);
+            record.extend(cells.record());
+            csv.write_record(&record)?;
         }
     }
     csv.flush()?;

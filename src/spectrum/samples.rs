@@ -27,6 +27,42 @@ pub trait Passes: Sync {
     /// # Errors
     /// If the recording can no longer be read.
     fn pass(&self) -> Result<Self::Pass<'_>, Self::Error>;
+    /// How many threads may work on a pass; 1 keeps all work on the caller's. No
+    /// result depends on it.
+    fn threads(&self) -> usize {
+        std::thread::available_parallelism().map_or(1, |n| n.get().min(MOST_THREADS))
+    }
+}
+
+/// Threads of one pass at most: each holds a group of segments.
+pub const MOST_THREADS: usize = 8;
+
+/// A recording whose passes get so many threads and no more, because others are
+/// worked on at the same time.
+pub struct OnThreads<'a, P>(pub &'a P, pub usize);
+
+impl<P: Passes> Passes for OnThreads<'_, P> {
+    type Error = P::Error;
+    type Pass<'a>
+        = P::Pass<'a>
+    where
+        Self: 'a;
+
+    fn rate_hz(&self) -> f64 {
+        self.0.rate_hz()
+    }
+    fn channels(&self) -> usize {
+        self.0.channels()
+    }
+    fn frames(&self) -> u64 {
+        self.0.frames()
+    }
+    fn pass(&self) -> Result<P::Pass<'_>, P::Error> {
+        self.0.pass()
+    }
+    fn threads(&self) -> usize {
+        self.1.clamp(1, MOST_THREADS)
+    }
 }
 
 /// One pass over a recording.

@@ -80,7 +80,14 @@ where
     P: Passes,
     R: Send,
 {
-    let threads = std::thread::available_parallelism().map_or(1, |n| n.get().min(8));
+    let threads = recording.threads();
+    if threads <= 1 {
+        let mut state = new_state();
+        return read_groups(recording, layout, progress, |group| {
+            sink(work(&mut state, &group));
+            true
+        });
+    }
     let (group_tx, group_rx) = mpsc::sync_channel::<Group>(1);
     let group_rx = Mutex::new(group_rx);
     let (result_tx, result_rx) = mpsc::channel::<(u64, R)>();
@@ -199,7 +206,7 @@ fn read_groups<P: Passes>(
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::spectrum::samples::InMemory;
+    use crate::spectrum::samples::{InMemory, OnThreads};
 
     fn segments(frames: usize, layout: Layout) -> Vec<Vec<f32>> {
         let recording = InMemory {
@@ -222,6 +229,37 @@ mod tests {
         )
         .unwrap();
         all
+    }
+
+    /// Sums in `f32` differ with their order: the same bits mean the same order.
+    #[test]
+    fn the_number_of_threads_changes_no_bit() {
+        let recording = InMemory {
+            rate_hz: 1.0,
+            channels: vec![(0..3_000_000).map(|i| (i as f32 * 0.37).sin()).collect()],
+        };
+        let layout = Layout {
+            segment: 1 << 12,
+            padded: true,
+        };
+        let sum = |threads| {
+            let mut sum = 0.0f32;
+            for_each_group(
+                &OnThreads(&recording, threads),
+                layout,
+                &|_| (),
+                || (),
+                |(), group| group.samples[0].iter().sum::<f32>(),
+                |r| sum = sum * 0.999 + r,
+            )
+            .unwrap();
+            sum.to_bits()
+        };
+        let alone = sum(1);
+        assert_ne!(alone, 0);
+        for threads in [2, 3, 8] {
+            assert_eq!(sum(threads), alone, "{threads} threads");
+        }
     }
 
     #[test]

@@ -87,25 +87,25 @@ pub(super) fn plan(site: &Site) -> Vec<Plan> {
         let known = |l: &usize| home.get(*l).copied().flatten();
         let homes: Vec<Option<usize>> = set.iter().map(known).collect();
         // All its latents are fitted in one place: join it.
-        if let Some(Some(first)) = homes.first() {
-            if homes.iter().all(|h| *h == Some(*first)) {
-                if let Some(plan) = plans.get_mut(*first) {
-                    plan.sources.push(source);
-                }
-                return;
+        if let Some(Some(first)) = homes.first()
+            && homes.iter().all(|h| *h == Some(*first))
+        {
+            if let Some(plan) = plans.get_mut(*first) {
+                plan.sources.push(source);
             }
+            return;
         }
         let mut free: Vec<usize> = set.iter().copied().filter(|l| known(l).is_none()).collect();
         let mut pinned: Vec<usize> = set.iter().copied().filter(|l| known(l).is_some()).collect();
         if free.is_empty() {
             // Latents of two other places: take the last as its place.
-            if let Some(last) = pinned.pop() {
-                if let Some(plan) = known(&last).and_then(|h| plans.get_mut(h)) {
-                    plan.sources.push(source);
-                    for p in pinned {
-                        if !plan.pinned.contains(&p) && !plan.latents.contains(&p) {
-                            plan.pinned.push(p);
-                        }
+            if let Some(last) = pinned.pop()
+                && let Some(plan) = known(&last).and_then(|h| plans.get_mut(h))
+            {
+                plan.sources.push(source);
+                for p in pinned {
+                    if !plan.pinned.contains(&p) && !plan.latents.contains(&p) {
+                        plan.pinned.push(p);
                     }
                 }
             }

@@ -257,10 +257,10 @@ fn evaluate_mode(
                 }
             }
         }
-        if members > 1 {
-            if let Some(all) = value.responsibility.get_mut(n * count..(n + 1) * count) {
-                share_between_members(entries, all);
-            }
+        if members > 1
+            && let Some(all) = value.responsibility.get_mut(n * count..(n + 1) * count)
+        {
+            share_between_members(entries, all);
         }
         if let Some(slot) = value.ln_weight.get_mut(n) {
             *slot = ln_weight;
@@ -276,11 +276,11 @@ fn evaluate_mode(
 fn meet(entries: &[Entry], density: &[f64], run: std::ops::Range<usize>) -> PerClass {
     let mut x = [0.0; CLASSES];
     for i in run {
-        if let (Some(e), Some(&d)) = (entries.get(i), density.get(i)) {
-            if d > 0.0 {
-                for (x, o) in x.iter_mut().zip(&e.odds) {
-                    *x += o * d;
-                }
+        if let (Some(e), Some(&d)) = (entries.get(i), density.get(i))
+            && d > 0.0
+        {
+            for (x, o) in x.iter_mut().zip(&e.odds) {
+                *x += o * d;
             }
         }
     }

@@ -86,10 +86,10 @@ pub(super) fn look(
                 *d = (*d - o.2).max(0.0) + message;
             }
             for k in gate.products.clone() {
-                if products.get(k).map(|b| b.tone) == Some(o.0) {
-                    if let Some(slot) = told.open.get_mut(k) {
-                        *slot = open;
-                    }
+                if products.get(k).map(|b| b.tone) == Some(o.0)
+                    && let Some(slot) = told.open.get_mut(k)
+                {
+                    *slot = open;
                 }
             }
         }

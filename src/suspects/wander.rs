@@ -7,6 +7,7 @@
 //! ladder: a tone that wanders is not its line.
 
 use super::scene::Measured;
+use std::sync::LazyLock;
 
 /// Standard deviation of a measured wander's logarithm.
 const SPREAD: f64 = 0.3;
@@ -131,7 +132,7 @@ pub(super) fn variants(
 /// over what can be resolved.
 #[derive(Debug, Clone)]
 pub(super) struct MeanRatios {
-    free: Vec<f64>,
+    free: &'static [f64],
 }
 
 const MEASURED_STEP: f64 = 0.2;
@@ -140,23 +141,28 @@ const SCALE_STEP: f64 = 0.5;
 const SCALE_FROM: f64 = -4.0;
 const SCALE_STEPS: usize = 64;
 
+/// The same for every recording, and costs as much as judging a short one.
+static FREE: LazyLock<Vec<f64>> = LazyLock::new(|| {
+    let ladder = ladder(false);
+    let mut free = Vec::with_capacity(MEASURED_STEPS * SCALE_STEPS);
+    for m in 0..MEASURED_STEPS {
+        let measured = m as f64 * MEASURED_STEP;
+        for s in 0..SCALE_STEPS {
+            let scale = (SCALE_FROM + s as f64 * SCALE_STEP).exp();
+            free.push(
+                ladder
+                    .iter()
+                    .map(|(w, p)| p * ratio_of(measured, (scale * w).hypot(1.0).ln()))
+                    .sum(),
+            );
+        }
+    }
+    free
+});
+
 impl MeanRatios {
     pub fn new() -> MeanRatios {
-        let ladder = ladder(false);
-        let mut free = Vec::with_capacity(MEASURED_STEPS * SCALE_STEPS);
-        for m in 0..MEASURED_STEPS {
-            let measured = m as f64 * MEASURED_STEP;
-            for s in 0..SCALE_STEPS {
-                let scale = (SCALE_FROM + s as f64 * SCALE_STEP).exp();
-                free.push(
-                    ladder
-                        .iter()
-                        .map(|(w, p)| p * ratio_of(measured, (scale * w).hypot(1.0).ln()))
-                        .sum(),
-                );
-            }
-        }
-        MeanRatios { free }
+        MeanRatios { free: &FREE }
     }
 
     /// `scale`: wander of the line per unit of each latent's relative wander, Hz.

@@ -2,14 +2,16 @@
 //!
 //! A straight line over a gap takes a piece out of every tone: a strong one
 //! then no longer looks steady, and gaps that come again and again give it
-//! sidebands. So what was found is fitted to the samples that are there, by
-//! least squares, and drawn on through the gaps; then the search is repeated.
-//! (An expectation-maximisation step after Dempster, Laird and Rubin 1977: the
-//! missing samples are put to what is expected of them.) Gaps get no tone that
-//! the samples around them do not carry, and count for nothing in the fit.
+//! sidebands. So the strongest lines are fitted to the samples that are there, by
+//! least squares, and drawn on through the gaps; then the search is made. Gaps get
+//! no tone that the samples around them do not carry, and count for nothing in the
+//! fit.
 
+use super::normal::Normal;
+use super::pursuit::{Line, pursue};
 use super::{Search, Tone, ToneSet, find};
 use crate::capture::Block;
+use crate::spectrum::plan::Plan;
 use crate::spectrum::samples::{Pass, Passes};
 use std::f64::consts::TAU;
 
@@ -18,11 +20,9 @@ use std::f64::consts::TAU;
 const LONG_GAP: u64 = 32;
 /// Share of missing frames beyond which gaps are too long to be drawn through.
 const MOST_MISSING: f64 = 0.5;
-/// Repetitions of the search; the last changes nothing that matters.
-const ROUNDS: usize = 2;
 /// Most tones drawn through the gaps, and the work that fitting them may take:
 /// tones squared times frames.
-const MOST_TONES: usize = 16;
+const MOST_LINES: usize = 16;
 const MOST_WORK: f64 = 1e9;
 
 /// As [`find`], for recordings that may have missing samples (NaN), with what
@@ -91,38 +91,38 @@ fn mend<P: Passes>(
     }
     let stretch = longest_stretch(recording)?;
     let stretch_s = |frame: u64| frame as f64 / recording.rate_hz();
-    let mut tones = first;
-    if stretch.lost > 0 {
-        let part = Part {
-            whole: recording,
-            from: stretch.from,
-            to: stretch.to,
-        };
+    let part = Part {
+        whole: recording,
+        from: stretch.from,
+        to: stretch.to,
+    };
+    if stretch.lost as f64 > MOST_MISSING * frames as f64 {
         let found = find(&part, search, progress)?;
-        if stretch.lost as f64 > MOST_MISSING * frames as f64 {
-            let note = format!(
-                "gaps are longer than what is between them: only the longest stretch was searched, {:.3} to {:.3} s",
-                stretch_s(stretch.from),
-                stretch_s(stretch.to)
-            );
-            return Ok((moved(found, stretch_s(stretch.from)), vec![note]));
+        let note = format!(
+            "gaps are longer than what is between them: only the longest stretch was searched, {:.3} to {:.3} s",
+            stretch_s(stretch.from),
+            stretch_s(stretch.to)
+        );
+        return Ok((moved(found, stretch_s(stretch.from)), vec![note]));
+    }
+    let missing = first.missing.clone();
+    let model = match first.plan {
+        Plan::Whole { .. } => Model::pursue(recording)?,
+        // Too long to be held: a tone is steady between gaps, if it is at all.
+        Plan::Segments { .. } if stretch.lost > 0 => {
+            Model::fit(recording, &find(&part, search, progress)?.tones)?
         }
-        tones = ToneSet {
-            tones: found.tones,
-            ..tones
-        };
+        Plan::Segments { .. } => Model::fit(recording, &first.tones)?,
+    };
+    let drawn = model.most();
+    if drawn == 0 {
+        return Ok((first, Vec::new()));
     }
-    let missing = tones.missing.clone();
-    let mut drawn = 0;
-    for _ in 0..ROUNDS {
-        let model = Model::fit(recording, &tones.tones)?;
-        drawn = model.lines.len();
-        let filled = Filled {
-            recording,
-            model: &model,
-        };
-        tones = find(&filled, search, progress)?;
-    }
+    let filled = Filled {
+        recording,
+        model: &model,
+    };
+    let mut tones = find(&filled, search, progress)?;
     // Samples that were drawn tell nothing new.
     let most = missing.iter().copied().max().unwrap_or(0);
     let present = (frames - most.min(frames)) as f64 / frames as f64;
@@ -265,26 +265,47 @@ impl<P: Passes> Pass for PartPass<'_, P> {
     }
 }
 
-/// Steady tones as the samples that are there have them.
+/// Steady lines as the samples that are there have them.
 struct Model {
-    /// Cycles per sample.
-    lines: Vec<f64>,
-    /// `amplitudes[channel][line]`: of cosine and sine.
-    amplitudes: Vec<Vec<(f64, f64)>>,
+    /// `lines[channel]`.
+    lines: Vec<Vec<Line>>,
 }
 
 impl Model {
+    /// From all samples, of a recording short enough to be held.
+    fn pursue<P: Passes>(recording: &P) -> Result<Model, P::Error> {
+        let mut channels: Vec<Vec<f32>> = vec![Vec::new(); recording.channels()];
+        let mut pass = recording.pass()?;
+        let mut block = Block::default();
+        while pass.next_into(&mut block)? {
+            for (all, samples) in channels.iter_mut().zip(&block.samples) {
+                all.extend_from_slice(samples);
+            }
+        }
+        let most = most_lines(recording.frames());
+        let lines = |samples: &Vec<f32>| {
+            if samples.iter().any(|sample| sample.is_nan()) {
+                pursue(samples, most)
+            } else {
+                Vec::new()
+            }
+        };
+        Ok(Model {
+            lines: channels.iter().map(lines).collect(),
+        })
+    }
+
+    /// From the steady ones among tones found before.
     fn fit<P: Passes>(recording: &P, tones: &[Tone]) -> Result<Model, P::Error> {
         let mut steady: Vec<&Tone> = tones.iter().filter(|tone| tone.wander_hz == 0.0).collect();
         steady.sort_by(|a, b| b.level_dbfs.total_cmp(&a.level_dbfs));
-        let work = (MOST_WORK / recording.frames().max(1) as f64).sqrt();
-        steady.truncate((work as usize).clamp(1, MOST_TONES));
-        let lines: Vec<f64> = steady
+        steady.truncate(most_lines(recording.frames()));
+        let cycles: Vec<f64> = steady
             .iter()
             .map(|tone| tone.seen_hz.0 / recording.rate_hz())
             .collect();
         // A constant, then cosine and sine of each.
-        let unknowns = 1 + 2 * lines.len();
+        let unknowns = 1 + 2 * cycles.len();
         let mut sums = vec![Normal::new(unknowns); recording.channels()];
         let mut pass = recording.pass()?;
         let mut block = Block::default();
@@ -292,8 +313,9 @@ impl Model {
         while pass.next_into(&mut block)? {
             for i in 0..block.frames() {
                 let frame = block.first_frame + i as u64;
-                for (&line, pair) in lines.iter().zip(row[1..].chunks_exact_mut(2)) {
-                    let (sin, cos) = phase(line, frame).sin_cos();
+                let pairs = row.get_mut(1..).unwrap_or_default().chunks_exact_mut(2);
+                for (&cycles, pair) in cycles.iter().zip(pairs) {
+                    let (sin, cos) = (TAU * (cycles * frame as f64).fract()).sin_cos();
                     pair.copy_from_slice(&[cos, sin]);
                 }
                 for (sum, channel) in sums.iter_mut().zip(&block.samples) {
@@ -304,95 +326,34 @@ impl Model {
                 }
             }
         }
-        let amplitudes = sums
-            .into_iter()
-            .map(|sum| {
-                let solved = sum.solve();
-                let pairs = solved.get(1..).unwrap_or_default().chunks_exact(2);
-                pairs.map(|pair| (pair[0], pair[1])).collect()
-            })
-            .collect();
-        Ok(Model { lines, amplitudes })
+        let lines = |sum: Normal| {
+            let solved = sum.solve();
+            let pairs = solved.get(1..).unwrap_or_default().chunks_exact(2);
+            let line = |(&cycles, pair): (&f64, &[f64])| match pair {
+                &[cos, sin] => Some(Line { cycles, cos, sin }),
+                _ => None,
+            };
+            cycles.iter().zip(pairs).filter_map(line).collect()
+        };
+        Ok(Model {
+            lines: sums.into_iter().map(lines).collect(),
+        })
+    }
+
+    fn most(&self) -> usize {
+        self.lines.iter().map(Vec::len).max().unwrap_or(0)
     }
 
     fn value(&self, channel: usize, frame: u64) -> f64 {
-        let amplitudes = self.amplitudes.get(channel).map_or(&[][..], Vec::as_slice);
-        self.lines
-            .iter()
-            .zip(amplitudes)
-            .map(|(&line, &(a, b))| {
-                let (sin, cos) = phase(line, frame).sin_cos();
-                a * cos + b * sin
-            })
-            .sum()
+        let lines = self.lines.get(channel).map_or(&[][..], Vec::as_slice);
+        lines.iter().map(|line| line.at(frame)).sum()
     }
 }
 
-fn phase(line: f64, frame: u64) -> f64 {
-    // The whole turns dropped first: a sine of a large number loses digits.
-    TAU * (line * frame as f64).fract()
-}
-
-/// Normal equations of a least-squares fit.
-#[derive(Clone)]
-struct Normal {
-    size: usize,
-    /// Row after row, the right-hand side last in each.
-    matrix: Vec<f64>,
-}
-
-impl Normal {
-    fn new(size: usize) -> Normal {
-        Normal {
-            size,
-            matrix: vec![0.0; size * (size + 1)],
-        }
-    }
-
-    fn add(&mut self, row: &[f64], value: f64) {
-        for (&factor, line) in row.iter().zip(self.matrix.chunks_exact_mut(self.size + 1)) {
-            for (sum, &other) in line.iter_mut().zip(row) {
-                *sum += factor * other;
-            }
-            if let Some(last) = line.last_mut() {
-                *last += factor * value;
-            }
-        }
-    }
-
-    /// By elimination with the largest pivot; 0 for what the samples leave open.
-    fn solve(mut self) -> Vec<f64> {
-        let (n, width) = (self.size, self.size + 1);
-        let m = &mut self.matrix;
-        let largest = m.iter().fold(0.0f64, |most, &x| most.max(x.abs()));
-        for column in 0..n {
-            let pivot = (column..n)
-                .max_by(|&a, &b| {
-                    m[a * width + column]
-                        .abs()
-                        .total_cmp(&m[b * width + column].abs())
-                })
-                .unwrap_or(column);
-            if m[pivot * width + column].abs() <= 1e-9 * largest {
-                continue;
-            }
-            for k in 0..width {
-                m.swap(column * width + k, pivot * width + k);
-            }
-            for row in (0..n).filter(|&row| row != column) {
-                let factor = m[row * width + column] / m[column * width + column];
-                for k in column..width {
-                    m[row * width + k] -= factor * m[column * width + k];
-                }
-            }
-        }
-        (0..n)
-            .map(|row| match m[row * width + row] {
-                pivot if pivot.abs() <= 1e-9 * largest => 0.0,
-                pivot => m[row * width + n] / pivot,
-            })
-            .collect()
-    }
+/// Lines that can be fitted to so many frames within the work allowed.
+fn most_lines(frames: u64) -> usize {
+    let work = (MOST_WORK / frames.max(1) as f64).sqrt();
+    (work as usize).clamp(1, MOST_LINES)
 }
 
 /// A recording whose missing samples are what a model has, on a straight line
@@ -464,9 +425,9 @@ impl<P: Passes> Pass for FilledPass<'_, P> {
                 };
                 let to = right.unwrap_or(from);
                 let steps = (i - start + 1) as f64;
-                for n in start..i {
+                for (n, sample) in (start..i).zip(samples.iter_mut().skip(start)) {
                     let line = from + (to - from) * (n - start + 1) as f64 / steps;
-                    samples[n] = (model(n) + line) as f32;
+                    *sample = (model(n) + line) as f32;
                 }
             }
             if let Some((last, &value)) = samples.iter().enumerate().next_back() {
