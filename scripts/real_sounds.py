@@ -69,7 +69,7 @@ def main():
                 site = Path(folder) / "site.toml"
                 site.write_text(f"[recorder]\nclock_ppm = 0.1\nbandwidth_hz = {rate / 2}\n")
                 result = subprocess.run(
-                    [PROGRAM, "reconcile", *files, "--rate", ",".join(rates),
+                    [PROGRAM, "reconcile", *files, "--rates", ",".join(rates),
                      "--site", str(site), "--suspects", "-"],
                     capture_output=True, text=True, check=True,
                 )

@@ -149,7 +149,18 @@ fn candidates(finding: &Finding, ladder: &[Rung], folded: &dyn Fn(f64) -> f64) -
                 label: suspect.line.clone(),
             },
         };
-        for place in suspect.places.iter().filter(|p| p.probability > LEAST) {
+        // What came later (time, references) changed the whole, not its division.
+        let told: f64 = suspect.places.iter().map(|p| p.probability).sum();
+        let scale = if told > 0.0 {
+            suspect.probability / told
+        } else {
+            0.0
+        };
+        for place in suspect
+            .places
+            .iter()
+            .filter(|p| scale * p.probability > LEAST)
+        {
             // The tone is measured far better than its source is known: where the
             // source meets it, the rung tells the frequency.
             let rung = ladder
@@ -169,7 +180,7 @@ fn candidates(finding: &Finding, ladder: &[Rung], folded: &dyn Fn(f64) -> f64) -
                 } else {
                     Sense::Upright
                 },
-                probability: place.probability,
+                probability: scale * place.probability,
             });
         }
     }

@@ -338,7 +338,7 @@ fn reconcile_needs_two_recordings() {
     assert_eq!(output.status.code(), Some(2));
     let output = foldtrace(&["reconcile", SKID[0], "absent.wav"]);
     assert_eq!(output.status.code(), Some(1));
-    let output = foldtrace(&["reconcile", SKID[0], SKID[1], "--rate", "1,2,3"]);
+    let output = foldtrace(&["reconcile", SKID[0], SKID[1], "--rates", "1,2,3"]);
     assert_eq!(output.status.code(), Some(2));
     let output = foldtrace(&[&["reconcile"], &SKID[..], &["--json", SKID[1]]].concat());
     assert_eq!(output.status.code(), Some(2));

@@ -4,10 +4,11 @@ use super::output::{
     SOME_FAILED, Stop, complain, is_stdout, shown, spare, terminal_width, to_file, to_stdout, usage,
 };
 use super::progress::Progress;
+use super::reading::Reading;
 use super::site::load_site;
 use super::values::{how_many, positive};
 use clap::Args;
-use foldtrace::capture::OpenOptions;
+
 use foldtrace::plan::rates::usual;
 use foldtrace::reconcile::{Capture, reconcile};
 use foldtrace::report::{reconciled, text::plain};
@@ -42,10 +43,10 @@ pub struct Arguments {
     /// once for each in their order where the recorders differ
     #[arg(long, value_name = "FILE")]
     pub site: Vec<PathBuf>,
-    /// Sample rate of every recording, where the files do not tell it; several, separated by
-    /// commas, for each recording its own
-    #[arg(long, value_name = "HZ", value_delimiter = ',', allow_negative_numbers = true, value_parser = positive)]
-    pub rate: Vec<f64>,
+    /// Sample rates of the recordings in their order, separated by commas, where they differ and
+    /// the files do not tell them; may be fractional
+    #[arg(long, value_name = "HZ,HZ", value_delimiter = ',', allow_negative_numbers = true, conflicts_with = "rate", value_parser = positive)]
+    pub rates: Vec<f64>,
     /// Write the suspect list as CSV; `-` writes it to stdout in place of the table
     #[arg(long, value_name = "FILE")]
     pub suspects: Option<PathBuf>,
@@ -55,6 +56,8 @@ pub struct Arguments {
     /// Suspects listed per tone
     #[arg(long, value_name = "N", default_value = "5", value_parser = how_many)]
     pub top: NonZeroUsize,
+    #[command(flatten)]
+    pub reading: Reading,
 }
 
 /// The value for recording `n`, where one was given for all or one for each.
@@ -75,7 +78,7 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
     let count = arguments.recordings.len();
     for (option, given) in [
         ("site", arguments.site.len()),
-        ("rate", arguments.rate.len()),
+        ("rates", arguments.rates.len()),
     ] {
         if given > 1 && given != count {
             return Err(usage(format!(
@@ -99,13 +102,13 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
     let mut failed = false;
     for (n, path) in arguments.recordings.iter().enumerate() {
         let Some(site) = of(&sites, n) else { continue };
-        let options = triage::Options {
-            open: OpenOptions {
-                rate_hz: of(&arguments.rate, n).copied(),
-                ..OpenOptions::default()
-            },
+        let mut options = triage::Options {
+            open: arguments.reading.open_options(),
             ..triage::Options::default()
         };
+        if let Some(&rate) = of(&arguments.rates, n) {
+            options.open.rate_hz = Some(rate);
+        }
         let progress = Progress::new();
         let done = triage::run(path, site, &options, &|done, of| progress.show(done, of));
         progress.clear();

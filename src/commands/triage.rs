@@ -10,7 +10,7 @@ use super::values::{Channel, Drawing, DrawingKind, channel, drawing, how_many};
 use clap::Args;
 use foldtrace::evidence::reference::{Reference, ReferenceFile};
 use foldtrace::report::page::{self, Failed, Input, PictureError, Record, Subject, command_line};
-use foldtrace::report::{json, suspect_list, table, text::plain};
+use foldtrace::report::{json, plan_table, suspect_list, table, text::plain};
 use foldtrace::sources::Site;
 use foldtrace::triage;
 use std::ffi::OsStr;
@@ -158,13 +158,17 @@ pub fn run(arguments: &Arguments) -> Result<ExitCode, Stop> {
     }
     if let Some(path) = report {
         let record = record(arguments);
+        let planned: Vec<_> = results
+            .iter()
+            .map(|r| r.next.as_ref().map(|test| plan_table::planned(r, test)))
+            .collect();
         let subject = Subject {
             results: &results,
             failed: &failed,
             site: &site,
             site_name: &site_name,
             top,
-            planned: &[],
+            planned: &planned,
             references: &options.references,
         };
         let write_page = |out: &mut dyn Write| page::write_triage(&subject, &record, out);

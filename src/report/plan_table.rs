@@ -1,5 +1,6 @@
 //! Tests in words: what to do, what it is worth, what will be seen, what to beware of.
 
+use super::page::Planned;
 use super::table::{HEAD, QUIET, wrapped};
 use super::text::{count, hertz, percent, plain};
 use crate::plan::{Outcome, Plan, Shows, Test, Told, What};
@@ -103,22 +104,34 @@ fn seen(result: &Triage, tone: usize) -> String {
     })
 }
 
+/// The best test for one tone, as the page shows it.
+pub fn planned(result: &Triage, test: &Test) -> Planned {
+    Planned {
+        words: words(result, test),
+        cautions: caution(&test.what).map(str::to_owned).into_iter().collect(),
+    }
+}
+
 /// The best test for one tone, with its caution.
 pub fn advice(result: &Triage, test: &Test) -> String {
+    let mut text = words(result, test);
+    if let Some(caution) = caution(&test.what) {
+        text.push_str(&format!(" Caution: {caution}."));
+    }
+    text
+}
+
+fn words(result: &Triage, test: &Test) -> String {
     let Some(told) = test.tones.first() else {
         return what(test);
     };
-    let mut text = format!(
+    format!(
         "for {}, {}; {} to settle it. There {}.",
         seen(result, told.tone),
         what(test),
         percent(told.prospect.settles),
         outcomes(told)
-    );
-    if let Some(caution) = caution(&test.what) {
-        text.push_str(&format!(" Caution: {caution}."));
-    }
-    text
+    )
 }
 
 /// Writes the tests, best first, at most `top`.

@@ -76,8 +76,7 @@ pub struct Suspect {
     pub probability: f64,
     /// Listed lines expected this close by pure chance.
     pub coincidence: f64,
-    /// Every place on the ladder where it could be; their probabilities sum to
-    /// `probability`. `true_hz`, `zone` and `sense` are those of the best.
+    /// Every place on the ladder where it could be, with probabilities in proportion. `true_hz`, `zone` and `sense` are those of the best.
     pub places: Vec<Place>,
 }
 
