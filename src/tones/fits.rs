@@ -35,12 +35,15 @@ pub fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> 
     let mut work = track::Work::default();
     // resolution cells in a bin
     let cells = band.samples as f64 / band.grid as f64;
-    let alone = |own: usize, bin: f64| {
+    // Other wanderers are still there. In a window of w-th length the skirt of one that
+    // is ρ times as strong is ρ/(πd) at d of the window's cells: where that is to be
+    // as small as for an equal one, d is ρ times as large.
+    let alone = |own: usize, bin: f64, strength: f64| {
         wanderers
             .iter()
             .enumerate()
             .filter(|&(i, _)| i != own)
-            .map(|(_, w)| (w.bin - bin).abs() - w.strays)
+            .map(|(_, w)| ((w.bin - bin).abs() - w.strays) / (w.strength / strength).max(1.0))
             .fold(f64::INFINITY, f64::min)
     };
     let steady = lines.iter().map(|l| {
@@ -50,7 +53,7 @@ pub fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> 
             snr: l.snr(band.samples),
             noise: l.noise,
             present: (0.0, 1.0),
-            alone: alone(usize::MAX, l.bin),
+            alone: alone(usize::MAX, l.bin, l.c.norm() * band.samples as f64),
         };
         let track = track::follow(band, &target, |k| residual.with(l, k), &mut work);
         let (bin, bin_sd, wander) = settled(l, &track, cells);
@@ -73,7 +76,7 @@ pub fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> 
             snr: w.strength * w.strength / w.noise,
             noise: w.noise,
             present: w.present,
-            alone: alone(i, w.bin),
+            alone: alone(i, w.bin, w.strength),
         };
         let track = track::follow(band, &target, |k| band.get(k), &mut work);
         if track.jumps() {

@@ -47,11 +47,14 @@ fn drop_rounding<P: Passes>(
     search: &Search,
     found: &mut ToneSet,
 ) -> Result<(), P::Error> {
-    /// No recording is so quiet that a tone this strong is in doubt.
+    /// Hardly a recording is so loud, in its own unit, that a tone this strong is in
+    /// doubt: not worth another pass over a long one.
     const SURE_DBFS: f64 = -90.0;
     /// The last bit, as a share of the largest sample.
     const LAST_BIT: f64 = 1.0 / 8_388_608.0;
-    if found.tones.iter().all(|tone| tone.level_dbfs > SURE_DBFS) {
+    let long = matches!(found.plan, Plan::Segments { .. });
+    let sure = |tone: &Tone| long && tone.level_dbfs > SURE_DBFS;
+    if found.tones.iter().all(sure) {
         return Ok(());
     }
     let mut peaks = vec![0.0f32; recording.channels()];
