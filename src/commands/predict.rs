@@ -25,7 +25,8 @@ every line at the true sample instants, with noise, clock error and quantising.
 Exit: 0 done, 1 the recording could not be written, 2 wrong usage or site file.
 
 Example:
-  foldtrace predict --site sample-data/orrowmere.toml --rate 8000 --keep-clear 20-60 --rates 8000,11025,16000";
+  foldtrace predict --site sample-data/orrowmere.toml --rate 8000 \\
+      --keep-clear 20-60 --rates 8000,11025,16000";
 
 /// Options of `predict`.
 #[derive(Debug, Args)]
