@@ -10,15 +10,15 @@
 //! from a recording, and what is left open stays a set of candidates.
 //!
 //! Recordings are taken one after the other. For each, the clock error relative to
-//! the first is found from all tones at once ([`clock`]): a pair of candidates is a
+//! the first is found from all tones at once (`clock`): a pair of candidates is a
 //! vote for the error at which they meet. Where few tones leave several errors
 //! possible, each is followed as a state of its own. In each, tones are matched by
 //! the sum-product algorithm for data association (Williams and Lau, IEEE Trans.
-//! Aerosp. Electron. Syst. 50 (2014) 2942–2959; from memory; [`matching`]).
+//! Aerosp. Electron. Syst. 50 (2014) 2942–2959; from memory; `matching`).
 //!
 //! A source's likelihood is what a recording says beyond the prior; two recordings of
 //! one place mostly see the same tones, so the strongest word for a source and the
-//! strongest against it count, once each ([`pairs`]).
+//! strongest against it count, once each (`pairs`).
 
 mod clock;
 mod matching;

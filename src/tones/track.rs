@@ -32,7 +32,7 @@ pub struct TrackPoint {
     pub turns_sd: f64,
 }
 
-/// Frequency and phase in window `index` of [`Follower::windows`], in bins.
+/// Frequency and phase in window `index` of [`Track::windows`], in bins.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct Point {
     /// Which window, from 0.
