@@ -6,7 +6,7 @@
 //! a speed beside. Each test is a channel from "which candidate" to "what will be
 //! seen"; its worth is the mutual information between the two, in bits, and the
 //! chance that one candidate is then at least [`prospect::SETTLED`] probable
-//! ([`prospect`]).
+//! ([`mod@prospect`]).
 
 mod bench;
 pub mod prospect;

@@ -91,7 +91,7 @@ pub fn write_header(out: impl Write) -> csv::Result<()> {
     Ok(())
 }
 
-/// Writes one result's rows without the header; see [`write`].
+/// Writes one result's rows without the header; see [`write()`].
 ///
 /// # Errors
 /// If `out` cannot be written.
