@@ -293,6 +293,7 @@ fn tone(seen_hz: f64, u95: f64, wander_hz: f64, snr_db: f64) -> Tone {
         snr_db,
         from_s: 0.0,
         to_s: 600.0,
+        duty: 1.0,
         wander_hz,
         linewidth_hz: 0.0,
         track: Vec::new(),

@@ -50,6 +50,7 @@ fn seen(rng: &mut StdRng, f: f64, snr_db: f64, rate_hz: f64, epsilon: f64, noisy
         linewidth_hz: 0.0,
         track: Vec::new(),
         track_step_s: 0.0,
+        duty: 1.0,
         channels: Vec::new(),
     }
 }

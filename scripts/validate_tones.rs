@@ -4,8 +4,9 @@
 //!
 //! Prints, per case, what the README's figures are taken from: error against the
 //! Cramér–Rao bound, coverage of the 95 % interval, false tones on pure noise,
-//! the level at which half of all tones are found, level error, and what becomes
-//! of a wandering family.
+//! the level at which half of all tones are found, level error, short recordings and
+//! the ends of the axis, several channels, tones that stray, and what becomes of a
+//! wandering family. Give a section's name as a third argument for that one only.
 
 use foldtrace::spectrum::samples::InMemory;
 use foldtrace::tones::{Search, ToneSet, find};
@@ -83,9 +84,16 @@ fn bursty(rng: &mut StdRng, n: usize) -> Vec<f64> {
 }
 
 fn run(x: &[f64]) -> ToneSet {
+    run_all(&[x])
+}
+
+fn run_all(channels: &[&[f64]]) -> ToneSet {
     let recording = InMemory {
         rate_hz: 1.0,
-        channels: vec![x.iter().map(|&v| v as f32).collect()],
+        channels: channels
+            .iter()
+            .map(|x| x.iter().map(|&v| v as f32).collect())
+            .collect(),
     };
     match find(&recording, &Search::default(), &|_, _| ()) {
         Ok(set) => set,
@@ -105,6 +113,17 @@ fn bound(amplitude: f64, sigma: f64, n: f64) -> f64 {
     (24.0 * sigma * sigma / (amplitude * amplitude * n * (n * n - 1.0))).sqrt() / TAU
 }
 
+/// Events per recording with their standard error (that of one event if there were
+/// none).
+fn rate(events: usize, recordings: usize) -> String {
+    let n = recordings.max(1) as f64;
+    format!(
+        "{:.4} ± {:.4} a recording",
+        events as f64 / n,
+        (events.max(1) as f64).sqrt() / n
+    )
+}
+
 /// A share with its standard error.
 fn share(part: usize, of: usize) -> String {
     let p = part as f64 / of.max(1) as f64;
@@ -120,7 +139,8 @@ fn nearest(set: &ToneSet, f: f64) -> Option<&foldtrace::tones::Tone> {
 
 fn steady(trials: usize, rng: &mut StdRng) {
     for (label, kind) in [("white", 0), ("pink", 1), ("neighbour +30 dB", 2)] {
-        let (mut squares, mut inside, mut count, mut level, mut missed) = (0.0, 0, 0, 0.0f64, 0);
+        let (mut squares, mut inside, mut count, mut missed) = (0.0, 0, 0, 0);
+        let (mut bias, mut level_squares) = (0.0, 0.0);
         let mut extra = 0;
         for _ in 0..trials {
             let n = 40_000 + (260_000.0 * rng.random::<f64>()) as usize;
@@ -183,15 +203,22 @@ fn steady(trials: usize, rng: &mut StdRng) {
                 }
                 squares += (error / bound(amplitude, sigma, n as f64)).powi(2);
                 inside += usize::from(error.abs() <= t.seen_hz_u95);
-                level = level.max((t.level_dbfs - 20.0 * amplitude.log10()).abs());
+                // Bound on a level: var(A) = 2σ²/N.
+                let off_db = t.level_dbfs - 20.0 * amplitude.log10();
+                let bound_db = 8.686 * (2.0 / n as f64).sqrt() * sigma / amplitude;
+                bias += off_db;
+                level_squares += (off_db / bound_db).powi(2);
                 count += 1;
             }
         }
         println!(
-            "steady, {label}: {count} tones, {missed} missed, {extra} extra; rms error / bound {:.4}; \
-             u95 holds {:.4}; worst level error {level:.3} dB",
+            "steady, {label}: {count} tones, {missed} missed, {extra} extra; rms error / bound {:.4} ± {:.4}; \
+             u95 holds {}; mean level error {:.4} dB, rms {:.3} of the bound",
             (squares / count as f64).sqrt(),
-            inside as f64 / count as f64,
+            (0.5 / count as f64).sqrt(),
+            share(inside, count),
+            bias / count as f64,
+            (level_squares / count as f64).sqrt(),
         );
     }
 }
@@ -220,8 +247,8 @@ fn noise_only(trials: usize, rng: &mut StdRng) {
             recordings += usize::from(!set.tones.is_empty());
         }
         println!(
-            "noise only, {label}: {tones} tones in {recordings} of {trials} recordings ({:.4} a recording)",
-            tones as f64 / trials as f64
+            "noise only, {label}: {tones} tones in {recordings} of {trials} recordings ({})",
+            rate(tones, trials)
         );
     }
 }
@@ -256,6 +283,129 @@ fn sensitivity(trials: usize, rng: &mut StdRng) {
             "sensitivity, {offset_db:+.1} dB re threshold: found {:.3}, ideal {:.3}",
             ours as f64 / trials as f64,
             ideal as f64 / trials as f64
+        );
+    }
+}
+
+/// Short recordings: false tones, and intervals in the middle and next to the ends.
+fn short(trials: usize, rng: &mut StdRng) {
+    let mut tones = 0;
+    for _ in 0..10 * trials {
+        let n = (1_024.0 * 4f64.powf(rng.random())) as usize;
+        let x = white(rng, n);
+        tones += run(&x).tones.len();
+    }
+    println!(
+        "noise only, 1024 to 4096 samples: {tones} tones ({})",
+        rate(tones, 10 * trials)
+    );
+    for (label, place) in [
+        ("in the middle", 0),
+        ("6 to 20 cells above 0", 1),
+        ("6 to 20 cells below half the rate", 2),
+    ] {
+        for long in [false, true] {
+            let (mut inside, mut found, mut squares) = (0, 0, 0.0);
+            for _ in 0..3 * trials {
+                let n = if long {
+                    40_000
+                } else {
+                    (1_024.0 * 4f64.powf(rng.random())) as usize
+                };
+                let cells = 6.0 + 14.0 * rng.random::<f64>();
+                let f = match place {
+                    0 => 0.05 + 0.4 * rng.random::<f64>(),
+                    1 => cells / n as f64,
+                    _ => 0.5 - cells / n as f64,
+                };
+                // 17 to 40 dB in a cell
+                let snr = 10f64.powf(1.7 + 2.3 * rng.random::<f64>());
+                let amplitude = (4.0 * snr / n as f64).sqrt();
+                let mut x = white(rng, n);
+                add_tone(&mut x, f, amplitude, TAU * rng.random::<f64>());
+                let set = run(&x);
+                let near = nearest(&set, f).filter(|t| (t.seen_hz.0 - f).abs() < 2.0 / n as f64);
+                if let Some(t) = near {
+                    found += 1;
+                    inside += usize::from((t.seen_hz.0 - f).abs() <= t.seen_hz_u95);
+                    squares += ((t.seen_hz.0 - f) / bound(amplitude, 1.0, n as f64)).powi(2);
+                }
+            }
+            println!(
+                "{label}, {}: {found} of {} found; rms error / bound {:.3}; u95 holds {}",
+                if long {
+                    "40000 samples"
+                } else {
+                    "1024 to 4096 samples"
+                },
+                3 * trials,
+                (squares / found as f64).sqrt(),
+                share(inside, found)
+            );
+        }
+    }
+}
+
+/// Several channels: false tones with noise shared or not, and what is found of a
+/// tone in all of them that is too weak for one.
+fn channels(trials: usize, rng: &mut StdRng) {
+    for count in [2, 3, 8] {
+        for (label, share) in [("own", 0.0), ("half shared", 0.5), ("identical", 1.0)] {
+            let (mut tones, mut recordings) = (0, 0);
+            for _ in 0..trials {
+                let n = (1_024.0 * 40f64.powf(rng.random())) as usize;
+                let common = white(rng, n);
+                let all: Vec<Vec<f64>> = (0..count)
+                    .map(|_| {
+                        common
+                            .iter()
+                            .map(|c| f64::sqrt(share) * c + f64::sqrt(1.0 - share) * normal(rng))
+                            .collect()
+                    })
+                    .collect();
+                let set = run_all(&all.iter().map(Vec::as_slice).collect::<Vec<_>>());
+                tones += set.tones.len();
+                recordings += 1;
+            }
+            println!(
+                "noise only, {count} channels, noise {label}: {tones} tones in {recordings} recordings ({})",
+                rate(tones, recordings)
+            );
+        }
+    }
+    let n = 65_536;
+    let single = (n as f64 / 2.0 / 0.01).ln();
+    for offset_db in [-4.0, -3.0, -2.0] {
+        let snr = single * 10f64.powf(offset_db / 10.0);
+        let (mut found, mut alone, mut inside, mut rows) = (0, 0, 0, 0);
+        for _ in 0..trials {
+            let f = 0.01 + 0.48 * rng.random::<f64>();
+            let amplitude = (4.0 * snr / n as f64).sqrt();
+            let all: Vec<Vec<f64>> = (0..3)
+                .map(|_| {
+                    let mut x = white(rng, n);
+                    add_tone(&mut x, f, amplitude, TAU * rng.random::<f64>());
+                    x
+                })
+                .collect();
+            let near = |set: &ToneSet| -> Option<bool> {
+                nearest(set, f)
+                    .filter(|t| (t.seen_hz.0 - f).abs() < 2.0 / n as f64)
+                    .map(|t| (t.seen_hz.0 - f).abs() <= t.seen_hz_u95)
+            };
+            let set = run_all(&all.iter().map(Vec::as_slice).collect::<Vec<_>>());
+            rows += set.tones.len();
+            if let Some(ok) = near(&set) {
+                found += 1;
+                inside += usize::from(ok);
+            }
+            alone += usize::from(near(&run(&all[0])).is_some());
+        }
+        println!(
+            "3 channels, {offset_db:+.1} dB re one channel's threshold: found {}, in one alone {}; {rows} rows; u95 holds {}",
+            share(found, trials),
+            share(alone, trials),
+            share(inside, found)
         );
     }
 }
@@ -405,6 +555,12 @@ fn main() {
     }
     if wants("sensitivity") {
         sensitivity(trials * 2, rng);
+    }
+    if wants("short") {
+        short(trials, rng);
+    }
+    if wants("channels") {
+        channels(trials, rng);
     }
     if wants("strays") {
         strays(trials, rng);

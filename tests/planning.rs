@@ -30,6 +30,7 @@ fn tones(list: &[(f64, f64)]) -> Vec<Tone> {
             linewidth_hz: 0.0,
             track: Vec::new(),
             track_step_s: 0.0,
+            duty: 1.0,
             channels: Vec::new(),
         })
         .collect()
@@ -109,7 +110,7 @@ fn remainders_leave_the_solutions_of_the_congruences() {
         let mut stated: Vec<f64> = tone
             .rows
             .iter()
-            .filter(|r| r.suspect == "unlisted" && r.probability > 0.005)
+            .filter(|r| r.suspect == "unlisted" && r.probability > 0.0005)
             .filter_map(|r| Some(r.true_hz?.0))
             .collect();
         stated.sort_by(f64::total_cmp);

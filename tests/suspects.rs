@@ -27,6 +27,7 @@ fn tones(list: &[(f64, f64, f64, f64)]) -> Vec<Tone> {
             snr_db,
             from_s: 0.0,
             to_s: 60.0,
+            duty: 1.0,
             wander_hz,
             ..Tone::default()
         })

@@ -599,6 +599,7 @@ fn observe(
                 snr_db: snr_db + normal(rng, 0.3),
                 from_s: 0.0,
                 to_s: 1.0 / cell,
+                duty: 1.0,
                 wander_hz: if visible { measured } else { 0.0 },
                 channels: vec![ChannelLevel {
                     channel: 0,

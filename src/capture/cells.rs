@@ -229,25 +229,27 @@ pub(super) fn read_heading(bytes: &[u8]) -> Heading {
         }
     }
     for separator in ['/', ','] {
-        if let Some((name, unit)) = text.split_once(separator) {
-            if is_unit(unit.trim()) && !name.trim().is_empty() {
-                return Heading {
-                    name: name.trim().into(),
-                    unit: Some(unit.trim().into()),
-                    suffix: None,
-                };
-            }
-        }
-    }
-    // accel_g, current_mA: but x_in and run_1 are names.
-    if let Some((name, unit)) = text.rsplit_once('_') {
-        if ENDINGS.contains(&unit) && !name.is_empty() {
+        if let Some((name, unit)) = text.split_once(separator)
+            && is_unit(unit.trim())
+            && !name.trim().is_empty()
+        {
             return Heading {
-                name: name.into(),
-                unit: Some(unit.into()),
+                name: name.trim().into(),
+                unit: Some(unit.trim().into()),
                 suffix: None,
             };
         }
+    }
+    // accel_g, current_mA: but x_in and run_1 are names.
+    if let Some((name, unit)) = text.rsplit_once('_')
+        && ENDINGS.contains(&unit)
+        && !name.is_empty()
+    {
+        return Heading {
+            name: name.into(),
+            unit: Some(unit.into()),
+            suffix: None,
+        };
     }
     Heading {
         name: text.into(),

@@ -151,15 +151,15 @@ impl Scan {
         }
         // A column of remarks costs nothing as long as there is one of numbers.
         let all_worded = self.columns.iter().all(ColumnScan::is_worded);
-        if let Some(column) = self.columns.iter().find(|_| all_worded) {
-            if let Some((line, text)) = &column.word {
-                return Err(CaptureError::NotANumber {
-                    line: *line,
-                    column: column.column + 1,
-                    text: text.clone(),
-                    share: column.share_of_words(),
-                });
-            }
+        if let Some(column) = self.columns.iter().find(|_| all_worded)
+            && let Some((line, text)) = &column.word
+        {
+            return Err(CaptureError::NotANumber {
+                line: *line,
+                column: column.column + 1,
+                text: text.clone(),
+                share: column.share_of_words(),
+            });
         }
         let (Some(clock), Some(time)) = (&self.clock, table.time) else {
             return Ok(());

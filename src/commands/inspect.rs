@@ -13,11 +13,11 @@ pub const HELP: &str = "\
 The line `read as` says what was taken for what. Where that is wrong, the options under Reading say \
 it right; they are the same in every command.
 
+Exit: 0 done, 1 some input could not be read, 2 wrong usage.
+
 Example:
   foldtrace inspect sample-data/recordings/fan-logger.csv
-  foldtrace inspect sample-data/recordings/fan-logger.csv --time none --rate 256
-
-Exit: 0 done, 1 some input could not be read, 2 wrong usage.";
+  foldtrace inspect sample-data/recordings/fan-logger.csv --time none --rate 256";
 
 /// Options of `inspect`.
 #[derive(Debug, Args)]

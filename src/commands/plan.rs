@@ -23,10 +23,11 @@ converter, a changed speed of a named source, a source switched off, a longer re
 source's speed. Tests that touch machines or wiring carry a caution; they are for licensed people, under \
 your local codes.
 
-Example:
-  foldtrace plan sample-data/recordings/skid-8000.wav --site sample-data/orrowmere.toml --rates 11025,16000,22050
+Exit: 0 done, 1 the recording could not be read, 2 wrong usage or site file.
 
-Exit: 0 done, 1 the recording could not be read, 2 wrong usage or site file.";
+Example:
+  foldtrace plan sample-data/recordings/skid-8000.wav \\
+      --site sample-data/orrowmere.toml --rates 11025,16000,22050";
 
 /// Options of `plan`.
 #[derive(Debug, Args)]

@@ -22,10 +22,11 @@ other source's line it may fall on; then ranks sample rates by how well they kee
 a band clear of folded lines, with --keep-clear). With --wav it also makes a recording to practise on: \
 every line at the true sample instants, with noise, clock error and quantising.
 
-Example:
-  foldtrace predict --site sample-data/orrowmere.toml --rate 8000 --keep-clear 20-60 --rates 8000,11025,16000
+Exit: 0 done, 1 the recording could not be written, 2 wrong usage or site file.
 
-Exit: 0 done, 1 the recording could not be written, 2 wrong usage or site file.";
+Example:
+  foldtrace predict --site sample-data/orrowmere.toml --rate 8000 \\
+      --keep-clear 20-60 --rates 8000,11025,16000";
 
 /// Options of `predict`.
 #[derive(Debug, Args)]

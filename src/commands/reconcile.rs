@@ -28,10 +28,11 @@ that these are one tone, and what could have made it at which true frequency. A 
 open is given as the candidates that are left, with a further rate that would tell. Recordings that do not \
 belong together are said to be so.
 
-Example:
-  foldtrace reconcile sample-data/recordings/skid-8000.wav sample-data/recordings/skid-11025.wav --site sample-data/orrowmere.toml
+Exit: 0 done, 1 some input could not be read, 2 wrong usage or site file.
 
-Exit: 0 done, 1 some input could not be read, 2 wrong usage or site file.";
+Example:
+  foldtrace reconcile sample-data/recordings/skid-8000.wav \\
+      sample-data/recordings/skid-11025.wav --site sample-data/orrowmere.toml";
 
 /// Options of `reconcile`.
 #[derive(Debug, Args)]

@@ -20,11 +20,10 @@ Writes three lists into the folder: suspects.csv (every tone and suspect), recor
 recording, also those that could not be read, with the reason) and recurring.csv (what comes back). A scan \
 that was interrupted goes on with --resume and ends with the same files.
 
-Example:
-  foldtrace scan recordings/ --out results --site sample-data/orrowmere.toml
-  find /archive -name '*.wav' | foldtrace scan --names-from - --out results
+Exit: 0 done, 1 some recording could not be read, 2 wrong usage or site file.
 
-Exit: 0 done, 1 some recording could not be read, 2 wrong usage or site file.";
+Example:
+  foldtrace scan sample-data/recordings --out results --site sample-data/orrowmere.toml";
 
 /// Options of `scan`.
 #[derive(Debug, Args)]

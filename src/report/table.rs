@@ -5,6 +5,7 @@ use super::plan_table;
 use super::reading;
 use super::strip;
 use super::text::{count, percent, plain, with_u95};
+use crate::spectrum::condition::Condition;
 use crate::suspects::{Finding, Ground, Suspect, Verdict};
 use crate::tones::Tone;
 use crate::triage::Triage;
@@ -101,15 +102,54 @@ fn what_was_read(result: &Triage, site_name: &str, out: &mut dyn Write) -> io::R
         }
         None => {}
     }
-    let missing: u64 = result.tones.missing.iter().sum();
+    condition(result, out)?;
+    writeln!(out, "  sources: {}", plain(site_name))
+}
+
+/// What is wrong with the samples, and what was done about it.
+fn condition(result: &Triage, out: &mut dyn Write) -> io::Result<()> {
+    let conditions = &result.tones.condition;
+    let total = |of: fn(&Condition) -> u64| conditions.iter().map(of).sum::<u64>() as usize;
+    let samples = |n: usize, word: &str| {
+        count(
+            n,
+            format!("{word} sample").trim_start(),
+            format!("{word} samples").trim_start(),
+        )
+    };
+    let (missing, stuck, clipped) = (
+        total(|c| c.missing),
+        total(|c| c.stuck),
+        total(|c| c.clipped),
+    );
     if missing > 0 {
+        let what = samples(missing, "missing");
+        writeln!(out, "  {what} bridged by straight lines")?;
+    }
+    if stuck > 0 {
+        let what = samples(stuck, "");
         writeln!(
             out,
-            "  {} bridged by straight lines",
-            count(missing as usize, "missing sample", "missing samples")
+            "  {what} in runs that stand still (stuck, or dropped out) bridged by straight lines"
         )?;
     }
-    writeln!(out, "  sources: {}", plain(site_name))
+    if clipped > 0 {
+        let what = samples(clipped, "clipped");
+        writeln!(
+            out,
+            "  {what}, left as they are: clipping makes harmonics and mixtures of strong tones"
+        )?;
+    }
+    let dead: Vec<String> = conditions
+        .iter()
+        .zip(&result.spec.channels)
+        .filter(|(c, _)| c.constant)
+        .map(|(_, channel)| plain(&channel.name))
+        .collect();
+    if !dead.is_empty() {
+        writeln!(out, "  channel {} holds one value only", dead.join(", "))?;
+    }
+    Ok(())
 }
 
 /// One printed line: a tone's own cells are only on its first.

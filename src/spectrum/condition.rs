@@ -47,8 +47,9 @@ const RESOLVED: f32 = 8.0;
 /// A run is entered or left with at least this share of a typical step: the crest of a
 /// smooth wave is not.
 const JUMP: f32 = 0.5;
-/// A rail is reached in steps no larger than this many typical ones; a dropout is not.
-const REACH: f32 = 6.0;
+/// A rail is reached in steps no larger than this many typical ones (of normal noise the
+/// typical step is 1.13 σ, and one of 5 σ is rare); a dropout is not.
+const REACH: f32 = 4.5;
 /// Samples flat in a row that count as clipped.
 const FLAT: u64 = 3;
 

@@ -4,12 +4,15 @@
 //! not explain, and patches that stand out only when smoothed, are judged as
 //! wandering tones or dropped as humps of noise.
 
-use super::mean;
+use super::cycle::OF_PATCH;
+use super::fits::{Fit, followed};
 use super::peaks::{LOWEST, Level, peaks};
 use super::refine::{Line, Residual, View, refine};
+use super::regions::merge;
 use super::statistic::{Coarse, Fine, lower};
+use super::switching::{WIDEST_CYCLE, cycles, judge_cycle};
 use super::threshold;
-use super::track::{self, Target, Track};
+use super::track;
 use super::wander::{Wanderer, judge};
 use crate::spectrum::Band;
 use crate::spectrum::fft::Complex64;
@@ -28,8 +31,6 @@ const HUMP_CHANCE: f64 = 1e-6;
 /// A patch gathers the highest of many cells: it must hold this many times what
 /// a single steady line must.
 const PATCH_MARGIN: f64 = 3.0;
-/// A track that leaves a steady tone less probable than this shows wander.
-const UNSTEADY: f64 = 0.01;
 /// Share of the false alarms granted to peaks at full resolution.
 const FINE_SHARE: f64 = 0.75;
 
@@ -37,25 +38,18 @@ const FINE_SHARE: f64 = 0.75;
 pub struct Found {
     /// Steady tones, and tones that move or come and go.
     pub tones: Vec<Fit>,
+    /// The band without the steady ones.
+    pub rest: Band,
 }
 
-/// A tone measured, in bins of the band's grid.
-#[derive(Debug, Clone)]
-pub struct Fit {
-    /// Mean frequency while present.
-    pub bin: f64,
-    /// Standard deviation of that mean.
-    pub bin_sd: f64,
-    /// rms excursion from the mean; 0 when steady.
-    pub wander: f64,
-    /// |c|·samples while present: the tone is 2·|c|·cos(…).
-    pub strength: f64,
-    /// Noise power per cell.
-    pub noise: f64,
-    /// First and last moment present, as fractions of the recording.
-    pub present: (f64, f64),
-    /// Frequency and phase over time.
-    pub track: Track,
+impl Found {
+    /// Nothing looked for yet.
+    pub fn nothing(band: Band) -> Found {
+        Found {
+            tones: Vec::new(),
+            rest: band,
+        }
+    }
 }
 
 /// Finds the tones of a band.
@@ -65,7 +59,17 @@ pub struct Fit {
 pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
     let mut fine = Fine::new(band);
     let level = Level::new(&fine, FINE_SHARE * false_alarms);
-    let (bunches, singles) = bunches(&peaks(band, &fine, &level));
+    let mut standing = peaks(band, &fine, &level);
+    let mut work = track::Work::default();
+    let cycles = cycles(band, &fine, &standing, level.fitted(View::Plain), &mut work);
+    let of_cycle = |i: usize| {
+        let k = i + band.first_bin;
+        cycles
+            .iter()
+            .any(|c| c.cells.start <= k + 2 && k < c.cells.end + 2)
+    };
+    standing.retain(|&i| !of_cycle(i));
+    let (bunches, singles) = bunches(&standing);
     let mut lines: Vec<Line> = singles.iter().map(|&i| start(band, &fine, i)).collect();
     let mut residual = refine(band, &mut lines);
     if !lines.is_empty() {
@@ -82,7 +86,7 @@ pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
         };
         let more: Vec<Line> = peaks(residual.band(), &rest, &level)
             .into_iter()
-            .filter(|&i| !near(i))
+            .filter(|&i| !near(i) && !of_cycle(i))
             .map(|i| start(band, &rest, i))
             .collect();
         if !more.is_empty() {
@@ -108,8 +112,9 @@ pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
         scales,
         residual,
         lines,
-        wanderers: Vec::new(),
+        wanderers: cycles,
         threshold: level.fitted(View::Plain),
+        work,
     };
     search.settle_all(patches);
     search.coarse((1.0 - FINE_SHARE) * false_alarms);
@@ -125,104 +130,20 @@ pub fn detect(band: &Band, false_alarms: f64, broad: &[Range<usize>]) -> Found {
         mut residual,
         ..
     } = search;
-    let wanderers = apart(wanderers);
+    let wanderers = apart(wanderers, band.samples as f64 / band.grid as f64);
     let (lines, splinters): (Vec<Line>, Vec<Line>) = lines.into_iter().partition(|l| {
         l.bin.is_finite()
             && l.bin >= SLOWEST
             && stands_out(l, band.samples, &level)
-            && !is_splinter(l, &wanderers, band.samples)
+            && !is_splinter(l, &wanderers, band)
     });
     for line in splinters.iter().filter(|l| l.bin.is_finite()) {
         residual.add(line, 1.0);
     }
     Found {
         tones: followed(&residual, &lines, &wanderers),
+        rest: residual.into_band(),
     }
-}
-
-/// Every tone with its track.
-fn followed(residual: &Residual, lines: &[Line], wanderers: &[Wanderer]) -> Vec<Fit> {
-    let band = residual.band();
-    let mut work = track::Work::default();
-    // resolution cells in a bin
-    let cells = band.samples as f64 / band.grid as f64;
-    let alone = |own: usize, bin: f64| {
-        wanderers
-            .iter()
-            .enumerate()
-            .filter(|&(i, _)| i != own)
-            .map(|(_, w)| (w.bin - bin).abs() - w.strays)
-            .fold(f64::INFINITY, f64::min)
-    };
-    let steady = lines.iter().map(|l| {
-        let target = Target {
-            bin: l.bin,
-            strays: 0.0,
-            snr: l.snr(band.samples),
-            noise: l.noise,
-            present: (0.0, 1.0),
-            alone: alone(usize::MAX, l.bin),
-        };
-        let track = track::follow(band, &target, |k| residual.with(l, k), &mut work);
-        let (bin, bin_sd, wander) = settled(l, &track, cells);
-        Fit {
-            bin,
-            bin_sd,
-            wander,
-            strength: l.c.norm() * band.samples as f64,
-            noise: l.noise,
-            present: target.present,
-            track,
-        }
-    });
-    let mut fits: Vec<Fit> = steady.collect();
-    fits.extend(wanderers.iter().enumerate().map(|(i, w)| {
-        let target = Target {
-            bin: w.bin,
-            strays: w.strays,
-            snr: w.strength * w.strength / w.noise,
-            noise: w.noise,
-            present: w.present,
-            alone: alone(i, w.bin),
-        };
-        let track = track::follow(band, &target, |k| band.get(k), &mut work);
-        let (bin, bin_sd, wander) = match mean::mean(&track, w.bin * cells, w.present) {
-            Some(m) => (
-                w.bin + m.offset / cells,
-                m.variance.sqrt() / cells,
-                mean::excursion(&track) / cells,
-            ),
-            None => (w.bin, w.bin_sd, w.wander),
-        };
-        Fit {
-            bin,
-            bin_sd,
-            wander,
-            strength: w.strength,
-            noise: w.noise,
-            present: w.present,
-            track,
-        }
-    }));
-    fits
-}
-
-/// Frequency, its standard deviation and the wander, in bins, of a line fitted as
-/// steady, in the light of its track.
-fn settled(line: &Line, track: &Track, cells: f64) -> (f64, f64, f64) {
-    let Some(m) = mean::mean(track, line.bin * cells, (0.0, 1.0)) else {
-        return (line.bin, line.bin_sd.hypot(line.strayed), 0.0);
-    };
-    let wander = if m.steady < UNSTEADY {
-        mean::excursion(track) / cells
-    } else {
-        0.0
-    };
-    (
-        line.bin + m.shift / cells,
-        line.bin_sd.hypot(m.more.sqrt() / cells),
-        wander,
-    )
 }
 
 /// Does a wandering tone stray over `bin`?
@@ -231,22 +152,29 @@ fn strays_over(w: &Wanderer, bin: f64) -> bool {
 }
 
 /// Drops what lies where a stronger wandering tone strays: its splinters.
-fn apart(mut wanderers: Vec<Wanderer>) -> Vec<Wanderer> {
+fn apart(mut wanderers: Vec<Wanderer>, cells: f64) -> Vec<Wanderer> {
     wanderers.sort_by(|a, b| b.strength.total_cmp(&a.strength));
     let mut kept: Vec<Wanderer> = Vec::new();
     for tone in wanderers {
-        if !kept.iter().any(|k| strays_over(k, tone.bin)) {
+        let strength = tone.strength * tone.duty;
+        if !kept
+            .iter()
+            .any(|k| strays_over(k, tone.bin) || k.switching_at(tone.bin, cells) > strength)
+        {
             kept.push(tone);
         }
     }
     kept
 }
 
-fn is_splinter(line: &Line, wanderers: &[Wanderer], samples: usize) -> bool {
+fn is_splinter(line: &Line, wanderers: &[Wanderer], band: &Band) -> bool {
+    let samples = band.samples;
+    let cells = samples as f64 / band.grid as f64;
     let strength = line.c.norm() * samples as f64;
-    wanderers
-        .iter()
-        .any(|w| w.strength > strength && strays_over(w, line.bin))
+    wanderers.iter().any(|w| {
+        w.strength > strength
+            && (strays_over(w, line.bin) || w.switching_at(line.bin, cells) > strength)
+    })
 }
 
 /// Splits peaks into bunches of splinters (as ranges of cells) and the rest.
@@ -317,19 +245,6 @@ fn unsteady(line: &Line) -> bool {
     threshold::exceedance(shape, 2.5, line.leftover) < UNSTEADY_CHANCE
 }
 
-/// Joins ranges that overlap or lie at most `gap` apart.
-pub fn merge(mut ranges: Vec<Range<usize>>, gap: usize) -> Vec<Range<usize>> {
-    ranges.sort_by_key(|r| (r.start, r.end));
-    let mut merged: Vec<Range<usize>> = Vec::new();
-    for r in ranges {
-        match merged.last_mut() {
-            Some(last) if r.start <= last.end + gap => last.end = last.end.max(r.end),
-            _ => merged.push(r),
-        }
-    }
-    merged
-}
-
 /// What is known while broad patches are looked at.
 struct Patches {
     fine: Fine,
@@ -340,6 +255,7 @@ struct Patches {
     wanderers: Vec<Wanderer>,
     /// What a steady line's power over noise must exceed.
     threshold: f64,
+    work: track::Work,
 }
 
 impl Patches {
@@ -460,7 +376,17 @@ impl Patches {
         self.lines = outer;
         // A patch that reaches down to 0 Hz is drift.
         let drift = core.start + first < LOWEST;
-        let judged = judge(self.residual.band(), core, noise)
+        // Wider cuts show switching more sharply.
+        let band = self.residual.band();
+        let judged = [4, 1]
+            .into_iter()
+            .map(|wider| {
+                let more = wider * core.len();
+                core.start.saturating_sub(more)..(core.end + more).min(band.bins.len())
+            })
+            .filter(|cells| cells.len() < 2 * WIDEST_CYCLE)
+            .find_map(|cells| judge_cycle(band, cells, noise, OF_PATCH, &mut self.work))
+            .or_else(|| judge(band, core, noise))
             .filter(|t| !drift && t.strength.powi(2) > PATCH_MARGIN * self.threshold * noise);
         if let Some(tone) = judged {
             self.wanderers.push(tone);
@@ -511,7 +437,7 @@ impl Patches {
             .wanderers
             .iter()
             .filter(|w| w.cells.end > patch.start + first && w.cells.start < patch.end + first)
-            .map(|w| w.strength * w.strength * (w.present.1 - w.present.0))
+            .map(|w| w.strength * w.strength * (w.present.1 - w.present.0) * w.duty)
             .sum();
         of_lines + of_wanderers > 0.7 * excess
     }

@@ -13,8 +13,10 @@
 use super::track::{Track, TrackPoint, coarser};
 use crate::units::SeenHz;
 
-/// Prior probability that a tone does not wander at all.
-const STEADY: f64 = 0.25;
+/// Prior probability that a tone does not wander at all: for where its mean is, and,
+/// lower, for how sure that is: the interval is to hold for those too that do stray.
+const STEADY: f64 = 0.5;
+const STEADY_FOR_INTERVAL: f64 = 0.2;
 /// Intensities considered, cells² per recording: from one that nothing shows to one
 /// that no window would be coherent in.
 const LEAST_LOG10: f64 = -3.0;
@@ -46,27 +48,41 @@ pub fn mean(track: &Track, about: f64, present: (f64, f64)) -> Option<Mean> {
     }
     let filter = |q| Filter::run(track, about, present, q);
     let still = filter(0.0)?;
-    let each = (1.0 - STEADY) / f64::from(STEPS);
-    let mut ways = vec![(still.ln_likelihood + STEADY.ln(), still)];
+    let mut ways = vec![still];
     for i in 0..STEPS {
-        let moving = filter(10f64.powf(LEAST_LOG10 + STEP_LOG10 * f64::from(i)))?;
-        ways.push((moving.ln_likelihood + each.ln(), moving));
+        ways.push(filter(10f64.powf(LEAST_LOG10 + STEP_LOG10 * f64::from(i)))?);
     }
-    let most = ways.iter().fold(f64::NEG_INFINITY, |m, w| m.max(w.0));
-    let total: f64 = ways.iter().map(|w| (w.0 - most).exp()).sum();
-    let average = |of: &dyn Fn(&Outcome) -> f64| {
-        ways.iter()
-            .map(|(l, w)| (l - most).exp() / total * of(w))
+    let most = ways
+        .iter()
+        .fold(f64::NEG_INFINITY, |m, w| m.max(w.ln_likelihood));
+    let weights = |steady: f64| -> Vec<f64> {
+        let each = (1.0 - steady) / f64::from(STEPS);
+        let weights: Vec<f64> = ways
+            .iter()
+            .enumerate()
+            .map(|(i, w)| if i == 0 { steady } else { each } * (w.ln_likelihood - most).exp())
+            .collect();
+        let total: f64 = weights.iter().sum();
+        weights.into_iter().map(|w| w / total).collect()
+    };
+    let average = |weights: &[f64], of: &dyn Fn(&Outcome) -> f64| {
+        weights
+            .iter()
+            .zip(&ways)
+            .map(|(p, w)| p * of(w))
             .sum::<f64>()
     };
-    let offset = average(&|w| w.mean);
-    let variance = average(&|w| w.variance + (w.mean - offset).powi(2));
+    let likely = weights(STEADY);
+    let offset = average(&likely, &|w| w.mean);
+    let variance = average(&weights(STEADY_FOR_INTERVAL), &|w| {
+        w.variance + (w.mean - offset).powi(2)
+    });
     Some(Mean {
         shift: offset - still.mean,
         offset,
         more: (variance - still.variance).max(0.0),
         variance,
-        steady: (ways.first()?.0 - most).exp() / total,
+        steady: *likely.first()?,
     })
 }
 
@@ -158,10 +174,10 @@ impl Filter {
         let s = self.p[c][c] + variance;
         let gain: [f64; 3] = std::array::from_fn(|i| self.p[i][c] / s);
         let row = self.p[c];
-        for i in 0..3 {
-            self.x[i] += gain[i] * off;
-            for j in 0..3 {
-                self.p[i][j] -= gain[i] * row[j];
+        for ((x, p), g) in self.x.iter_mut().zip(&mut self.p).zip(gain) {
+            *x += g * off;
+            for (p, r) in p.iter_mut().zip(row) {
+                *p -= g * r;
             }
         }
         self.mirror();

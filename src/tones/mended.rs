@@ -47,11 +47,14 @@ fn drop_rounding<P: Passes>(
     search: &Search,
     found: &mut ToneSet,
 ) -> Result<(), P::Error> {
-    /// No recording is so quiet that a tone this strong is in doubt.
+    /// Hardly a recording is so loud, in its own unit, that a tone this strong is in
+    /// doubt: not worth another pass over a long one.
     const SURE_DBFS: f64 = -90.0;
     /// The last bit, as a share of the largest sample.
     const LAST_BIT: f64 = 1.0 / 8_388_608.0;
-    if found.tones.iter().all(|tone| tone.level_dbfs > SURE_DBFS) {
+    let long = matches!(found.plan, Plan::Segments { .. });
+    let sure = |tone: &Tone| long && tone.level_dbfs > SURE_DBFS;
+    if found.tones.iter().all(sure) {
         return Ok(());
     }
     let mut peaks = vec![0.0f32; recording.channels()];
@@ -106,6 +109,7 @@ fn mend<P: Passes>(
         return Ok((moved(found, stretch_s(stretch.from)), vec![note]));
     }
     let missing = first.missing.clone();
+    let condition = first.condition.clone();
     let model = match first.plan {
         Plan::Whole { .. } => Model::pursue(recording)?,
         // Too long to be held: a tone is steady between gaps, if it is at all.
@@ -130,6 +134,7 @@ fn mend<P: Passes>(
         tone.seen_hz_u95 /= present.sqrt();
     }
     tones.missing = missing;
+    tones.condition = condition;
     let note = match drawn {
         0 => Vec::new(),
         1 => vec!["the strongest steady tone was drawn on through the missing samples".into()],

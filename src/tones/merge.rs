@@ -6,12 +6,7 @@ use super::Tone;
 /// wander, or a resolution cell; the strongest channel's measurement stands for
 /// all. Returns the `most` strongest, numbered by rising frequency, and how many more
 /// there were.
-pub fn across_channels(
-    per_channel: Vec<(usize, Vec<Tone>)>,
-    cell_hz: f64,
-    most: usize,
-) -> (Vec<Tone>, usize) {
-    let mut all: Vec<Tone> = per_channel.into_iter().flat_map(|(_, t)| t).collect();
+pub fn across_channels(mut all: Vec<Tone>, cell_hz: f64, most: usize) -> (Vec<Tone>, usize) {
     // strongest first, so that it takes the others in
     all.sort_by(|a, b| {
         b.snr_db

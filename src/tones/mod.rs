@@ -1,6 +1,8 @@
 //! Tones: spectral lines found in a recording and measured.
 
+pub mod cycle;
 pub mod detect;
+pub mod fits;
 pub mod kernel;
 pub mod mean;
 pub mod mended;
@@ -11,7 +13,9 @@ mod pursuit;
 pub mod refine;
 pub mod regions;
 pub mod statistic;
+pub mod switching;
 pub mod threshold;
+pub mod together;
 pub mod track;
 pub mod wander;
 
@@ -21,9 +25,10 @@ use crate::spectrum::condition::Condition;
 use crate::spectrum::display::Spectrum;
 use crate::spectrum::plan::Plan;
 use crate::spectrum::samples::Passes;
-use crate::spectrum::{least_noise, slice, welch, whole};
+use crate::spectrum::{Band, least_noise, slice, welch, whole};
 use crate::units::{SeenHz, U95, amplitude_db, power_db};
 use detect::Found;
+use fits::Fit;
 use track::Track;
 
 /// A tone's strength in one channel.
@@ -54,6 +59,8 @@ pub struct Tone {
     pub from_s: f64,
     /// See `from_s`.
     pub to_s: f64,
+    /// Share of the time from `from_s` to `to_s` in which it is there, `(0, 1]`.
+    pub duty: f64,
     /// rms deviation of the tone's frequency from its mean, Hz; 0 when steady
     /// within what can be resolved.
     pub wander_hz: f64,
@@ -133,14 +140,20 @@ pub fn find<P: Passes>(
     let chosen: Vec<usize> = (0..recording.channels())
         .filter(|c| search.channels.is_empty() || search.channels.contains(c))
         .collect();
-    let false_alarms = search.false_alarms / chosen.len().max(1) as f64;
-    let mut per_channel = Vec::new();
+    // Each channel's share, and one for all of them together.
+    let shares = match chosen.len() {
+        0 | 1 => 1,
+        several => several + 1,
+    };
+    let false_alarms = search.false_alarms / shares as f64;
+    let mut rows = Rows::default();
     let mut spectra = Vec::new();
     let condition;
     match plan {
         Plan::Whole { grid, .. } => {
             let loaded = whole::load(recording, &|n| progress(n, frames))?;
             condition = loaded.condition;
+            let mut searched = Vec::new();
             for (channel, samples) in loaded.channels.into_iter().enumerate() {
                 if !chosen.contains(&channel) || samples.is_empty() {
                     continue;
@@ -148,8 +161,10 @@ pub fn find<P: Passes>(
                 let band = whole::transform(samples, grid, recording.rate_hz(), search.step);
                 spectra.push(Spectrum::of_band(&band, channel, search.full_scale));
                 let found = detect::detect(&band, false_alarms, &[]);
-                per_channel.push((channel, tones_of(&found, &band, channel, search.full_scale)));
+                rows.own(&found, channel, search.full_scale);
+                searched.push((channel, found));
             }
+            rows.shared(&searched, false_alarms, search.full_scale);
         }
         Plan::Segments { segment, .. } => {
             let averaged = welch::average(recording, segment, &|n| progress(n, 2 * frames))?;
@@ -158,39 +173,41 @@ pub fn find<P: Passes>(
                     .iter()
                     .map(|&c| Spectrum::of_averaged(&averaged, c, search.full_scale)),
             );
-            let regions: Vec<_> = chosen
-                .iter()
-                .flat_map(|&c| regions::regions(&averaged, c, false_alarms, frames))
-                .collect();
-            let wants: Vec<_> = regions.iter().map(|r| r.want).collect();
+            let regions = regions::regions(&averaged, &chosen, false_alarms, frames);
+            let wants: Vec<_> = regions.iter().flat_map(|r| r.wants()).collect();
             if !wants.is_empty() {
                 let mut bands = slice::cut(recording, segment, &wants, &|n| {
                     progress(frames + n, 2 * frames)
-                })?;
-                for (region, band) in regions.iter().zip(&mut bands) {
-                    let power = averaged.mean_square(region.want.channel);
-                    band.least_noise = least_noise(band.samples, power, search.step);
-                    band.floor = region.floor(band.samples);
-                }
-                for &channel in &chosen {
-                    let mut tones = Vec::new();
-                    for (region, band) in regions.iter().zip(&bands) {
-                        if region.want.channel == channel {
-                            let share = band.bins.len() as f64 / (band.grid / 2) as f64;
-                            let mut found =
-                                detect::detect(band, false_alarms * share, &[region.cells(band)]);
-                            region.keep_core(&mut found, band);
-                            tones.extend(tones_of(&found, band, channel, search.full_scale));
-                        }
+                })?
+                .into_iter();
+                for region in &regions {
+                    let mut searched = Vec::new();
+                    for &channel in &region.channels {
+                        let Some(mut band) = bands.next() else {
+                            continue;
+                        };
+                        let power = averaged.mean_square(channel);
+                        band.least_noise = least_noise(band.samples, power, search.step);
+                        band.floor = region.floor(channel, band.samples);
+                        let share = band.bins.len() as f64 / (band.grid / 2) as f64;
+                        let mut found = if region.together {
+                            Found::nothing(band)
+                        } else {
+                            detect::detect(&band, false_alarms * share, &[region.cells(&band)])
+                        };
+                        region.keep_core(&mut found);
+                        rows.own(&found, channel, search.full_scale);
+                        searched.push((channel, found));
                     }
-                    per_channel.push((channel, tones));
+                    let share = region.share(averaged.segment);
+                    rows.shared(&searched, false_alarms * share, search.full_scale);
                 }
             }
             condition = averaged.condition;
         }
     }
     let cell_hz = recording.rate_hz() / frames.max(1) as f64;
-    let (tones, left_out) = merge::across_channels(per_channel, cell_hz, MOST_TONES);
+    let (tones, left_out) = merge::across_channels(rows.tones, cell_hz, MOST_TONES);
     Ok(ToneSet {
         tones,
         plan,
@@ -202,44 +219,128 @@ pub fn find<P: Passes>(
     })
 }
 
-/// Bins to hertz and decibels.
-fn tones_of(
-    found: &Found,
-    band: &crate::spectrum::Band,
-    channel: usize,
-    full_scale: f64,
-) -> Vec<Tone> {
-    let bin_hz = band.bin_hz();
-    let duration = band.samples as f64 / band.rate_hz;
-    // The noise is itself an estimate, worth about 93 cells: Student's factor to
-    // first order, 1 + (z² + 1)/4n.
-    let student = 1.0 + (U95 * U95 + 1.0) / (4.0 * 93.0);
-    let tone = |fit: &detect::Fit| {
-        let level_dbfs = amplitude_db(2.0 * fit.strength / band.samples as f64 / full_scale);
-        let snr_db = power_db(fit.strength * fit.strength / fit.noise);
-        Tone {
-            number: 0,
-            seen_hz: SeenHz((fit.bin * bin_hz).clamp(0.0, band.rate_hz / 2.0)),
-            seen_hz_u95: student * U95 * fit.bin_sd * bin_hz,
-            level_dbfs,
-            snr_db,
-            from_s: fit.present.0 * duration,
-            to_s: fit.present.1 * duration,
-            wander_hz: fit.wander * bin_hz,
-            linewidth_hz: 2.355 * fit.wander * bin_hz,
-            track: points(&fit.track, bin_hz, duration, band.rate_hz / 2.0),
-            track_step_s: match fit.track.windows {
-                0 => 0.0,
-                windows => duration / windows as f64,
-            },
-            channels: vec![ChannelLevel {
-                channel,
-                level_dbfs,
-                snr_db,
-            }],
+/// Rows as they are found, channel by channel.
+#[derive(Default)]
+struct Rows {
+    tones: Vec<Tone>,
+}
+
+/// The noise is itself an estimate, worth about 93 cells: Student's factor to first
+/// order, 1 + (z² + 1)/4n.
+const STUDENT: f64 = 1.0 + (U95 * U95 + 1.0) / (4.0 * 93.0);
+/// SNR in one cell at which a tone known from other channels counts as seen in one
+/// more: noise exceeds it once in 10 000 times.
+const SEEN_TOO: f64 = 9.2;
+/// And the least at which a channel is named of those that only together show a tone.
+const CONTRIBUTES: f64 = 4.0;
+
+impl Rows {
+    /// One channel's own tones: bins to hertz and decibels.
+    fn own(&mut self, found: &Found, channel: usize, full_scale: f64) {
+        let band = &found.rest;
+        let bin_hz = band.bin_hz();
+        let duration = band.samples as f64 / band.rate_hz;
+        self.tones.extend(found.tones.iter().map(|fit| {
+            let level = level(channel, fit.strength, fit.noise, band.samples, full_scale);
+            Tone {
+                number: 0,
+                seen_hz: SeenHz((fit.bin * bin_hz).clamp(0.0, band.rate_hz / 2.0)),
+                seen_hz_u95: STUDENT * U95 * fit.bin_sd * bin_hz,
+                level_dbfs: level.level_dbfs,
+                snr_db: level.snr_db,
+                from_s: fit.present.0 * duration,
+                to_s: fit.present.1 * duration,
+                duty: fit.duty,
+                wander_hz: fit.wander * bin_hz,
+                linewidth_hz: 2.355 * fit.wander * bin_hz,
+                track: points(&fit.track, bin_hz, duration, band.rate_hz / 2.0),
+                track_step_s: match fit.track.windows {
+                    0 => 0.0,
+                    windows => duration / windows as f64,
+                },
+                channels: vec![level],
+            }
+        }));
+    }
+
+    /// What channels show together, and what one channel's steady tones leave in the
+    /// others.
+    fn shared(&mut self, searched: &[(usize, Found)], false_alarms: f64, full_scale: f64) {
+        if searched.len() < 2 {
+            return;
         }
-    };
-    found.tones.iter().map(tone).collect()
+        let bands: Vec<&Band> = searched.iter().map(|(_, f)| &f.rest).collect();
+        let known: Vec<&Fit> = searched.iter().flat_map(|(_, f)| &f.tones).collect();
+        for joint in together::together(&bands, &known, false_alarms) {
+            let Some(band) = bands.first() else { return };
+            let mut channels: Vec<ChannelLevel> = searched
+                .iter()
+                .zip(&joint.channels)
+                .filter(|(_, (strength, noise))| strength * strength > CONTRIBUTES * noise)
+                .map(|((channel, _), &(strength, noise))| {
+                    level(*channel, strength, noise, band.samples, full_scale)
+                })
+                .collect();
+            channels.sort_by(|a, b| b.snr_db.total_cmp(&a.snr_db));
+            let Some(strongest) = channels.first() else {
+                continue;
+            };
+            self.tones.push(Tone {
+                seen_hz: SeenHz((joint.bin * band.bin_hz()).clamp(0.0, band.rate_hz / 2.0)),
+                seen_hz_u95: STUDENT * U95 * joint.bin_sd * band.bin_hz(),
+                level_dbfs: strongest.level_dbfs,
+                snr_db: strongest.snr_db,
+                to_s: band.samples as f64 / band.rate_hz,
+                duty: 1.0,
+                channels,
+                ..Tone::default()
+            });
+        }
+        for (channel, found) in searched {
+            let band = &found.rest;
+            let half = band.rate_hz / 2.0;
+            let mut more = Vec::new();
+            for tone in &mut self.tones {
+                let bin = tone.seen_hz.0 / band.bin_hz();
+                let inside =
+                    bin >= band.first_bin as f64 && bin < (band.first_bin + band.bins.len()) as f64;
+                let steady = tone.wander_hz == 0.0 && tone.seen_hz.0 < half;
+                let near = |f: &&Fit| (f.bin - bin).abs() < 4.0 + 3.0 * f.wander;
+                if !inside
+                    || !steady
+                    || tone.channels.iter().any(|c| c.channel == *channel)
+                    || found.tones.iter().any(|f| near(&f))
+                {
+                    continue;
+                }
+                let strength = together::strength(band, bin);
+                let noise = together::noise(band, bin);
+                if strength * strength > SEEN_TOO * noise {
+                    more.push((
+                        tone,
+                        level(*channel, strength, noise, band.samples, full_scale),
+                    ));
+                }
+            }
+            for (tone, level) in more {
+                tone.channels.push(level);
+            }
+        }
+    }
+}
+
+fn level(
+    channel: usize,
+    strength: f64,
+    noise: f64,
+    samples: usize,
+    full_scale: f64,
+) -> ChannelLevel {
+    ChannelLevel {
+        channel,
+        level_dbfs: amplitude_db(2.0 * strength / samples as f64 / full_scale),
+        snr_db: power_db(strength * strength / noise),
+    }
 }
 
 fn points(track: &Track, bin_hz: f64, duration: f64, half_hz: f64) -> Vec<TrackPoint> {

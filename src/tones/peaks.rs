@@ -1,6 +1,6 @@
 //! Cells that stand out at full resolution.
 
-use super::refine::View;
+use super::refine::{NOISE_REACH, View};
 use super::statistic::Fine;
 use super::threshold;
 use crate::spectrum::Band;
@@ -12,6 +12,14 @@ use std::collections::BTreeMap;
 pub const LOWEST: usize = 4;
 /// Chance that a cell of a pedestal or hump passes for a line on it.
 const RAGGED_CHANCE: f64 = 1e-5;
+
+/// The same for the few cells right beside it.
+const NARROW_CHANCE: f64 = 1e-4;
+
+/// A median of exponentials has 1/ln²2 times the relative variance of their mean.
+const MEDIAN_COST: f64 = 2.08;
+/// Hann-windowed cells are worth one in this many.
+const HANN_CELLS: f64 = 1.94;
 
 /// How high a cell, and later a fitted line, must stand.
 pub struct Level {
@@ -29,12 +37,15 @@ const FIRST_LOOK: f64 = 0.8;
 impl Level {
     /// For `false_alarms` expected in the band when it holds noise only.
     pub fn new(fine: &Fine, false_alarms: f64) -> Level {
-        let worth =
-            |floor: &Floor, power: &[f32], lag| floor.cells / correlation(power, &floor.level, lag);
+        // A fitted line's noise is the median of the cells around it.
+        let worth = |floor: &Floor, power: &[f32], lag, around: f64| {
+            floor.cells.min(around) / correlation(power, &floor.level, lag)
+        };
+        let around = (2 * NOISE_REACH + 1) as f64 / MEDIAN_COST;
         Level {
             per_cell: false_alarms / fine.plain.len() as f64,
-            plain_worth: worth(&fine.plain_floor, &fine.plain, 1),
-            hann_worth: worth(&fine.hann_floor, &fine.hann, 3),
+            plain_worth: worth(&fine.plain_floor, &fine.plain, 1, around),
+            hann_worth: worth(&fine.hann_floor, &fine.hann, 3, around / HANN_CELLS),
         }
     }
 
@@ -137,22 +148,32 @@ fn above_pedestal(
         View::Plain => (&fine.plain, fine.plain_floor.level[i]),
         View::Hann => (&fine.hann, fine.hann_floor.level[i]),
     };
-    let mut around: Vec<f32> = (i.saturating_sub(14)..(i + 15).min(power.len()))
-        .filter(|&k| k.abs_diff(i) >= 3)
-        .filter(|&k| stronger.range(k.saturating_sub(2)..=k + 2).next().is_none())
-        .map(|k| power[k])
-        .collect();
-    if around.len() < 6 {
+    let around = |reach: usize| -> Option<(f64, f64)> {
+        let mut cells: Vec<f32> = (i.saturating_sub(reach)..(i + reach + 1).min(power.len()))
+            .filter(|&k| k.abs_diff(i) >= 3)
+            .filter(|&k| stronger.range(k.saturating_sub(2)..=k + 2).next().is_none())
+            .map(|k| power[k])
+            .collect();
+        if cells.len() < 6 {
+            return None;
+        }
+        let mid = cells.len() / 2;
+        let median = *cells.select_nth_unstable_by(mid, f32::total_cmp).1;
+        let shared = if view == View::Hann { HANN_CELLS } else { 1.0 };
+        let worth = cells.len() as f64 / MEDIAN_COST / shared;
+        Some((f64::from(median) / std::f64::consts::LN_2, worth))
+    };
+    let Some((level, worth)) = around(14) else {
         return true;
-    }
-    let mid = around.len() / 2;
-    let median = *around.select_nth_unstable_by(mid, f32::total_cmp).1;
-    let level = median / std::f32::consts::LN_2;
-    // 2.08/n is the relative variance of a median of exponentials; Hann cells
-    // are worth about half.
-    let worth = around.len() as f64 / 2.08 / if view == View::Hann { 1.94 } else { 1.0 };
-    let raised = f64::from(level / floor) > 1.0 + 3.0 / worth.sqrt();
-    !raised || f64::from(value / level) > threshold::ratio(1.0, worth, RAGGED_CHANCE)
+    };
+    let raised = level / f64::from(floor) > 1.0 + 3.0 / worth.sqrt();
+    let above = |level: f64, worth: f64, chance: f64| {
+        f64::from(value) / level > threshold::ratio(1.0, worth, chance)
+    };
+    // A hump no wider than that is highest where the line would be.
+    !raised
+        || above(level, worth, RAGGED_CHANCE)
+            && around(8).is_none_or(|(level, worth)| above(level, worth, NARROW_CHANCE))
 }
 
 /// Over how many cells the power is correlated: 1 on steady noise, more when the

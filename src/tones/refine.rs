@@ -13,6 +13,8 @@ use crate::spectrum::fft::{Complex32, Complex64};
 /// Bins on either side that enter a fit. Leaving out the rest costs 0.8 % of
 /// the information on frequency (Σ_{|k|>B} 1/k² against π²/3).
 const REACH: i64 = 128;
+/// Bins on either side whose median is a line's noise.
+pub const NOISE_REACH: i64 = 96;
 /// A tone's skirts are taken out as far as they exceed this share of the noise.
 const SKIRT: f64 = 0.02;
 const CYCLES: usize = 6;
@@ -71,6 +73,11 @@ impl Residual {
         Residual { band: band.clone() }
     }
 
+    /// The band as it stands, for good.
+    pub fn into_band(self) -> Band {
+        self.band
+    }
+
     /// The band as it stands.
     pub fn band(&self) -> &Band {
         &self.band
@@ -119,7 +126,7 @@ impl Residual {
     /// Median-based noise power around `bin` in the chosen view.
     fn noise(&self, bin: f64, view: View) -> Option<f64> {
         let mut powers: Vec<f64> = self
-            .range(bin, 96)
+            .range(bin, NOISE_REACH)
             .filter_map(|k| self.value(k, view))
             .map(|z| z.norm_sqr())
             .collect();
@@ -287,6 +294,10 @@ pub fn refine(band: &Band, lines: &mut [Line]) -> Residual {
         }
     }
     for line in lines.iter_mut() {
+        // A fitted SNR is one too high on average, and near the threshold the peak's
+        // own curvature is uncertain: to first order in 1/SNR, both together.
+        let snr = line.snr(band.samples);
+        line.bin_sd *= snr / (snr - 1.0).max(0.5 * snr);
         let around: Vec<f64> = residual
             .range(line.bin, 8)
             .filter_map(|k| residual.value(k, line.view))

@@ -245,6 +245,24 @@ pub struct Track {
     pub points: Vec<Point>,
 }
 
+/// A tone that is coherent in a window moves from one to the next by less than this
+/// many of their resolution cells, rms.
+const COHERENT_STEP: f64 = 1.2;
+
+impl Track {
+    /// Does it jump about as the peaks of noise do, and no tone that gathers its power
+    /// in each window can?
+    pub fn jumps(&self) -> bool {
+        let steps: Vec<f64> = self
+            .points
+            .windows(2)
+            .filter(|w| w[1].index == w[0].index + 1)
+            .map(|w| ((w[1].cells - w[0].cells) / self.windows as f64).powi(2))
+            .collect();
+        steps.len() >= 6 && steps.iter().sum::<f64>() > COHERENT_STEP.powi(2) * steps.len() as f64
+    }
+}
+
 /// Follows `target` through the windows that are as short as its strength allows;
 /// `bin` gives each bin of the transform with everything else taken out.
 ///
@@ -292,7 +310,7 @@ pub fn follow(
     let wanted = (PER_WINDOW * windows).max((6.0 * target.strays + 8.0 * cell) as usize);
     let width = crate::spectrum::fft::next_fast_len(wanted)
         .min((2.0 * room) as usize & !1)
-        .min(band.grid / 2 & !1);
+        .min((band.grid / 2) & !1);
     let base = Baseband::cut(band, centre as i64, width, bin);
     let points = windows_of(&base, windows, target, cell, work);
     if points.len() < 2 {

@@ -30,6 +30,11 @@ pub struct Wanderer {
     pub noise: f64,
     /// First and last moment present, as fractions of the recording.
     pub present: (f64, f64),
+    /// Share of the time between those that it is on.
+    pub duty: f64,
+    /// Stretches in which a tone that goes on and off is on, as fractions of the
+    /// recording; empty for others.
+    pub on: Vec<(f64, f64)>,
     /// Furthest excursion from the mean, bins.
     pub strays: f64,
     /// Cells it occupies.
@@ -61,17 +66,17 @@ pub fn steadiness_of_noise(n: f64, t: f64) -> f64 {
 }
 
 /// The patch as a signal in time: `cells` of the band, critically sampled.
-struct Patch {
-    first: usize,
+pub(super) struct Patch {
+    pub(super) first: usize,
     /// Cells, and samples over the whole grid.
-    width: usize,
-    z: Vec<Complex32>,
+    pub(super) width: usize,
+    pub(super) z: Vec<Complex32>,
     power: f64,
-    noise: f64,
+    pub(super) noise: f64,
 }
 
 impl Patch {
-    fn cut(band: &Band, cells: std::ops::Range<usize>, noise: f64) -> Patch {
+    pub(super) fn cut(band: &Band, cells: std::ops::Range<usize>, noise: f64) -> Patch {
         let mut z = band.bins[cells.clone()].to_vec();
         let power = z.iter().map(|z| f64::from(z.norm_sqr())).sum();
         let noise = noise * z.len() as f64;
@@ -229,6 +234,8 @@ pub fn judge(band: &Band, core: std::ops::Range<usize>, noise: f64) -> Option<Wa
             from as f64 / patch.z.len() as f64,
             to as f64 / patch.z.len() as f64,
         ),
+        duty: 1.0,
+        on: Vec::new(),
         strays: track.strays,
         cells: band.first_bin + core.start..band.first_bin + core.end,
     })

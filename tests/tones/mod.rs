@@ -190,6 +190,74 @@ fn missing_samples_are_bridged_and_counted() {
 }
 
 #[test]
+fn faults_are_reported_and_make_no_tones() {
+    let mut rng = StdRng::seed_from_u64(111);
+    let n = 60_000;
+    // 16-bit steps, so that repeats mean something
+    let quantised = |x: &[f32]| -> Vec<f32> { x.iter().map(|v| (v * 300.0).round()).collect() };
+    let mut x: Vec<f32> = noise(&mut rng, n);
+    for v in &mut x {
+        // an offset, which every dropout interrupts
+        *v += 8.0;
+    }
+    add(&mut x, 1000.0, 61.7, 0.5, 0.0);
+    let mut dropping = quantised(&x);
+    for start in (1_500..n).step_by(1_000) {
+        dropping[start..start + 25].fill(0.0);
+    }
+    let set = run(1000.0, vec![dropping]);
+    assert_eq!(set.tones.len(), 1, "{:?}", set.tones);
+    near(&set, 61.7, 0.01);
+    let dropped = 25 * (n - 1_500).div_ceil(1_000) as u64;
+    assert!(
+        set.condition[0].stuck.abs_diff(dropped) < dropped / 20,
+        "{dropped}: {:?}",
+        set.condition[0].stuck
+    );
+    let clipped: Vec<f32> = quantised(&x).iter().map(|v| v.min(2_700.0)).collect();
+    let set = run(1000.0, vec![clipped, vec![5.0; n]]);
+    assert!(set.condition[0].clipped > 500 && set.condition[0].stuck == 0);
+    assert!(set.condition[1].constant && !set.condition[0].constant);
+    assert!(
+        set.tones
+            .iter()
+            .all(|t| t.channels.iter().all(|c| c.channel == 0))
+    );
+}
+
+#[test]
+fn channels_find_together_what_none_finds_alone() {
+    let mut rng = StdRng::seed_from_u64(112);
+    let n = 30_000;
+    let (mut found, mut alone) = (0, 0);
+    for _ in 0..10 {
+        let channels: Vec<Vec<f32>> = (0..3)
+            .map(|_| {
+                let mut x = noise(&mut rng, n);
+                // 10.5 dB in a cell: 1.5 dB below one channel's threshold
+                let phase = TAU * rng.random::<f64>();
+                add(
+                    &mut x,
+                    1000.0,
+                    123.45,
+                    (4.0 * 11.2 / n as f64).sqrt(),
+                    phase,
+                );
+                x
+            })
+            .collect();
+        alone += run(1000.0, vec![channels[0].clone()]).tones.len();
+        let set = run(1000.0, channels);
+        found += usize::from(set.tones.len() == 1 && set.tones[0].channels.len() >= 2);
+    }
+    assert!(found >= 7 && alone <= 4, "together {found}, alone {alone}");
+    // The same noise in every channel adds nothing.
+    let mut x = noise(&mut rng, n);
+    add(&mut x, 1000.0, 123.45, (4.0 * 7.0 / n as f64).sqrt(), 0.0);
+    assert!(run(1000.0, vec![x; 3]).tones.is_empty());
+}
+
+#[test]
 fn a_tone_that_comes_and_goes_is_timed() {
     let mut rng = StdRng::seed_from_u64(107);
     let (rate, n) = (1000.0, 100_000);
@@ -256,4 +324,70 @@ fn next_to_either_end_intervals_are_honest() {
     }
     assert!(count >= 36, "found {count}");
     assert!(inside * 100 >= count * 85, "{inside} of {count} inside");
+}
+
+/// A machine that runs ten seconds of every thirty: one row, whether it picks up its
+/// phase where it left it or starts anew; a beat of two tones stays two, a modulated
+/// tone keeps its sidebands.
+#[test]
+fn a_tone_that_cycles_is_one_row_with_its_duty() {
+    let mut rng = StdRng::seed_from_u64(110);
+    let (rate, n) = (500.0, 150_000);
+    for (period, on_share, anew, amplitude) in [
+        (30.0, 1.0 / 3.0, false, 0.5),
+        (30.0, 1.0 / 3.0, true, 2.0),
+        (11.0, 0.6, false, 0.5),
+    ] {
+        let mut x = noise(&mut rng, n);
+        let mut phase = 0.0;
+        let mut last = f64::INFINITY;
+        let (mut on, mut first, mut end) = (0, n, 0);
+        for (i, v) in x.iter_mut().enumerate() {
+            let t = (i as f64 / rate + 5.0) % period;
+            if t < last && anew {
+                phase = TAU * rng.random::<f64>();
+            }
+            last = t;
+            if t < on_share * period {
+                *v += (amplitude * (TAU * 61.3 * i as f64 / rate + phase).cos()) as f32;
+                on += 1;
+                first = first.min(i);
+                end = i + 1;
+            }
+        }
+        let duty = f64::from(on) / (end - first) as f64;
+        let set = run(rate, vec![x]);
+        let what = format!(
+            "period {period}, on {on_share}, anew {anew}: {:?}",
+            set.tones
+        );
+        assert_eq!(set.tones.len(), 1, "{what}");
+        let tone = &set.tones[0];
+        // each stretch is known to its own resolution, all of them to a good deal less
+        assert!((tone.seen_hz.0 - 61.3).abs() < 0.02, "{what}");
+        assert!((tone.duty - duty).abs() < 0.06, "duty {duty}, {what}");
+        assert!(
+            (tone.level_dbfs - 20.0 * f64::log10(amplitude)).abs() < 0.6,
+            "{what}"
+        );
+        assert!(
+            (tone.from_s - first as f64 / rate).abs() < 0.13 * period,
+            "{what}"
+        );
+        assert!(
+            (tone.to_s - end as f64 / rate).abs() < 0.13 * period,
+            "{what}"
+        );
+    }
+    let mut beat = noise(&mut rng, n);
+    add(&mut beat, rate, 61.30, 0.5, 0.0);
+    add(&mut beat, rate, 61.35, 0.5, 1.0);
+    let mut modulated = noise(&mut rng, n);
+    for (hz, amplitude) in [(61.3, 0.5), (61.1, 0.2), (61.5, 0.2)] {
+        add(&mut modulated, rate, hz, amplitude, 0.3);
+    }
+    assert_eq!(run(rate, vec![beat]).tones.len(), 2);
+    let set = run(rate, vec![modulated]);
+    assert_eq!(set.tones.len(), 3);
+    assert!(set.tones.iter().all(|t| t.duty == 1.0));
 }
