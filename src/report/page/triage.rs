@@ -88,7 +88,7 @@ fn base_name(path: &str) -> String {
 }
 
 #[derive(Template)]
-#[template(path = "triage.html")]
+#[template(config = "src/report/page/askama.toml", path = "triage.html")]
 struct Page<'a> {
     title: String,
     recordings: Vec<Recording<'a>>,

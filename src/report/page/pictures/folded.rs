@@ -19,7 +19,7 @@ const TOP: f64 = 46.0;
 
 /// Fills `folded.svg`.
 #[derive(Template)]
-#[template(path = "pictures/folded.svg")]
+#[template(config = "src/report/page/askama.toml", path = "pictures/folded.svg")]
 pub(in crate::report::page) struct FoldedPicture {
     prefix: String,
     width: Px,

@@ -20,7 +20,7 @@ const NAME: usize = 30;
 
 /// Fills `spectrum.svg`.
 #[derive(Template)]
-#[template(path = "pictures/spectrum.svg")]
+#[template(config = "src/report/page/askama.toml", path = "pictures/spectrum.svg")]
 pub(in crate::report::page) struct SpectrumPicture {
     /// Distinguishes the ids of several pictures in a page.
     prefix: String,

@@ -22,7 +22,7 @@ const UNCERTAIN: f64 = 4.0;
 
 /// Fills `tracks.svg`.
 #[derive(Template)]
-#[template(path = "pictures/tracks.svg")]
+#[template(config = "src/report/page/askama.toml", path = "pictures/tracks.svg")]
 pub(in crate::report::page) struct TrackPicture {
     width: Px,
     height: Px,
